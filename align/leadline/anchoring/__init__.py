@@ -1,0 +1,1 @@
+"""Depth maps: by hand, and as a posterior that weighs recording against histology."""

@@ -1,0 +1,1 @@
+"""What everything else stands on: errors, checked arrays, fingerprints, progress, whole files."""

@@ -1,0 +1,1 @@
+"""An invented brain with known truth."""

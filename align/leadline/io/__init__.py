@@ -1,0 +1,1 @@
+"""Files to model values and back; one module per family of formats."""

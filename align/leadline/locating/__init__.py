@@ -1,0 +1,1 @@
+"""Contacts to regions, layers and probabilities."""

@@ -1,0 +1,1 @@
+"""Frozen values that flow from stage to stage; no files, no screens."""

@@ -1,0 +1,1 @@
+"""The order of the stages; what is skipped, resumed and recorded."""

@@ -1,0 +1,1 @@
+"""Stack to atlas: orientation, affine, deformation, quality."""

@@ -1,0 +1,1 @@
+"""Dye tracks: background, ridges, paths, centre lines, assignment to penetrations."""
