@@ -1,0 +1,130 @@
+"""A brain's inputs on the bench: opened once, on first need, and handed to the steps."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import cached_property
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from leadline.base.errors import LeadlineError
+from leadline.base.progress import SILENT, Progress
+from leadline.model.brain import Brain, Penetration, RecordingSource
+from leadline.model.probe import NOT_RECORDED, Probe
+from leadline.model.recording import Recording
+
+if TYPE_CHECKING:
+    from leadline.anchoring.knowledge import Knowledge
+    from leadline.model.anchor import Anchor
+    from leadline.model.atlas import Atlas
+    from leadline.model.recording import Traces
+    from leadline.model.volume import Stack, Volume
+
+WORK_VOXELS_MAX = 200e6
+
+
+@dataclass
+class Bench:
+    """Lazily opened inputs of one brain. Methods raise LeadlineError when an input is wrong."""
+
+    brain: Brain
+    progress: Progress = SILENT
+    threads: int = 2
+
+    @cached_property
+    def atlas(self) -> Atlas:
+        """The atlas folder, read."""
+        from leadline.io.atlases import read_atlas
+
+        return read_atlas(self.brain.atlas)
+
+    @cached_property
+    def background(self) -> Stack:
+        """The autofluorescence channel, opened."""
+        from leadline.io.stacks import open_stack
+
+        source = self.brain.stack
+        return open_stack(
+            source.background, channel=source.background_channel, voxel_um=source.voxel_um, code=source.code
+        )
+
+    @cached_property
+    def dye(self) -> Stack | None:
+        """The dye channel, opened; None where the brain has none."""
+        from leadline.io.stacks import open_stack
+
+        source = self.brain.stack
+        if source.dye is None:
+            return None
+        dye = open_stack(source.dye, channel=source.dye_channel, voxel_um=source.voxel_um, code=source.code)
+        ours, theirs = dye.finest, self.background.finest
+        if ours.shape != theirs.shape or ours.code != theirs.code or not np.allclose(ours.voxel_um, theirs.voxel_um):
+            raise LeadlineError(
+                f"dye ({ours.shape} voxels, {ours.voxel_um.tolist()} um, {ours.code}) and background ({theirs.shape}, "
+                f"{theirs.voxel_um.tolist()} um, {theirs.code}) are not on one grid",
+                where=str(source.dye),
+                mend="Both channels must be of one imaging of one brain",
+            )
+        return dye
+
+    def reduced(self, stack: Stack, target_um: float) -> Volume:
+        """``stack`` in memory at about ``target_um``, coarser only where the whole brain would not fit."""
+        from leadline.io.reduce import reduce_to
+
+        extent = float(np.prod(stack.finest.extent_um))
+        target = max(target_um, (extent / WORK_VOXELS_MAX) ** (1 / 3))
+        return reduce_to(stack.fitting(target), target, progress=self.progress)
+
+    def probe(self, penetration: Penetration) -> Probe:
+        """The probe of a penetration, wired to its recording; contacts that were not recorded left out."""
+        from leadline.io.probes import read_probe, wire
+
+        probe = read_probe(
+            penetration.probe, tip_offset_um=penetration.tip_offset_um, probe_index=penetration.probe_index
+        )
+        with_traces = [source for source in penetration.recordings if source.lfp is not None]
+        if with_traces:
+            traces = self.traces(with_traces[0])
+            return wire(probe, traces.n_channels, with_traces[0].skip_channels).recorded
+        if (probe.channel == NOT_RECORDED).all():
+            return wire(probe, len(probe.contact_id), ()).recorded
+        return probe.recorded
+
+    def traces(self, source: RecordingSource) -> Traces:
+        """The traces of one recording, opened."""
+        from leadline.io.recordings import open_traces
+
+        return open_traces(source)
+
+    def recordings(self, penetration: Penetration, probe: Probe) -> tuple[Recording, ...]:
+        """The recordings of a penetration: traces opened, spikes, events and exclusions read."""
+        from leadline.io.spikes import read_events, read_excluded, read_spikes
+
+        return tuple(
+            Recording(
+                traces=self.traces(source) if source.lfp else None,
+                spikes=read_spikes(source.spikes, probe) if source.spikes else None,
+                events=read_events(source.events) if source.events else None,
+                excluded_s=read_excluded(source.exclude) if source.exclude else np.zeros((0, 2)),
+                name=f"{penetration.name}, recording {number}",
+            )
+            for number, source in enumerate(penetration.recordings, 1)
+        )
+
+    @cached_property
+    def knowledge(self) -> Knowledge:
+        """What is known of structure types: the built-in table, with the lab's own where there is one."""
+        from leadline.anchoring import knowledge
+
+        if self.brain.knowledge is None:
+            return knowledge.builtin()
+        text = self.brain.knowledge.read_text(encoding="utf-8")
+        return knowledge.parse(text, str(self.brain.knowledge))
+
+    @cached_property
+    def anchors_file_rows(self) -> tuple[Anchor, ...]:
+        """What ``out/anchors.csv`` holds now."""
+        from leadline.io.tables import read_anchors
+
+        return read_anchors(self.brain.out / "anchors.csv")

@@ -1,0 +1,138 @@
+"""``leadline check``: every input opened and looked at, all that is wrong said at once, nothing heavy computed."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, TypeVar
+
+from leadline.base.errors import Faults, LeadlineError, nearest
+from leadline.pipeline.bench import Bench
+
+if TYPE_CHECKING:
+    from collections.abc import Callable
+
+    from leadline.model.brain import Brain, Penetration
+    from leadline.model.probe import Probe
+
+T = TypeVar("T")
+
+
+@dataclass(frozen=True, slots=True)
+class Findings:
+    """``faults`` stop a run; ``notes`` are worth knowing."""
+
+    faults: tuple[LeadlineError, ...]
+    notes: tuple[str, ...]
+
+
+def check(brain: Brain, bench: Bench | None = None) -> Findings:
+    """Open and look at every input of a brain."""
+    look = _Look(bench or Bench(brain))
+    look.images()
+    for penetration in brain.penetrations:
+        look.penetration(penetration)
+    look.anchors()
+    look.hear(lambda: look.bench.knowledge)
+    return Findings(tuple(dict.fromkeys(look.faults)), tuple(look.notes))
+
+
+class _Look:
+    def __init__(self, bench: Bench) -> None:
+        self.bench, self.brain = bench, bench.brain
+        self.faults: list[LeadlineError] = []
+        self.notes: list[str] = []
+
+    def hear(self, ask: Callable[[], T], about: str = "") -> T | None:
+        """Call ``ask``; keep what it complains of, with the penetration it is about."""
+        try:
+            return ask()
+        except Faults as error:
+            self.faults += error.faults
+        except LeadlineError as error:
+            where = f"{about}: {error.where}" if about and error.where else error.where or about
+            self.faults.append(LeadlineError(error.what, where=where, mend=error.mend))
+        return None
+
+    def images(self) -> None:
+        atlas = self.hear(lambda: self.bench.atlas)
+        stack = self.hear(lambda: self.bench.background)
+        self.hear(lambda: self.bench.dye)
+        if atlas is not None and stack is not None:
+            self.notes += _size_notes(sorted(atlas.labels.extent_um), sorted(stack.finest.extent_um))
+
+    def penetration(self, penetration: Penetration) -> None:
+        about = f"penetration {penetration.name}"
+        probe = self.hear(lambda: self.bench.probe(penetration), about)
+        if probe is None:
+            return
+        if not len(probe.contact_id):
+            self.faults.append(
+                LeadlineError(
+                    "no contact of the probe was recorded",
+                    where=about,
+                    mend="device_channel_indices is -1 everywhere; write the trace of each contact",
+                )
+            )
+        self._trace_numbers(penetration, probe, about)
+        self.hear(lambda: self.bench.recordings(penetration, probe), about)
+        if penetration.points is not None:
+            self._points(penetration, probe, about)
+        if penetration.shank_toward and len(probe.shanks) == 1:
+            self.notes.append(f"{about}: shank_toward says nothing of a probe with one shank")
+
+    def _trace_numbers(self, penetration: Penetration, probe: Probe, about: str) -> None:
+        for source in penetration.recordings:
+            if source.lfp is None:
+                continue
+            lfp = source
+            traces = self.hear(lambda lfp=lfp: self.bench.traces(lfp), about)  # type: ignore[misc]
+            if traces is not None and probe.channel.size and probe.channel.max() >= traces.n_channels:
+                self.faults.append(
+                    LeadlineError(
+                        f"the probe names trace {int(probe.channel.max())}, the recording has traces 0 to "
+                        f"{traces.n_channels - 1}",
+                        where=f"{about}: {source.lfp}",
+                        mend="Correct n_channels or device_channel_indices",
+                    )
+                )
+
+    def _points(self, penetration: Penetration, probe: Probe, about: str) -> None:
+        from leadline.io.points import read_hand_points
+
+        path = penetration.points
+        assert path is not None
+        points = self.hear(lambda: read_hand_points(path), about)
+        for shank in points or {}:
+            if shank not in probe.shanks:
+                self.faults.append(
+                    LeadlineError(
+                        f"points name shank {shank}, the probe has {', '.join(map(str, probe.shanks))}",
+                        where=f"{about}: {path}",
+                        mend="Correct the shank column",
+                    )
+                )
+
+    def anchors(self) -> None:
+        from leadline.model.anchor import in_order
+        from leadline.pipeline.record import Record
+        from leadline.pipeline.stages import anchors_in_force
+
+        record = self.hear(lambda: Record(self.brain.folder, self.brain.cache))
+        anchors = self.hear(lambda: anchors_in_force(self.brain, record)) if record is not None else None
+        names = [p.name for p in self.brain.penetrations]
+        for key in sorted({(a.penetration, a.shank) for a in anchors or ()}):
+            if key[0] not in names:
+                what = f"there is no penetration '{key[0]}'"
+                self.faults.append(LeadlineError(what, where="anchors.csv", mend=nearest(key[0], names)))
+            mine = [a for a in anchors or () if (a.penetration, a.shank) == key]
+            self.hear(lambda mine=mine: in_order(mine))  # type: ignore[misc]
+
+
+def _size_notes(atlas_um: list[float], stack_um: list[float]) -> list[str]:
+    """Tissue swells and shrinks by some tens of per cent; a factor of two is a wrong voxel size."""
+    ratio = [s / a for s, a in zip(stack_um, atlas_um, strict=True)]
+    if min(ratio) < 0.5 or max(ratio) > 2.0:
+        sizes = " x ".join(f"{s / 1000:.1f}" for s in stack_um)
+        wanted = " x ".join(f"{a / 1000:.1f}" for a in atlas_um)
+        return [f"the stack measures {sizes} mm, the atlas {wanted} mm: is voxel_um right?"]
+    return []

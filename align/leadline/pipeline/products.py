@@ -1,0 +1,226 @@
+"""What the steps hand on, as files: every product is written, then read back, so a resumed run equals a fresh one."""
+
+from __future__ import annotations
+
+import json
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from leadline.base.atomic import whole_file, write_text
+from leadline.model.channels import TRACK_COLUMNS
+from leadline.model.posterior import DepthPosterior
+from leadline.model.track import Track
+from leadline.model.transform import Registration
+
+if TYPE_CHECKING:
+    from collections.abc import Mapping, Sequence
+    from pathlib import Path
+
+    from leadline.model.brain import Brain
+
+FRAME_NOTE = """\
+stack_to_atlas.h5 and atlas_to_stack.h5 are ITK transforms on points, in micrometres.
+
+stack_to_atlas.h5 takes (s0, s1, s2), micrometres along the stored axes of the stack from the centre of its first
+voxel, to (ap, dv, ml), micrometres in the atlas: ap grows posterior, dv inferior, ml right, from the centre of the
+first voxel of the atlas volume laid out as PIR. atlas_to_stack.h5 goes the other way.
+
+    import SimpleITK as sitk
+    sitk.ReadTransform("stack_to_atlas.h5").TransformPoint((s0_um, s1_um, s2_um))
+
+Estimates with error, for research only: see error_um in qc.json.
+"""
+
+
+@dataclass(frozen=True)
+class RegistrationFiles:
+    """Files of ``out/registration``."""
+
+    brain: Brain
+
+    @property
+    def folder(self) -> Path:
+        """The folder."""
+        return self.brain.out / "registration"
+
+    @property
+    def stack_to_atlas(self) -> Path:
+        """Transform of points, stack to atlas."""
+        return self.folder / "stack_to_atlas.h5"
+
+    @property
+    def atlas_to_stack(self) -> Path:
+        """Transform of points, atlas to stack."""
+        return self.folder / "atlas_to_stack.h5"
+
+    @property
+    def quality(self) -> Path:
+        """Numbers."""
+        return self.folder / "qc.json"
+
+    @property
+    def picture(self) -> Path:
+        """Atlas outlines over the sample."""
+        return self.folder / "qc.png"
+
+    @property
+    def all(self) -> tuple[Path, ...]:
+        """Every file of the stage."""
+        return self.stack_to_atlas, self.atlas_to_stack, self.quality, self.picture, self.folder / "README"
+
+    def write(self, registration: Registration) -> None:
+        """Write transforms, numbers and the note on frames."""
+        from leadline.registration._sitk import write_point_transform
+
+        write_point_transform(self.stack_to_atlas, registration.stack_to_atlas)
+        write_point_transform(self.atlas_to_stack, registration.atlas_to_stack)
+        content = {
+            "error_um": round(registration.error_um, 2),
+            **registration.quality,
+            "warnings": list(registration.warnings),
+        }
+        write_text(self.quality, json.dumps(content, indent=2, ensure_ascii=False) + "\n")
+        write_text(self.folder / "README", FRAME_NOTE)
+
+    def read(self) -> Registration:
+        """The registration as written."""
+        from leadline.registration._sitk import read_point_transform
+
+        quality = json.loads(self.quality.read_text(encoding="utf-8"))
+        error_um, warnings = quality.pop("error_um"), tuple(quality.pop("warnings"))
+        return Registration(
+            read_point_transform(self.stack_to_atlas),
+            read_point_transform(self.atlas_to_stack),
+            float(error_um),
+            quality,
+            warnings,
+        )
+
+
+@dataclass(frozen=True)
+class ProfileFiles:
+    """Files of one penetration's profile."""
+
+    brain: Brain
+    name: str
+
+    @property
+    def table(self) -> Path:
+        """The profile itself."""
+        return self.brain.out / "profiles" / f"{self.name}.parquet"
+
+    @property
+    def picture(self) -> Path:
+        """Its picture."""
+        return self.brain.out / "profiles" / f"{self.name}.png"
+
+    @property
+    def spectra(self) -> Path:
+        """Power by frequency and row."""
+        return self.brain.cache / "spectra" / f"{self.name}.npz"
+
+    @property
+    def all(self) -> tuple[Path, ...]:
+        """Every file of the step."""
+        return self.table, self.picture, self.spectra
+
+
+def write_tracks(brain: Brain, tracks: Sequence[Track], missing: Mapping[str, str]) -> None:
+    """Write ``tracks.csv``, and beside the cache what the table has no column for."""
+    import pandas as pd
+
+    from leadline.io.tables import write_table
+
+    frames = [
+        pd.DataFrame(
+            {
+                "penetration": t.penetration,
+                "shank": t.shank,
+                "order": np.arange(len(t.stack_um)),
+                **{f"s{k}_um": t.stack_um[:, k].round(2) for k in range(3)},
+                **{name: t.atlas_um[:, k].round(2) for k, name in enumerate(("ap_um", "dv_um", "ml_um"))},
+                "track_depth_um": t.track_depth_um.round(2),
+                "radius_um": t.radius_um.round(2),
+            }
+        )
+        for t in tracks
+    ]
+    table = pd.concat(frames) if frames else pd.DataFrame(columns=list(TRACK_COLUMNS))
+    ends = [
+        {
+            "penetration": t.penetration,
+            "shank": t.shank,
+            "entry_sd_um": round(t.entry_sd_um, 2),
+            "end_sd_um": round(t.end_sd_um, 2),
+            "source": t.source,
+        }
+        for t in tracks
+    ]
+    write_table(table[list(TRACK_COLUMNS)], brain.out / "tracks.csv")
+    text = json.dumps({"tracks": ends, "missing": dict(missing)}, indent=1, ensure_ascii=False)
+    write_text(brain.cache / "tracks.json", text + "\n")
+
+
+def read_tracks(brain: Brain) -> tuple[tuple[Track, ...], dict[str, str]]:
+    """Tracks as written, and what was found for every penetration that has none."""
+    import pandas as pd
+
+    table = pd.read_csv(brain.out / "tracks.csv", dtype={"penetration": str})
+    content = json.loads((brain.cache / "tracks.json").read_text(encoding="utf-8"))
+    return tuple(_track(table, ends) for ends in content["tracks"]), content["missing"]
+
+
+def _track(table: Any, ends: dict[str, Any]) -> Track:
+    rows = table[(table["penetration"] == ends["penetration"]) & (table["shank"] == ends["shank"])]
+    return Track(
+        ends["penetration"],
+        int(ends["shank"]),
+        rows[["s0_um", "s1_um", "s2_um"]].to_numpy(float),
+        rows[["ap_um", "dv_um", "ml_um"]].to_numpy(float),
+        rows["radius_um"].to_numpy(float),
+        float(ends["entry_sd_um"]),
+        float(ends["end_sd_um"]),
+        ends["source"],
+        rows["track_depth_um"].to_numpy(float),
+    )
+
+
+def write_posteriors(brain: Brain, posteriors: Sequence[DepthPosterior]) -> None:
+    """Keep the draws of every shank."""
+    arrays: dict[str, Any] = {}
+    heads = []
+    for i, p in enumerate(posteriors):
+        arrays[f"tip_{i}"] = p.tip_distance_um
+        arrays[f"depth_{i}"] = p.depth_um.astype(np.float32)
+        heads.append(
+            {
+                "penetration": p.penetration,
+                "shank": p.shank,
+                "informed": p.informed,
+                "diagnostics": dict(p.diagnostics),
+                "warnings": list(p.warnings),
+            }
+        )
+    arrays["heads"] = np.array(json.dumps(heads))
+    with whole_file(brain.cache / "posterior.npz") as part:
+        np.savez(part, **arrays)
+
+
+def read_posteriors(brain: Brain) -> tuple[DepthPosterior, ...]:
+    """Draws as kept."""
+    with np.load(brain.cache / "posterior.npz", allow_pickle=False) as arrays:
+        heads = json.loads(str(arrays["heads"]))
+        return tuple(
+            DepthPosterior(
+                h["penetration"],
+                h["shank"],
+                arrays[f"tip_{i}"],
+                arrays[f"depth_{i}"].astype(float),
+                h["informed"],
+                h["diagnostics"],
+                tuple(h["warnings"]),
+            )
+            for i, h in enumerate(heads)
+        )

@@ -1,0 +1,97 @@
+"""What has been done to a brain: for every step the fingerprint of what went in and of what came out."""
+
+from __future__ import annotations
+
+import fcntl
+import json
+from contextlib import contextmanager
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from leadline.base.atomic import write_text
+from leadline.base.errors import LeadlineError
+from leadline.base.fingerprint import fingerprint_path, fingerprint_value
+
+if TYPE_CHECKING:
+    from collections.abc import Iterator, Mapping
+
+RECORD_FORMAT = 1
+
+
+@dataclass(frozen=True, slots=True)
+class Done:
+    """One finished step. ``key`` : fingerprint of all that went in. ``outputs`` : path -> fingerprint."""
+
+    key: str
+    outputs: Mapping[str, str]
+    warnings: tuple[str, ...] = ()
+    inputs: Mapping[str, str] = field(default_factory=dict)
+    extra: Mapping[str, Any] = field(default_factory=dict)
+
+    def intact(self, folder: Path) -> bool:
+        """Whether every output is there as it was left."""
+        return all(
+            (folder / name).exists() and fingerprint_path(folder / name) == mark for name, mark in self.outputs.items()
+        )
+
+    @property
+    def product(self) -> str:
+        """Fingerprint of the outputs together."""
+        return fingerprint_value(dict(self.outputs))
+
+
+class Record:
+    """The steps done so far, kept in ``.leadline/steps.json`` and saved after every step."""
+
+    def __init__(self, folder: Path, cache: Path) -> None:
+        self.folder, self.file = folder, cache / "steps.json"
+        self.steps: dict[str, Done] = {}
+        if self.file.is_file():
+            self._read()
+
+    def _read(self) -> None:
+        try:
+            content = json.loads(self.file.read_text(encoding="utf-8"))
+            if content["format"] == RECORD_FORMAT:
+                self.steps = {
+                    name: Done(s["key"], s["outputs"], tuple(s["warnings"]), s["inputs"], s["extra"])
+                    for name, s in content["steps"].items()
+                }
+        except (ValueError, KeyError, TypeError, AttributeError) as error:
+            raise LeadlineError(
+                f"is damaged ({error!r})", where=str(self.file), mend="Delete it; the stages will run again"
+            ) from error
+
+    def keep(self, name: str, done: Done) -> None:
+        """Remember a finished step, on disk."""
+        self.steps[name] = done
+        steps = {
+            name: {
+                "key": d.key,
+                "outputs": dict(d.outputs),
+                "warnings": list(d.warnings),
+                "inputs": dict(d.inputs),
+                "extra": dict(d.extra),
+            }
+            for name, d in self.steps.items()
+        }
+        write_text(self.file, json.dumps({"format": RECORD_FORMAT, "steps": steps}, indent=1) + "\n")
+
+
+@contextmanager
+def sole_worker(brain_file: Path) -> Iterator[None]:
+    """Hold the brain for this process; a second one is told so instead of writing over the first.
+
+    Raises LeadlineError when another process holds it.
+    """
+    with brain_file.open("rb") as handle:
+        try:
+            fcntl.flock(handle, fcntl.LOCK_EX | fcntl.LOCK_NB)
+        except BlockingIOError as error:
+            raise LeadlineError(
+                "another Leadline process is working on this brain",
+                where=str(brain_file),
+                mend="Wait until it has ended, then start again",
+            ) from error
+        yield

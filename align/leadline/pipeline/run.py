@@ -1,0 +1,118 @@
+"""Runs the steps of a brain in order; what has not changed is not done again, what is finished is kept."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING
+
+from leadline.base.errors import LeadlineError
+from leadline.base.fingerprint import fingerprint_path, fingerprint_value
+from leadline.base.progress import SILENT, Progress
+from leadline.pipeline.bench import Bench
+from leadline.pipeline.provenance import write_provenance
+from leadline.pipeline.record import Done, Record, sole_worker
+from leadline.pipeline.stages import STAGES, Step, plan
+
+if TYPE_CHECKING:
+    from pathlib import Path
+
+    from leadline.model.brain import Brain
+
+
+@dataclass(frozen=True, slots=True)
+class Summary:
+    """What a run did. ``done``, ``skipped`` : step names. ``warnings`` : (step, sentence) of all steps, also old."""
+
+    brain: str
+    done: tuple[str, ...]
+    skipped: tuple[str, ...]
+    warnings: tuple[tuple[str, str], ...]
+
+
+def run(brain: Brain, *, until: str = "locate", progress: Progress = SILENT, threads: int = 2) -> Summary:
+    """Run every step up to the stage ``until`` and what it needs.
+
+    Raises LeadlineError when an input is wrong; steps finished before it are kept.
+    """
+    with sole_worker(brain.file):
+        return _run(Bench(brain, progress, threads), until)
+
+
+def _run(bench: Bench, until: str) -> Summary:
+    brain = bench.brain
+    record = Record(brain.folder, brain.cache)
+    steps = _needed(plan(brain, record), until)
+    marks: dict[Path, str] = {}
+    checked = False
+    done, skipped = [], []
+    for step in steps:
+        inputs = {str(_short(p, brain)): marks.setdefault(p, _mark(p)) for p in step.reads}
+        key = _key(step, inputs, record)
+        old = record.steps.get(step.name)
+        if old is not None and old.key == key and old.intact(brain.folder):
+            skipped.append(step.name)
+            continue
+        if not checked:
+            _check(bench)
+            checked = True
+        bench.progress.begin(step.name, 0)
+        warnings = step.run(bench)
+        _require_unchanged(step, marks)
+        outputs = {str(p.relative_to(brain.folder)): fingerprint_path(p) for p in step.gives}
+        record.keep(step.name, Done(key, outputs, tuple(warnings), inputs, step.extra))
+        done.append(step.name)
+    if until == "locate":
+        write_provenance(brain, record, [s.name for s in steps])
+    warnings_all = tuple((s.name, w) for s in steps for w in record.steps[s.name].warnings)
+    return Summary(brain.name, tuple(done), tuple(skipped), warnings_all)
+
+
+def _needed(steps: tuple[Step, ...], until: str) -> tuple[Step, ...]:
+    """The steps of stage ``until`` and all that they need, in order."""
+    if until not in STAGES:
+        raise LeadlineError(f"there is no stage '{until}'", mend=f"Stages are {', '.join(STAGES)}")
+    wanted = {s.name for s in steps if s.stage == until}
+    for step in reversed(steps):
+        if step.name in wanted:
+            wanted.update(step.needs)
+    return tuple(s for s in steps if s.name in wanted)
+
+
+def _key(step: Step, inputs: dict[str, str], record: Record) -> str:
+    from leadline import __version__
+
+    needs = {name: record.steps[name].product for name in step.needs}
+    return fingerprint_value([__version__, step.name, step.key, inputs, needs])
+
+
+def _check(bench: Bench) -> None:
+    from leadline.pipeline.check import check
+
+    found = check(bench.brain, bench)
+    if found.faults:
+        from leadline.base.errors import Faults
+
+        raise found.faults[0] if len(found.faults) == 1 else Faults(found.faults)
+
+
+def _require_unchanged(step: Step, marks: dict[Path, str]) -> None:
+    """A file that changed while it was read makes a result of two halves."""
+    for path in step.reads:
+        if not path.exists() or _mark(path) != marks[path]:
+            raise LeadlineError(
+                f"changed while '{step.name}' was reading it", where=str(path), mend="Let it be and run again"
+            )
+
+
+def _mark(path: Path) -> str:
+    return fingerprint_path(path)
+
+
+def _short(path: Path, brain: Brain) -> Path:
+    return path.relative_to(brain.folder) if path.is_relative_to(brain.folder) else path
+
+
+def without_physiology(brain: Brain) -> Brain:
+    """The brain with its recordings' word on depth left out (``--no-physiology``)."""
+    anchor = replace(brain.settings.anchor, physiology=False)
+    return replace(brain, settings=replace(brain.settings, anchor=anchor))

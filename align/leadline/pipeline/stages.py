@@ -1,0 +1,141 @@
+"""The table of stages: what each needs, reads, gives, and how it is run. The only place that knows the order."""
+
+from __future__ import annotations
+
+import dataclasses
+from dataclasses import dataclass, field
+from typing import TYPE_CHECKING, Any
+
+from leadline.model.anchor import Anchor
+from leadline.pipeline import products, work
+
+if TYPE_CHECKING:
+    from collections.abc import Callable
+    from pathlib import Path
+
+    from leadline.model.brain import Brain, Penetration
+    from leadline.pipeline.bench import Bench
+    from leadline.pipeline.record import Record
+
+STAGES = ("register", "trace", "profile", "anchor", "locate")
+
+
+@dataclass(frozen=True)
+class Step:
+    """One piece of work that is done as a whole or not at all.
+
+    ``key`` : settings and other values that the result depends on, beside ``reads`` (files) and ``needs`` (other
+    steps). ``gives`` : files written. ``run`` : does it and returns sentences for the user. ``extra`` : what the
+    record keeps beside fingerprints.
+    """
+
+    name: str
+    stage: str
+    needs: tuple[str, ...]
+    key: Any
+    reads: tuple[Path, ...]
+    gives: tuple[Path, ...]
+    run: Callable[[Bench], tuple[str, ...]]
+    extra: dict[str, Any] = field(default_factory=dict)
+
+
+def plan(brain: Brain, record: Record) -> tuple[Step, ...]:
+    """Every step of a brain, in order."""
+    profiles = tuple(_profile(brain, p) for p in brain.penetrations if p.recordings)
+    return (
+        _register(brain),
+        _trace(brain),
+        *profiles,
+        _anchor(brain, record, tuple(step.name for step in profiles)),
+        _locate(brain),
+    )
+
+
+def anchors_in_force(brain: Brain, record: Record) -> tuple[Anchor, ...]:
+    """Anchors of brain.toml and of ``out/anchors.csv``.
+
+    The file also repeats those that brain.toml held at the last run; one that has since left brain.toml is gone.
+    """
+    from leadline.io.tables import read_anchors
+
+    done = record.steps.get("anchor")
+    mirrored = {Anchor(**row) for row in done.extra.get("from_brain_toml", ())} if done else set()
+    kept = [a for a in read_anchors(brain.out / "anchors.csv") if a not in mirrored or a in brain.anchors]
+    new = [a for a in brain.anchors if a not in kept]
+    return tuple(sorted({*kept, *new}, key=lambda a: (a.penetration, a.shank, -a.tip_distance_um)))
+
+
+def _register(brain: Brain) -> Step:
+    paths = products.RegistrationFiles(brain)
+    stack = brain.stack
+    return Step(
+        "register",
+        "register",
+        (),
+        key=(brain.settings.register, stack.voxel_um, stack.code, stack.background_channel, stack.dye_channel),
+        reads=_present(brain.atlas, stack.background, stack.dye),
+        gives=paths.all,
+        run=lambda bench: work.register(bench, paths),
+    )
+
+
+def _trace(brain: Brain) -> Step:
+    penetrations = [dataclasses.replace(p, recordings=()) for p in brain.penetrations]
+    stack = brain.stack
+    return Step(
+        "trace",
+        "trace",
+        ("register",),
+        key=(brain.settings.trace, penetrations, stack),
+        reads=_present(
+            stack.background, stack.dye, *(p.points for p in brain.penetrations), *(p.probe for p in brain.penetrations)
+        ),
+        gives=(brain.out / "tracks.csv", brain.cache / "tracks.json"),
+        run=work.trace,
+    )
+
+
+def _profile(brain: Brain, penetration: Penetration) -> Step:
+    files = products.ProfileFiles(brain, penetration.name)
+    reads = [penetration.probe]
+    for source in penetration.recordings:
+        reads += [p for p in (source.lfp, source.spikes, source.events, source.exclude) if p is not None]
+    return Step(
+        f"profile {penetration.name}",
+        "profile",
+        (),
+        key=(brain.settings.profile, penetration.recordings, penetration.tip_offset_um, penetration.probe_index),
+        reads=tuple(reads),
+        gives=files.all,
+        run=lambda bench: work.profile(bench, penetration, files),
+    )
+
+
+def _anchor(brain: Brain, record: Record, profiles: tuple[str, ...]) -> Step:
+    anchors = anchors_in_force(brain, record)
+    return Step(
+        "anchor",
+        "anchor",
+        ("register", "trace", *profiles),
+        key=(brain.settings.anchor, anchors, [p.inserted_um for p in brain.penetrations]),
+        reads=_present(brain.atlas, brain.knowledge, *(p.probe for p in brain.penetrations)),
+        gives=(brain.out / "anchors.csv", brain.out / "suggestions.csv", brain.cache / "posterior.npz"),
+        run=lambda bench: work.anchor(bench, anchors),
+        extra={"from_brain_toml": [dataclasses.asdict(a) for a in brain.anchors]},
+    )
+
+
+def _locate(brain: Brain) -> Step:
+    return Step(
+        "locate",
+        "locate",
+        ("register", "trace", "anchor"),
+        key=(brain.settings.locate, brain.name, [p.name for p in brain.penetrations]),
+        reads=_present(brain.atlas, *(p.probe for p in brain.penetrations)),
+        gives=(brain.out / "channels.csv", brain.out / "channels.parquet", brain.out / "posterior.parquet"),
+        run=work.locate,
+    )
+
+
+def _present(*paths: Path | None) -> tuple[Path, ...]:
+    return tuple(dict.fromkeys(p for p in paths if p is not None))

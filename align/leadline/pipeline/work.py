@@ -1,0 +1,313 @@
+"""The work of each stage: inputs from the bench, the stage's pure function, outputs to files, sentences back."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from leadline.base.atomic import write_text
+from leadline.model.track import Trace, Track
+from leadline.pipeline import products
+
+if TYPE_CHECKING:
+    from collections.abc import Sequence
+
+    from leadline.base.arrays import FloatArray, IntArray
+    from leadline.model.anchor import Anchor
+    from leadline.model.atlas import Atlas
+    from leadline.model.brain import Brain, Penetration
+    from leadline.model.posterior import DepthPosterior
+    from leadline.model.probe import Probe
+    from leadline.model.profile import Profile
+    from leadline.model.transform import Registration
+    from leadline.pipeline.bench import Bench
+
+LABEL_STEP_UM = 5.0
+BEYOND_UM = 1500.0
+LATERAL_COPIES = 16
+
+
+def register(bench: Bench, files: products.RegistrationFiles) -> tuple[str, ...]:
+    """Stack to atlas, and the check of it."""
+    from leadline.io.qc_picture import draw_qc
+    from leadline.registration import stage
+
+    settings = bench.brain.settings.register
+    grain = settings.resolution_um / 2
+    background = bench.reduced(bench.background, grain)
+    dye = None if bench.dye is None else bench.reduced(bench.dye, grain)
+    atlas = bench.atlas
+    registration = stage.register(
+        background,
+        atlas.template,
+        atlas.labels,
+        settings=settings,
+        dye=dye,
+        progress=bench.progress,
+        threads=bench.threads,
+    )
+    files.write(registration)
+    draw_qc(files.picture, background, atlas, files.read())
+    return registration.warnings
+
+
+@dataclass(frozen=True)
+class _Found:
+    """A dye track and the same curve in atlas um."""
+
+    trace: Trace
+    atlas_um: FloatArray
+
+
+def trace(bench: Bench) -> tuple[str, ...]:
+    """Dye tracks, each given to a penetration; hand-traced points where there are any."""
+    from leadline.tracing.assign import assign
+
+    brain = bench.brain
+    transform = products.RegistrationFiles(brain).read().stack_to_atlas
+    by_hand = [p for p in brain.penetrations if p.points is not None]
+    by_dye = [p for p in brain.penetrations if p.points is None]
+    dye = None if bench.dye is None else bench.reduced(bench.dye, brain.settings.trace.resolution_um)
+    background = bench.reduced(bench.background, brain.settings.trace.resolution_um)
+    tracks, missing, notes = _hand_tracks(by_hand, background, dye, transform)
+    if by_dye and dye is None:
+        missing |= {p.name: "the brain has no dye channel and the penetration no hand-traced points" for p in by_dye}
+    elif by_dye:
+        from leadline.tracing.find import trace as find
+
+        found = [
+            _Found(t, transform(t.points_um))
+            for t in find(dye, background, settings=brain.settings.trace, progress=bench.progress)
+        ]
+        wanted = [_wanted(bench, p) for p in by_dye]
+        result = assign([_path(f) for f in found], wanted)
+        for (name, shank), index in result.matches.items():
+            tracks.append(_track(name, shank, found[index], "dye"))
+        missing |= dict(result.missing)
+        notes += list(result.notes)
+    order = {p.name: i for i, p in enumerate(brain.penetrations)}
+    tracks.sort(key=lambda t: (order[t.penetration], t.shank))
+    products.write_tracks(brain, tracks, missing)
+    return (*(f"penetration {name}: {why}" for name, why in missing.items()), *notes)
+
+
+def _hand_tracks(
+    penetrations: Sequence[Penetration], background: Any, dye: Any, transform: Any
+) -> tuple[list[Track], dict[str, str], list[str]]:
+    from leadline.io.points import read_hand_points
+    from leadline.tracing.fit import from_points
+
+    tracks = []
+    for penetration in penetrations:
+        assert penetration.points is not None
+        for shank, points in read_hand_points(penetration.points).items():
+            traced = from_points(points, background, dye)
+            tracks.append(_track(penetration.name, shank, _Found(traced, transform(traced.points_um)), "points"))
+    return tracks, {}, []
+
+
+def _track(name: str, shank: int, found: _Found, source: str) -> Track:
+    t = found.trace
+    return Track(name, shank, t.points_um, found.atlas_um, t.radius_um, t.entry_sd_um, t.end_sd_um, source)
+
+
+def _path(found: _Found) -> Any:
+    from leadline.tracing.assign import TracedPath
+
+    return TracedPath(atlas_um=found.atlas_um, contrast=found.trace.contrast)
+
+
+def _wanted(bench: Bench, penetration: Penetration) -> Any:
+    from leadline.io.probes import read_probe
+    from leadline.tracing.assign import Wanted
+
+    probe = read_probe(penetration.probe, probe_index=penetration.probe_index)
+    offsets = tuple(float(probe.x_um[probe.shank == s].mean()) for s in probe.shanks)
+    return Wanted(
+        name=penetration.name,
+        shank_x_um=offsets,
+        entry_near_um=penetration.entry_near_um,
+        shank_toward=penetration.shank_toward,
+        inserted_um=penetration.inserted_um,
+    )
+
+
+def profile(bench: Bench, penetration: Penetration, files: products.ProfileFiles) -> tuple[str, ...]:
+    """One penetration's recording to its depth profile."""
+    from leadline.io.profile_picture import draw_profiles
+    from leadline.io.profiles import write_profile, write_spectra
+    from leadline.physiology.profile import profile_of
+
+    probe = bench.probe(penetration)
+    found, spectra = profile_of(
+        penetration.name,
+        probe,
+        bench.recordings(penetration, probe),
+        settings=bench.brain.settings.profile,
+        progress=bench.progress,
+    )
+    write_profile(files.table, found)
+    write_spectra(files.spectra, spectra)
+    draw_profiles(files.picture, found, spectra)
+    return found.warnings
+
+
+def anchor(bench: Bench, anchors: tuple[Anchor, ...]) -> tuple[str, ...]:
+    """The posterior over depth maps of every shank, and the anchors that it suggests."""
+    from leadline.anchoring.manual import manual_map, recentred
+    from leadline.anchoring.posterior import infer
+    from leadline.anchoring.suggest import suggest
+    from leadline.io.tables import anchors_text, suggestions_text
+    from leadline.model.anchor import in_order
+
+    brain = bench.brain
+    for p, s in {(a.penetration, a.shank) for a in anchors}:
+        in_order(a for a in anchors if (a.penetration, a.shank) == (p, s))
+    evidence = shank_evidence(bench, anchors)
+    settings = brain.settings.anchor
+    posteriors = infer(
+        evidence,
+        bench.atlas.structures,
+        bench.knowledge,
+        draws=settings.draws,
+        seed=settings.seed,
+        physiology=settings.physiology,
+        progress=bench.progress,
+    )
+    suggestions = suggest(posteriors, evidence, bench.atlas.structures, bench.knowledge, at_most=settings.suggestions)
+    posteriors = tuple(
+        p if settings.physiology and e.profile is not None else recentred(p, manual_map(e.anchors, e.end_depth_um))
+        for p, e in zip(posteriors, evidence, strict=True)
+    )
+    products.write_posteriors(brain, posteriors)
+    taken = {(a.penetration, a.shank, a.landmark) for a in anchors if a.landmark}
+    open_ones = [s for s in suggestions if (s.anchor.penetration, s.anchor.shank, s.anchor.landmark) not in taken]
+    write_text(brain.out / "anchors.csv", anchors_text(anchors))
+    write_text(brain.out / "suggestions.csv", suggestions_text(open_ones))
+    return tuple(f"penetration {p.penetration}, shank {p.shank}: {w}" for p in posteriors for w in p.warnings)
+
+
+def shank_evidence(bench: Bench, anchors: Sequence[Anchor]) -> tuple[Any, ...]:
+    """All that is known of every located shank's depth map."""
+    from leadline.anchoring.evidence import ShankEvidence
+    from leadline.io.profiles import read_profile
+
+    brain = bench.brain
+    error_um = products.RegistrationFiles(brain).read().error_um
+    tracks, _ = products.read_tracks(brain)
+    by_name = {p.name: p for p in brain.penetrations}
+    probes = {name: bench.probe(by_name[name]) for name in {t.penetration for t in tracks}}
+    evidence = []
+    for track in tracks:
+        penetration = by_name[track.penetration]
+        probe = probes[track.penetration]
+        here = probe.tip_distance_um[probe.shank == track.shank]
+        if not here.size:
+            continue
+        profile: Profile | None = None
+        if penetration.recordings:
+            profile = read_profile(products.ProfileFiles(brain, penetration.name).table).of_shank(track.shank)
+        depth, label, lateral = labels_along(track, bench.atlas, error_um)
+        evidence.append(
+            ShankEvidence(
+                penetration=track.penetration,
+                shank=track.shank,
+                tip_distance_um=np.unique(here),
+                profile=profile,
+                depth_um=depth,
+                label_id=label,
+                lateral_label_id=lateral,
+                end_depth_um=track.length_um,
+                entry_sd_um=track.entry_sd_um,
+                end_sd_um=track.end_sd_um,
+                registration_error_um=error_um,
+                inserted_um=penetration.inserted_um,
+                anchors=tuple(a for a in anchors if (a.penetration, a.shank) == (track.penetration, track.shank)),
+            )
+        )
+    return tuple(evidence)
+
+
+def labels_along(track: Track, atlas: Atlas, error_um: float) -> tuple[FloatArray, IntArray, IntArray]:
+    """Structure ids every 5 um from 1500 um above the entry to 1500 um beyond the end: along the track ``(M,)``, and
+    along copies of it moved sideways by the registration error ``(K, M)``."""
+    depth = np.arange(-BEYOND_UM, track.length_um + BEYOND_UM, LABEL_STEP_UM)
+    points = track.atlas_at(depth)
+    tangent = points[-1] - points[0]
+    tangent /= np.linalg.norm(tangent)
+    side = np.cross(tangent, np.eye(3)[np.argmin(np.abs(tangent))])
+    side /= np.linalg.norm(side)
+    other = np.cross(tangent, side)
+    # Sixteen points of a sunflower whose radii follow the Rayleigh law: a fixed sample of a 2-D normal.
+    k = np.arange(LATERAL_COPIES) + 0.5
+    radius = error_um * np.sqrt(-2.0 * np.log(1.0 - k / LATERAL_COPIES))
+    angle = k * np.pi * (3.0 - np.sqrt(5.0))
+    shift = radius[:, None] * (np.cos(angle)[:, None] * side + np.sin(angle)[:, None] * other)
+    return depth, atlas.label_at(points), atlas.label_at(points[None] + shift[:, None])
+
+
+def locate(bench: Bench) -> tuple[str, ...]:
+    """Every channel's region, layer and probability, as tables."""
+    import pandas as pd
+
+    from leadline.io.tables import read_anchors, write_table
+    from leadline.locating.table import unlocated_rows
+
+    brain = bench.brain
+    registration = products.RegistrationFiles(brain).read()
+    tracks, _ = products.read_tracks(brain)
+    track_of = {(t.penetration, t.shank): t for t in tracks}
+    posterior_of = {(p.penetration, p.shank): p for p in products.read_posteriors(brain)}
+    anchors = read_anchors(brain.out / "anchors.csv")
+    channels, shares = [], []
+    for penetration in brain.penetrations:
+        probe = bench.probe(penetration)
+        for shank in probe.shanks:
+            key = (penetration.name, shank)
+            contacts = probe.take(np.flatnonzero(probe.shank == shank))
+            if key in posterior_of:
+                rows, odds = _locate_shank(
+                    brain, bench.atlas, contacts, track_of[key], posterior_of[key], registration, anchors
+                )
+                shares.append(odds)
+            else:
+                rows = unlocated_rows(brain.name, penetration.name, contacts, bench.atlas)
+            channels.append(rows.iloc[np.argsort(contacts.channel, kind="stable")])
+    table = pd.concat(channels, ignore_index=True)
+    write_table(table, brain.out / "channels.csv")
+    write_table(table, brain.out / "channels.parquet")
+    if not shares:
+        from leadline.model.channels import POSTERIOR_COLUMNS
+
+        shares = [pd.DataFrame(columns=list(POSTERIOR_COLUMNS))]
+    write_table(pd.concat(shares, ignore_index=True), brain.out / "posterior.parquet")
+    return ()
+
+
+def _locate_shank(
+    brain: Brain,
+    atlas: Atlas,
+    contacts: Probe,
+    track: Track,
+    posterior: DepthPosterior,
+    registration: Registration,
+    anchors: Sequence[Anchor],
+) -> tuple[Any, Any]:
+    from leadline.locating.assign import locate as locate_contacts
+    from leadline.locating.table import channel_rows, posterior_rows
+
+    located = locate_contacts(
+        contacts.tip_distance_um,
+        track,
+        posterior,
+        atlas,
+        [a for a in anchors if (a.penetration, a.shank) == (track.penetration, track.shank)],
+        registration_error_um=registration.error_um,
+        seed=brain.settings.locate.seed,
+    )
+    return (
+        channel_rows(brain.name, track.penetration, contacts, atlas, located),
+        posterior_rows(track.penetration, contacts, atlas, located),
+    )
