@@ -37,6 +37,8 @@ class DepthPosterior:
         object.__setattr__(self, "tip_distance_um", tip)
         object.__setattr__(self, "depth_um", frozen(self.depth_um))
         object.__setattr__(self, "diagnostics", MappingProxyType(dict(self.diagnostics)))
+        if (np.diff(tip) <= 0).any():
+            raise ValueError("tip_distance_um must ascend")
         if self.depth_um.ndim != 2 or self.depth_um.shape[1] != tip.size:
             raise ValueError(f"depth_um is {self.depth_um.shape}, rows are {tip.size}")
 

@@ -1,0 +1,37 @@
+# Two commands do everything on a fresh machine: make demo, make test.
+PYTHON ?= $(shell command -v python3.13 || command -v python3.12 || command -v python3.11 || command -v python3)
+BIN := .venv/bin
+ONE_THREAD := OMP_NUM_THREADS=1 OPENBLAS_NUM_THREADS=1 MKL_NUM_THREADS=1 NUMBA_NUM_THREADS=1
+
+.PHONY: demo test lint study bench clean
+demo: .venv/.core
+	$(BIN)/leadline demo leadline-demo
+
+test: .venv/.dev
+	$(ONE_THREAD) $(BIN)/python -m pytest -n 2 --dist worksteal --doctest-modules align tests
+
+lint: .venv/.dev
+	$(BIN)/ruff check align tests
+	$(BIN)/ruff format --check align tests
+	$(BIN)/mypy
+	$(BIN)/lint-imports
+
+study: .venv/.dev
+	$(BIN)/python -m tests.studies
+
+bench: .venv/.dev
+	$(BIN)/python -m tests.benchmarks
+
+clean:
+	rm -rf .venv leadline-demo
+
+.venv/bin/python:
+	$(PYTHON) -m venv .venv
+
+.venv/.core: .venv/bin/python pyproject.toml constraints.txt
+	$(BIN)/python -m pip install -q --disable-pip-version-check -c constraints.txt -e .
+	touch $@
+
+.venv/.dev: .venv/bin/python pyproject.toml constraints.txt
+	$(BIN)/python -m pip install -q --disable-pip-version-check -c constraints.txt -e '.[dev]'
+	touch $@ .venv/.core
