@@ -1,0 +1,357 @@
+"""Atlas folders: ``atlas.toml``, a label volume, a template and ``structures.csv``."""
+
+from __future__ import annotations
+
+import csv
+import re
+import tomllib
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from leadline.base.arrays import AnyArray, FloatArray
+from leadline.base.atomic import whole_folder
+from leadline.base.errors import Faults, LeadlineError, nearest
+from leadline.io.images import SAME_WITHIN, settle, volume_of
+from leadline.io.stacks import open_image
+from leadline.model.atlas import TISSUES, Atlas, Structure, Structures
+from leadline.model.frames import from_pir, voxel_as_pir
+from leadline.model.volume import Volume
+
+if TYPE_CHECKING:
+    from collections.abc import Mapping, Sequence
+    from pathlib import Path
+
+LARGEST_ID = 2**32 - 1
+ATLAS_FILE = "atlas.toml"
+COLUMNS = ("id", "acronym", "name", "parent_id", "colour")
+OPTIONAL_COLUMNS = ("layer", "coarse", "tissue")
+_REQUIRED = ("name", "labels", "template", "structures")
+_KEYS = (*_REQUIRED, "citation", "licence", "orientation", "voxel_um", "bregma_um")
+_SLAB_VOXELS = 2**24
+
+
+def read_atlas(folder: Path) -> Atlas:
+    """Read an atlas folder, labels exact and laid out as PIR.
+
+    ``Atlas.extra["columns"]`` names the optional columns that ``structures.csv`` has.
+
+    Raises LeadlineError when a file or key is missing, the two volumes differ in grid, label ids are not exact, or a
+    label has no row.
+    """
+    stated = _read_toml(folder)
+    structures, columns = read_structures(folder / stated["structures"])
+    voxel, code = stated.get("voxel_um"), stated.get("orientation")
+    labels = read_labels(folder / stated["labels"], voxel_um=voxel, code=code)
+    template = read_template(folder / stated["template"], voxel_um=voxel, code=code)
+    require_same_grid(labels, template, where=str(folder))
+    require_rows(labels, structures, where=str(folder / stated["labels"]))
+    bregma = stated.get("bregma_um")
+    return Atlas(
+        stated["name"],
+        labels,
+        template,
+        structures,
+        stated.get("citation", ""),
+        stated.get("licence", ""),
+        None if bregma is None else np.asarray(bregma, np.float64),
+        {"columns": " ".join(columns)},
+    )
+
+
+def _read_toml(folder: Path) -> dict[str, Any]:
+    file = folder / ATLAS_FILE
+    if not file.is_file():
+        raise LeadlineError(
+            f"holds no {ATLAS_FILE}" if folder.is_dir() else "the atlas folder is not there",
+            where=str(folder),
+            mend="Make the folder with `leadline atlas import`, or correct the path",
+        )
+    try:
+        stated = tomllib.loads(file.read_text("utf-8"))
+    except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
+        raise LeadlineError(f"is no valid TOML ({error})", where=str(file), mend="Correct that line") from error
+    faults = [
+        LeadlineError(f"unknown key {key!r}", where=str(file), mend=nearest(key, _KEYS).capitalize())
+        for key in stated.keys() - set(_KEYS)
+    ]
+    faults += [
+        LeadlineError(f"key {key!r} is missing", where=str(file), mend="Write it as text")
+        for key in _REQUIRED
+        if not isinstance(stated.get(key), str) or not stated[key]
+    ]
+    for key in ("voxel_um", "bregma_um"):
+        if key in stated and not _three_numbers(stated[key]):
+            faults.append(LeadlineError(f"{key} is {stated[key]!r}", where=str(file), mend="Write three numbers in um"))
+    for key in ("citation", "licence", "orientation"):
+        if not isinstance(stated.get(key, ""), str):
+            faults.append(LeadlineError(f"{key} is {stated[key]!r}", where=str(file), mend="Write it as text"))
+    if faults:
+        raise Faults(faults)
+    return stated
+
+
+def _three_numbers(value: Any) -> bool:
+    return (
+        isinstance(value, list)
+        and len(value) == 3
+        and all(isinstance(x, int | float) and not isinstance(x, bool) and np.isfinite(x) for x in value)
+    )
+
+
+def read_labels(path: Path, *, voxel_um: Sequence[float] | None, code: str | None) -> Volume:
+    """Read a label volume as uint32 in PIR, slab by slab.
+
+    Raises LeadlineError when an id is not a whole number from 0 to 2^32 - 1, or is stored as a float that may have
+    been rounded.
+    """
+    image = open_image(path)
+    voxel, letters = settle(image, voxel_um, code, said_in=ATLAS_FILE)
+    stored = volume_of(image.levels[0], voxel, letters)
+    pir = np.empty(tuple(int(n) for n in voxel_as_pir(stored.shape, letters)), np.uint32)
+    view = from_pir(pir, letters)
+    for slab in _slabs(stored):
+        view[slab] = exact_ids(stored.data[slab], path)
+    if not pir.any():
+        raise LeadlineError("holds no label: every voxel is 0", where=str(path), mend="Give the label volume")
+    return Volume(pir, voxel_as_pir(voxel, letters), "PIR")
+
+
+def read_template(path: Path, *, voxel_um: Sequence[float] | None, code: str | None) -> Volume:
+    """Read a template volume in PIR, of the type it is stored in."""
+    image = open_image(path)
+    voxel, letters = settle(image, voxel_um, code, said_in=ATLAS_FILE)
+    stored = volume_of(image.levels[0], voxel, letters)
+    pir = np.empty(tuple(int(n) for n in voxel_as_pir(stored.shape, letters)), stored.data.dtype)
+    view = from_pir(pir, letters)
+    for slab in _slabs(stored):
+        block = stored.data[slab]
+        if not np.isfinite(block).all():
+            raise LeadlineError("holds values that are not finite", where=str(path), mend="Replace them by 0")
+        view[slab] = block
+    if pir.min() == pir.max():
+        raise LeadlineError("every voxel is the same", where=str(path), mend="Give the template volume")
+    return Volume(pir, voxel_as_pir(voxel, letters), "PIR")
+
+
+def _slabs(volume: Volume) -> list[tuple[slice, slice, slice]]:
+    """Slabs across the axis in which the file is laid out, of about 16 million voxels."""
+    chunk = volume.chunk or (1, *volume.shape[1:])
+    axis = int(np.argmax(np.asarray(volume.shape) / np.asarray(chunk)))
+    n = volume.shape[axis]
+    step = max(1, _SLAB_VOXELS * n // int(np.prod(volume.shape, dtype=np.int64)))
+    step = max(chunk[axis], step // chunk[axis] * chunk[axis])
+    slabs = []
+    for start in range(0, n, step):
+        key = [slice(None)] * 3
+        key[axis] = slice(start, min(n, start + step))
+        slabs.append((key[0], key[1], key[2]))
+    return slabs
+
+
+def exact_ids(block: AnyArray, path: Path) -> AnyArray:
+    """Label ids as uint32, or an error when they are not exact."""
+    kind, where = block.dtype.kind, str(path)
+    if kind == "f":
+        limit = 2.0 ** (np.finfo(block.dtype).nmant + 1)
+        if not np.isfinite(block).all() or (block != np.rint(block)).any():
+            raise LeadlineError(
+                "holds label ids that are not whole numbers",
+                where=where,
+                mend="Give the label volume as unsigned integers, not resampled with smoothing",
+            )
+        if float(np.abs(block).max(initial=0)) >= limit:
+            raise LeadlineError(
+                f"stores label ids as {block.dtype}, which cannot hold ids above {limit:.0f} exactly",
+                where=where,
+                mend="Export the label volume as 32 bit unsigned integers",
+            )
+    low, high = block.min(initial=0), block.max(initial=0)
+    if low < 0 or high > LARGEST_ID:
+        raise LeadlineError(f"holds the label id {int(low if low < 0 else high)}", where=where,
+                            mend=f"Ids run from 0 (outside) to {LARGEST_ID}")  # fmt: skip
+    return block.astype(np.uint32, copy=False)
+
+
+def require_same_grid(labels: Volume, template: Volume, *, where: str) -> None:
+    """Raise LeadlineError unless both PIR volumes have the same shape and voxel size."""
+    same = np.abs(labels.voxel_um / template.voxel_um - 1.0) <= SAME_WITHIN
+    if labels.shape != template.shape or not same.all():
+        raise LeadlineError(
+            f"labels and template differ: laid out as PIR they have {labels.shape} voxels of {labels.voxel_um.tolist()}"
+            f" um and {template.shape} voxels of {template.voxel_um.tolist()} um",
+            where=where,
+            mend="Give both on one grid, in one orientation",
+        )
+
+
+def label_counts(labels: AnyArray) -> dict[int, int]:
+    """Voxels of each id, ascending; runs of equal labels are counted at once."""
+    counts: dict[int, int] = {}
+    for plane in labels:
+        flat = plane.ravel()
+        starts = np.concatenate([[0], np.flatnonzero(flat[1:] != flat[:-1]) + 1])
+        lengths = np.diff(np.append(starts, flat.size))
+        ids, which = np.unique(flat[starts], return_inverse=True)
+        for k, n in zip(ids.tolist(), np.bincount(which, lengths).tolist(), strict=True):
+            counts[k] = counts.get(k, 0) + int(n)
+    return dict(sorted(counts.items()))
+
+
+def require_rows(labels: Volume, structures: Structures, *, where: str) -> dict[int, int]:
+    """Count the voxels of each id; raise LeadlineError that lists the ids without a row."""
+    counts = label_counts(labels.array())
+    lost = {k: n for k, n in counts.items() if k not in structures}
+    if lost:
+        named = ", ".join(f"{k} ({n} voxels)" for k, n in list(lost.items())[:10])
+        raise LeadlineError(
+            f"{len(lost)} label{'s have' if len(lost) > 1 else ' has'} no row in the structure table: {named}"
+            + (", ..." if len(lost) > 10 else ""),
+            where=where,
+            mend="Add a row for each to structures.csv, or set these voxels to 0",
+        )
+    return counts
+
+
+def read_structures(path: Path) -> tuple[Structures, tuple[str, ...]]:
+    """Read ``structures.csv``: the tree, and which optional columns the file has. Unknown columns are let be.
+
+    Raises LeadlineError with all faults of the table at once.
+    """
+    if not path.is_file():
+        raise LeadlineError("is not there", where=str(path), mend="Name the structure table in atlas.toml")
+    try:
+        with path.open(newline="", encoding="utf-8-sig") as handle:
+            table = csv.DictReader(handle)
+            header = [name.strip() for name in table.fieldnames or ()]
+            table.fieldnames = header
+            lines = list(table)
+    except (UnicodeDecodeError, csv.Error) as error:
+        raise LeadlineError(f"is no CSV table in UTF-8 ({error})", where=str(path), mend="Save it again") from error
+    missing = [name for name in COLUMNS if name not in header]
+    if missing:
+        raise LeadlineError(f"lacks the column{'s' if len(missing) > 1 else ''} {', '.join(missing)}", where=str(path),
+                            mend="The columns are " + ", ".join(COLUMNS))  # fmt: skip
+    rows, faults = [], []
+    for number, line in enumerate(lines, start=2):
+        try:
+            rows.append(_structure(line, f"{path}, line {number}"))
+        except LeadlineError as fault:
+            faults.append(fault)
+    faults += _twice(rows, str(path))
+    if faults:
+        raise Faults(faults)
+    if not rows:
+        raise LeadlineError("has no rows", where=str(path), mend="Write one row for each structure")
+    return Structures(tuple(rows)), tuple(name for name in OPTIONAL_COLUMNS if name in header)
+
+
+def _structure(line: Mapping[str, str | None], where: str) -> Structure:
+    cell = {key: (value or "").strip() for key, value in line.items() if isinstance(value, str | None)}
+    tissue, coarse = cell.get("tissue") or "grey", (cell.get("coarse") or "false").lower()
+    if tissue not in TISSUES:
+        raise LeadlineError(f"tissue is {tissue!r}", where=where, mend="It is one of " + ", ".join(TISSUES))
+    if coarse not in ("true", "false"):
+        raise LeadlineError(f"coarse is {coarse!r}", where=where, mend="Write true or false")
+    if not cell["acronym"]:
+        raise LeadlineError("the acronym is empty", where=where, mend="Give every structure an acronym")
+    return Structure(
+        structure_id(cell["id"], "id", where),
+        cell["acronym"],
+        cell["name"] or cell["acronym"],
+        structure_id(cell["parent_id"], "parent_id", where) if cell["parent_id"] else None,
+        colour(cell["colour"], where),
+        cell.get("layer", ""),
+        coarse == "true",
+        tissue,
+    )
+
+
+def structure_id(text: str, column: str, where: str) -> int:
+    """A whole number from 1 to 2^32 - 1, exact."""
+    if not re.fullmatch(r"\d+", text) or not 1 <= int(text) <= LARGEST_ID:
+        empty = "; leave it empty at the root" if column == "parent_id" else ""
+        raise LeadlineError(
+            f"{column} is {text!r}", where=where, mend=f"Write a whole number from 1 to {LARGEST_ID}{empty}"
+        )
+    return int(text)
+
+
+def colour(text: str, where: str) -> str:
+    """'#rrggbb' from six hexadecimal digits with or without '#'; grey where empty."""
+    if not text:
+        return "#808080"
+    if not re.fullmatch(r"#?[0-9a-fA-F]{6}", text):
+        raise LeadlineError(f"colour is {text!r}", where=where, mend="Write six hexadecimal digits, e.g. '#3f8fd2'")
+    return "#" + text.removeprefix("#").lower()
+
+
+def _twice(rows: list[Structure], where: str) -> list[LeadlineError]:
+    faults, ids, acronyms = [], set[int](), dict[str, int]()
+    for row in rows:
+        if row.id in ids:
+            faults.append(LeadlineError(f"id {row.id} has two rows", where=where, mend="Give each structure one row"))
+        elif row.acronym in acronyms:
+            faults.append(
+                LeadlineError(
+                    f"acronym {row.acronym!r} names both id {acronyms[row.acronym]} and id {row.id}",
+                    where=where,
+                    mend="Give each structure an acronym of its own; results name regions by it",
+                )
+            )
+        ids.add(row.id)
+        acronyms.setdefault(row.acronym, row.id)
+    return faults
+
+
+def write_atlas(
+    folder: Path,
+    *,
+    name: str,
+    citation: str,
+    licence: str,
+    labels: AnyArray,
+    template: AnyArray,
+    voxel_um: Sequence[float] | FloatArray,
+    rows: Sequence[Structure],
+    bregma_um: Sequence[float] | None = None,
+) -> None:
+    """Write a whole atlas folder from PIR arrays; what stood there is replaced only when all is written."""
+    import nrrd
+    import tomli_w
+
+    voxel = [float(v) for v in voxel_um]
+    header = {
+        "space": "left-posterior-superior",
+        "space directions": np.array([[0.0, voxel[0], 0.0], [0.0, 0.0, -voxel[1]], [-voxel[2], 0.0, 0.0]]),
+        "space units": ["um", "um", "um"],
+        "encoding": "gzip",
+    }
+    stated: dict[str, Any] = {
+        "name": name,
+        "citation": citation,
+        "licence": licence,
+        "labels": "labels.nrrd",
+        "template": "template.nrrd",
+        "structures": "structures.csv",
+        "orientation": "PIR",
+        "voxel_um": voxel,
+    }
+    if bregma_um is not None:
+        stated["bregma_um"] = [float(v) for v in bregma_um]
+    with whole_folder(folder) as part:
+        nrrd.write(str(part / "labels.nrrd"), labels.astype(np.uint32, copy=False), header, compression_level=6)
+        nrrd.write(str(part / "template.nrrd"), template, header, compression_level=6)
+        write_structures(part / "structures.csv", rows)
+        (part / ATLAS_FILE).write_text(tomli_w.dumps(stated), "utf-8")
+
+
+def write_structures(path: Path, rows: Sequence[Structure]) -> None:
+    """Write ``structures.csv``."""
+    with path.open("w", newline="", encoding="utf-8") as handle:
+        table = csv.writer(handle, lineterminator="\n")
+        table.writerow((*COLUMNS, *OPTIONAL_COLUMNS))
+        for row in rows:
+            parent = "" if row.parent_id is None else row.parent_id
+            coarse = "true" if row.coarse else "false"
+            table.writerow((row.id, row.acronym, row.name, parent, row.colour, row.layer, coarse, row.tissue))

@@ -1,0 +1,291 @@
+"""NIfTI and NRRD: a header and one block of voxels, the first axis running fastest."""
+
+from __future__ import annotations
+
+import gzip
+import shutil
+import tempfile
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from leadline.base.errors import LeadlineError
+from leadline.io.images import READ_FAULTS, UNIT_UM, Image, Picked, letters_of, pick, unreadable, whole_level
+
+NIFTI_SUFFIXES = (".nii", ".nii.gz")
+NRRD_SUFFIXES = (".nrrd", ".nhdr")
+_SPACES = {"r": (0, 1), "l": (0, -1), "a": (1, 1), "p": (1, -1), "s": (2, 1), "i": (2, -1)}
+
+
+class Block:
+    """Voxels of one file as a memory map in Fortran order, made on first reading.
+
+    Compressed voxels are inflated into an unnamed temporary file, once, so that memory stays bounded.
+    ``slope``, ``shift`` : stored value to voxel value; with them the voxels are float32.
+    """
+
+    def __init__(
+        self,
+        path: Path,
+        dtype: Any,
+        shape: tuple[int, ...],
+        offset: int,
+        *,
+        compressed: bool,
+        slope: float = 1.0,
+        shift: float = 0.0,
+    ) -> None:
+        self.path, self.shape, self._stored, self._offset = path, shape, np.dtype(dtype), offset
+        self._compressed, self._slope, self._shift = compressed, slope, shift
+        self.dtype = np.dtype(np.float32) if self._scaled else self._stored
+        self._map: Any = None
+        self._require_length()
+
+    @property
+    def _scaled(self) -> bool:
+        return (self._slope, self._shift) != (1.0, 0.0)
+
+    @property
+    def _bytes(self) -> int:
+        return int(np.prod(self.shape, dtype=np.int64) * self._stored.itemsize)
+
+    def __getitem__(self, key: Any) -> Any:
+        block = self._mapped()[key]
+        return block * np.float32(self._slope) + np.float32(self._shift) if self._scaled else block
+
+    def _mapped(self) -> Any:
+        if self._map is None:
+            file: Any = self._inflate() if self._compressed else self.path
+            offset = 0 if self._compressed and self._nrrd else self._offset
+            self._map = np.memmap(file, self._stored, "r", offset, self.shape, order="F")
+        return self._map
+
+    @property
+    def _nrrd(self) -> bool:
+        """An NRRD header stands before the compressed voxels, a NIfTI header is compressed with them."""
+        return not self.path.name.lower().endswith(".nii.gz")
+
+    def _inflate(self) -> Any:
+        file = tempfile.TemporaryFile()  # noqa: SIM115 - lives as long as the memory map
+        with self.path.open("rb") as packed:
+            packed.seek(self._offset if self._nrrd else 0)
+            with gzip.open(packed) as voxels:
+                shutil.copyfileobj(voxels, file, 2**20)
+        file.flush()
+        self._require(file.tell() - (0 if self._nrrd else self._offset))
+        return file
+
+    def _require_length(self) -> None:
+        size = self.path.stat().st_size
+        if not self._compressed:
+            self._require(size - self._offset)
+            return
+        with self.path.open("rb") as packed:
+            packed.seek(max(0, size - 4))
+            length = int.from_bytes(packed.read(4), "little")
+        if length != (self._bytes + (0 if self._nrrd else self._offset)) % 2**32:
+            try:  # not what one whole gzip member ends with: several members, or cut short
+                self._mapped()
+            except READ_FAULTS as error:
+                raise error if isinstance(error, LeadlineError) else unreadable(self.path, error) from error
+
+    def _require(self, available: int) -> None:
+        if available < self._bytes:
+            raise LeadlineError(
+                f"is cut short: its header promises {self._bytes} bytes of voxels, {max(0, available)} are there",
+                where=str(self.path),
+                mend="Copy or export it again",
+            )
+
+
+def open_nifti(path: Path, channel: int) -> Image:
+    """Read the header of a NIfTI file; a fourth axis holds channels.
+
+    Size and orientation come from the affine, as nibabel reads it; they count as told only where ``xyzt_units`` names
+    a unit and a qform or sform code is set.
+    """
+    import nibabel
+    from nibabel.affines import voxel_sizes
+    from nibabel.filebasedimages import ImageFileError
+
+    try:
+        image: Any = nibabel.load(path)
+    except (ImageFileError, *READ_FAULTS) as error:
+        raise unreadable(path, error) from error
+    header = image.header
+    slope, shift = (np.nan_to_num(value, nan=default) for value, default in zip(
+        (image.dataobj.slope, image.dataobj.inter), (1.0, 0.0), strict=True))  # fmt: skip
+    shape = tuple(int(n) for n in image.shape)
+    block = Block(
+        path,
+        header.get_data_dtype(),
+        shape,
+        int(image.dataobj.offset),
+        compressed=path.name.lower().endswith(".gz"),
+        slope=float(slope),
+        shift=float(shift),
+    )
+    data = pick(block, _axes(shape, path), channel, path)
+    sizes = voxel_sizes(image.affine)
+    if not (np.isfinite(image.affine).all() and (sizes > 0).all()):
+        raise LeadlineError("its affine is not a proper one", where=str(path), mend="Write a qform or sform")
+    letters, notes = _nifti_letters(image, path)
+    a, b, c = (float(s) for s in sizes)
+    unit = {"mm": 1e3, "micron": 1.0, "meter": 1e6}.get(header.get_xyzt_units()[0])
+    return Image(
+        path,
+        (_level(data),),
+        (None, None, None) if unit is None else (a * unit, b * unit, c * unit),
+        letters,
+        (a, b, c) if unit is None else None,
+        notes,
+    )
+
+
+def _nifti_letters(image: Any, path: Path) -> tuple[Any, tuple[str, ...]]:
+    _, s_code = image.get_sform(coded=True)
+    qform, q_code = image.get_qform(coded=True)
+    if s_code <= 0 and q_code <= 0:
+        return (None, None, None), ()
+    letters, notes = letters_of(np.asarray(image.affine)[:3, :3], path)
+    if s_code > 0 and q_code > 0:
+        other, _ = letters_of(np.asarray(qform)[:3, :3], path)
+        if other != letters:
+            raise LeadlineError(
+                f"its sform says {''.join(letters)}, its qform says {''.join(other)}",
+                where=str(path),
+                mend="Write the same orientation into both",
+            )
+    return letters, notes
+
+
+def _axes(shape: tuple[int, ...], path: Path) -> str:
+    """Names of NIfTI axes: after the three of space, the one that is longer than 1 holds channels."""
+    extra = ["c" if n > 1 else "t" for n in shape[3:]]
+    if extra.count("c") > 1:
+        raise LeadlineError(f"has too many axes: {shape}", where=str(path), mend="Keep one axis of channels")
+    if extra and "c" not in extra:
+        extra[-1] = "c"
+    names = iter("tuvw")
+    return ("xyz" + "".join(name if name == "c" else next(names) for name in extra))[: len(shape)]
+
+
+def open_nrrd(path: Path, channel: int) -> Image:
+    """Read the header of an NRRD file; a non-spatial axis holds channels.
+
+    The size counts as told only where ``space units`` or ``units`` name a unit, the orientation only where ``space``
+    names an anatomical frame.
+    """
+    import nrrd
+
+    try:
+        with path.open("rb") as handle:
+            header = nrrd.read_header(handle)
+            offset = handle.tell()
+    except (nrrd.NRRDError, *READ_FAULTS) as error:
+        raise unreadable(path, error) from error
+    shape = tuple(int(n) for n in header["sizes"])
+    space = _spatial(header, len(shape), path)
+    axes, names = "", iter("xyz")
+    for is_space in space:
+        axes += next(names) if is_space else "c"
+    data = pick(_nrrd_block(path, header, shape, offset), axes, channel, path)
+    if axes.count("c") > 1:
+        raise LeadlineError(f"has two non-spatial axes: {shape}", where=str(path), mend="Keep one axis of channels")
+    voxel, unitless = _nrrd_sizes(header, space)
+    letters, notes = _nrrd_letters(header, space, path)
+    return Image(path, (_level(data),), voxel, letters, unitless, notes)
+
+
+def _spatial(header: Any, n_axes: int, path: Path) -> list[bool]:
+    """Which axes are of space: those with a direction, else those whose kind says so, else all of three."""
+    directions = header.get("space directions")
+    if directions is not None:
+        space = [row is not None and bool(np.isfinite(np.asarray(row, float)).all()) for row in directions]
+    elif header.get("kinds") is not None and n_axes > 3:
+        space = [kind.lower() in ("domain", "space") for kind in header["kinds"]]
+    else:
+        space = [True] * n_axes
+    if sum(space) != 3 or len(space) != n_axes:
+        raise LeadlineError(
+            f"has {n_axes} axes, {sum(space)} of them of space",
+            where=str(path),
+            mend="Give three axes a direction in 'space directions', and 'none' to the axis of channels",
+        )
+    kinds = header.get("kinds") or []
+    if any("color" in kind.lower() or kind.lower() == "complex" for kind in kinds):
+        raise LeadlineError("holds colour or complex voxels", where=str(path), mend="Export one grey channel")
+    return space
+
+
+def _nrrd_block(path: Path, header: Any, shape: tuple[int, ...], offset: int) -> Any:
+    import nrrd
+
+    encoding = str(header.get("encoding", "raw")).lower()
+    name = header.get("data file") or header.get("datafile")
+    file = path if name is None else path.parent / str(name)
+    if name is not None and not file.is_file():
+        raise LeadlineError(f"its voxels are to be in {name!r}, which is no file", where=str(path),
+                            mend="Keep header and data file together; lists of data files are not read")  # fmt: skip
+    plain = not header.get("byte skip") and not header.get("line skip")
+    if encoding in ("raw", "gzip", "gz") and plain:
+        types = {
+            "uchar": "u1", "uint8": "u1", "unsigned char": "u1", "uint8_t": "u1",
+            "signed char": "i1", "int8": "i1", "int8_t": "i1",
+            "ushort": "u2", "uint16": "u2", "unsigned short": "u2", "uint16_t": "u2", "unsigned short int": "u2",
+            "short": "i2", "int16": "i2", "int16_t": "i2", "short int": "i2", "signed short": "i2",
+            "uint": "u4", "uint32": "u4", "unsigned int": "u4", "uint32_t": "u4",
+            "int": "i4", "int32": "i4", "int32_t": "i4", "signed int": "i4",
+            "ulonglong": "u8", "uint64": "u8", "uint64_t": "u8", "unsigned long long": "u8",
+            "longlong": "i8", "int64": "i8", "int64_t": "i8", "long long": "i8",
+            "float": "f4", "double": "f8",
+        }  # fmt: skip
+        if str(header["type"]) not in types:
+            raise LeadlineError(
+                f"voxels are of type {header['type']!r}", where=str(path), mend="Export one grey channel"
+            )
+        order = ">" if str(header.get("endian", "little")) == "big" else "<"
+        dtype = np.dtype(order + types[str(header["type"])])
+        return Block(file, dtype, shape, offset if name is None else 0, compressed=encoding != "raw")
+    try:
+        return nrrd.read(str(path), index_order="F")[0]
+    except (nrrd.NRRDError, *READ_FAULTS) as error:
+        raise unreadable(path, error) from error
+
+
+def _nrrd_sizes(header: Any, space: list[bool]) -> tuple[Any, Any]:
+    keep = np.flatnonzero(space)
+    if header.get("space directions") is not None:
+        rows = [header["space directions"][k] for k in keep]
+        sizes = [float(np.linalg.norm(row)) for row in rows]
+        units = header.get("space units")
+    elif header.get("spacings") is not None:
+        sizes = [float(header["spacings"][k]) for k in keep]
+        units = header.get("units")
+        units = None if units is None else [units[k] for k in keep]
+    else:
+        return (None, None, None), None
+    if not (np.isfinite(sizes).all() and min(sizes) > 0):
+        return (None, None, None), None
+    known = [UNIT_UM.get(str(unit).strip().lower()) for unit in units] if units is not None else [None]
+    if len(known) != 3 or None in known:
+        return (None, None, None), tuple(sizes)
+    return tuple(size * (unit or 1.0) for size, unit in zip(sizes, known, strict=True)), None
+
+
+def _nrrd_letters(header: Any, space: list[bool], path: Path) -> tuple[Any, tuple[str, ...]]:
+    words = str(header.get("space", "")).lower()
+    initials = words if len(words) == 3 else "".join(word[0] for word in words.split("-") if word and word != "time")
+    if header.get("space directions") is None or len(initials) != 3 or any(i not in _SPACES for i in initials):
+        return (None, None, None), ()
+    directions = np.array([header["space directions"][k] for k in np.flatnonzero(space)], float)
+    ras = np.zeros((3, 3))
+    for column, initial in enumerate(initials):
+        axis, sign = _SPACES[initial]
+        ras[axis] = sign * directions[:, column]
+    return letters_of(ras, path)
+
+
+def _level(data: Picked) -> Any:
+    return whole_level(data, (data.shape[0], data.shape[1], 1))
