@@ -11,13 +11,13 @@ import numpy as np
 from leadline.base.errors import LeadlineError
 from leadline.base.progress import SILENT, Progress
 from leadline.model.brain import Brain, Penetration, RecordingSource
-from leadline.model.probe import NOT_RECORDED, Probe
 from leadline.model.recording import Recording
 
 if TYPE_CHECKING:
     from leadline.anchoring.knowledge import Knowledge
     from leadline.model.anchor import Anchor
     from leadline.model.atlas import Atlas
+    from leadline.model.probe import Probe
     from leadline.model.recording import Traces
     from leadline.model.volume import Stack, Volume
 
@@ -77,18 +77,17 @@ class Bench:
         return reduce_to(stack.fitting(target), target, progress=self.progress)
 
     def probe(self, penetration: Penetration) -> Probe:
-        """The probe of a penetration, wired to its recording; contacts that were not recorded left out."""
-        from leadline.io.probes import read_probe, wire
+        """The probe of a penetration, wired to its recordings; contacts that were not recorded left out."""
+        from leadline.io.probes import is_wired, read_probe, wire
 
         probe = read_probe(
             penetration.probe, tip_offset_um=penetration.tip_offset_um, probe_index=penetration.probe_index
         )
-        with_traces = [source for source in penetration.recordings if source.lfp is not None]
-        if with_traces:
-            traces = self.traces(with_traces[0])
-            return wire(probe, traces.n_channels, with_traces[0].skip_channels).recorded
-        if (probe.channel == NOT_RECORDED).all():
-            return wire(probe, len(probe.contact_id), ()).recorded
+        for source in penetration.recordings:
+            if source.lfp is not None:
+                probe = wire(probe, self.traces(source).n_channels, source.skip_channels)
+        if not is_wired(probe):
+            probe = wire(probe, len(probe.contact_id))
         return probe.recorded
 
     def traces(self, source: RecordingSource) -> Traces:

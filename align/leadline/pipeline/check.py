@@ -73,28 +73,21 @@ class _Look:
                     mend="device_channel_indices is -1 everywhere; write the trace of each contact",
                 )
             )
-        self._trace_numbers(penetration, probe, about)
+        self._left_out(penetration, probe, about)
         self.hear(lambda: self.bench.recordings(penetration, probe), about)
         if penetration.points is not None:
             self._points(penetration, probe, about)
         if penetration.shank_toward and len(probe.shanks) == 1:
             self.notes.append(f"{about}: shank_toward says nothing of a probe with one shank")
 
-    def _trace_numbers(self, penetration: Penetration, probe: Probe, about: str) -> None:
+    def _left_out(self, penetration: Penetration, probe: Probe, about: str) -> None:
+        from leadline.io.probes import in_words, unreferenced
+
         for source in penetration.recordings:
-            if source.lfp is None:
-                continue
-            lfp = source
-            traces = self.hear(lambda lfp=lfp: self.bench.traces(lfp), about)  # type: ignore[misc]
-            if traces is not None and probe.channel.size and probe.channel.max() >= traces.n_channels:
-                self.faults.append(
-                    LeadlineError(
-                        f"the probe names trace {int(probe.channel.max())}, the recording has traces 0 to "
-                        f"{traces.n_channels - 1}",
-                        where=f"{about}: {source.lfp}",
-                        mend="Correct n_channels or device_channel_indices",
-                    )
-                )
+            if source.lfp is not None:
+                idle = unreferenced(probe, self.bench.traces(source).n_channels, source.skip_channels)
+                if idle.size:
+                    self.notes.append(f"{about}: traces {in_words(idle)} of {source.lfp.name} are no contact, left out")
 
     def _points(self, penetration: Penetration, probe: Probe, about: str) -> None:
         from leadline.io.points import read_hand_points
