@@ -1,0 +1,294 @@
+"""Every dye track of a stack, without a hand: ridges, lines, centre lines, ends, and what speaks for each."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import partial
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from leadline.base.arrays import BoolArray, FloatArray
+from leadline.base.progress import SILENT, Progress
+from leadline.model.settings import TraceSettings
+from leadline.model.track import Trace
+from leadline.model.volume import Volume
+from leadline.tracing import centre, ends, path
+from leadline.tracing.autofluorescence import Foretold, excess, excess_at, foretell
+from leadline.tracing.grid import check_frame, reduced
+from leadline.tracing.ridge import Ridges, find_ridges
+from leadline.tracing.tissue import Tissue, depth_on, find_tissue
+
+if TYPE_CHECKING:
+    from collections.abc import Iterator
+
+DETECT_UM = 27.0
+SEED = 20
+SKIN_UM = 120.0
+THRESHOLD = 0.55
+MAX_POINTS = 30_000
+MIN_SCORE = 6.0
+MAX_TRIES = 150
+EXTEND_UM = 500.0
+SAME_UM = 45.0
+LOOKS = 4
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Scene:
+    """What every candidate is judged in."""
+
+    dye: Volume
+    background: Volume
+    tissue: Tissue
+    foretold: Foretold
+    settings: TraceSettings
+
+    @property
+    def voxel_um(self) -> float:
+        """Typical voxel size of what is sampled."""
+        return float(np.cbrt(self.dye.voxel_um.prod()))
+
+    def excess(self, points_um: FloatArray) -> FloatArray:
+        """Dye in noise sd at points; NaN outside the volume."""
+        return excess_at(self.dye, self.background, self.foretold, points_um)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Candidate:
+    """A curve with what was measured along it; ``fault`` is empty for a track."""
+
+    curve_um: FloatArray
+    sigma_um: float
+    run: tuple[int, int]
+    profile: ends.DyeProfile
+    measures: dict[str, float]
+    fault: str = ""
+
+
+def trace(
+    dye: Volume, background: Volume, *, settings: TraceSettings | None = None, progress: Progress = SILENT
+) -> tuple[Trace, ...]:
+    """Find every dye track: smooth curves from the brain surface to the end of the dye, in stack um.
+
+    Parameters
+    ----------
+    dye, background : two channels of one stack, any voxel size, any orientation; may be read lazily.
+    settings : ``sensitivity`` scales what counts as faint, ``min_length_um`` what counts as short.
+    progress : told of each step.
+
+    Returns
+    -------
+    Traces, the clearest first.
+
+    Raises
+    ------
+    LeadlineError
+        When the channels do not lie on the same voxels or the background is empty.
+    """
+    settings = settings or TraceSettings()
+    check_frame(dye, background)
+    progress.begin("tracing", 4)
+    coarse_dye, coarse_background = reduced(dye, DETECT_UM), reduced(background, DETECT_UM)
+    tissue = find_tissue(coarse_background)
+    depth = depth_on(tissue, coarse_dye)
+    progress.step()
+    foretold = foretell(coarse_dye, coarse_background, depth > 0)
+    image = excess(coarse_dye, coarse_background, foretold)
+    del coarse_background, coarse_dye
+    progress.step()
+    ridges = _ridges(image, depth > SKIN_UM, settings.sensitivity)
+    del image, depth
+    progress.step()
+    scene = Scene(dye, background, tissue, foretold, settings)
+    kept = _candidates(scene, ridges)
+    kept = _second_look(scene, kept)
+    found = [_finish(scene, item) for item in kept]
+    progress.step()
+    return tuple(sorted(found, key=lambda t: -t.contrast * t.length_um))
+
+
+def _ridges(image: Volume, inside: BoolArray, sensitivity: float) -> Ridges:
+    voxel = float(image.voxel_um.max())
+    scales = (max(30.0, voxel), max(50.0, 1.5 * voxel))
+    ridges = find_ridges(image, inside, scales, THRESHOLD / sensitivity)
+    if len(ridges) > MAX_POINTS:
+        ridges = ridges.take(np.sort(np.argsort(-ridges.strength)[:MAX_POINTS]))
+    return ridges
+
+
+def _candidates(scene: Scene, ridges: Ridges) -> list[Candidate]:
+    """Take the best line, look closely, keep or drop it, take its points away, and so on until lines are poor."""
+    kept: list[Candidate] = []
+    if len(ridges) < 10:
+        return kept
+    alive = np.ones(len(ridges), bool)
+    lines = path.draw_lines(ridges, np.random.default_rng(SEED))
+    for row, run in _best_first(lines, ridges, alive):
+        rough = path.bend(lines.origin_um[row], lines.way[row], run, ridges, alive)
+        item = examine(scene, rough)
+        if not item.fault and not any(_same(item, other) for other in kept):
+            kept.append(item)
+        spent = path.near_curve(ridges.points_um, ridges.axes, item.curve_um, max(50.0, scene.voxel_um * 1.5), 0.95)
+        spent |= path.near_curve(ridges.points_um, ridges.axes, rough, 60.0, 0.95) if item.fault else False
+        alive &= ~spent
+        if not spent.any():
+            break
+    return kept
+
+
+def _best_first(lines: path.Lines, ridges: Ridges, alive: BoolArray) -> Iterator[tuple[int, FloatArray]]:
+    """Lines by their present score. Scores only fall as points are taken away, so the old ones are upper bounds."""
+    run = lines.run.copy()
+    fresh = np.ones(len(run), bool)
+    for _ in range(MAX_TRIES):
+        while True:
+            best = int(np.argmax(run[:, 0])) if len(run) else -1
+            if best < 0 or run[best, 0] < MIN_SCORE:
+                return
+            if fresh[best]:
+                break
+            stale = np.flatnonzero(~fresh & (run[:, 0] >= MIN_SCORE))
+            stale = stale[np.argsort(-run[stale, 0])[:64]]
+            run[stale] = path.score(lines.origin_um[stale], lines.way[stale], ridges, alive)
+            fresh[stale] = True
+        yield best, run[best].copy()
+        fresh[:] = False
+
+
+def examine(scene: Scene, rough_um: FloatArray, others: tuple[Candidate, ...] = ()) -> Candidate:
+    """Refine a rough curve in sub-voxel centring, find its run of dye, and judge it."""
+    curve, sigma = centre.even(rough_um), 30.0
+    pixel = max(12.0, scene.voxel_um / 2)
+    n = len(curve)
+    run = (0, n - 1)
+    for look in range(LOOKS):
+        curve = path.resampled(curve[run[0] : run[1] + 1], centre.STATION_UM, before_um=EXTEND_UM, after_um=EXTEND_UM)
+        stations = centre.look(curve, partial(_excess_without, scene, others), pixel)
+        centres = centre.fit_gaussians(stations, voxel_um=scene.voxel_um, sigma_um=sigma)
+        profile = ends.dye_profile(stations, sigma)
+        off = np.linalg.norm(centres.offset_um, axis=1)
+        run = ends.dye_run(profile, (off > max(35.0, scene.voxel_um)) if look else np.zeros(len(curve), bool))
+        depth = scene.tissue.depth_at(curve)
+        counts = np.zeros(len(curve), bool)
+        counts[run[0] : run[1] + 1] = True
+        counts &= (depth > SKIN_UM) & (profile.amount > profile.noise)
+        if counts.sum() < 8:
+            return Candidate(rough_um, sigma, run, profile, {}, "no dye along it")
+        good = counts & (centres.error_um < 20)
+        if good.sum() > 5:
+            sigma = float(np.clip(np.median(centres.sigma_um[good]), 12.0, 80.0))
+        curve, gap = centre.join(stations, centres, counts)
+    item = Candidate(curve, sigma, run, profile, _measures(scene, curve, run, profile, gap, centres, counts))
+    return _judged(scene, item)
+
+
+def _excess_without(scene: Scene, others: tuple[Candidate, ...], points_um: FloatArray) -> FloatArray:
+    """Dye at points, less what the other tracks put there."""
+    from scipy.spatial import cKDTree
+
+    value = scene.excess(points_um)
+    for other in others:
+        curve = other.curve_um[other.run[0] : other.run[1] + 1]
+        amount = other.profile.amount[other.run[0] : other.run[1] + 1]
+        gap, at = cKDTree(curve).query(points_um, distance_upper_bound=4 * other.sigma_um)
+        near = np.isfinite(gap)
+        value[near] -= amount[at[near]].clip(0) * np.exp(-(gap[near] ** 2) / (2 * other.sigma_um**2))
+    return value
+
+
+def _measures(
+    scene: Scene,
+    curve: FloatArray,
+    run: tuple[int, int],
+    profile: ends.DyeProfile,
+    gap: FloatArray,
+    centres: centre.Centres,
+    counts: BoolArray,
+) -> dict[str, float]:
+    inside = slice(run[0], run[1] + 1)
+    depth = scene.tissue.depth_at(curve[inside])
+    z = profile.clearness[inside]
+    length = (run[1] - run[0]) * centre.STATION_UM
+    turn = np.diff(curve[inside], axis=0)
+    turn /= np.linalg.norm(turn, axis=1)[:, None]
+    chord = (curve[run[1]] - curve[run[0]]) / max(np.linalg.norm(curve[run[1]] - curve[run[0]]), 1e-9)
+    sure = counts & (profile.amount > 3 * profile.noise)
+    gaps = gap[sure] if sure.any() else gap[counts]
+    return {
+        "length": length,
+        "top": float(min(depth[0], depth[-1])),
+        "gain": float(abs(depth[-1] - depth[0]) / max(length, 1.0)),
+        "contrast": float(np.median(z)),
+        "coverage": float((z > 2).mean()),
+        "residual": float(np.sqrt(np.median(gaps**2))),
+        "bend_deg": float(np.degrees(np.arccos(np.clip(np.quantile(turn @ chord, 0.05), -1, 1)))),
+        "sigma": float(np.median(centres.sigma_um[counts])),
+    }
+
+
+def _judged(scene: Scene, item: Candidate) -> Candidate:
+    m = item.measures
+    faint = 2.5 / scene.settings.sensitivity
+    checks = (
+        (m["length"] < scene.settings.min_length_um, "shorter than a track"),
+        (m["coverage"] < 0.5, "dye on less than half of it"),
+        (m["top"] > 600.0, "does not come near the brain surface"),
+        (m["residual"] > max(16.0, 0.4 * scene.voxel_um), "winds about its smooth curve"),
+        (m["gain"] < 0.2, "runs along the surface"),
+        (m["contrast"] < faint, "fainter than noise allows"),
+        (m["bend_deg"] > 25.0, "bends more than a shank can"),
+    )
+    fault = next((text for wrong, text in checks if wrong), "")
+    return Candidate(item.curve_um, item.sigma_um, item.run, item.profile, m, fault)
+
+
+def _same(a: Candidate, b: Candidate) -> bool:
+    """Whether two candidates are one track: most of the shorter lies on the other."""
+    from scipy.spatial import cKDTree
+
+    one, two = (c.curve_um[c.run[0] : c.run[1] + 1] for c in (a, b))
+    if len(one) > len(two):
+        one, two = two, one
+    gap, _ = cKDTree(two).query(one)
+    return float((gap < SAME_UM).mean()) > 0.5
+
+
+def _second_look(scene: Scene, kept: list[Candidate]) -> list[Candidate]:
+    """Look at tracks with near neighbours again, the neighbours' dye taken away."""
+    from scipy.spatial import cKDTree
+
+    out = []
+    for i, item in enumerate(kept):
+        tree = cKDTree(item.curve_um)
+        others = tuple(other for k, other in enumerate(kept) if k != i and tree.query(other.curve_um)[0].min() < 330.0)
+        again = examine(scene, item.curve_um[item.run[0] : item.run[1] + 1], others) if others else item
+        out.append(item if again.fault else again)
+    return out
+
+
+def _finish(scene: Scene, item: Candidate) -> Trace:
+    """Cut a candidate to its ends and state their doubt."""
+    curve, profile = item.curve_um, item.profile
+    first, last = item.run
+    depth = scene.tissue.depth_at(curve)
+    if depth[first] > depth[last]:  # the entry comes first
+        curve, depth = curve[::-1], depth[::-1]
+        profile = profile.reversed()
+        first, last = len(curve) - 1 - last, len(curve) - 1 - first
+    step = centre.STATION_UM
+    end, end_sd = ends.dye_end(profile, (first, last), step, item.sigma_um)
+    long = path.resampled(curve[first : int(np.ceil(end)) + 1], step, before_um=1200.0)
+    shift = len(long) - len(curve[first : int(np.ceil(end)) + 1]) - first
+    outside = np.flatnonzero(scene.tissue.depth_at(long[: len(long) // 2]) <= 0)
+    surface = int(outside[-1]) if len(outside) else first + shift
+    level = scene.tissue.level
+    enter = ends.entry(long, step, surface, scene.background, level)
+    if enter is None:
+        enter = ends.Entry(surface * step, 150.0)
+    s = np.arange(len(long)) * step
+    stop = min((end + shift) * step, s[-1])
+    at = np.append(np.arange(enter.at_um, stop - step / 2, step), stop)
+    points = np.column_stack([np.interp(at, s, long[:, k]) for k in range(3)])
+    m = item.measures
+    return Trace(points, np.full(len(points), item.sigma_um), enter.sd_um, end_sd, m["contrast"], m["coverage"])

@@ -1,0 +1,118 @@
+"""Volumes brought to a coarser grid slab by slab, and read again where a curve runs."""
+
+from __future__ import annotations
+
+from itertools import product
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from leadline.base.errors import LeadlineError
+from leadline.model.volume import Volume
+
+if TYPE_CHECKING:
+    from collections.abc import Iterator
+
+    from leadline.base.arrays import Float32Array, FloatArray
+
+SLAB_VOXELS = 8_000_000
+READ_VOXELS = 4_000_000
+
+
+def check_frame(dye: Volume, background: Volume) -> None:
+    """Raise LeadlineError unless both channels lie on the same voxels."""
+    same = (
+        dye.shape == background.shape
+        and np.allclose(dye.voxel_um, background.voxel_um)
+        and np.allclose(dye.origin_um, background.origin_um)
+    )
+    if not same:
+        raise LeadlineError(
+            f"the dye channel has shape {dye.shape} and voxels {dye.voxel_um.tolist()} um, "
+            f"the background channel {background.shape} and {background.voxel_um.tolist()} um",
+            where="tracing",
+            mend="Give two channels of the same stack",
+        )
+
+
+def reduced(volume: Volume, target_um: float) -> Volume:
+    """The volume in memory as float32, averaged over whole blocks of about ``target_um``.
+
+    Each axis is averaged over ``max(1, round(target_um / voxel))`` voxels; what is left over at the far end is
+    dropped. Reads slabs along the first axis, so that a volume on disk is never held whole.
+    """
+    factor = np.maximum(1, np.round(target_um / volume.voxel_um)).astype(int)
+    factor = np.minimum(factor, volume.shape)
+    shape = tuple(int(n) for n in np.asarray(volume.shape) // factor)
+    out = np.empty(shape, np.float32)
+    rows = max(1, int(SLAB_VOXELS // (factor[0] * volume.shape[1] * volume.shape[2])))
+    for start in range(0, shape[0], rows):
+        stop = min(start + rows, shape[0])
+        slab = np.asarray(
+            volume.data[start * factor[0] : stop * factor[0], : shape[1] * factor[1], : shape[2] * factor[2]]
+        )
+        out[start:stop] = _block_mean(slab, factor)
+    origin = volume.origin_um + (factor - 1) / 2 * volume.voxel_um
+    return Volume(out, factor * volume.voxel_um, volume.code, origin)
+
+
+def _block_mean(slab: np.ndarray, factor: np.ndarray) -> Float32Array:
+    """Mean over blocks, one axis after the other; values that are not finite count as 0."""
+    values = np.nan_to_num(slab.astype(np.float32, copy=False), nan=0.0, posinf=0.0, neginf=0.0)
+    for axis in (2, 1, 0):
+        n = int(factor[axis])
+        if n > 1:
+            shape = (*values.shape[:axis], values.shape[axis] // n, n, *values.shape[axis + 1 :])
+            values = values.reshape(shape).mean(axis=axis + 1, dtype=np.float32)
+    return values
+
+
+def sampled(volume: Volume, points_um: FloatArray) -> FloatArray:
+    """Values at points ``(n, 3)`` by linear interpolation; NaN outside.
+
+    Linear weights keep the first moment of what they sample, so centres are not drawn to the voxel grid. Points are
+    read in runs whose bounding boxes stay small: a curve through a large volume costs only its corridor.
+    """
+    from scipy.ndimage import map_coordinates
+
+    index = volume.index(points_um)
+    last = np.asarray(volume.shape) - 1
+    out = np.full(len(index), np.nan)
+    for rows in _runs(index, last):
+        part = index[rows]
+        inside = ((part >= -0.5) & (part <= last + 0.5)).all(axis=1)
+        if not inside.any():
+            continue
+        lo = np.clip(np.floor(part[inside].min(axis=0)).astype(int), 0, last)
+        hi = np.clip(np.ceil(part[inside].max(axis=0)).astype(int) + 1, lo + 1, last + 1)
+        block = np.asarray(volume.data[lo[0] : hi[0], lo[1] : hi[1], lo[2] : hi[2]]).astype(np.float32, copy=False)
+        values = map_coordinates(
+            np.nan_to_num(block, nan=0.0, posinf=0.0, neginf=0.0), (part[inside] - lo).T, order=1, mode="nearest"
+        )
+        out[np.arange(rows.start, rows.stop)[inside]] = values
+    return out
+
+
+def _runs(index: FloatArray, last: FloatArray) -> Iterator[slice]:
+    """Split rows in halves until the box around each run is small."""
+    stack = [slice(0, len(index))]
+    while stack:
+        rows = stack.pop()
+        part = np.clip(index[rows], 0, last)
+        size = np.prod(np.ptp(part, axis=0) + 2) if len(part) else 0.0
+        if size > READ_VOXELS and rows.stop - rows.start > 1:
+            middle = (rows.start + rows.stop) // 2
+            stack += [slice(middle, rows.stop), slice(rows.start, middle)]
+        elif len(part):
+            yield rows
+
+
+def blocks(shape: tuple[int, ...], size: int, margin: tuple[int, ...]) -> Iterator[tuple[tuple[slice, ...], ...]]:
+    """Blocks of ``size`` voxels with a margin: pairs of (block with margin, the block itself inside it)."""
+    for starts in product(*(range(0, n, size) for n in shape)):
+        stops = [min(a + size, n) for a, n in zip(starts, shape, strict=True)]
+        lo = [max(a - m, 0) for a, m in zip(starts, margin, strict=True)]
+        hi = [min(b + m, n) for b, m, n in zip(stops, margin, shape, strict=True)]
+        outer = tuple(slice(a, b) for a, b in zip(lo, hi, strict=True))
+        inner = tuple(slice(a - o, b - o) for a, b, o in zip(starts, stops, lo, strict=True))
+        yield outer, inner
