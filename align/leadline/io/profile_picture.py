@@ -1,0 +1,187 @@
+"""One picture per penetration: what was recorded, by depth, the tip at the bottom."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from leadline.base.atomic import whole_file
+from leadline.model.profile import FEATURE_BY_NAME
+
+if TYPE_CHECKING:
+    from collections.abc import Sequence
+    from pathlib import Path
+
+    from leadline.base.arrays import AnyArray, FloatArray
+    from leadline.model.profile import Profile
+    from leadline.model.spectra import Spectra
+
+# Okabe & Ito's colours for all kinds of colour vision (jfly.uni-koeln.de, 2008; from memory)
+BLUE, ORANGE, GREEN, RED, SKY, PINK = "#0072B2", "#E69F00", "#009E73", "#D55E00", "#56B4E9", "#CC79A7"
+LANES: tuple[tuple[str, tuple[tuple[str, str], ...]], ...] = (
+    (
+        "band power\n(dB from its median)",
+        (
+            ("delta_power_db", BLUE),
+            ("theta_power_db", GREEN),
+            ("gamma_power_db", ORANGE),
+            ("ripple_power_db", RED),
+            ("high_frequency_power_db", PINK),
+        ),
+    ),
+    (
+        "likeness",
+        (("theta_coherence", GREEN), ("neighbour_correlation", BLUE), ("neighbour_coherence", ORANGE)),
+    ),
+    ("units per 100 µm", (("unit_density_per_100um", BLUE),)),
+    ("spikes/s per 100 µm", (("spike_rate_hz", RED), ("evoked_rate_hz", SKY))),
+    ("spike amplitude (µV)", (("spike_amplitude_uv", PINK),)),
+)
+GAP = 2.5  # times the usual pitch; a wider step between rows is left white
+FLAG_COLOUR = "#999999"
+
+
+def draw_profiles(
+    path: Path, profile: Profile, spectra: Spectra, boundaries: Sequence[tuple[int, float, str]] | None = None
+) -> None:
+    """Draw a penetration: spectrum, current sources, band powers, likeness of rows and units against tip distance.
+
+    Parameters
+    ----------
+    path : PNG to write.
+    profile, spectra : of one penetration, the same rows.
+    boundaries : shank, tip distance of a border, and the name of what lies below it.
+    """
+    from matplotlib.backends.backend_agg import FigureCanvasAgg
+    from matplotlib.figure import Figure
+
+    shanks = np.unique(profile.shank)
+    lanes = [lane for lane in LANES if any(_has(profile, name) for name, _ in lane[1])]
+    maps = 1 + bool(spectra.time_s.size)
+    widths = [2.2] * maps + [1.5] * len(lanes)
+    figure = Figure(figsize=(sum(widths) * 1.05 + 1.2, 0.9 + 6.2 * len(shanks)), dpi=110, layout="constrained")
+    FigureCanvasAgg(figure)
+    axes = figure.subplots(len(shanks), len(widths), squeeze=False, sharey="row", gridspec_kw={"width_ratios": widths})
+    for line, shank in zip(axes, shanks, strict=True):
+        rows = np.flatnonzero(profile.shank == shank)
+        _draw_spectrum(line[0], profile.tip_distance_um[rows], spectra, rows)
+        if maps == 2:
+            _draw_sources(line[1], profile.tip_distance_um[rows], spectra, rows)
+        for axis, (title, features) in zip(line[maps:], lanes, strict=True):
+            _draw_lane(axis, profile, rows, title, features)
+        _finish(line, profile, rows, [b for b in boundaries or () if b[0] == shank])
+        label = "tip distance (µm)" if len(shanks) == 1 else f"shank {shank}: tip distance (µm)"
+        line[0].set_ylabel(label)
+    figure.suptitle(f"Penetration {profile.penetration}", fontsize=11)
+    with whole_file(path) as part:
+        figure.savefig(part, format="png", metadata={"Software": None})
+
+
+def _has(profile: Profile, name: str) -> bool:
+    return name in profile.features and bool(np.isfinite(profile.features[name]).any())
+
+
+def _blocks(tip_um: FloatArray) -> list[slice]:
+    """Rows in stretches without gaps."""
+    steps = np.diff(tip_um)
+    cuts = np.flatnonzero(steps > GAP * np.median(steps)) + 1 if steps.size else np.zeros(0, int)
+    edges = [0, *cuts.tolist(), len(tip_um)]
+    return [slice(a, b) for a, b in zip(edges[:-1], edges[1:], strict=True)]
+
+
+def _edges(tip_um: FloatArray) -> FloatArray:
+    """Edges ``(n + 1,)`` of the strips that stand for rows."""
+    if len(tip_um) == 1:
+        return np.array([tip_um[0] - 10.0, tip_um[0] + 10.0])
+    middle = (tip_um[:-1] + tip_um[1:]) / 2
+    return np.concatenate([[2 * tip_um[0] - middle[0]], middle, [2 * tip_um[-1] - middle[-1]]])
+
+
+def _draw_map(axis: Any, across: FloatArray, tip_um: FloatArray, values: AnyArray, limit: float, colours: str) -> Any:
+    image = None
+    for block in _blocks(tip_um):
+        image = axis.pcolormesh(
+            across,
+            _edges(tip_um[block]),
+            np.ma.masked_invalid(values[block]),
+            cmap=colours,
+            vmin=-limit,
+            vmax=limit,
+            rasterized=True,
+        )
+    return image
+
+
+def _draw_spectrum(axis: Any, tip_um: FloatArray, spectra: Spectra, rows: AnyArray) -> None:
+    """Power at each frequency against its own median over depth, so that every frequency shows its pattern."""
+    power = spectra.power_uv2_per_hz[rows].astype(float)
+    known = np.isfinite(power).any(axis=0)
+    if known.any():
+        decibels = 10 * np.log10(np.maximum(power[:, known], 1e-9))
+        contrast = decibels - np.nanmedian(decibels, axis=0)
+        frequency = spectra.frequency_hz[known]
+        edges = np.concatenate([[frequency[0] / 2 ** (1 / 16)], frequency * 2 ** (1 / 16)])
+        limit = max(3.0, float(np.nanpercentile(np.abs(contrast), 98)))
+        image = _draw_map(axis, edges, tip_um, contrast, limit, "PuOr_r")
+        axis.figure.colorbar(image, ax=axis, location="bottom", aspect=14, pad=0.01, label="dB from the median")
+    axis.set_xscale("log")
+    axis.set_title("power", fontsize=9)
+    axis.set_xlabel("frequency (Hz)")
+
+
+def _draw_sources(axis: Any, tip_um: FloatArray, spectra: Spectra, rows: AnyArray) -> None:
+    density = spectra.csd_ua_per_mm3[rows].astype(float)
+    if np.isfinite(density).any():
+        limit = max(1e-6, float(np.nanpercentile(np.abs(density), 99.5)))
+        step = float(spectra.time_s[1] - spectra.time_s[0]) * 1e3
+        edges = np.append(spectra.time_s * 1e3, spectra.time_s[-1] * 1e3 + step) - step / 2
+        image = _draw_map(axis, edges, tip_um, density, limit, "RdBu_r")
+        axis.figure.colorbar(
+            image, ax=axis, location="bottom", aspect=14, pad=0.01, label="source density (µA/mm³)\nblue: sink"
+        )
+    axis.axvline(0, color="black", lw=0.6)
+    axis.set_title(f"after {spectra.event_kind or 'events'}", fontsize=9)
+    axis.set_xlabel("time (ms)")
+
+
+def _draw_lane(axis: Any, profile: Profile, rows: AnyArray, title: str, features: tuple[tuple[str, str], ...]) -> None:
+    tip_um = profile.tip_distance_um[rows]
+    for name, colour in features:
+        if not _has(profile, name):
+            continue
+        values = profile.features[name][rows]
+        if name.endswith("_db"):
+            values = values - np.nanmedian(values) if np.isfinite(values).any() else values
+        for number, block in enumerate(_blocks(tip_um)):
+            words = FEATURE_BY_NAME[name].words.replace("correlation between neighbours", "neighbours' correlation")
+            label = words.replace(" power", "") if number == 0 and len(features) > 1 else None
+            axis.plot(values[block], tip_um[block], color=colour, lw=1.2, label=label)
+    axis.set_title(title, fontsize=9)
+    if len(features) > 1:
+        axis.legend(fontsize=6.5, loc="upper center", bbox_to_anchor=(0.5, -0.06), frameon=False, handlelength=1.2)
+
+
+def _finish(line: AnyArray, profile: Profile, rows: AnyArray, boundaries: list[tuple[int, float, str]]) -> None:
+    """Grey bands over flagged rows, borders across all lanes, quiet axes."""
+    tip_um = profile.tip_distance_um[rows]
+    half = float(np.median(np.diff(tip_um))) / 2 if len(tip_um) > 1 else 10.0
+    for axis in line:
+        axis.tick_params(labelsize=7)
+        axis.spines[["top", "right"]].set_visible(False)
+        axis.set_ylim(tip_um[0] - 2 * half, tip_um[-1] + 2 * half)
+        for i in rows:
+            if profile.flags[int(i)]:
+                at = profile.tip_distance_um[int(i)]
+                axis.axhspan(at - half, at + half, color=FLAG_COLOUR, alpha=0.3, lw=0)
+        for _, border_um, _ in boundaries:
+            axis.axhline(border_um, color="black", lw=0.5, ls=(0, (4, 3)))
+    for _, border_um, name in boundaries:
+        line[-1].annotate(
+            name,
+            (1.02, border_um),
+            xycoords=("axes fraction", "data"),
+            fontsize=6.5,
+            va="top",
+            annotation_clip=True,
+        )

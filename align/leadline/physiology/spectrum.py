@@ -1,0 +1,214 @@
+"""Power spectra and cross-spectra of all contacts in one streamed pass."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from leadline.base.arrays import AnyArray, BoolArray, FloatArray, IntArray
+from leadline.base.progress import SILENT, Progress
+
+if TYPE_CHECKING:
+    from collections.abc import Mapping
+
+    from leadline.model.recording import Traces
+    from leadline.model.settings import ProfileSettings
+    from leadline.physiology.chunks import Plan
+
+GROUP = 64  # channels transformed at once: their spectra stay in the cache
+CROSS_BINS = 32  # bins of a band that enter the cross-spectra; neighbouring bins say much the same
+CROSS_SEGMENTS = 100
+USABLE = 0.45  # of the sampling rate; above it anti-alias filters have taken the power away
+LINE_EXCESS = 4.0  # 6 dB above its surroundings, and narrow, is pickup
+SCAN_SEGMENTS = 24
+SCAN_CHANNELS = 16
+ARTEFACT_DB = 10.0
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class FieldStatistics:
+    """What the pass keeps of a recording's fields.
+
+    ``frequency_hz`` : (F,). ``power_uv2_per_hz`` : (C, F) one-sided density, mean over segments. ``line`` : (F,) bins
+    that hold mains or other narrow pickup. ``cross_uv2`` : band -> (C, C) complex cross-spectrum summed over the band
+    (``[i, j]`` is the mean of ``X_i conj(X_j)``). ``seconds`` : time that the segments kept cover. ``artefacts`` :
+    share of the segments left out for an artefact.
+    """
+
+    frequency_hz: FloatArray
+    power_uv2_per_hz: FloatArray
+    line: BoolArray
+    cross_uv2: Mapping[str, AnyArray]
+    seconds: float
+    artefacts: float
+
+
+def bands_hz(settings: ProfileSettings) -> dict[str, tuple[float, float]]:
+    """The bands of the settings by the names of their features."""
+    return {
+        "delta": settings.delta_hz,
+        "theta": settings.theta_hz,
+        "gamma": settings.gamma_hz,
+        "ripple": settings.ripple_hz,
+        "high_frequency": settings.high_frequency_hz,
+    }
+
+
+CROSSED = ("delta", "theta", "gamma", "ripple")
+
+
+def field_statistics(
+    traces: Traces,
+    channels: IntArray,
+    plan: Plan,
+    settings: ProfileSettings,
+    *,
+    progress: Progress = SILENT,
+) -> FieldStatistics:
+    """Read the segments of ``plan`` once and average their spectra [1]_.
+
+    Segments overlap by half, lose their mean and take a periodic Hann window, as in ``scipy.signal.welch``; the window
+    is applied to the spectra, not to the samples. Segments whose broadband level stands far above the recording's own
+    are left out.
+
+    References
+    ----------
+    .. [1] Welch (1967), IEEE Trans. Audio Electroacoust. 15, 70, doi:10.1109/TAU.1967.1161901.
+    """
+    frequency = np.asarray(np.fft.rfftfreq(plan.segment, 1.0 / traces.sampling_hz), float)
+    median_power, threshold = _scan(traces, channels, plan)
+    line = line_bins(frequency, median_power, settings.mains_hz)
+    sums = _Sums(len(channels), frequency, line, settings, plan)
+    progress.begin("reading fields", plan.n_segments)
+    for start, stop, count in plan.blocks():
+        samples = np.ascontiguousarray(traces.read_uv(start, stop, channels).T)
+        segments = np.lib.stride_tricks.sliding_window_view(samples, plan.segment, axis=1)[:, :: plan.hop]
+        sums.add(segments, _levels(segments) <= threshold)
+        progress.step(count)
+    return sums.result(traces.sampling_hz)
+
+
+class _Sums:
+    """Running sums of one pass."""
+
+    def __init__(
+        self, n_channels: int, frequency_hz: FloatArray, line: BoolArray, settings: ProfileSettings, plan: Plan
+    ) -> None:
+        self.frequency_hz, self.line, self.plan = frequency_hz, line, plan
+        self.power = np.zeros((n_channels, frequency_hz.size))
+        self.kept = self.seen = self.crossed = 0
+        self.every = max(2, -(-plan.n_segments // CROSS_SEGMENTS))
+        self.bins: dict[str, IntArray] = {}
+        self.weight: dict[str, float] = {}
+        top = USABLE * 2 * frequency_hz[-1]
+        for name, (low, high) in bands_hz(settings).items():
+            inside = np.flatnonzero((frequency_hz >= low) & (frequency_hz <= min(high, top)) & ~line)
+            inside = inside[(inside > 0) & (inside < frequency_hz.size - 1)]
+            if name in CROSSED and inside.size and high <= top:
+                self.bins[name] = inside[:: max(1, inside.size // CROSS_BINS)]
+                self.weight[name] = inside.size / self.bins[name].size
+        self.cross = {name: np.zeros((n_channels, n_channels), np.complex128) for name in self.bins}
+
+    def add(self, segments: AnyArray, kept: BoolArray) -> None:
+        """Add the segments ``(C, S, N)`` that are kept."""
+        from scipy.fft import rfft
+
+        from leadline.physiology._kernels import add_hann_power
+
+        chosen = np.flatnonzero(kept & ((self.seen + np.arange(kept.size)) % self.every == 0))
+        parts: dict[str, list[AnyArray]] = {name: [] for name in self.bins}
+        for first in range(0, len(segments), GROUP):
+            spectrum = rfft(segments[first : first + GROUP], axis=-1)
+            power = np.zeros((len(spectrum), self.frequency_hz.size), np.float32)
+            add_hann_power(spectrum.view(np.float32), kept, power)
+            self.power[first : first + GROUP] += power
+            if chosen.size:
+                for name, bins in self.bins.items():
+                    parts[name].append(_hann(spectrum[:, chosen], bins))
+        for name, pieces in parts.items():
+            if pieces:
+                values = np.concatenate(pieces).reshape(len(segments), -1)
+                self.cross[name] += values @ values.conj().T
+        self.seen += kept.size
+        self.kept += int(kept.sum())
+        self.crossed += chosen.size
+
+    def result(self, sampling_hz: float) -> FieldStatistics:
+        """Means in uV^2 and uV^2/Hz."""
+        density = 2.0 / (sampling_hz * 0.375 * self.plan.segment)  # the squares of a periodic Hann window sum to 3/8 N
+        power = self.power * density / max(self.kept, 1)
+        power[:, [0, -1]] /= 2.0
+        step = float(self.frequency_hz[1])
+        cross = {
+            name: total * (density * step * self.weight[name] / max(self.crossed, 1))
+            for name, total in self.cross.items()
+        }
+        seconds = (self.kept + min(self.kept, 1)) * self.plan.hop / sampling_hz
+        return FieldStatistics(self.frequency_hz, power, self.line, cross, seconds, 1.0 - self.kept / max(self.seen, 1))
+
+
+def _hann(spectrum: AnyArray, bins: IntArray) -> AnyArray:
+    return 0.5 * spectrum[..., bins] - 0.25 * (spectrum[..., bins - 1] + spectrum[..., bins + 1])
+
+
+def _levels(segments: AnyArray) -> FloatArray:
+    """Broadband level ``(S,)`` in dB of each segment: median over some contacts of the power of its differences."""
+    some = segments[:: max(1, len(segments) // 16)]
+    power = np.square(np.diff(some, axis=-1)).mean(axis=-1)
+    return np.asarray(10.0 * np.log10(np.median(power, axis=0) + 1e-12), float)
+
+
+def _scan(traces: Traces, channels: IntArray, plan: Plan) -> tuple[FloatArray, float]:
+    """Typical spectrum ``(F,)`` and artefact threshold in dB, from a few segments of a few contacts spread evenly."""
+    from scipy.fft import rfft
+
+    some = channels[:: max(1, len(channels) // SCAN_CHANNELS)]
+    starts = np.concatenate([start + plan.hop * np.arange(n) for start, _, n in plan.blocks()])
+    starts = starts[:: max(1, len(starts) // SCAN_SEGMENTS)]
+    power, level = [], []
+    for start in starts.tolist():
+        samples = np.ascontiguousarray(traces.read_uv(start, start + plan.segment, some).T)
+        spectrum = rfft(samples, axis=-1)
+        spectrum[:, 0] = 0.0
+        inner = np.arange(1, spectrum.shape[1] - 1)
+        power.append(np.log(np.square(np.abs(_hann(spectrum, inner))) + 1e-12).mean(axis=0))
+        level.append(_levels(samples[:, None])[0])
+    spread = 1.4826 * float(np.median(np.abs(np.array(level) - np.median(level))))
+    threshold = float(np.median(level)) + max(ARTEFACT_DB, 6.0 * spread)
+    return np.pad(np.exp(np.mean(power, axis=0)), 1, mode="edge"), threshold
+
+
+def line_bins(frequency_hz: FloatArray, power: FloatArray, mains_hz: float) -> BoolArray:
+    """Bins ``(F,)`` of mains harmonics, and of any line at least 6 dB above its surroundings and narrower than 2 Hz."""
+    from scipy.ndimage import binary_dilation, median_filter
+
+    step = float(frequency_hz[1])
+    reach = 1.0 + 2.0 * step
+    line = np.zeros(frequency_hz.size, bool)
+    if mains_hz > 0:
+        nearest = np.maximum(np.round(frequency_hz / mains_hz), 1.0) * mains_hz
+        line |= np.abs(frequency_hz - nearest) <= reach
+    width = 2 * int(np.ceil(6.0 / step)) + 1
+    logs = np.log(power + 1e-20)
+    excess = logs - median_filter(logs, width, mode="nearest")
+    narrow = (excess > np.log(LINE_EXCESS)) & (frequency_hz > 15.0)
+    line |= binary_dilation(narrow, iterations=int(np.ceil(reach / step)))
+    return line
+
+
+def band_power_db(statistics: FieldStatistics, band_hz: tuple[float, float], *, floor_uv2: float = 1e-6) -> FloatArray:
+    """Power ``(C,)`` in a band, dB re 1 uV^2; bins with mains are left out and replaced by the band's mean.
+
+    NaN where less than half of the band lies below 0.45 of the sampling rate, or no clean bin lies in it.
+    """
+    frequency = statistics.frequency_hz
+    top = min(band_hz[1], USABLE * 2 * float(frequency[-1]))
+    if top - band_hz[0] < 0.5 * (band_hz[1] - band_hz[0]):
+        return np.full(len(statistics.power_uv2_per_hz), np.nan)
+    inside = (frequency >= band_hz[0]) & (frequency <= top) & (frequency > 0) & ~statistics.line
+    if not inside.any():
+        return np.full(len(statistics.power_uv2_per_hz), np.nan)
+    density = statistics.power_uv2_per_hz[:, inside].mean(axis=1)
+    return np.asarray(10.0 * np.log10(np.maximum(density * (top - band_hz[0]), floor_uv2)), float)
