@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import csv
-import re
 import tomllib
 from typing import TYPE_CHECKING, Any
 
@@ -14,18 +12,16 @@ from leadline.base.atomic import whole_folder
 from leadline.base.errors import Faults, LeadlineError, nearest
 from leadline.io.images import SAME_WITHIN, settle, volume_of
 from leadline.io.stacks import open_image
-from leadline.model.atlas import TISSUES, Atlas, Structure, Structures
+from leadline.io.structure_tables import LARGEST_ID, read_structures, write_structures
+from leadline.model.atlas import Atlas, Structure, Structures
 from leadline.model.frames import from_pir, voxel_as_pir
 from leadline.model.volume import Volume
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping, Sequence
+    from collections.abc import Sequence
     from pathlib import Path
 
-LARGEST_ID = 2**32 - 1
 ATLAS_FILE = "atlas.toml"
-COLUMNS = ("id", "acronym", "name", "parent_id", "colour")
-OPTIONAL_COLUMNS = ("layer", "coarse", "tissue")
 _REQUIRED = ("name", "labels", "template", "structures")
 _KEYS = (*_REQUIRED, "citation", "licence", "orientation", "voxel_um", "bregma_um")
 _SLAB_VOXELS = 2**24
@@ -99,14 +95,14 @@ def _three_numbers(value: Any) -> bool:
     )
 
 
-def read_labels(path: Path, *, voxel_um: Sequence[float] | None, code: str | None) -> Volume:
+def read_labels(path: Path, *, voxel_um: Sequence[float] | None, code: str | None, said_in: str = ATLAS_FILE) -> Volume:
     """Read a label volume as uint32 in PIR, slab by slab.
 
     Raises LeadlineError when an id is not a whole number from 0 to 2^32 - 1, or is stored as a float that may have
     been rounded.
     """
     image = open_image(path)
-    voxel, letters = settle(image, voxel_um, code, said_in=ATLAS_FILE)
+    voxel, letters = settle(image, voxel_um, code, said_in=said_in)
     stored = volume_of(image.levels[0], voxel, letters)
     pir = np.empty(tuple(int(n) for n in voxel_as_pir(stored.shape, letters)), np.uint32)
     view = from_pir(pir, letters)
@@ -117,10 +113,12 @@ def read_labels(path: Path, *, voxel_um: Sequence[float] | None, code: str | Non
     return Volume(pir, voxel_as_pir(voxel, letters), "PIR")
 
 
-def read_template(path: Path, *, voxel_um: Sequence[float] | None, code: str | None) -> Volume:
+def read_template(
+    path: Path, *, voxel_um: Sequence[float] | None, code: str | None, said_in: str = ATLAS_FILE
+) -> Volume:
     """Read a template volume in PIR, of the type it is stored in."""
     image = open_image(path)
-    voxel, letters = settle(image, voxel_um, code, said_in=ATLAS_FILE)
+    voxel, letters = settle(image, voxel_um, code, said_in=said_in)
     stored = volume_of(image.levels[0], voxel, letters)
     pir = np.empty(tuple(int(n) for n in voxel_as_pir(stored.shape, letters)), stored.data.dtype)
     view = from_pir(pir, letters)
@@ -198,7 +196,9 @@ def label_counts(labels: AnyArray) -> dict[int, int]:
     return dict(sorted(counts.items()))
 
 
-def require_rows(labels: Volume, structures: Structures, *, where: str) -> dict[int, int]:
+def require_rows(
+    labels: Volume, structures: Structures, *, where: str, table: str = "structures.csv"
+) -> dict[int, int]:
     """Count the voxels of each id; raise LeadlineError that lists the ids without a row."""
     counts = label_counts(labels.array())
     lost = {k: n for k, n in counts.items() if k not in structures}
@@ -208,100 +208,9 @@ def require_rows(labels: Volume, structures: Structures, *, where: str) -> dict[
             f"{len(lost)} label{'s have' if len(lost) > 1 else ' has'} no row in the structure table: {named}"
             + (", ..." if len(lost) > 10 else ""),
             where=where,
-            mend="Add a row for each to structures.csv, or set these voxels to 0",
+            mend=f"Add a row for each to {table}, or set these voxels to 0",
         )
     return counts
-
-
-def read_structures(path: Path) -> tuple[Structures, tuple[str, ...]]:
-    """Read ``structures.csv``: the tree, and which optional columns the file has. Unknown columns are let be.
-
-    Raises LeadlineError with all faults of the table at once.
-    """
-    if not path.is_file():
-        raise LeadlineError("is not there", where=str(path), mend="Name the structure table in atlas.toml")
-    try:
-        with path.open(newline="", encoding="utf-8-sig") as handle:
-            table = csv.DictReader(handle)
-            header = [name.strip() for name in table.fieldnames or ()]
-            table.fieldnames = header
-            lines = list(table)
-    except (UnicodeDecodeError, csv.Error) as error:
-        raise LeadlineError(f"is no CSV table in UTF-8 ({error})", where=str(path), mend="Save it again") from error
-    missing = [name for name in COLUMNS if name not in header]
-    if missing:
-        raise LeadlineError(f"lacks the column{'s' if len(missing) > 1 else ''} {', '.join(missing)}", where=str(path),
-                            mend="The columns are " + ", ".join(COLUMNS))  # fmt: skip
-    rows, faults = [], []
-    for number, line in enumerate(lines, start=2):
-        try:
-            rows.append(_structure(line, f"{path}, line {number}"))
-        except LeadlineError as fault:
-            faults.append(fault)
-    faults += _twice(rows, str(path))
-    if faults:
-        raise Faults(faults)
-    if not rows:
-        raise LeadlineError("has no rows", where=str(path), mend="Write one row for each structure")
-    return Structures(tuple(rows)), tuple(name for name in OPTIONAL_COLUMNS if name in header)
-
-
-def _structure(line: Mapping[str, str | None], where: str) -> Structure:
-    cell = {key: (value or "").strip() for key, value in line.items() if isinstance(value, str | None)}
-    tissue, coarse = cell.get("tissue") or "grey", (cell.get("coarse") or "false").lower()
-    if tissue not in TISSUES:
-        raise LeadlineError(f"tissue is {tissue!r}", where=where, mend="It is one of " + ", ".join(TISSUES))
-    if coarse not in ("true", "false"):
-        raise LeadlineError(f"coarse is {coarse!r}", where=where, mend="Write true or false")
-    if not cell["acronym"]:
-        raise LeadlineError("the acronym is empty", where=where, mend="Give every structure an acronym")
-    return Structure(
-        structure_id(cell["id"], "id", where),
-        cell["acronym"],
-        cell["name"] or cell["acronym"],
-        structure_id(cell["parent_id"], "parent_id", where) if cell["parent_id"] else None,
-        colour(cell["colour"], where),
-        cell.get("layer", ""),
-        coarse == "true",
-        tissue,
-    )
-
-
-def structure_id(text: str, column: str, where: str) -> int:
-    """A whole number from 1 to 2^32 - 1, exact."""
-    if not re.fullmatch(r"\d+", text) or not 1 <= int(text) <= LARGEST_ID:
-        empty = "; leave it empty at the root" if column == "parent_id" else ""
-        raise LeadlineError(
-            f"{column} is {text!r}", where=where, mend=f"Write a whole number from 1 to {LARGEST_ID}{empty}"
-        )
-    return int(text)
-
-
-def colour(text: str, where: str) -> str:
-    """'#rrggbb' from six hexadecimal digits with or without '#'; grey where empty."""
-    if not text:
-        return "#808080"
-    if not re.fullmatch(r"#?[0-9a-fA-F]{6}", text):
-        raise LeadlineError(f"colour is {text!r}", where=where, mend="Write six hexadecimal digits, e.g. '#3f8fd2'")
-    return "#" + text.removeprefix("#").lower()
-
-
-def _twice(rows: list[Structure], where: str) -> list[LeadlineError]:
-    faults, ids, acronyms = [], set[int](), dict[str, int]()
-    for row in rows:
-        if row.id in ids:
-            faults.append(LeadlineError(f"id {row.id} has two rows", where=where, mend="Give each structure one row"))
-        elif row.acronym in acronyms:
-            faults.append(
-                LeadlineError(
-                    f"acronym {row.acronym!r} names both id {acronyms[row.acronym]} and id {row.id}",
-                    where=where,
-                    mend="Give each structure an acronym of its own; results name regions by it",
-                )
-            )
-        ids.add(row.id)
-        acronyms.setdefault(row.acronym, row.id)
-    return faults
 
 
 def write_atlas(
@@ -344,14 +253,3 @@ def write_atlas(
         nrrd.write(str(part / "template.nrrd"), template, header, compression_level=6)
         write_structures(part / "structures.csv", rows)
         (part / ATLAS_FILE).write_text(tomli_w.dumps(stated), "utf-8")
-
-
-def write_structures(path: Path, rows: Sequence[Structure]) -> None:
-    """Write ``structures.csv``."""
-    with path.open("w", newline="", encoding="utf-8") as handle:
-        table = csv.writer(handle, lineterminator="\n")
-        table.writerow((*COLUMNS, *OPTIONAL_COLUMNS))
-        for row in rows:
-            parent = "" if row.parent_id is None else row.parent_id
-            coarse = "true" if row.coarse else "false"
-            table.writerow((row.id, row.acronym, row.name, parent, row.colour, row.layer, coarse, row.tissue))
