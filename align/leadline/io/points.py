@@ -7,15 +7,19 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from leadline.base.errors import LeadlineError
-from leadline.io.tables import numbers, read_csv
-from leadline.model.frames import STACK_COLUMNS
+from leadline.io.tables import csv_rows, csv_text, numbers, read_csv
+from leadline.model.frames import ATLAS_COLUMNS, STACK_COLUMNS
 
 if TYPE_CHECKING:
+    from collections.abc import Mapping
     from pathlib import Path
 
     import pandas as pd
 
     from leadline.base.arrays import FloatArray
+
+TRACK_EDIT_COLUMNS = ("penetration", "shank", *STACK_COLUMNS, "order")
+PAIR_COLUMNS = (*STACK_COLUMNS, *ATLAS_COLUMNS)
 
 
 def read_hand_points(path: Path) -> dict[int, FloatArray]:
@@ -43,3 +47,64 @@ def read_points(path: Path, columns: tuple[str, ...]) -> tuple[pd.DataFrame, Flo
     """A table with all the user's columns, and its points ``(n, 3)`` from ``columns``."""
     table = read_csv(path, columns, what="points")
     return table, numbers(table, columns, path)
+
+
+def track_edits_text(edits: Mapping[tuple[str, int], FloatArray]) -> str:
+    """The content of ``track_edits.csv``: tracks drawn by hand, (penetration, shank) -> ``(n, 3)`` stack um."""
+    rows = [
+        (penetration, shank, *(float(c) for c in point), order)
+        for (penetration, shank), points in edits.items()
+        for order, point in enumerate(points)
+    ]
+    return csv_text(TRACK_EDIT_COLUMNS, rows)
+
+
+def read_track_edits(path: Path) -> dict[tuple[str, int], FloatArray]:
+    """Tracks drawn by hand, from entry to tip; none where there is no such file.
+
+    Raises LeadlineError when a column is missing, a cell is no number, or a track has fewer than two points.
+    """
+    if not path.is_file():
+        return {}
+    found: dict[tuple[str, int], list[tuple[int, list[float]]]] = {}
+    for number, row in enumerate(csv_rows(path, TRACK_EDIT_COLUMNS, what="hand-drawn tracks"), 2):
+        try:
+            point = [float(row[c]) for c in STACK_COLUMNS]
+            key = (row["penetration"], int(row["shank"]))
+            found.setdefault(key, []).append((int(row["order"]), point))
+        except (ValueError, TypeError) as error:
+            raise LeadlineError(
+                f"is no point of a track ({error})", where=f"{path}, line {number}", mend="Correct or remove that line"
+            ) from error
+    tracks = {key: np.array([point for _, point in sorted(rows)]) for key, rows in found.items()}
+    for (penetration, shank), points in tracks.items():
+        if len(points) < 2 or not np.isfinite(points).all():
+            raise LeadlineError(
+                f"the track of {penetration}, shank {shank} needs at least two finite points",
+                where=str(path),
+                mend="Add points or remove the track",
+            )
+    return tracks
+
+
+def pairs_text(stack_um: FloatArray, atlas_um: FloatArray) -> str:
+    """The content of ``registration_pairs.csv``: places named twice, ``(n, 3)`` in stack and in atlas um."""
+    rows = [tuple(map(float, (*s, *a))) for s, a in zip(stack_um, atlas_um, strict=True)]
+    return csv_text(PAIR_COLUMNS, rows)
+
+
+def read_pairs(path: Path) -> tuple[FloatArray, FloatArray]:
+    """Places named twice, ``(n, 3)`` in stack and in atlas um; none where there is no such file.
+
+    Raises LeadlineError when a column is missing or a cell is no number.
+    """
+    if not path.is_file():
+        return np.zeros((0, 3)), np.zeros((0, 3))
+    try:
+        rows = [
+            [float(row[c]) for c in PAIR_COLUMNS] for row in csv_rows(path, PAIR_COLUMNS, what="registration pairs")
+        ]
+    except (ValueError, TypeError) as error:
+        raise LeadlineError(f"holds no pair of points ({error})", where=str(path), mend="Correct that line") from error
+    values = np.array(rows, float).reshape(-1, 6)
+    return values[:, :3], values[:, 3:]

@@ -77,13 +77,13 @@ def numbers(table: pd.DataFrame, columns: Sequence[str], path: Path) -> Any:
 
 def anchors_text(anchors: Iterable[Anchor]) -> str:
     """The content of ``anchors.csv``."""
-    return _csv_text(ANCHOR_COLUMNS, ([getattr(a, c) for c in ANCHOR_COLUMNS] for a in anchors))
+    return csv_text(ANCHOR_COLUMNS, ([getattr(a, c) for c in ANCHOR_COLUMNS] for a in anchors))
 
 
 def suggestions_text(suggestions: Iterable[Suggestion]) -> str:
     """The content of ``suggestions.csv``."""
     rows = ([*(getattr(s.anchor, c) for c in ANCHOR_COLUMNS), s.support, s.against] for s in suggestions)
-    return _csv_text((*ANCHOR_COLUMNS, "support", "against"), rows)
+    return csv_text((*ANCHOR_COLUMNS, "support", "against"), rows)
 
 
 def read_anchors(path: Path) -> tuple[Anchor, ...]:
@@ -102,30 +102,39 @@ def read_suggestions(path: Path) -> tuple[Suggestion, ...]:
 def _anchor_rows(path: Path) -> list[tuple[Anchor, dict[str, str]]]:
     if not path.is_file():
         return []
+    rows = csv_rows(path, ANCHOR_COLUMNS[:4], what="anchors")
+    return [(_anchor(row, f"{path}, line {n}"), row) for n, row in enumerate(rows, 2)]
+
+
+def csv_rows(path: Path, needed: Sequence[str], *, what: str) -> list[dict[str, str]]:
+    """Rows of a CSV table that Leadline wrote and people may edit, every cell as text, formula guards taken off.
+
+    Raises LeadlineError when the file is no CSV or a ``needed`` column is missing.
+    """
     try:
         reader = csv.DictReader(io.StringIO(path.read_text(encoding="utf-8-sig")), strict=True)
         rows = list(reader)
     except (csv.Error, UnicodeDecodeError) as error:
         raise LeadlineError(f"cannot be read as CSV ({error})", where=str(path), mend="Mend or delete it") from error
-    missing = [c for c in ANCHOR_COLUMNS[:4] if rows and c not in (reader.fieldnames or ())]
+    missing = [c for c in needed if rows and c not in (reader.fieldnames or ())]
     if missing:
         raise LeadlineError(
-            f"column '{missing[0]}' is missing", where=str(path), mend=f"Columns are {', '.join(ANCHOR_COLUMNS)}"
+            f"column '{missing[0]}' is missing", where=str(path), mend=f"{what} need the columns {', '.join(needed)}"
         )
-    return [(_anchor(row, f"{path}, line {n}"), row) for n, row in enumerate(rows, 2)]
+    return [{key: _unharmed(cell) for key, cell in row.items() if key is not None} for row in rows]
 
 
 def _anchor(row: dict[str, str], where: str) -> Anchor:
     try:
         return Anchor(
-            (row["penetration"] or "").removeprefix("'"),
+            row["penetration"] or "",
             int(row["shank"]),
             float(row["tip_distance_um"]),
             float(row["track_depth_um"]),
             float(row.get("sd_um") or 40.0),
-            _unharmed(row.get("landmark")),
+            row.get("landmark") or "",
             row.get("source") or "user",
-            _unharmed(row.get("note")),
+            row.get("note") or "",
         )
     except LeadlineError as error:
         raise LeadlineError(error.what, where=where, mend=error.mend) from error
@@ -140,7 +149,8 @@ def write_json(value: Mapping[str, Any], path: Path) -> None:
     write_text(path, json.dumps(value, indent=2, ensure_ascii=False, allow_nan=False) + "\n")
 
 
-def _csv_text(columns: Sequence[str], rows: Iterable[Sequence[object]]) -> str:
+def csv_text(columns: Sequence[str], rows: Iterable[Sequence[object]]) -> str:
+    """A CSV table as text; numbers as they are, so that reading gives the same bits."""
     buffer = io.StringIO()
     writer = csv.writer(buffer, lineterminator="\n")
     writer.writerow(columns)
