@@ -100,11 +100,9 @@ def read_pairs(path: Path) -> tuple[FloatArray, FloatArray]:
     """
     if not path.is_file():
         return np.zeros((0, 3)), np.zeros((0, 3))
+    table = csv_rows(path, PAIR_COLUMNS, what="registration pairs")
     try:
-        rows = [
-            [float(row[c]) for c in PAIR_COLUMNS] for row in csv_rows(path, PAIR_COLUMNS, what="registration pairs")
-        ]
+        values = np.array([[float(row[c]) for c in PAIR_COLUMNS] for row in table]).reshape(-1, 6)
     except (ValueError, TypeError) as error:
         raise LeadlineError(f"holds no pair of points ({error})", where=str(path), mend="Correct that line") from error
-    values = np.array(rows, float).reshape(-1, 6)
     return values[:, :3], values[:, 3:]
