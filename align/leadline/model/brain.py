@@ -79,3 +79,8 @@ class Brain:
     def cache(self) -> Path:
         """Where intermediate results and the record of what has been done are kept."""
         return self.folder / ".leadline"
+
+    @property
+    def track_edits(self) -> Path:
+        """Tracks drawn or corrected on the screen; they stand above the dye and above ``points``."""
+        return self.folder / "track_edits.csv"

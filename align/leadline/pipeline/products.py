@@ -15,7 +15,7 @@ from leadline.model.track import Track
 from leadline.model.transform import Registration
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping, Sequence
+    from collections.abc import Sequence
     from pathlib import Path
 
     from leadline.model.brain import Brain
@@ -127,7 +127,7 @@ class ProfileFiles:
         return self.table, self.picture, self.spectra
 
 
-def write_tracks(brain: Brain, tracks: Sequence[Track], missing: Mapping[str, str]) -> None:
+def write_tracks(brain: Brain, tracks: Sequence[Track], missing: Sequence[str]) -> None:
     """Write ``tracks.csv``, and beside the cache what the table has no column for."""
     import pandas as pd
 
@@ -159,17 +159,17 @@ def write_tracks(brain: Brain, tracks: Sequence[Track], missing: Mapping[str, st
         for t in tracks
     ]
     write_table(table[list(TRACK_COLUMNS)], brain.out / "tracks.csv")
-    text = json.dumps({"tracks": ends, "missing": dict(missing)}, indent=1, ensure_ascii=False)
+    text = json.dumps({"tracks": ends, "missing": list(missing)}, indent=1, ensure_ascii=False)
     write_text(brain.cache / "tracks.json", text + "\n")
 
 
-def read_tracks(brain: Brain) -> tuple[tuple[Track, ...], dict[str, str]]:
-    """Tracks as written, and what was found for every penetration that has none."""
+def read_tracks(brain: Brain) -> tuple[tuple[Track, ...], tuple[str, ...]]:
+    """Tracks as written, and a message for every penetration that lacks one."""
     import pandas as pd
 
     table = pd.read_csv(brain.out / "tracks.csv", dtype={"penetration": str})
     content = json.loads((brain.cache / "tracks.json").read_text(encoding="utf-8"))
-    return tuple(_track(table, ends) for ends in content["tracks"]), content["missing"]
+    return tuple(_track(table, ends) for ends in content["tracks"]), tuple(content["missing"])
 
 
 def _track(table: Any, ends: dict[str, Any]) -> Track:

@@ -4,19 +4,20 @@ from __future__ import annotations
 
 import dataclasses
 from dataclasses import dataclass, field
-from typing import TYPE_CHECKING, Any
+from pathlib import Path
+from typing import TYPE_CHECKING, Any, TypeVar
 
 from leadline.model.anchor import Anchor
 from leadline.pipeline import products, work
 
 if TYPE_CHECKING:
     from collections.abc import Callable
-    from pathlib import Path
 
     from leadline.model.brain import Brain, Penetration
     from leadline.pipeline.bench import Bench
     from leadline.pipeline.record import Record
 
+T = TypeVar("T")
 STAGES = ("register", "trace", "profile", "anchor", "locate")
 
 
@@ -80,15 +81,20 @@ def _register(brain: Brain) -> Step:
 
 
 def _trace(brain: Brain) -> Step:
-    penetrations = [dataclasses.replace(p, recordings=()) for p in brain.penetrations]
+    penetrations = [_pathless(dataclasses.replace(p, recordings=(), unit_table=None)) for p in brain.penetrations]
     stack = brain.stack
+    edits = brain.track_edits if brain.track_edits.is_file() else None
     return Step(
         "trace",
         "trace",
         ("register",),
-        key=(brain.settings.trace, penetrations, stack),
+        key=(brain.settings.trace, penetrations, _pathless(stack)),
         reads=_present(
-            stack.background, stack.dye, *(p.points for p in brain.penetrations), *(p.probe for p in brain.penetrations)
+            stack.background,
+            stack.dye,
+            edits,
+            *(p.points for p in brain.penetrations),
+            *(p.probe for p in brain.penetrations),
         ),
         gives=(brain.out / "tracks.csv", brain.cache / "tracks.json"),
         run=work.trace,
@@ -104,7 +110,12 @@ def _profile(brain: Brain, penetration: Penetration) -> Step:
         f"profile {penetration.name}",
         "profile",
         (),
-        key=(brain.settings.profile, penetration.recordings, penetration.tip_offset_um, penetration.probe_index),
+        key=(
+            brain.settings.profile,
+            [_pathless(r) for r in penetration.recordings],
+            penetration.tip_offset_um,
+            penetration.probe_index,
+        ),
         reads=tuple(reads),
         gives=files.all,
         run=lambda bench: work.profile(bench, penetration, files),
@@ -139,3 +150,9 @@ def _locate(brain: Brain) -> Step:
 
 def _present(*paths: Path | None) -> tuple[Path, ...]:
     return tuple(dict.fromkeys(p for p in paths if p is not None))
+
+
+def _pathless(value: T) -> T:
+    """The value without its paths: where a brain's folder lies does not matter, what the files hold is looked at."""
+    paths = [f.name for f in dataclasses.fields(value) if isinstance(getattr(value, f.name), Path)]  # type: ignore[arg-type]
+    return dataclasses.replace(value, **dict.fromkeys(paths))  # type: ignore[type-var]

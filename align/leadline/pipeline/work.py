@@ -2,17 +2,16 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from leadline.base.atomic import write_text
-from leadline.model.track import Trace, Track
+from leadline.model.track import Track
 from leadline.pipeline import products
 
 if TYPE_CHECKING:
-    from collections.abc import Sequence
+    from collections.abc import Mapping, Sequence
 
     from leadline.base.arrays import FloatArray, IntArray
     from leadline.model.anchor import Anchor
@@ -21,8 +20,11 @@ if TYPE_CHECKING:
     from leadline.model.posterior import DepthPosterior
     from leadline.model.probe import Probe
     from leadline.model.profile import Profile
-    from leadline.model.transform import Registration
+    from leadline.model.track import Trace
+    from leadline.model.transform import PointTransform, Registration
+    from leadline.model.volume import Volume
     from leadline.pipeline.bench import Bench
+    from leadline.tracing.assign import Wanted
 
 LABEL_STEP_UM = 5.0
 BEYOND_UM = 1500.0
@@ -53,84 +55,83 @@ def register(bench: Bench, files: products.RegistrationFiles) -> tuple[str, ...]
     return registration.warnings
 
 
-@dataclass(frozen=True)
-class _Found:
-    """A dye track and the same curve in atlas um."""
-
-    trace: Trace
-    atlas_um: FloatArray
-
-
 def trace(bench: Bench) -> tuple[str, ...]:
-    """Dye tracks, each given to a penetration; hand-traced points where there are any."""
-    from leadline.tracing.assign import assign
-
+    """Dye tracks, each given to a penetration; hand-traced points and edited tracks where there are any."""
     brain = bench.brain
     transform = products.RegistrationFiles(brain).read().stack_to_atlas
-    by_hand = [p for p in brain.penetrations if p.points is not None]
-    by_dye = [p for p in brain.penetrations if p.points is None]
-    dye = None if bench.dye is None else bench.reduced(bench.dye, brain.settings.trace.resolution_um)
-    background = bench.reduced(bench.background, brain.settings.trace.resolution_um)
-    tracks, missing, notes = _hand_tracks(by_hand, background, dye, transform)
-    if by_dye and dye is None:
-        missing |= {p.name: "the brain has no dye channel and the penetration no hand-traced points" for p in by_dye}
-    elif by_dye:
-        from leadline.tracing.find import trace as find
-
-        found = [
-            _Found(t, transform(t.points_um))
-            for t in find(dye, background, settings=brain.settings.trace, progress=bench.progress)
-        ]
-        wanted = [_wanted(bench, p) for p in by_dye]
-        result = assign([_path(f) for f in found], wanted)
-        for (name, shank), index in result.matches.items():
-            tracks.append(_track(name, shank, found[index], "dye"))
-        missing |= dict(result.missing)
-        notes += list(result.notes)
+    grain = brain.settings.trace.resolution_um
+    dye = None if bench.dye is None else bench.reduced(bench.dye, grain)
+    background = bench.reduced(bench.background, grain)
+    hand = _hand_tracks(brain, background, dye, transform)
+    wanted = [w for p in brain.penetrations if p.points is None and (w := _wanted(p, hand)) is not None]
+    found, missing, notes = _dye_tracks(bench, wanted, background, dye, transform)
     order = {p.name: i for i, p in enumerate(brain.penetrations)}
-    tracks.sort(key=lambda t: (order[t.penetration], t.shank))
+    tracks = sorted([*hand.values(), *found], key=lambda t: (order[t.penetration], t.shank))
     products.write_tracks(brain, tracks, missing)
-    return (*(f"penetration {name}: {why}" for name, why in missing.items()), *notes)
+    return (*missing, *notes)
 
 
 def _hand_tracks(
-    penetrations: Sequence[Penetration], background: Any, dye: Any, transform: Any
-) -> tuple[list[Track], dict[str, str], list[str]]:
-    from leadline.io.points import read_hand_points
+    brain: Brain, background: Volume, dye: Volume | None, transform: PointTransform
+) -> dict[tuple[str, int], Track]:
+    """Tracks that a person traced: the points files of brain.toml, and over them what was edited on the screen."""
+    from leadline.io.points import read_hand_points, read_track_edits
     from leadline.tracing.fit import from_points
 
-    tracks = []
-    for penetration in penetrations:
-        assert penetration.points is not None
-        for shank, points in read_hand_points(penetration.points).items():
-            traced = from_points(points, background, dye)
-            tracks.append(_track(penetration.name, shank, _Found(traced, transform(traced.points_um)), "points"))
-    return tracks, {}, []
+    points = {
+        (p.name, shank): rows
+        for p in brain.penetrations
+        if p.points is not None
+        for shank, rows in read_hand_points(p.points).items()
+    }
+    names = {p.name for p in brain.penetrations}
+    points |= {key: rows for key, rows in read_track_edits(brain.track_edits).items() if key[0] in names}
+    return {
+        (name, shank): _track(name, shank, from_points(rows, background, dye), transform, "points")
+        for (name, shank), rows in points.items()
+    }
 
 
-def _track(name: str, shank: int, found: _Found, source: str) -> Track:
-    t = found.trace
-    return Track(name, shank, t.points_um, found.atlas_um, t.radius_um, t.entry_sd_um, t.end_sd_um, source)
-
-
-def _path(found: _Found) -> Any:
-    from leadline.tracing.assign import TracedPath
-
-    return TracedPath(atlas_um=found.atlas_um, contrast=found.trace.contrast)
-
-
-def _wanted(bench: Bench, penetration: Penetration) -> Any:
+def _wanted(penetration: Penetration, traced: Mapping[tuple[str, int], Track]) -> Wanted | None:
+    """The shanks that still need a dye track; None where a person has traced them all."""
     from leadline.io.probes import read_probe
     from leadline.tracing.assign import Wanted
 
     probe = read_probe(penetration.probe, probe_index=penetration.probe_index)
-    offsets = tuple(float(probe.x_um[probe.shank == s].mean()) for s in probe.shanks)
+    shanks = tuple(s for s in probe.shanks if (penetration.name, s) not in traced)
+    if not shanks:
+        return None
     return Wanted(
         name=penetration.name,
-        shank_x_um=offsets,
+        shank_x_um=tuple(float(probe.x_um[probe.shank == s].mean()) for s in shanks),
         entry_near_um=penetration.entry_near_um,
         shank_toward=penetration.shank_toward,
         inserted_um=penetration.inserted_um,
+        shanks=shanks,
+    )
+
+
+def _dye_tracks(
+    bench: Bench, wanted: Sequence[Wanted], background: Volume, dye: Volume | None, transform: PointTransform
+) -> tuple[list[Track], tuple[str, ...], tuple[str, ...]]:
+    from leadline.tracing.assign import TracedPath, assign
+    from leadline.tracing.find import trace as find
+
+    if not wanted:
+        return [], (), ()
+    if dye is None:
+        why = "the brain has no dye channel, and the penetration no hand-traced points"
+        return [], tuple(f"penetration '{w.name}' has no track: {why}" for w in wanted), ()
+    traces = find(dye, background, settings=bench.brain.settings.trace, progress=bench.progress)
+    result = assign([TracedPath(transform(t.points_um), t.contrast) for t in traces], wanted)
+    tracks = [_track(name, shank, traces[i], transform, "dye") for (name, shank), i in result.matches.items()]
+    return tracks, result.missing, result.notes
+
+
+def _track(name: str, shank: int, traced: Trace, transform: PointTransform, source: str) -> Track:
+    atlas_um = transform(traced.points_um)
+    return Track(
+        name, shank, traced.points_um, atlas_um, traced.radius_um, traced.entry_sd_um, traced.end_sd_um, source
     )
 
 
