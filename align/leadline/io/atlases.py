@@ -10,7 +10,7 @@ import numpy as np
 from leadline.base.arrays import AnyArray, FloatArray
 from leadline.base.atomic import whole_folder
 from leadline.base.errors import Faults, LeadlineError, nearest
-from leadline.io.images import SAME_WITHIN, settle, volume_of
+from leadline.io.images import IN_ATLAS, SAME_WITHIN, UserSays, settle, volume_of
 from leadline.io.stacks import open_image
 from leadline.io.structure_tables import LARGEST_ID, read_structures, write_structures
 from leadline.model.atlas import Atlas, Structure, Structures
@@ -95,14 +95,14 @@ def _three_numbers(value: Any) -> bool:
     )
 
 
-def read_labels(path: Path, *, voxel_um: Sequence[float] | None, code: str | None, said_in: str = ATLAS_FILE) -> Volume:
+def read_labels(path: Path, *, voxel_um: Sequence[float] | None, code: str | None, user: UserSays = IN_ATLAS) -> Volume:
     """Read a label volume as uint32 in PIR, slab by slab.
 
     Raises LeadlineError when an id is not a whole number from 0 to 2^32 - 1, or is stored as a float that may have
     been rounded.
     """
     image = open_image(path)
-    voxel, letters = settle(image, voxel_um, code, said_in=said_in)
+    voxel, letters = settle(image, voxel_um, code, user)
     stored = volume_of(image.levels[0], voxel, letters)
     pir = np.empty(tuple(int(n) for n in voxel_as_pir(stored.shape, letters)), np.uint32)
     view = from_pir(pir, letters)
@@ -114,11 +114,11 @@ def read_labels(path: Path, *, voxel_um: Sequence[float] | None, code: str | Non
 
 
 def read_template(
-    path: Path, *, voxel_um: Sequence[float] | None, code: str | None, said_in: str = ATLAS_FILE
+    path: Path, *, voxel_um: Sequence[float] | None, code: str | None, user: UserSays = IN_ATLAS
 ) -> Volume:
     """Read a template volume in PIR, of the type it is stored in."""
     image = open_image(path)
-    voxel, letters = settle(image, voxel_um, code, said_in=said_in)
+    voxel, letters = settle(image, voxel_um, code, user)
     stored = volume_of(image.levels[0], voxel, letters)
     pir = np.empty(tuple(int(n) for n in voxel_as_pir(stored.shape, letters)), stored.data.dtype)
     view = from_pir(pir, letters)

@@ -131,7 +131,7 @@ def open_nifti(path: Path, channel: int) -> Image:
     if not (np.isfinite(image.affine).all() and (sizes > 0).all()):
         raise LeadlineError("its affine is not a proper one", where=str(path), mend="Write a qform or sform")
     letters, notes = _nifti_letters(image, path)
-    a, b, c = (float(s) for s in sizes)
+    a, b, c = (float(f"{s:.6g}") for s in sizes)  # the header holds float32
     unit = {"mm": 1e3, "micron": 1.0, "meter": 1e6}.get(header.get_xyzt_units()[0])
     return Image(
         path,

@@ -13,6 +13,7 @@ import numpy as np
 
 from leadline.base.errors import LeadlineError
 from leadline.io.images import READ_FAULTS, UNIT_UM, Image, Level, pick, unreadable, whole_level
+from leadline.io.levels import placed
 
 if TYPE_CHECKING:
     from collections.abc import Iterator
@@ -38,13 +39,20 @@ def open_tiff(path: Path, channel: int) -> Image:
         axes = _axis_names(series.axes, path)
         _require_grey(series.keyframe, path)
         sources = [_source(file, level, series, k) for k, level in enumerate(series.levels)]
+    finest = pick(sources[0], axes, channel, path)
+    coarser = [source for source in sources[1:] if min(_spatial(source.shape, axes)) > 1]
     levels = tuple(
-        _level(pick(source, axes, channel, path), pick(sources[0], axes, channel, path).shape, _chunk(source, axes))
-        for source in sources
+        _level(pick(source, axes, channel, path), finest.shape, _chunk(source, axes))
+        for source in (sources[0], *coarser)
     )
     sizes = dict(zip("xyz", _sizes(file), strict=True))
     z, y, x = (sizes[a] for a in axes if a in "xyz")
-    return Image(path, levels, (z, y, x))
+    return Image(path, placed(levels), (z, y, x))
+
+
+def _spatial(lengths: Any, axes: str) -> tuple[int, ...]:
+    """Those of the lengths that belong to axes of space."""
+    return tuple(int(n) for n, a in zip(lengths, axes, strict=True) if a in "xyz")
 
 
 def _only_series(file: Any, path: Path) -> Any:
@@ -104,7 +112,7 @@ def _chunk(source: Any, axes: str) -> tuple[int, ...]:
     chunks = getattr(source, "chunks", None)
     if chunks is None:
         chunks = [1 if a == "z" else n for a, n in zip(axes, source.shape, strict=True)]
-    return tuple(int(n) for a, n in zip(axes, chunks, strict=True) if a in "xyz")
+    return _spatial(chunks, axes)
 
 
 def _level(data: Any, finest: tuple[int, ...], chunk: tuple[int, ...]) -> Level:

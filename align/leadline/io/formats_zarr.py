@@ -14,6 +14,7 @@ import numpy as np
 
 from leadline.base.errors import LeadlineError
 from leadline.io.images import READ_FAULTS, UNIT_UM, Image, Level, pick, unreadable
+from leadline.io.levels import placed
 
 if TYPE_CHECKING:
     from pathlib import Path
@@ -32,7 +33,8 @@ def is_zarr(folder: Path) -> bool:
 def open_zarr(path: Path, channel: int) -> Image:
     """Read the metadata of an OME-Zarr image, or of a bare array of three axes.
 
-    Scales count as voxel sizes only where the axis names a unit of length. Level offsets come from translations.
+    Scales count as voxel sizes only where the axis names a unit of length. Level offsets come from
+    translations, or from the voxels where there are none.
     """
     import zarr
 
@@ -65,19 +67,22 @@ def _image(path: Path, group: Any, channel: int) -> Image:
         if array.ndim != len(axes):
             raise LeadlineError(f"level {dataset['path']} has {array.ndim} axes, its metadata name {len(axes)}",
                                 where=str(path), mend="Write one entry of 'axes' for each axis")  # fmt: skip
+        if levels and min(array.shape[k] for k in keep) < 2:
+            continue  # the tip of a pyramid is no stack
         factor, offset = scale / scaled[0][0], (shift - scaled[0][1]) / scaled[0][0]
         chunk = _three([(array.shards or array.chunks)[k] for k in keep])
         levels.append(Level(pick(array, names, channel, path), factor[keep], offset[keep], chunk))
     order = sorted(range(len(levels)), key=lambda k: float(levels[k].factor.prod()))
     if order[0] != 0:
         raise LeadlineError("its first dataset is not the finest", where=str(path), mend="List datasets finest first")
+    told = any(step["type"] == "translation" for d in scales["datasets"] for step in d["coordinateTransformations"])
     units = [UNIT_UM.get(str(axes[k].get("unit", "")).lower()) for k in keep]
     sizes = [float(scaled[0][0][k]) for k in keep]
     a, b, c = (size * unit if unit else None for size, unit in zip(sizes, units, strict=True))
     letters = [_direction(axes[k]) for k in keep]
     return Image(
         path,
-        tuple(levels[k] for k in order),
+        tuple(levels[k] for k in order) if told else placed(tuple(levels[k] for k in order)),
         (a, b, c),
         (letters[0], letters[1], letters[2]),
         (sizes[0], sizes[1], sizes[2]) if not any(units) and sizes != [1.0, 1.0, 1.0] else None,

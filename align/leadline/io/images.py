@@ -146,25 +146,31 @@ def _require_stack(data: Picked, path: Path) -> None:
         raise LeadlineError(f"{what}: shape {data.shape}", where=str(path), mend="Give the whole stack")
 
 
+@dataclass(frozen=True, slots=True)
+class UserSays:
+    """Where and how the user writes voxel size and orientation, for messages."""
+
+    place: str
+    voxel: str = "voxel_um = [a, b, c]"
+    code: str = 'orientation = "PIR"'
+
+
+IN_BRAIN = UserSays("brain.toml")
+IN_ATLAS = UserSays("atlas.toml")
+IN_COMMAND = UserSays("the command", "--voxel-um a,b,c", "--orientation PIR")
+
+
 def settle(
-    image: Image,
-    voxel_um: Sequence[float] | None,
-    code: str | None,
-    *,
-    said_in: str = "brain.toml",
-    voxel_key: str = "voxel_um",
-    code_key: str = "orientation",
+    image: Image, voxel_um: Sequence[float] | None, code: str | None, user: UserSays = IN_BRAIN
 ) -> tuple[FloatArray, str]:
     """Join what the file and the user say of voxel size and orientation; nothing is guessed.
 
-    ``said_in``, ``voxel_key``, ``code_key`` : where the user writes it, for messages.
-
     Raises LeadlineError when neither says it, or when they disagree by more than one per cent.
     """
-    return _settle_voxel(image, voxel_um, said_in, voxel_key), _settle_code(image, code, said_in, code_key)
+    return _settle_voxel(image, voxel_um, user), _settle_code(image, code, user)
 
 
-def _settle_voxel(image: Image, given: Sequence[float] | None, said_in: str, key: str) -> FloatArray:
+def _settle_voxel(image: Image, given: Sequence[float] | None, says: UserSays) -> FloatArray:
     told = image.voxel_um
     where = str(image.path)
     if given is None:
@@ -173,18 +179,22 @@ def _settle_voxel(image: Image, given: Sequence[float] | None, said_in: str, key
         raise LeadlineError(
             f"the file does not carry its voxel size ({_known_sizes(image)})",
             where=where,
-            mend=f"Write {key} = [a, b, c] in {said_in}: micrometres along the stored axes, first axis first",
+            mend=f"Write {says.voxel} in {says.place}: micrometres along the stored axes, first axis first",
         )
     user = np.asarray(given, np.float64)
     if user.shape != (3,) or not np.isfinite(user).all() or (user <= 0).any():
-        raise LeadlineError(f"{key} must be three positive numbers, is {list(given)}", where=said_in)
+        raise LeadlineError(
+            f"the voxel size must be three positive numbers, is {list(given)}",
+            where=says.place,
+            mend=f"Write {says.voxel} in um",
+        )
     file = np.array([np.nan if size is None else size for size in told])
     clash = np.abs(file / user - 1.0) > SAME_WITHIN
     if clash.any() or _clashes_unitless(image, user):
         raise LeadlineError(
-            f"voxel sizes disagree: {_known_sizes(image)}, {said_in} says {user.tolist()} um",
+            f"voxel sizes disagree: {_known_sizes(image)}, {says.place} says {user.tolist()} um",
             where=where,
-            mend=f"Correct {key} (its order is that of the stored axes, first axis first) or the file",
+            mend=f"Correct {says.place} (the order is that of the stored axes, first axis first) or the file",
         )
     return np.where(np.isnan(file), user, file)
 
@@ -205,7 +215,7 @@ def _known_sizes(image: Image) -> str:
     return "the file says [" + ", ".join("?" if s is None else f"{s:g}" for s in image.voxel_um) + "] um"
 
 
-def _settle_code(image: Image, given: str | None, said_in: str, key: str) -> str:
+def _settle_code(image: Image, given: str | None, says: UserSays) -> str:
     told = "".join(letter or "?" for letter in image.letters)
     if given is None:
         if "?" not in told:
@@ -214,15 +224,15 @@ def _settle_code(image: Image, given: str | None, said_in: str, key: str) -> str
         raise LeadlineError(
             f"the file does not carry its orientation{said}",
             where=str(image.path),
-            mend=f'Write {key} = "PIR" (or another code) in {said_in}: the directions in which the stored axes grow, '
+            mend=f"Write {says.code} (or another code) in {says.place}: the directions in which the stored axes grow, "
             "one letter each of R/L, A/P and S/I",
         )
-    user = orientation(given, where=f"{key} in {said_in}")
+    user = orientation(given, where=f"orientation in {says.place}")
     if any(a not in ("?", b) for a, b in zip(told, user, strict=True)):
         raise LeadlineError(
-            f"orientations disagree: the file says {told!r}, {said_in} says {user!r}",
+            f"orientations disagree: the file says {told!r}, {says.place} says {user!r}",
             where=str(image.path),
-            mend=f"Correct {key} or the file; a mirrored brain cannot be told from the image",
+            mend=f"Correct {says.place} or the file; a mirrored brain cannot be told from the image",
         )
     return user
 

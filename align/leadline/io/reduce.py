@@ -24,8 +24,8 @@ def reduce_to(volume: Volume, target_um: float, progress: Progress = SILENT) -> 
     """Average a volume down to voxels of ``target_um``, each axis by itself, never up.
 
     Every output voxel is the mean of the input over its own box; factors may be fractional, then input voxels on the
-    border count by the part that lies inside. At the far edge a box that is less than half filled is left out, and
-    one that is more is the mean of what it holds. Memory: the result and about 64 MiB.
+    border count by the part that lies inside. At the far edge a box that is filled more than half is the mean of
+    what it holds, one that is less is left out. Memory: the result and about 64 MiB.
 
     Parameters
     ----------

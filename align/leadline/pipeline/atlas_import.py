@@ -3,8 +3,10 @@
 from __future__ import annotations
 
 from collections import Counter
-from dataclasses import dataclass, replace
-from typing import TYPE_CHECKING
+from dataclasses import replace
+from typing import TYPE_CHECKING, Any, TypeAlias
+
+import numpy as np
 
 from leadline.base.progress import SILENT, Progress
 from leadline.model.atlas import OUTSIDE_ID, Atlas, Structures
@@ -13,21 +15,8 @@ if TYPE_CHECKING:
     from collections.abc import Sequence
     from pathlib import Path
 
-SAID_IN = "the command"
-
-
-@dataclass(frozen=True, slots=True)
-class AtlasSummary:
-    """What an atlas folder holds. ``notes`` : sentences for the user."""
-
-    name: str
-    shape: tuple[int, int, int]
-    voxel_um: tuple[float, float, float]
-    structures: int
-    labels: int
-    layers: int
-    tissues: dict[str, int]
-    notes: tuple[str, ...] = ()
+Summary: TypeAlias = dict[str, Any]
+"""What an atlas folder holds, by name; ``notes`` are sentences for the user."""
 
 
 def import_atlas(
@@ -43,7 +32,7 @@ def import_atlas(
     voxel_um: Sequence[float] | None = None,
     bregma_um: Sequence[float] | None = None,
     progress: Progress = SILENT,
-) -> AtlasSummary:
+) -> Summary:
     """Build an atlas folder from a label volume, a template and a structure table.
 
     Parameters
@@ -59,15 +48,16 @@ def import_atlas(
     from leadline.atlas.importing import structures_from
     from leadline.atlas.structures import derive
     from leadline.io.atlases import read_labels, read_template, require_rows, require_same_grid, write_atlas
+    from leadline.io.images import IN_COMMAND
     from leadline.io.structure_tables import read_foreign_table
 
     progress.begin("importing the atlas", 4)
     imported = structures_from(read_foreign_table(structures), where=str(structures))
     rows = derive(imported.rows, given=imported.given)
     progress.step()
-    label_volume = read_labels(labels, voxel_um=voxel_um, code=orientation, said_in=SAID_IN)
+    label_volume = read_labels(labels, voxel_um=voxel_um, code=orientation, user=IN_COMMAND)
     progress.step()
-    template_volume = read_template(template, voxel_um=voxel_um, code=orientation, said_in=SAID_IN)
+    template_volume = read_template(template, voxel_um=voxel_um, code=orientation, user=IN_COMMAND)
     progress.step()
     require_same_grid(label_volume, template_volume, where=str(labels))
     counts = require_rows(label_volume, Structures(rows), where=str(labels), table=str(structures))
@@ -82,8 +72,9 @@ def import_atlas(
         rows=rows,
         bregma_um=bregma_um,
     )
+    bregma = None if bregma_um is None else np.asarray(bregma_um, np.float64)
     progress.step()
-    atlas = Atlas(name, label_volume, template_volume, Structures(rows))
+    atlas = Atlas(name, label_volume, template_volume, Structures(rows), citation, licence, bregma)
     return _summary(atlas, counts, imported.notes)
 
 
@@ -97,7 +88,7 @@ def load_atlas(folder: Path) -> Atlas:
     return replace(atlas, structures=Structures(derive(atlas.structures.rows, given=given)))
 
 
-def check_atlas(folder: Path) -> AtlasSummary:
+def check_atlas(folder: Path) -> Summary:
     """Check an atlas folder whole and say what it holds.
 
     Raises LeadlineError with what is wrong.
@@ -108,7 +99,7 @@ def check_atlas(folder: Path) -> AtlasSummary:
     return _summary(atlas, label_counts(atlas.labels.array()), ())
 
 
-def _summary(atlas: Atlas, counts: dict[int, int], notes: Sequence[str]) -> AtlasSummary:
+def _summary(atlas: Atlas, counts: dict[int, int], notes: Sequence[str]) -> Summary:
     """Count what there is, and say what looks unusual without being wrong."""
     rows = atlas.structures.rows
     shown = [atlas.structures[k] for k in counts if k != OUTSIDE_ID]
@@ -124,7 +115,14 @@ def _summary(atlas: Atlas, counts: dict[int, int], notes: Sequence[str]) -> Atla
     ]
     if not any(row.coarse for row in rows):
         said.append("no structure is marked coarse: the coarse region is the structure itself, of a layer its area")
-    a, b, c = (float(v) for v in atlas.voxel_um)
-    tissues = dict(sorted(Counter(row.tissue for row in shown).items()))
-    layers = sum(bool(row.layer) for row in shown)
-    return AtlasSummary(atlas.name, atlas.labels.shape, (a, b, c), len(rows), len(shown), layers, tissues, tuple(said))
+    return {
+        "name": atlas.name,
+        "shape": list(atlas.labels.shape),
+        "voxel_um": [float(v) for v in atlas.voxel_um],
+        "bregma_um": None if atlas.bregma_um is None else [float(v) for v in atlas.bregma_um],
+        "structures": len(rows),
+        "labels": len(shown),
+        "layers": sum(bool(row.layer) for row in shown),
+        "tissues": dict(sorted(Counter(row.tissue for row in shown).items())),
+        "notes": said,
+    }
