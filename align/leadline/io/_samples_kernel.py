@@ -7,8 +7,8 @@ from typing import Any
 import numpy as np
 from numba import njit
 
-TILE_SAMPLES = 64
-TILE_CHANNELS = 16
+TILE_SAMPLES = 128
+TILE_CHANNELS = 32
 
 
 @njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from itertools import pairwise
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -87,7 +88,7 @@ def _blocks(tip_um: FloatArray) -> list[slice]:
     steps = np.diff(tip_um)
     cuts = np.flatnonzero(steps > GAP * np.median(steps)) + 1 if steps.size else np.zeros(0, int)
     edges = [0, *cuts.tolist(), len(tip_um)]
-    return [slice(a, b) for a, b in zip(edges[:-1], edges[1:], strict=True)]
+    return [slice(a, b) for a, b in pairwise(edges)]
 
 
 def _edges(tip_um: FloatArray) -> FloatArray:

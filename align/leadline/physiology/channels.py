@@ -31,9 +31,9 @@ def bad_channels(statistics: FieldStatistics, probe: Probe) -> tuple[BoolArray, 
 
     Each is judged against the contacts of its shank within 250 um, so that a whole quiet stretch (a ventricle, white
     matter) is neither. Dead: 40 dB below the shank, 25 dB below the neighbours, or 10 dB below them and sharing
-    hardly any of their gamma signals. Noisy: 20 dB above the neighbours from 100 Hz up, those within 250 um as well as the
-    nearest four, which a thin cell layer is not; or 10 dB, and sharing clearly less of their signals than they share
-    of each other's.
+    hardly any of their gamma signals. Noisy: 20 dB above the neighbours from 100 Hz up (those within 250 um and also
+    the nearest four, which spares a thin cell layer), or 10 dB above them and sharing clearly less of their signals
+    than they share of each other's.
     """
     top = USABLE * 2 * float(statistics.frequency_hz[-1])
     level = band_power_db(statistics, (1.0, min(300.0, top)))

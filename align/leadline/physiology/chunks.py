@@ -20,7 +20,7 @@ GUARD_S = 0.1  # left out on either side of an excluded interval: filters and am
 SEGMENT_S = 2.0
 MIN_SEGMENTS = 8
 MAX_READ_S = 1200.0  # more adds nothing: 1200 segments give band powers to 0.2 dB
-BLOCK_SAMPLES = 12_000_000  # samples of all channels held at once, 48 MB
+BLOCK_SAMPLES = 8_000_000  # samples of all channels held at once: 32 MB, which the allocator uses again
 
 
 @dataclass(frozen=True, slots=True, eq=False)

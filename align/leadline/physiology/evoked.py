@@ -21,6 +21,7 @@ REST = ""  # events of rarer kinds
 MIN_EVENTS = 10
 SMOOTH_S = 0.008
 ARTEFACT_S = 0.004  # of the response that the event itself may spoil
+CLEAR_ROWS = 3  # rows that must show a response
 RESPONSE = 0.5  # of the peak's power: the response lasts while it is above
 
 
@@ -118,7 +119,10 @@ def _smooth(values: FloatArray, time_s: FloatArray) -> FloatArray:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class EvokedRows:
-    """Features ``(R,)`` of a response by row, and the maps ``(R, T)`` that they were read from."""
+    """Features ``(R,)`` of a response by row, and the maps ``(R, T)`` that they were read from.
+
+    ``clarity`` : how many standard deviations of the noise the response reaches in the three rows that show it best.
+    """
 
     csd_ua_per_mm3: FloatArray
     amplitude_uv: FloatArray
@@ -148,12 +152,12 @@ def evoked_rows(response: Response, potential: FloatArray, density: FloatArray) 
     after = response.time_s > ARTEFACT_S
     base = csd if np.isfinite(csd).any() else uv
     noise = csd_noise if np.isfinite(csd).any() else uv_noise
-    power = np.nan_to_num(np.nanmean(np.where(np.isfinite(base), base, 0.0) ** 2, axis=0)) * after
-    floor = float(np.nanmean(np.where(np.isfinite(noise), noise, 0.0)[:, after] ** 2))
-    lasting = np.flatnonzero(power >= max(RESPONSE * power.max(), 2.0 * floor))
-    span = slice(int(lasting[0]), int(lasting[-1]) + 1) if lasting.size else slice(0, 0)
-    clarity = float(power.max() / floor) if floor > 0 else float("inf")
-    uv_sd, csd_sd = uv_noise[:, after].std(axis=1), csd_noise[:, after].std(axis=1)
+    score = np.abs(np.nan_to_num(base / _spread(noise[:, after])[:, None])) * after
+    power = np.square(score).mean(axis=0)
+    lasting = np.flatnonzero(power >= RESPONSE * power.max())
+    span = slice(int(lasting[0]), int(lasting[-1]) + 1)
+    clarity = float(np.sort(score.max(axis=1))[-CLEAR_ROWS:][0])
+    uv_sd, csd_sd = _spread(uv_noise[:, after]), _spread(csd_noise[:, after])
     return EvokedRows(
         _mean(csd, span),
         _mean(uv, span),
@@ -164,6 +168,13 @@ def evoked_rows(response: Response, potential: FloatArray, density: FloatArray) 
         csd,
         clarity,
     )
+
+
+def _spread(noise: FloatArray) -> FloatArray:
+    """Standard deviation ``(R,)`` of the noise ``(R, T)`` of each row; at least half of the median row's."""
+    sd = np.sqrt(np.square(noise).mean(axis=1))
+    known = sd[np.isfinite(sd)]
+    return np.maximum(sd, 0.5 * float(np.median(known)) if known.size else 1.0)
 
 
 def _apply(matrix: FloatArray, values: FloatArray) -> FloatArray:

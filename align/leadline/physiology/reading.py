@@ -25,7 +25,7 @@ if TYPE_CHECKING:
     from leadline.model.settings import ProfileSettings
 
 FREQUENCY_HZ = 0.5 * 2.0 ** (np.arange(0, 89) / 8.0)  # 0.5 to 1024 Hz, eight to the octave
-CLEAR = 8.0  # times the noise that the power of a response must reach at its peak
+CLEAR = 5.5  # standard deviations of the noise; random times reach 3 to 5
 
 
 @dataclass(slots=True)

@@ -18,7 +18,7 @@ if TYPE_CHECKING:
     from leadline.physiology.chunks import Plan
 
 GROUP = 64  # channels transformed at once: their spectra stay in the cache
-CROSS_BINS = 32  # bins of a band that enter the cross-spectra; neighbouring bins say much the same
+CROSS_BINS = 24  # bins of a band that enter the cross-spectra; neighbouring bins say much the same
 CROSS_SEGMENTS = 100
 USABLE = 0.45  # of the sampling rate; above it anti-alias filters have taken the power away
 LINE_EXCESS = 4.0  # 6 dB above its surroundings, and narrow, is pickup
@@ -126,11 +126,10 @@ class _Sums:
             self.power[first : first + GROUP] += power
             if chosen.size:
                 for name, bins in self.bins.items():
-                    parts[name].append(_hann(spectrum[:, chosen], bins))
+                    parts[name].append(_hann(spectrum, chosen, bins))
         for name, pieces in parts.items():
             if pieces:
-                values = np.concatenate(pieces).reshape(len(segments), -1)
-                self.cross[name] += values @ values.conj().T
+                self.cross[name] += _outer(np.concatenate(pieces).reshape(len(segments), -1))
         self.seen += kept.size
         self.kept += int(kept.sum())
         self.crossed += chosen.size
@@ -149,8 +148,18 @@ class _Sums:
         return FieldStatistics(self.frequency_hz, power, self.line, cross, seconds, 1.0 - self.kept / max(self.seen, 1))
 
 
-def _hann(spectrum: AnyArray, bins: IntArray) -> AnyArray:
-    return 0.5 * spectrum[..., bins] - 0.25 * (spectrum[..., bins - 1] + spectrum[..., bins + 1])
+def _outer(values: AnyArray) -> AnyArray:
+    """``values @ values^H`` of complex64 (C, K), by the half that tells all."""
+    from scipy.linalg.blas import cherk
+
+    half = cherk(1.0, values.T, trans=2)
+    return np.conj(half) + np.triu(half, 1).T
+
+
+def _hann(spectrum: AnyArray, segments: IntArray, bins: IntArray) -> AnyArray:
+    """The Hann window applied to some bins of some segments of spectra ``(C, S, F)``."""
+    at = segments[:, None]
+    return 0.5 * spectrum[:, at, bins] - 0.25 * (spectrum[:, at, bins - 1] + spectrum[:, at, bins + 1])
 
 
 def _levels(segments: AnyArray) -> FloatArray:
@@ -170,10 +179,10 @@ def _scan(traces: Traces, channels: IntArray, plan: Plan) -> tuple[FloatArray, f
     power, level = [], []
     for start in starts.tolist():
         samples = np.ascontiguousarray(traces.read_uv(start, start + plan.segment, some).T)
-        spectrum = rfft(samples, axis=-1)
-        spectrum[:, 0] = 0.0
-        inner = np.arange(1, spectrum.shape[1] - 1)
-        power.append(np.log(np.square(np.abs(_hann(spectrum, inner))) + 1e-12).mean(axis=0))
+        spectrum = rfft(samples[:, None], axis=-1)
+        spectrum[..., 0] = 0.0
+        windowed = _hann(spectrum, np.zeros(1, np.int64), np.arange(1, spectrum.shape[-1] - 1))[:, 0]
+        power.append(np.log(np.square(np.abs(windowed)) + 1e-12).mean(axis=0))
         level.append(_levels(samples[:, None])[0])
     spread = 1.4826 * float(np.median(np.abs(np.array(level) - np.median(level))))
     threshold = float(np.median(level)) + max(ARTEFACT_DB, 6.0 * spread)
