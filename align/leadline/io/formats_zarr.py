@@ -61,7 +61,7 @@ def _image(path: Path, group: Any, channel: int) -> Image:
     names = "".join(_letter(axis) for axis in axes)
     keep = [k for k, name in enumerate(names) if name in "xyz"]
     scaled = [_scale(path, dataset, scales, len(axes)) for dataset in scales["datasets"]]
-    levels = []
+    levels: list[Level] = []
     for dataset, (scale, shift) in zip(scales["datasets"], scaled, strict=True):
         array = _array(path, group, dataset["path"])
         if array.ndim != len(axes):
