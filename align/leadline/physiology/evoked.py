@@ -174,7 +174,7 @@ def _spread(noise: FloatArray) -> FloatArray:
     """Standard deviation ``(R,)`` of the noise ``(R, T)`` of each row; at least half of the median row's."""
     sd = np.sqrt(np.square(noise).mean(axis=1))
     known = sd[np.isfinite(sd)]
-    return np.maximum(sd, 0.5 * float(np.median(known)) if known.size else 1.0)
+    return np.asarray(np.maximum(sd, 0.5 * float(np.median(known)) if known.size else 1.0), float)
 
 
 def _apply(matrix: FloatArray, values: FloatArray) -> FloatArray:

@@ -2,6 +2,7 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
+from tests.leadline.physiology.invented import InMemory, by_layer, column, line_probe
 
 from leadline.base.errors import LeadlineError
 from leadline.model.probe import Probe
@@ -9,7 +10,6 @@ from leadline.model.profile import FEATURE_BY_NAME
 from leadline.model.recording import Events, Recording
 from leadline.model.settings import ProfileSettings
 from leadline.physiology import profile_of
-from tests.leadline.physiology.invented import InMemory, by_layer, column, line_probe
 
 SETTINGS = ProfileSettings()
 
