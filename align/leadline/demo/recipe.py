@@ -62,7 +62,7 @@ class Recipe:
     scale_sd: float = 0.06
     slope_sd: float = 0.08
     border_sd_um: float = 0.0
-    seconds: float = 80.0
+    seconds: float = 64.0
     rough: float = 0.0
     silent: str = ""
     penetrations: int = 3

@@ -16,6 +16,7 @@ from leadline.demo import formats
 from leadline.demo.anatomy import make_atlas
 from leadline.demo.probes import as_json
 from leadline.demo.recipe import Recipe
+from leadline.demo.recording import TRUTH_COLUMNS, channel_rows, write_recording
 from leadline.demo.sample import draw, draw_points
 from leadline.demo.tracks import TruePenetration, make_penetrations
 from leadline.demo.warp import Frame, TrueMap, make_map
@@ -68,8 +69,11 @@ def write_brain(folder: Path, recipe: Recipe, progress: Progress = SILENT) -> No
     _write_stack(folder, brain, progress)
     for pen in brain.penetrations:
         write_text(folder / f"{pen.name.lower()}_probe.json", json.dumps(as_json(pen.design), indent=1))
+    recordings = {
+        pen.name: write_recording(folder, recipe, pen, progress) for pen in brain.penetrations if recipe.seconds
+    }
     write_truth(folder / "truth", brain)
-    write_text(folder / "brain.toml", brain_toml(brain))
+    write_text(folder / "brain.toml", brain_toml(brain, recordings))
     write_text(mark, said)
 
 
@@ -119,8 +123,8 @@ def stack_names(recipe: Recipe) -> tuple[str, str]:
     return ("stack/both" + suffix,) * 2 if recipe.one_file else ("stack/background" + suffix, "stack/dye" + suffix)
 
 
-def brain_toml(brain: Invented) -> str:
-    """The text of ``brain.toml``: it names no truth."""
+def brain_toml(brain: Invented, recordings: dict[str, dict[str, Any]]) -> str:
+    """The text of ``brain.toml``, with a recording's table for each penetration that has one; it names no truth."""
     import tomli_w
 
     recipe = brain.recipe
@@ -138,7 +142,10 @@ def brain_toml(brain: Invented) -> str:
             "brain": {"name": f"invented-{recipe.seed:02d}"},
             "atlas": {"path": "atlas"},
             "stack": stack,
-            "penetration": [_penetration(recipe, pen) for pen in brain.penetrations],
+            "penetration": [
+                _penetration(recipe, pen) | ({"recording": [recordings[pen.name]]} if pen.name in recordings else {})
+                for pen in brain.penetrations
+            ],
         }
     )
 
@@ -161,7 +168,7 @@ def _penetration(recipe: Recipe, pen: TruePenetration) -> dict[str, Any]:
 
 
 def write_truth(folder: Path, brain: Invented) -> None:
-    """``points.csv`` and ``tracks.csv``."""
+    """``points.csv``, ``tracks.csv`` and ``channels.csv``."""
     stack, atlas, border = draw_points(brain.recipe, brain.chart, brain.frame)
     rows = (
         [*(f"{x:.3f}" for x in (*s, *a)), str(bool(b)).lower()] for s, a, b in zip(stack, atlas, border, strict=True)
@@ -169,6 +176,8 @@ def write_truth(folder: Path, brain: Invented) -> None:
     write_csv(folder / "points.csv", (*STACK_COLUMNS, *ATLAS_COLUMNS, "near_border"), rows)
     columns = ("penetration", "shank", "order", *STACK_COLUMNS, *ATLAS_COLUMNS, "track_depth_um", "mark")
     write_csv(folder / "tracks.csv", columns, _track_rows(brain))
+    channels = (row for pen in brain.penetrations for row in channel_rows(brain.recipe, pen))
+    write_csv(folder / "channels.csv", TRUTH_COLUMNS, channels)
 
 
 def _track_rows(brain: Invented) -> Iterable[Sequence[object]]:

@@ -162,7 +162,7 @@ def test_refuses_a_folder_of_something_else(tmp_path: Path) -> None:
 def test_brain_file_never_names_the_truth(brain: Path) -> None:
     text = (brain / "brain.toml").read_text()
     assert "truth" not in text
-    assert tomllib.loads(text) == tomllib.loads(brain_toml(invent(PLAIN)))
+    assert tomllib.loads(text) == tomllib.loads(brain_toml(invent(PLAIN), {}))
 
 
 def test_probe_files_pass_the_published_check(tmp_path: Path) -> None:
@@ -177,6 +177,6 @@ def test_probe_files_pass_the_published_check(tmp_path: Path) -> None:
 
 def test_formats_that_carry_nothing_are_told_in_the_brain_file() -> None:
     for kind in STACK_FORMATS:
-        stack = tomllib.loads(brain_toml(invent(replace(PLAIN, stack_format=kind))))["stack"]
+        stack = tomllib.loads(brain_toml(invent(replace(PLAIN, stack_format=kind)), {}))["stack"]
         assert ("voxel_um" in stack) == (kind not in formats.CARRIES_VOXEL)
         assert ("orientation" in stack) == (kind not in formats.CARRIES_CODE)
