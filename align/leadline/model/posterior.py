@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from leadline.base.arrays import FloatArray, frozen, frozen_vector
+from leadline.base.arrays import FloatArray, IntArray, frozen, frozen_vector
 
 if TYPE_CHECKING:
     from collections.abc import Mapping
@@ -22,6 +22,8 @@ class DepthPosterior:
     ``tip_distance_um`` : (R,) ascending. ``depth_um`` : (S, R) track depths, each draw decreasing along a row.
     ``informed`` : probability that the recording speaks of these labels at all (0 with no physiology).
     ``diagnostics`` : effective sample size, evidence and the like. ``warnings`` : sentences for the user.
+    ``label_id`` : (S, R) structure of each row in each draw, with the displacement of borders and of the track across
+    itself that the draw believes in, which the physical depth alone does not tell; None where not known.
     """
 
     penetration: str
@@ -31,6 +33,7 @@ class DepthPosterior:
     informed: float = 0.0
     diagnostics: Mapping[str, float] = field(default_factory=dict)
     warnings: tuple[str, ...] = ()
+    label_id: IntArray | None = None
 
     def __post_init__(self) -> None:
         tip = frozen_vector(self.tip_distance_um, "tip_distance_um")
@@ -39,6 +42,8 @@ class DepthPosterior:
         object.__setattr__(self, "diagnostics", MappingProxyType(dict(self.diagnostics)))
         if (np.diff(tip) <= 0).any():
             raise ValueError("tip_distance_um must ascend")
+        if self.label_id is not None:
+            object.__setattr__(self, "label_id", frozen(self.label_id, np.int64))
         if self.depth_um.ndim != 2 or self.depth_um.shape[1] != tip.size:
             raise ValueError(f"depth_um is {self.depth_um.shape}, rows are {tip.size}")
 

@@ -1,0 +1,206 @@
+"""Draws of depth maps from the tempered posterior: sequential Monte Carlo with slice moves."""
+
+from __future__ import annotations
+
+import os
+from concurrent.futures import ThreadPoolExecutor
+from dataclasses import dataclass
+from itertools import pairwise
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from leadline.anchoring.features import GROUPS
+from leadline.anchoring.noise import MODELS
+from leadline.base.arrays import FloatArray, IntArray
+from leadline.base.progress import SILENT, Progress
+
+if TYPE_CHECKING:
+    from leadline.anchoring.depth_prior import DepthPrior
+    from leadline.anchoring.pack import Packed
+
+SCOUTS = 6
+KEEP_ESS = 0.5
+MOVES = 2
+LAST_MOVES = 4
+MAX_SHRINK = 24
+MAX_LEVELS = 60
+
+
+@dataclass
+class Ensemble:
+    """Particles in motion: ``z`` (N, J), their log likelihood, noise models ``c`` (N, G), lateral ``copy`` (N,)."""
+
+    z: FloatArray
+    log_likelihood: FloatArray
+    c: IntArray
+    copy: IntArray
+    feature_weight: FloatArray
+    row_weight: FloatArray
+
+    def take(self, rows: IntArray) -> Ensemble:
+        """Copies of the particles ``rows``."""
+        return Ensemble(
+            self.z[rows].copy(),
+            self.log_likelihood[rows].copy(),
+            self.c[rows].copy(),
+            self.copy[rows].copy(),
+            self.feature_weight[rows].copy(),
+            self.row_weight[rows].copy(),
+        )
+
+
+@dataclass(frozen=True, slots=True)
+class Drawn:
+    """The outcome: ``ensemble``, log evidence of the tempered model, and how the run went."""
+
+    ensemble: Ensemble
+    log_evidence: float
+    levels: int
+    evaluations: int
+
+
+class Crew:
+    """Runs a kernel over the particles on all cores; what each particle gets does not depend on how many there are."""
+
+    def __init__(self) -> None:
+        self.size = max(1, min(os.cpu_count() or 1, int(os.environ.get("NUMBA_NUM_THREADS", "64")), 8))
+        self.pool = ThreadPoolExecutor(self.size) if self.size > 1 else None
+
+    def run(self, kernel: Any, head: tuple[Any, ...], arrays: tuple[Any, ...], tail: tuple[Any, ...] = ()) -> None:
+        """Call ``kernel(*head, *parts of arrays, *tail)`` on parts of the particles."""
+        n = len(arrays[0])
+        if self.pool is None:
+            kernel(*head, *arrays, *tail)
+            return
+        cuts = np.linspace(0, n, self.size + 1).astype(int)
+        jobs = [
+            self.pool.submit(kernel, *head, *(a[lo:hi] for a in arrays), *tail) for lo, hi in pairwise(cuts.tolist())
+        ]
+        for job in jobs:
+            job.result()
+
+
+def sample(
+    packed: Packed, prior: DepthPrior, rng: np.random.Generator, n: int, power: float, progress: Progress = SILENT
+) -> Drawn:
+    """Draw ``n`` depth maps from prior x likelihood^``power``.
+
+    Adaptive tempering (Del Moral, Doucet & Jasra 2006, J. R. Stat. Soc. B 68, 411) from many prior draws; at each
+    level particles are resampled and moved by elliptical slices under their own fitted Gaussian and under the prior.
+    """
+    crew = Crew()
+    particles = _scouts(packed, prior, rng, SCOUTS * n)
+    _evaluate(crew, packed, particles)
+    beta, log_z, levels, spent = 0.0, 0.0, 0, len(particles.z)
+    progress.begin("depth posterior", 1.0)
+    while beta < 1.0 and levels < MAX_LEVELS:
+        step = _next_step(particles.log_likelihood * power, 1.0 - beta)
+        gain = step * power * particles.log_likelihood
+        top = gain.max()
+        weight = np.exp(gain - top)
+        log_z += float(top + np.log(weight.mean()))
+        particles = particles.take(_resample(weight, particles.z @ prior.offset_basis, n, rng))
+        beta += step
+        levels += 1
+        for move in range(MOVES if beta < 1.0 else LAST_MOVES):
+            spent += move_all(crew, packed, particles, power * beta, rng, fitted=move % 2 == 0)
+        progress.step(step)
+    return Drawn(particles, log_z, levels, spent)
+
+
+def move_all(
+    crew: Crew, packed: Packed, particles: Ensemble, power: float, rng: np.random.Generator, *, fitted: bool
+) -> int:
+    """One slice move and one switch of noise model and lateral copy for every particle; returns evaluations."""
+    from leadline.anchoring._kernels import slice_move
+
+    n, dims = particles.z.shape
+    centre, root = (fit(particles.z)) if fitted else (np.zeros(dims), np.eye(dims))
+    a = np.linalg.solve(root, (particles.z - centre).T).T.copy()
+    count = np.zeros(n, np.int64)
+    crew_args = (
+        particles.z, particles.log_likelihood, particles.c, particles.copy,
+        particles.feature_weight, particles.row_weight,
+    )  # fmt: skip
+    random = (a, rng.standard_normal((n, dims)), np.log(rng.random(n)), rng.random((n, MAX_SHRINK)), count)
+    crew.run(_slice_in_order(slice_move), (packed.pack, power, centre, root), crew_args + random)
+    return int(count.sum()) + _switch(crew, packed, particles, power, rng)
+
+
+def _slice_in_order(kernel: Any) -> Any:
+    def call(pack: Any, power: float, centre: Any, root: Any, *rest: Any) -> None:
+        kernel(pack, power, *rest[:6], centre, root, *rest[6:])
+
+    return call
+
+
+def fit(z: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Centre and lower Cholesky root of a Gaussian fitted to particles, shrunk towards its diagonal and widened."""
+    n, dims = z.shape
+    covariance = np.cov(z.T).reshape(dims, dims)
+    share = min(0.6, 1.5 * dims / n)
+    covariance = (1 - share) * covariance + share * np.diag(np.diag(covariance))
+    return z.mean(axis=0), np.linalg.cholesky(1.15 * covariance + 1e-3 * np.eye(dims))
+
+
+def _switch(crew: Crew, packed: Packed, particles: Ensemble, power: float, rng: np.random.Generator) -> int:
+    """Metropolis step on the noise model of one group, or on the lateral copy of the track."""
+    n = len(particles.z)
+    proposal = particles.take(np.arange(n))
+    which = rng.integers(0, len(GROUPS) + (packed.copies > 1), n)
+    models = len(MODELS["lfp"])
+    for g in range(len(GROUPS)):
+        rows = np.flatnonzero(which == g)
+        proposal.c[rows, g] = (proposal.c[rows, g] + rng.integers(1, models, rows.size)) % models
+    rows = np.flatnonzero(which == len(GROUPS))
+    proposal.copy[rows] = rng.integers(0, packed.copies, rows.size)
+    _evaluate(crew, packed, proposal)
+    accept = np.log(rng.random(n)) < power * (proposal.log_likelihood - particles.log_likelihood)
+    particles.c[accept], particles.copy[accept] = proposal.c[accept], proposal.copy[accept]
+    particles.log_likelihood[accept] = proposal.log_likelihood[accept]
+    return n
+
+
+def _scouts(packed: Packed, prior: DepthPrior, rng: np.random.Generator, n: int) -> Ensemble:
+    shanks, groups, _, wide = packed.pack.log_null.shape
+    rows = packed.pack.centre.shape[1]
+    return Ensemble(
+        prior.draw(rng, n),
+        np.empty(n),
+        rng.integers(0, len(MODELS["lfp"]), (n, len(GROUPS))),
+        rng.integers(0, packed.copies, n),
+        np.ones((n, shanks, groups, wide)),
+        np.ones((n, shanks, rows)),
+    )
+
+
+def _evaluate(crew: Crew, packed: Packed, p: Ensemble) -> None:
+    from leadline.anchoring._kernels import evaluate
+
+    arrays = (p.z, p.c, p.copy, p.feature_weight, p.row_weight, p.log_likelihood)
+    crew.run(evaluate, (packed.pack,), arrays)
+
+
+def _next_step(log_weight: FloatArray, left: float) -> float:
+    """Largest step of the inverse temperature that keeps half of the effective sample size (by bisection)."""
+
+    def ess(step: float) -> float:
+        w = np.exp(step * (log_weight - log_weight.max()))
+        return float(w.sum() ** 2 / (w**2).sum()) / len(w)
+
+    if ess(left) >= KEEP_ESS:
+        return left
+    low, high = 0.0, left
+    for _ in range(40):
+        middle = (low + high) / 2
+        low, high = (middle, high) if ess(middle) >= KEEP_ESS else (low, middle)
+    return max(low, 1e-6)
+
+
+def _resample(weight: FloatArray, order_by: FloatArray, n: int, rng: np.random.Generator) -> IntArray:
+    """Systematic resampling along an order, which keeps neighbours' shares nearly exact (Gerber et al. 2019)."""
+    order = np.argsort(order_by, kind="stable")
+    edges = np.cumsum(weight[order])
+    points = (np.arange(n) + rng.random()) / n * edges[-1]
+    return np.asarray(order[np.minimum(np.searchsorted(edges, points), len(order) - 1)], np.int64)
