@@ -191,8 +191,6 @@ def open_nrrd(path: Path, channel: int) -> Image:
     for is_space in space:
         axes += next(names) if is_space else "c"
     data = pick(_nrrd_block(path, header, shape, offset), axes, channel, path)
-    if axes.count("c") > 1:
-        raise LeadlineError(f"has two non-spatial axes: {shape}", where=str(path), mend="Keep one axis of channels")
     voxel, unitless = _nrrd_sizes(header, space)
     letters, notes = _nrrd_letters(header, space, path)
     return Image(path, (_level(data),), voxel, letters, unitless, notes)

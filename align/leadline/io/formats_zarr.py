@@ -58,7 +58,7 @@ def open_zarr(path: Path, channel: int) -> Image:
 def _image(path: Path, group: Any, channel: int) -> Image:
     group, scales = _multiscales(path, group)
     axes = [axis if isinstance(axis, dict) else {"name": axis} for axis in scales["axes"]]
-    names = "".join(_letter(axis) for axis in axes)
+    names = _letters(axes)
     keep = [k for k, name in enumerate(names) if name in "xyz"]
     scaled = [_scale(path, dataset, scales, len(axes)) for dataset in scales["datasets"]]
     levels: list[Level] = []
@@ -102,14 +102,12 @@ def _multiscales(path: Path, group: Any) -> tuple[Any, Any]:
     return group, scales
 
 
-def _letter(axis: Any) -> str:
-    """One letter for an axis: a spatial axis by its name, 'c' for channels, something else for the others."""
-    kind, name = axis.get("type"), str(axis["name"]).lower()
-    if name in ("x", "y", "z") and kind in ("space", None):
-        return name
-    if kind == "channel" or (kind is None and name == "c"):
-        return "c"
-    return "t"
+def _letters(axes: list[Any]) -> str:
+    """One letter for each axis: 'z', 'y', 'x' for those of space as they come, 'c' for channels, 't' for others."""
+    usual = {"x": "space", "y": "space", "z": "space", "c": "channel"}
+    kinds = [axis.get("type") or usual.get(str(axis["name"]).lower(), "other") for axis in axes]
+    space = iter("zyx")
+    return "".join(next(space, "t") if kind == "space" else "c" if kind == "channel" else "t" for kind in kinds)
 
 
 def _scale(path: Path, dataset: Any, scales: Any, n: int) -> tuple[Any, Any]:

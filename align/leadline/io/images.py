@@ -108,12 +108,18 @@ def pick(source: Any, axes: str, channel: int, path: Path) -> Picked:
     Raises LeadlineError when the array is no stack of numbers, or has no such channel.
     """
     shape = dict(zip(axes, source.shape, strict=True))
+    if axes.count("c") > 1:
+        raise LeadlineError(
+            f"has two axes of channels: shape {tuple(source.shape)}, axes {axes.upper()!r}",
+            where=str(path),
+            mend="Keep one axis of channels",
+        )
     long = {name: int(n) for name, n in shape.items() if name not in "xyzc" and n != 1}
     if long:
         raise LeadlineError(
             f"has more than one point along {', '.join(repr(name) for name in long)} {list(long.values())}",
             where=str(path),
-            mend="Keep one time point and one view in the file; the axes are " + axes.upper(),
+            mend=f"The axes are {axes.upper()}: keep one time point and one view, and name the axis of planes Z",
         )
     if sum(name in "xyz" for name in axes) != 3:
         raise LeadlineError(

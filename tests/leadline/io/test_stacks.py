@@ -97,6 +97,11 @@ def test_levels_without_translation_lie_where_their_voxels_say(tmp_path, how):
         assert stack.levels[1].origin_um == pytest.approx([0, inside * 5, inside * 4])
 
 
+def test_axes_of_space_may_have_names_of_their_own(tmp_path):
+    axes = [{"name": n, "type": "space", "unit": "micrometer"} for n in ("slice", "row", "column")]
+    holds(open_stack(write_zarr(tmp_path / "a.zarr", axes=axes), code="PIR"))
+
+
 def test_transformations_of_the_whole_image_count(tmp_path):
     path = write_zarr(tmp_path / "a.zarr", steps=[[{"type": "scale", "scale": [4, 5, 2]}]])
     meta = json.loads((path / ".zattrs").read_text())
@@ -119,11 +124,14 @@ def test_faults_of_ome_zarr(tmp_path):
         write_zarr(tmp_path / "p.zarr", steps=[[{"type": "affine", "path": "m"}]]), "type 'affine' that is not read"
     )
     refuses(write_zarr(tmp_path / "s.zarr", steps=[[{"type": "scale", "scale": [8, 0, 4]}]]), "its scale is")
-    refuses(write_zarr(tmp_path / "x.zarr", steps=[[]], axes=[{"type": "space"}] * 3), "metadata are not as")
+    refuses(write_zarr(tmp_path / "x.zarr", steps=[[{"scale": [1, 1, 1]}]]), "metadata are not as")
     lost = write_zarr(tmp_path / "l.zarr", (VOXELS, VOXELS[:, ::2, ::2]))
     for file in sorted((lost / "1").rglob("*"), reverse=True):
         file.unlink() if file.is_file() else file.rmdir()
     refuses(lost, "dataset '1' is named in its metadata but is not there", code="PIR")
+    two = [{"name": n, "type": "channel"} for n in "ab"]
+    path = write_zarr(tmp_path / "c.zarr", (VOXELS[None, None],), axes=[*two, *ZARR_AXES])
+    refuses(path, "two axes of channels", code="PIR")
     zarr.open_group(tmp_path / "e.zarr", mode="w", zarr_format=2)
     refuses(tmp_path / "e.zarr", "carries no 'multiscales' metadata")
     (tmp_path / "nothing.zarr").mkdir()
@@ -212,6 +220,10 @@ def test_faults_of_tiff(tmp_path):
     refuses(tmp_path / "c.tif", "voxels are of type complex64")
     tifffile.imwrite(tmp_path / "q.tif", np.stack([VOXELS] * 2))
     refuses(tmp_path / "q.tif", "has 4 axes and does not name them")
+    tifffile.imwrite(tmp_path / "t.ome.tif", VOXELS, metadata={"axes": "TYX"})
+    refuses(
+        tmp_path / "t.ome.tif", r"more than one point along 't' \[6\]. The axes are TYX: .* name the axis of planes Z"
+    )
     (tmp_path / "no.tif").write_text("not a TIFF")
     refuses(tmp_path / "no.tif", "cannot be read")
     with tifffile.TiffWriter(tmp_path / "two.tif") as writer:
