@@ -22,6 +22,7 @@ if TYPE_CHECKING:
     from pathlib import Path
 
 ATLAS_FILE = "atlas.toml"
+_WRITTEN = (ATLAS_FILE, "labels.nrrd", "template.nrrd", "structures.csv")
 _REQUIRED = ("name", "labels", "template", "structures")
 _KEYS = (*_REQUIRED, "citation", "licence", "orientation", "voxel_um", "bregma_um")
 _SLAB_VOXELS = 2**24
@@ -213,6 +214,19 @@ def require_rows(
     return counts
 
 
+def require_free(folder: Path) -> None:
+    """Raise LeadlineError unless the folder is absent, empty, or an atlas written here, that may be replaced."""
+    if not folder.exists():
+        return
+    others = sorted(p.name for p in folder.iterdir() if p.name not in _WRITTEN) if folder.is_dir() else [folder.name]
+    if others:
+        raise LeadlineError(
+            f"holds other files ({', '.join(others[:3])}{', ...' if len(others) > 3 else ''}), which would be lost",
+            where=str(folder),
+            mend="Name a new folder for the atlas",
+        )
+
+
 def write_atlas(
     folder: Path,
     *,
@@ -225,10 +239,14 @@ def write_atlas(
     rows: Sequence[Structure],
     bregma_um: Sequence[float] | None = None,
 ) -> None:
-    """Write a whole atlas folder from PIR arrays; what stood there is replaced only when all is written."""
+    """Write a whole atlas folder from PIR arrays; an atlas that stood there is replaced only when all is written.
+
+    Raises LeadlineError when the folder holds anything but such an atlas.
+    """
     import nrrd
     import tomli_w
 
+    require_free(folder)
     voxel = [float(v) for v in voxel_um]
     header = {
         "space": "left-posterior-superior",

@@ -18,6 +18,7 @@ if TYPE_CHECKING:
 
 _UNIT_UM = {"um": 1.0, "mm": 1000.0}
 _LONGEST_UM = 100_000.0
+_TIP_SLACK_UM = 1.0
 
 
 def read_probe(path: Path, *, tip_offset_um: float = 0.0, probe_index: int | None = None) -> Probe:
@@ -68,8 +69,10 @@ def wire(probe: Probe, n_channels: int, skip_channels: Sequence[int] = ()) -> Pr
 
     Raises
     ------
-    LeadlineError : numbers do not agree, or a contact is wired to a trace that the recording lacks or that is skipped.
+    LeadlineError : numbers do not agree, a contact is wired to a trace that the recording lacks or that is skipped, or
+        a contact lies beyond the tip.
     """
+    _require_above_tip(probe)
     skipped = sorted({int(k) for k in skip_channels})
     beyond = [k for k in skipped if not 0 <= k < n_channels]
     if beyond:
@@ -101,6 +104,17 @@ def in_words(values: IntArray) -> str:
     runs = np.split(values, np.flatnonzero(np.diff(values) > 1) + 1)
     words = [f"{run[0]}" if len(run) == 1 else f"{run[0]} to {run[-1]}" for run in runs]
     return ", ".join(words[:8]) + (", ..." if len(words) > 8 else "")
+
+
+def _require_above_tip(probe: Probe) -> None:
+    row = int(np.argmin(probe.tip_distance_um))
+    if probe.tip_distance_um[row] < -_TIP_SLACK_UM:
+        raise LeadlineError(
+            f"contact {probe.contact_id[row]!r} would lie {-probe.tip_distance_um[row]:g} um beyond the tip "
+            f"(y = {probe.y_um[row]:g} um, tip_offset_um = {probe.tip_offset_um:g})",
+            where="tip_offset_um",
+            mend="y must grow up the shank; write tip_offset_um, the distance from the tip to y = 0 of the probe file",
+        )
 
 
 def _require_traces(probe: Probe, n_channels: int, skipped: list[int]) -> None:

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any, TypeAlias
 
 import numpy as np
 
+from leadline.base.errors import LeadlineError
 from leadline.base.progress import SILENT, Progress
 from leadline.model.atlas import OUTSIDE_ID, Atlas, Structures
 
@@ -47,10 +48,20 @@ def import_atlas(
     """
     from leadline.atlas.importing import structures_from
     from leadline.atlas.structures import derive
-    from leadline.io.atlases import read_labels, read_template, require_rows, require_same_grid, write_atlas
+    from leadline.io.atlases import (
+        read_labels,
+        read_template,
+        require_free,
+        require_rows,
+        require_same_grid,
+        write_atlas,
+    )
     from leadline.io.images import IN_COMMAND
     from leadline.io.structure_tables import read_foreign_table
 
+    require_free(out)
+    if out.resolve() in (path.resolve().parent for path in (labels, template, structures)):
+        raise LeadlineError("holds the files to import", where=str(out), mend="Name a new folder for the atlas")
     progress.begin("importing the atlas", 4)
     imported = structures_from(read_foreign_table(structures), where=str(structures))
     rows = derive(imported.rows, given=imported.given)

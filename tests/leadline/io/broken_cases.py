@@ -343,6 +343,8 @@ PROBES = (
            ("'c0' and 'c4' share the place",)),
     Broken("two contacts of one name", probe_file(contact_ids=["c0", *[f"c{k}" for k in ANY[:-1]]]), ("named 'c0'",)),
     Broken("metres for micrometres", probe_file(si_units="mm"), ("contacts span 1550 mm", "si_units")),
+    Broken("y grows down the shank", probe_file(contact_positions=[[0.0, -50.0 * k] for k in ANY]),
+           ("'c31' would lie 1450 um beyond the tip", "y must grow up the shank")),
     Broken("an unknown unit", probe_file(si_units="inch"), ("si_units is 'inch'",)),
     Broken("too few shank names", probe_file(shank_ids=["0"]), ("shank_ids has 1 entries for 32 contacts",)),
     Broken("a trace wired to two contacts", probe_file(device_channel_indices=[0, *ANY[:-1]]),

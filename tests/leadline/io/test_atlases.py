@@ -223,6 +223,20 @@ def test_a_refused_import_writes_nothing(tmp_path):
     assert not (tmp_path / "out").exists()
 
 
+def test_an_atlas_never_replaces_other_files(tmp_path, folder):
+    sources = write_sources(tmp_path)
+    with pytest.raises(LeadlineError, match=r"holds other files \(atlas, labels.nii.gz, s.csv, ...\)"):
+        import_atlas(*sources[:3], tmp_path, name="Tiny")
+    import_atlas(*sources[:3], folder, name="Another")
+    assert read_atlas(folder).name == "Another"
+    with pytest.raises(LeadlineError, match="holds the files to import"):
+        import_atlas(folder / "labels.nrrd", folder / "template.nrrd", folder / "structures.csv", folder, name="Tiny")
+    (folder / "notes.txt").write_text("by hand")
+    with pytest.raises(LeadlineError, match=r"notes\.txt"):
+        import_atlas(*sources[:3], folder, name="Tiny")
+    assert (folder / "notes.txt").read_text() == "by hand"
+
+
 def test_columns_that_the_folder_lacks_are_derived(folder):
     edit(folder, "layer,coarse,tissue", "x,y,z", "structures.csv")
     assert {r.tissue for r in read_atlas(folder).structures.rows} == {"grey"}

@@ -121,6 +121,11 @@ def bare(n, channel=None):
                  np.full(n, -1) if channel is None else channel)  # fmt: skip
 
 
+def below_tip():
+    """A probe whose y grows down the shank."""
+    return Probe(tuple("0123"), np.zeros(4), np.arange(4) * -20.0, np.zeros(4, int), np.full(4, -1))
+
+
 @given(st.integers(1, 60), st.sets(st.integers(0, 70), max_size=8))
 def test_an_unwired_probe_takes_the_traces_that_are_not_skipped_in_order(n, skip):
     total = n + len(skip)
@@ -145,6 +150,7 @@ def test_a_wired_probe_keeps_its_wiring_and_leaves_traces_out():
          r", e.g. skip_channels = \[384\]"),
         (bare(384), 384, [383], "384 traces less 1 in skip_channels, the probe has 384 contacts"),
         (bare(10), 8, [], "8 traces, the probe has 10 contacts"),
+        (below_tip(), 4, [], r"contact '3' would lie 60 um beyond the tip \(y = -60 um, tip_offset_um = 0\)"),
         (bare(4), 5, [5], "skip_channels names trace 5, the recording has traces 0 to 4"),
         (bare(3, np.array([0, 1, 9])), 9, [], "contact '2' is wired to trace 9, the recording has 9 traces"),
         (bare(3, np.array([0, 1, 2])), 9, [2], "trace 2 is in skip_channels and is wired to a contact"),
