@@ -34,4 +34,4 @@ def manual_map(anchors: Iterable[Anchor], end_depth_um: float) -> DepthMap:
 def recentred(posterior: DepthPosterior, depth_map: DepthMap) -> DepthPosterior:
     """The same spread of draws about ``depth_map`` as their median: what is not known stays as wide as it was."""
     shift = depth_map(posterior.tip_distance_um) - posterior.median_um
-    return replace(posterior, depth_um=posterior.depth_um + shift, informed=0.0)
+    return replace(posterior, depth_um=posterior.depth_um + shift, informed=0.0, label_id=None)

@@ -56,16 +56,19 @@ def locate(
 ) -> Located:
     """Locate contacts at ``tip_distance_um`` (n,) of one shank.
 
-    The depth draws hold every error along the track. The registration error across the track is added here: each
-    depth draw is looked up at eight places drawn about it, ``registration_error_um`` being the standard deviation of
-    one coordinate.
+    The depth draws hold every error along the track. Where the posterior also says which structure each draw believes
+    in, that is counted. Where it does not, the registration error across the track is added here: each depth draw is
+    looked up at eight places drawn about it, ``registration_error_um`` being the standard deviation of one coordinate.
     """
     rows = np.searchsorted(posterior.tip_distance_um, tip_distance_um)
     draws = posterior.depth_um[:, rows]
     depth = np.median(draws, axis=0)
     atlas_um = track.atlas_at(depth)
     region = atlas.label_at(atlas_um)
-    region_draws = atlas.label_at(_with_lateral_error(draws, track, registration_error_um, seed))
+    if posterior.label_id is None:
+        region_draws = atlas.label_at(_with_lateral_error(draws, track, registration_error_um, seed))
+    else:
+        region_draws = posterior.label_id[:, rows]
     coarse_of = _coarse_ids(atlas.structures, np.union1d(region, region_draws))
     return Located(
         track_depth_um=depth,

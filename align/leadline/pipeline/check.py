@@ -95,7 +95,17 @@ class _Look:
         path = penetration.points
         assert path is not None
         points = self.hear(lambda: read_hand_points(path), about)
-        for shank in points or {}:
+        stack = self.hear(lambda: self.bench.background)
+        for shank, rows in (points or {}).items():
+            if stack is not None and ((rows > stack.finest.extent_um) | (rows < -stack.finest.voxel_um)).any():
+                size = ", ".join(f"{e:.0f}" for e in stack.finest.extent_um)
+                self.faults.append(
+                    LeadlineError(
+                        f"a point of shank {shank} lies outside the stack, which reaches to {size} um",
+                        where=f"{about}: {path}",
+                        mend="Points are um along the stored axes, not voxels",
+                    )
+                )
             if shank not in probe.shanks:
                 self.faults.append(
                     LeadlineError(

@@ -15,7 +15,7 @@ from leadline.model.track import Track
 from leadline.model.transform import Registration
 
 if TYPE_CHECKING:
-    from collections.abc import Sequence
+    from collections.abc import Mapping, Sequence
     from pathlib import Path
 
     from leadline.model.brain import Brain
@@ -194,6 +194,8 @@ def write_posteriors(brain: Brain, posteriors: Sequence[DepthPosterior]) -> None
     for i, p in enumerate(posteriors):
         arrays[f"tip_{i}"] = p.tip_distance_um
         arrays[f"depth_{i}"] = p.depth_um.astype(np.float32)
+        if p.label_id is not None:
+            arrays[f"label_{i}"] = p.label_id.astype(np.uint32)
         heads.append(
             {
                 "penetration": p.penetration,
@@ -212,15 +214,18 @@ def read_posteriors(brain: Brain) -> tuple[DepthPosterior, ...]:
     """Draws as kept."""
     with np.load(brain.cache / "posterior.npz", allow_pickle=False) as arrays:
         heads = json.loads(str(arrays["heads"]))
-        return tuple(
-            DepthPosterior(
-                h["penetration"],
-                h["shank"],
-                arrays[f"tip_{i}"],
-                arrays[f"depth_{i}"].astype(float),
-                h["informed"],
-                h["diagnostics"],
-                tuple(h["warnings"]),
-            )
-            for i, h in enumerate(heads)
-        )
+        return tuple(_posterior(arrays, i, head) for i, head in enumerate(heads))
+
+
+def _posterior(arrays: Mapping[str, Any], i: int, head: dict[str, Any]) -> DepthPosterior:
+    label = arrays[f"label_{i}"].astype(np.int64) if f"label_{i}" in arrays else None
+    return DepthPosterior(
+        head["penetration"],
+        head["shank"],
+        arrays[f"tip_{i}"],
+        arrays[f"depth_{i}"].astype(float),
+        head["informed"],
+        head["diagnostics"],
+        tuple(head["warnings"]),
+        label,
+    )
