@@ -17,15 +17,15 @@ _LAYER = re.compile(rf"\blayers?\s+({_ONE}(?:\s*[/\-–]\s*{_ONE})?)(?![\w/\-–
 _SHORT_LAYER = re.compile(r"\bL([1-6][abc]?(?:[/\-–][1-6][abc]?)?)$")
 _SUFFIX = re.compile(r"[-_ ]?L?([1-6][abc]?(?:/[1-6])?)")
 
-_GREY = re.compile(r"\b(nucle(us|i)|gangli(on|a)|gr[ea]y matter)\b")
+_GREY = re.compile(r"\b(nucle(us|i)|gangli(on|a)|gr[ea]y matter)\b(?! related)")
 _TISSUE_ZONE = re.compile(r"\b(ventricular|subventricular|subependymal|periventricular) zone\b")
 _GREY_BY_NAME = re.compile(r"\b(area|areas|cortex|complex|zone|region|field)\b")
 _WHITE_ROOT = re.compile(r"\b(fib(er|re)s?|white matter)\b")
 _WHITE = re.compile(
     r"\b(tract(s|us)?|corpus callosum|callosal|capsules?|commissures?|"
-    r"fascicul(us|i)|bundles?|peduncles?|lemnisc(us|i)|fornix|alveus|fimbria|cingulum|stria|chiasma?|nerves?|"
+    r"fascicul(us|i)|bundles?|peduncles?|lemnisc(us|i)|fornix|alveus|fimbria|cingulum|stria|chiasma?|nerv(es?|us|i)|"
     r"decussations?|forceps|brachium|funicul(us|i)|radiations?|corona radiata|arbor vitae|medullary lamina|"
-    r"perforant path|white layer)\b|^pyramid$"
+    r"path(ways?)?|ansa|white layer)\b|^pyramid$"
 )
 _VENTRICLE = re.compile(
     r"\b(ventricles?|ventricular systems?|(cerebral |mesencephalic )?aqueduct|central canal|"
