@@ -18,9 +18,12 @@ if TYPE_CHECKING:
 
 REACH_UM = 250.0  # neighbours that a channel is judged against
 FLAT_DB = -40.0  # below the shank's median: no tissue is that quiet
-QUIET_DB, MUTE_DB = -10.0, -25.0  # below the neighbours: without, and even with, signals in common with them
-LOUD_DB, SHOUTING_DB = 10.0, 20.0  # above the neighbours, likewise; a thin cell layer is some 6 dB louder
-LONE, APART = 0.35, 0.75  # likeness to the neighbours, as a share of the usual likeness around
+QUIET_DB, MUTE_DB = -6.0, -25.0  # below the neighbours: with little, and even with much, in common with them
+LONE = 0.8  # likeness to the neighbours, as a share of the usual likeness around
+CLOSE_UM = 50.0
+LOUD_DB = 8.0  # own noise above that of the neighbours
+OWN_SHARE = 0.4  # of a noisy channel's power that is its own noise
+SHOUTING_DB = 20.0  # above the neighbours in all, whatever is shared; a thin cell layer is some 6 dB louder
 OUTSIDE_ROWS = 3
 OUTSIDE_SHARE = 0.4
 OUTSIDE_DB = -15.0
@@ -30,15 +33,16 @@ def bad_channels(statistics: FieldStatistics, probe: Probe) -> tuple[BoolArray, 
     """Which channels ``(C,)`` are dead and which are noisy.
 
     Each is judged against the contacts of its shank within 250 um, so that a whole quiet stretch (a ventricle, white
-    matter) is neither. Dead: 40 dB below the shank, 25 dB below the neighbours, or 10 dB below them and sharing
-    hardly any of their gamma signals. Noisy: 20 dB above the neighbours from 100 Hz up (those within 250 um and also
-    the nearest four, which spares a thin cell layer), or 10 dB above them and sharing clearly less of their signals
-    than they share of each other's.
+    matter) is neither. Dead: 40 dB below the shank, 25 dB below the neighbours, or 6 dB below them and also below the
+    nearest four, sharing less of their signals than they share of each other's. Noisy: what it shares with no
+    neighbour is 8 dB more than the neighbours' own noise and at least two fifths of its power (only where a neighbour
+    stands within 50 um: on a coarser probe it may be the one contact in a thin cell layer); or it stands 20 dB above
+    its neighbours from 100 Hz up.
     """
     top = USABLE * 2 * float(statistics.frequency_hz[-1])
     level = band_power_db(statistics, (1.0, min(300.0, top)))
     high = band_power_db(statistics, (min(100.0, top / 2), min(1000.0, top)))
-    alike = _likeness(statistics.cross_uv2, probe)
+    alike, own_db, own_share = _sharing(statistics.cross_uv2, probe)
     dead = np.zeros(level.size, bool)
     noisy = np.zeros(level.size, bool)
     for shank in probe.shanks:
@@ -48,13 +52,14 @@ def bad_channels(statistics: FieldStatistics, probe: Probe) -> tuple[BoolArray, 
         live = members[~flat]
         if live.size < 5:
             continue
-        near = _neighbourhoods(probe.tip_distance_um[live])
-        below = level[live] - _median_of(level[live], near)
+        near = _neighbourhoods(probe.tip_distance_um[live], REACH_UM)
+        next_to = _neighbourhoods(probe.tip_distance_um[live], 0.0)
+        below = level[live] - np.minimum(_median_of(level[live], near), _median_of(level[live], next_to))
         share = alike[live] / np.maximum(_median_of(alike[live], near), 0.2)
         dead[live] |= (below < MUTE_DB) | ((below < QUIET_DB) & (share < LONE))
-        next_to = _neighbourhoods(probe.tip_distance_um[live], reach_um=0.0)
-        above = high[live] - np.maximum(_median_of(high[live], near), _median_of(high[live], next_to))
-        noisy[live] = (above > SHOUTING_DB) | ((above > LOUD_DB) & (share < APART))
+        louder = own_db[live] - _median_of(own_db[live], near)
+        noisy[live] = (louder > LOUD_DB) & (own_share[live] > OWN_SHARE) & _close(probe.tip_distance_um[live])
+        noisy[live] |= high[live] - _median_of(high[live], near) > SHOUTING_DB
     return dead, noisy & ~dead
 
 
@@ -104,27 +109,40 @@ def coherency_size(cross: AnyArray) -> FloatArray:
     return size
 
 
-def _likeness(cross: Mapping[str, AnyArray], probe: Probe) -> FloatArray:
-    """Median coherency ``(C,)`` of each contact with those of its shank within 150 um, in the gamma band."""
-    name = next((band for band in ("gamma", "theta", "delta") if band in cross), None)
+def _sharing(cross: Mapping[str, AnyArray], probe: Probe) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """How much each contact ``(C,)`` shares with those of its shank within 150 um, in its fastest crossed band.
+
+    Returns the median coherency, the power in dB that not even the most similar neighbour explains, and its share.
+    """
+    name = next((band for band in ("ripple", "gamma", "theta", "delta") if band in cross), None)
     if name is None:
-        return np.ones(len(probe.contact_id))
-    near = np.abs(probe.tip_distance_um[:, None] - probe.tip_distance_um) <= 150.0
-    near &= probe.shank[:, None] == probe.shank
-    np.fill_diagonal(near, False)
-    size = np.where(near, np.nan_to_num(coherency_size(cross[name])), np.nan)
-    lonely = ~near.any(axis=1)
-    size[lonely] = 0.0
-    return np.asarray(np.nanmedian(size, axis=1), float)
+        nothing = np.zeros(len(probe.contact_id))
+        return nothing + 1.0, nothing, nothing
+    distance = np.abs(probe.tip_distance_um[:, None] - probe.tip_distance_um)
+    distance[probe.shank[:, None] != probe.shank] = np.inf
+    np.fill_diagonal(distance, np.inf)
+    near = distance <= np.maximum(150.0, distance.min(axis=1, keepdims=True))
+    size = np.where(near, np.nan_to_num(coherency_size(cross[name])), 0.0)
+    alike = np.array([np.median(row[mask]) if mask.any() else 0.0 for row, mask in zip(size, near, strict=True)])
+    share = 1.0 - size.max(axis=1) ** 2
+    power = np.real(np.diagonal(cross[name]))
+    return alike, 10.0 * np.log10(np.maximum(power * share, 1e-9)), share
 
 
-def _neighbourhoods(tip_distance_um: FloatArray, reach_um: float = REACH_UM) -> BoolArray:
+def _neighbourhoods(tip_distance_um: FloatArray, reach_um: float) -> BoolArray:
     """Which contacts ``(n, n)`` each is judged against: those within reach, and at least the nearest four."""
     distance = np.abs(tip_distance_um[:, None] - tip_distance_um)
     np.fill_diagonal(distance, np.inf)
     reach = np.maximum(np.sort(distance, axis=1)[:, 3], reach_um)
     near: BoolArray = distance <= reach[:, None]
     return near
+
+
+def _close(tip_distance_um: FloatArray) -> BoolArray:
+    """Which contacts ``(n,)`` have another within 50 um of tip distance."""
+    distance = np.abs(tip_distance_um[:, None] - tip_distance_um)
+    np.fill_diagonal(distance, np.inf)
+    return np.asarray(distance.min(axis=1) <= CLOSE_UM, bool)
 
 
 def _median_of(values: FloatArray, near: BoolArray) -> FloatArray:

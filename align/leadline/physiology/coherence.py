@@ -14,6 +14,7 @@ if TYPE_CHECKING:
     from leadline.physiology.rows import Rows
 
 NEIGHBOUR_UM = 40.0  # how far apart two neighbours are, at the least: finer rows would all be alike
+TOGETHER = 0.1  # coherence above which the rhythms of two shanks are one
 FARTHEST = 1.75  # times that distance, or times the pitch where it is wider; beyond it lies a gap
 
 
@@ -40,6 +41,31 @@ def phase_and_coherence(cross: AnyArray, reference: int) -> tuple[FloatArray, Fl
     scale = np.where(known, power * power[reference], np.nan)
     phase = np.where(known, np.angle(with_reference), np.nan)
     return phase, np.asarray(np.abs(with_reference) ** 2 / scale, float)
+
+
+def theta_features(cross: AnyArray, rows: Rows, usable: BoolArray) -> tuple[FloatArray, FloatArray]:
+    """Phase and coherence ``(R,)`` of each row with the reference row of its shank.
+
+    Where the references of two shanks beat together (coherence above 0.1), the phases of both count from that of the
+    shank with the strongest one.
+    """
+    phase, coherence = np.full(len(rows), np.nan), np.full(len(rows), np.nan)
+    references = {}
+    for shank in np.unique(rows.shank):
+        members = np.flatnonzero(rows.shank == shank)
+        within = reference_row(cross[np.ix_(members, members)], usable[members])
+        if within >= 0:
+            references[int(shank)] = int(members[within])
+            phase[members], coherence[members] = phase_and_coherence(cross[np.ix_(members, members)], within)
+    if not references:
+        return phase, coherence
+    power = np.real(np.diagonal(cross))
+    main = max(references.values(), key=lambda row: power[row])
+    for shank, row in references.items():
+        together = np.abs(cross[row, main]) ** 2 / (power[row] * power[main])
+        if row != main and together > TOGETHER:
+            phase[rows.shank == shank] += np.angle(cross[row, main])
+    return np.angle(np.exp(1j * phase)), coherence
 
 
 def neighbour_likeness(

@@ -22,7 +22,8 @@ MIN_EVENTS = 10
 SMOOTH_S = 0.008
 ARTEFACT_S = 0.004  # of the response that the event itself may spoil
 CLEAR_ROWS = 3  # rows that must show a response
-RESPONSE = 0.5  # of the peak's power: the response lasts while it is above
+FIRST_PEAK = 0.35  # of the largest power that the first peak must reach
+FIRST_S = 0.008
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -59,12 +60,14 @@ def responses(
     excluded_s: FloatArray,
     window_s: tuple[float, float],
     *,
+    limit_uv: FloatArray | None = None,
     progress: Progress = SILENT,
 ) -> tuple[Response, ...]:
     """Average the samples around events: all kinds together, and each of the six most frequent kinds.
 
     Only windows around at most 600 events, spread evenly, are read; kinds with fewer than ten events are not shown
-    alone. Events near excluded intervals are dropped.
+    alone. Events near excluded intervals are dropped. Samples beyond ``limit_uv`` (C,) of the window's own mean are
+    cut to it, which bounds what an artefact can do.
     """
     usable = np.flatnonzero(usable_events(events, traces.n_samples, traces.sampling_hz, excluded_s, window_s))
     if usable.size < MIN_EVENTS:
@@ -82,6 +85,9 @@ def responses(
         if samples.shape[1] == time_s.size:
             kind = events.kind[index] if events.kind[index] in kinds else REST
             side = counts[kind].sum() % 2
+            if limit_uv is not None:
+                samples = samples - samples.mean(axis=1, keepdims=True)
+                samples = np.clip(samples, -limit_uv[:, None], limit_uv[:, None])
             sums[kind][side] += samples
             counts[kind][side] += 1
         progress.step()
@@ -137,9 +143,9 @@ class EvokedRows:
 def evoked_rows(response: Response, potential: FloatArray, density: FloatArray) -> EvokedRows:
     """Read the features of each row off a response.
 
-    The response lasts from the first to the last moment at which its current sources hold more than half of their
-    peak power; density and potential are means over that time. Latencies are those of the largest potential and of
-    the deepest sink of the row, NaN where these stand less than four times above the noise.
+    Density and potential are means over 16 ms around the first peak of the current sources, which marks where the
+    answer enters; later sinks speak through their latencies. Latencies are those of the largest potential and of the
+    deepest sink of the row, NaN where these stand less than four times above the noise.
 
     Parameters
     ----------
@@ -154,13 +160,12 @@ def evoked_rows(response: Response, potential: FloatArray, density: FloatArray) 
     noise = csd_noise if np.isfinite(csd).any() else uv_noise
     score = np.abs(np.nan_to_num(base / _spread(noise[:, after])[:, None])) * after
     power = np.square(score).mean(axis=0)
-    lasting = np.flatnonzero(power >= RESPONSE * power.max())
-    span = slice(int(lasting[0]), int(lasting[-1]) + 1)
+    span = np.abs(response.time_s - response.time_s[_first_peak(power)]) <= FIRST_S
     clarity = float(np.sort(score.max(axis=1))[-CLEAR_ROWS:][0])
     uv_sd, csd_sd = _spread(uv_noise[:, after]), _spread(csd_noise[:, after])
     return EvokedRows(
-        _mean(csd, span),
-        _mean(uv, span),
+        csd[:, span].mean(axis=1),
+        uv[:, span].mean(axis=1),
         _latency(np.abs(uv), uv_sd, response.time_s),
         _latency(-csd, csd_sd, response.time_s),
         response.time_s,
@@ -168,6 +173,12 @@ def evoked_rows(response: Response, potential: FloatArray, density: FloatArray) 
         csd,
         clarity,
     )
+
+
+def _first_peak(power: FloatArray) -> int:
+    """Index of the first local maximum of ``power`` (T,) that reaches a good part of the largest."""
+    inner = (power[1:-1] >= power[:-2]) & (power[1:-1] > power[2:]) & (power[1:-1] >= FIRST_PEAK * power.max())
+    return int(np.flatnonzero(inner)[0]) + 1 if inner.any() else int(power.argmax())
 
 
 def _spread(noise: FloatArray) -> FloatArray:
@@ -179,11 +190,6 @@ def _spread(noise: FloatArray) -> FloatArray:
 
 def _apply(matrix: FloatArray, values: FloatArray) -> FloatArray:
     return np.asarray(matrix @ values, float)
-
-
-def _mean(values: FloatArray, span: slice) -> FloatArray:
-    part = values[:, span]
-    return part.mean(axis=1) if part.shape[1] else np.full(len(values), np.nan)
 
 
 def _latency(size: FloatArray, sd: FloatArray, time_s: FloatArray) -> FloatArray:

@@ -12,7 +12,7 @@ from leadline.base.errors import LeadlineError
 from leadline.base.progress import SILENT, Progress
 from leadline.physiology.channels import bad_channels, outside_rows
 from leadline.physiology.chunks import fields, plan
-from leadline.physiology.coherence import neighbour_likeness, phase_and_coherence, reference_row
+from leadline.physiology.coherence import neighbour_likeness, theta_features
 from leadline.physiology.csd import row_csd_operator
 from leadline.physiology.evoked import EvokedRows, evoked_rows, responses, usable_events
 from leadline.physiology.rows import Rows
@@ -25,6 +25,7 @@ if TYPE_CHECKING:
     from leadline.model.settings import ProfileSettings
 
 FREQUENCY_HZ = 0.5 * 2.0 ** (np.arange(0, 89) / 8.0)  # 0.5 to 1024 Hz, eight to the octave
+LIMIT_SD = 5.0  # samples around an event count for at most this many standard deviations of their channel
 CLEAR = 5.5  # standard deviations of the noise; random times reach 3 to 5
 
 
@@ -125,7 +126,19 @@ def _add_fields(
     _add_powers(reading, statistics, good, settings)
     _add_likeness(reading, statistics, probe, good)
     if recording.events is not None:
-        _add_evoked(reading, recording.events, recording.excluded_s, traces, probe, good, settings, progress)
+        step_hz = float(statistics.frequency_hz[1])
+        limit_uv = LIMIT_SD * np.sqrt(statistics.power_uv2_per_hz.sum(axis=1) * step_hz)
+        _add_evoked(
+            reading,
+            recording.events,
+            recording.excluded_s,
+            traces,
+            probe,
+            good,
+            limit_uv,
+            settings,
+            progress,
+        )
 
 
 def _note_bad(reading: Reading, probe: Probe, dead: BoolArray, noisy: BoolArray) -> None:
@@ -193,12 +206,9 @@ def _add_likeness(reading: Reading, statistics: FieldStatistics, probe: Probe, g
     reading.features["neighbour_correlation"] = correlation
     reading.features["neighbour_coherence"] = coherence
     if "theta" in cross:
-        theta = row_cross(cross["theta"], rows, good)
-        reference = reference_row(theta, reading.flags == "")
-        if reference >= 0:
-            phase, likeness = phase_and_coherence(theta, reference)
-            reading.features["theta_phase_rad"] = phase
-            reading.features["theta_coherence"] = likeness
+        phase, likeness = theta_features(row_cross(cross["theta"], rows, good), rows, reading.flags == "")
+        reading.features["theta_phase_rad"] = phase
+        reading.features["theta_coherence"] = likeness
 
 
 def _add_evoked(
@@ -208,10 +218,13 @@ def _add_evoked(
     traces: Traces,
     probe: Probe,
     good: BoolArray,
+    limit_uv: FloatArray,
     settings: ProfileSettings,
     progress: Progress,
 ) -> None:
-    found = responses(traces, probe.channel, events, excluded_s, settings.event_window_s, progress=progress)
+    found = responses(
+        traces, probe.channel, events, excluded_s, settings.event_window_s, limit_uv=limit_uv, progress=progress
+    )
     if not found:
         reading.warnings.append("too few events lie in usable stretches for a response")
         return

@@ -22,9 +22,11 @@ CROSS_BINS = 24  # bins of a band that enter the cross-spectra; neighbouring bin
 CROSS_SEGMENTS = 100
 USABLE = 0.45  # of the sampling rate; above it anti-alias filters have taken the power away
 LINE_EXCESS = 4.0  # 6 dB above its surroundings, and narrow, is pickup
-SCAN_SEGMENTS = 24
-SCAN_CHANNELS = 16
-ARTEFACT_DB = 10.0
+SCAN_SEGMENTS = 32
+WATCHED_CHANNELS = 16  # contacts whose median level tells an artefact, which all hear, from a ripple, which few hear
+WATCHED_HZ = ((4.0, 12.0), (12.0, 30.0), (30.0, 90.0), (140.0, 220.0), (300.0, 1000.0))
+ARTEFACT_DB = 3.0
+ARTEFACT_SD = 4.0
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -70,23 +72,24 @@ def field_statistics(
     """Read the segments of ``plan`` once and average their spectra [1]_.
 
     Segments overlap by half, lose their mean and take a periodic Hann window, as in ``scipy.signal.welch``; the window
-    is applied to the spectra, not to the samples. Segments whose broadband level stands far above the recording's own
-    are left out. Samples are float32 throughout: a bin 60 dB below the strongest is right to 1e-4.
+    is applied to the spectra, not to the samples. Segments that most contacts hear louder than usual in some band, by
+    3 dB and four robust standard deviations of the recording's own changes, are left out as artefacts. Samples are
+    float32 throughout.
 
     References
     ----------
     .. [1] Welch (1967), IEEE Trans. Audio Electroacoust. 15, 70, doi:10.1109/TAU.1967.1161901.
     """
     frequency = np.asarray(np.fft.rfftfreq(plan.segment, 1.0 / traces.sampling_hz), float)
-    median_power, threshold = _scan(traces, channels, plan)
-    line = line_bins(frequency, median_power, settings.mains_hz)
+    typical, threshold = _scan(traces, channels, plan, frequency)
+    line = line_bins(frequency, typical, settings.mains_hz)
     sums = _Sums(len(channels), frequency, line, settings, plan)
     progress.begin("reading fields", plan.n_segments)
     for start, stop, count in plan.blocks():
         samples = np.ascontiguousarray(traces.read_uv(start, stop, channels).T)
         samples -= samples[:, ::16].mean(axis=1, keepdims=True)  # float32 would round small signals on a large offset
         segments = np.lib.stride_tricks.sliding_window_view(samples, plan.segment, axis=1)[:, :: plan.hop]
-        sums.add(segments, _levels(segments) <= threshold)
+        sums.add(segments, np.asarray((_levels(_watched(segments), frequency) <= threshold).all(axis=1), bool))
         progress.step(count)
     return sums.result(traces.sampling_hz)
 
@@ -164,31 +167,41 @@ def _hann(spectrum: AnyArray, segments: IntArray, bins: IntArray) -> AnyArray:
     return 0.5 * spectrum[:, at, bins] - 0.25 * (spectrum[:, at, bins - 1] + spectrum[:, at, bins + 1])
 
 
-def _levels(segments: AnyArray) -> FloatArray:
-    """Broadband level ``(S,)`` in dB of each segment: median over some contacts of the power of its differences."""
-    some = segments[:: max(1, len(segments) // 16)]
-    power = np.square(np.diff(some, axis=-1)).mean(axis=-1)
-    return np.asarray(10.0 * np.log10(np.median(power, axis=0) + 1e-12), float)
-
-
-def _scan(traces: Traces, channels: IntArray, plan: Plan) -> tuple[FloatArray, float]:
-    """Typical spectrum ``(F,)`` and artefact threshold in dB, from a few segments of a few contacts spread evenly."""
+def _watched(segments: AnyArray) -> AnyArray:
+    """Windowed power ``(C, S, F)`` of segments of a few contacts."""
     from scipy.fft import rfft
 
-    some = channels[:: max(1, len(channels) // SCAN_CHANNELS)]
+    spectrum = rfft(segments[:: max(1, len(segments) // WATCHED_CHANNELS)], axis=-1)
+    spectrum[..., 0] = 0.0
+    inner = 0.5 * spectrum[..., 1:-1] - 0.25 * (spectrum[..., :-2] + spectrum[..., 2:])
+    return np.pad(np.square(inner.real) + np.square(inner.imag), ((0, 0), (0, 0), (1, 1)), mode="edge")
+
+
+def _levels(power: AnyArray, frequency_hz: FloatArray) -> FloatArray:
+    """Level ``(S, B)`` in dB of each segment in the watched bands: the median over contacts."""
+    levels = []
+    for low, high in WATCHED_HZ:
+        inside = (frequency_hz >= low) & (frequency_hz <= high)
+        if inside.any():
+            levels.append(np.median(power[..., inside].mean(axis=-1), axis=0))
+    return np.asarray(10.0 * np.log10(np.stack(levels, axis=-1) + 1e-12), float)
+
+
+def _scan(traces: Traces, channels: IntArray, plan: Plan, frequency_hz: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Typical spectrum ``(F,)`` and artefact thresholds ``(B,)`` in dB, from a few segments spread evenly."""
+    some = channels[:: max(1, len(channels) // WATCHED_CHANNELS)]
     starts = np.concatenate([start + plan.hop * np.arange(n) for start, _, n in plan.blocks()])
     starts = starts[:: max(1, len(starts) // SCAN_SEGMENTS)]
-    power, level = [], []
+    logs, levels = [], []
     for start in starts.tolist():
         samples = np.ascontiguousarray(traces.read_uv(start, start + plan.segment, some).T)
-        spectrum = rfft(samples[:, None], axis=-1)
-        spectrum[..., 0] = 0.0
-        windowed = _hann(spectrum, np.zeros(1, np.int64), np.arange(1, spectrum.shape[-1] - 1))[:, 0]
-        power.append(np.log(np.square(np.abs(windowed)) + 1e-12).mean(axis=0))
-        level.append(_levels(samples[:, None])[0])
-    spread = 1.4826 * float(np.median(np.abs(np.array(level) - np.median(level))))
-    threshold = float(np.median(level)) + max(ARTEFACT_DB, 6.0 * spread)
-    return np.pad(np.exp(np.mean(power, axis=0)), 1, mode="edge"), threshold
+        power = _watched(samples[:, None])
+        logs.append(np.log(power[:, 0] + 1e-12).mean(axis=0))
+        levels.append(_levels(power, frequency_hz)[0])
+    found = np.array(levels)
+    usual = np.median(found, axis=0)
+    spread = 1.4826 * np.median(np.abs(found - usual), axis=0)
+    return np.asarray(np.exp(np.mean(logs, axis=0)), float), usual + np.maximum(ARTEFACT_DB, ARTEFACT_SD * spread)
 
 
 def line_bins(frequency_hz: FloatArray, power: FloatArray, mains_hz: float) -> BoolArray:

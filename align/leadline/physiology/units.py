@@ -14,6 +14,7 @@ if TYPE_CHECKING:
     from leadline.physiology.rows import Rows
 
 KERNEL_SD_UM = 25.0  # how far units reach: they are sorted up to about 50 um away (Henze 2000, from memory)
+REACH_SD = 4.0  # beyond it a unit counts for nothing, not for next to nothing
 PER_UM = 100.0
 RESPONSE_S = (0.01, 0.2)
 MIN_SPIKES = 20
@@ -98,7 +99,7 @@ def _by_unit(values: FloatArray, unit: IntArray, n_units: int) -> FloatArray:
 def _kernel(rows: Rows, tip_um: FloatArray, shank: FloatArray) -> FloatArray:
     """Density ``(R, U)`` per um that each unit contributes to each row of its shank."""
     offset = (rows.tip_distance_um[:, None] - tip_um) / KERNEL_SD_UM
-    density = np.exp(-0.5 * offset**2) / (KERNEL_SD_UM * np.sqrt(2 * np.pi))
+    density = np.where(np.abs(offset) < REACH_SD, np.exp(-0.5 * offset**2), 0.0) / (KERNEL_SD_UM * np.sqrt(2 * np.pi))
     return np.where(rows.shank[:, None] == shank, np.nan_to_num(density), 0.0)
 
 
