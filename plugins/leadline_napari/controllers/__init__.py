@@ -1,0 +1,1 @@
+"""State to snapshot to view; no screen toolkit is known here."""

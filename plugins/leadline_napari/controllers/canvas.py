@@ -1,0 +1,290 @@
+"""What the canvas shows, as layers in stack um: stack, atlas outlines, tracks, contacts, surfaces in 3-D."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from leadline.base.errors import LeadlineError
+from leadline_napari.states import LayerSpec, Pose
+from leadline_napari.style import ORANGE, PINK, SKY, VERMILION
+
+if TYPE_CHECKING:
+    from collections.abc import Mapping
+
+    import pandas as pd
+
+    from leadline.base.arrays import AnyArray, FloatArray
+    from leadline.model.atlas import Atlas, Structures
+    from leadline.model.track import Track
+    from leadline.model.transform import Registration
+    from leadline.model.volume import Stack, Volume
+    from leadline.pipeline.bench import Bench
+    from leadline_napari.results import Results
+
+NAMES = {
+    "background": "Stack background",
+    "dye": "Stack dye",
+    "outlines": "Atlas regions",
+    "tracks": "Tracks",
+    "contacts": "Contacts",
+    "hull": "Brain hull",
+}
+OUTLINE_GRAIN_UM = 25.0
+TRACK_STEP_UM = 25.0
+CONTACT_PX_UM = 60.0
+SAMPLE_PLANES = 3
+SURFACE_GRAIN_UM = 100.0
+CONTACT_COLUMNS = (
+    "penetration", "shank", "channel", "contact_id", "tip_distance_um", "track_depth_um", "track_depth_sd_um", "region",
+    "region_name", "coarse_region", "layer", "p_region", "boundary_um", "basis",
+)  # fmt: skip
+
+
+def pose_of(code: str) -> Pose:
+    """Coronal sections, dorsal up and the animal's right to the right, whatever the stored order."""
+    place = {letter: axis for axis, letter in enumerate(code)}
+    ap = place.get("A", place.get("P"))
+    dv = place.get("S", place.get("I"))
+    ml = place.get("R", place.get("L"))
+    if ap is None or dv is None or ml is None:
+        raise LeadlineError(f"orientation {code!r} lacks an axis", where="stack")
+    return Pose((ap, dv, ml), "up" if code[dv] == "S" else "down", "right" if code[ml] == "R" else "left")
+
+
+def stack_specs(bench: Bench) -> list[LayerSpec]:
+    """Background and dye, every resolution, read as they are looked at."""
+    specs = [_stack(NAMES["background"], bench.background, "gray", "translucent", (1.0, 99.8), 1.0)]
+    if bench.dye is not None:
+        specs.append(_stack(NAMES["dye"], bench.dye, ORANGE, "additive", (50.0, 99.95), 0.9))
+    return specs
+
+
+def _stack(
+    name: str, stack: Stack, colormap: str, blending: str, percentiles: tuple[float, float], opacity: float
+) -> LayerSpec:
+    levels = [_lazy(level) for level in stack.levels]
+    finest = stack.finest
+    return LayerSpec(
+        name,
+        "image",
+        levels if len(levels) > 1 else levels[0],
+        {
+            "multiscale": len(levels) > 1,
+            "scale": finest.voxel_um,
+            "translate": finest.origin_um,
+            "colormap": colormap,
+            "blending": blending,
+            "opacity": opacity,
+            "contrast_limits": _limits(stack.levels[-1], percentiles),
+            "axis_labels": axis_names(finest.code),
+        },
+    )
+
+
+def axis_names(code: str) -> tuple[str, ...]:
+    """Names of the stored axes."""
+    return tuple(f"s{k}" for k in range(len(code)))
+
+
+def _lazy(volume: Volume) -> Any:
+    """The voxels as a dask array that reads a block when it is looked at."""
+    import dask.array as da
+
+    chunk = volume.chunk or (1, *volume.shape[1:])
+    empty = np.zeros((0, 0, 0), volume.data.dtype)
+    return da.from_array(volume.data, chunks=chunk, name=False, fancy=False, asarray=True, lock=False, meta=empty)
+
+
+def _limits(volume: Volume, percentiles: tuple[float, float]) -> tuple[float, float]:
+    """Grey values between which contrast is spread, from a few planes of the coarsest level."""
+    step = max(1, max(volume.shape[1:]) // 400)
+    planes = np.linspace(0, volume.shape[0] - 1, SAMPLE_PLANES + 2).astype(int)[1:-1]
+    seen = np.concatenate(
+        [np.asarray(volume.data[int(k) : int(k) + 1, :, :])[0, ::step, ::step].ravel() for k in planes]
+    )
+    low, high = (float(v) for v in np.percentile(seen, percentiles))
+    return (low, high) if high > low else (low, low + 1.0)
+
+
+def outline_spec(bench: Bench, registration: Registration) -> LayerSpec:
+    """Atlas regions in stack space, one plane worked out when it is looked at; hovering names the region."""
+    import dask.array as da
+    import pandas as pd
+
+    finest, atlas = bench.background.finest, bench.atlas
+    factor = np.maximum(np.rint(OUTLINE_GRAIN_UM / finest.voxel_um), 1)
+    voxel = finest.voxel_um * factor
+    shape = tuple(int(n) for n in np.ceil(np.asarray(finest.shape) / factor))
+    origin = finest.origin_um + (voxel - finest.voxel_um) / 2
+    axis = pose_of(finest.code).order[0]
+    rows = sorted(atlas.structures.by_id.values(), key=lambda s: s.id)
+    ids = np.array([s.id for s in rows])
+
+    def plane(block_info: Any = None) -> AnyArray:
+        spans = block_info[None]["array-location"]
+        grid = np.stack(np.meshgrid(*(np.arange(a, b) for a, b in spans), indexing="ij"), axis=-1)
+        found = atlas.label_at(registration.stack_to_atlas(grid.reshape(-1, 3) * voxel + origin))
+        return np.searchsorted(ids, found).astype(np.uint16).reshape(grid.shape[:3])
+
+    chunks = tuple((1,) * n if k == axis else (n,) for k, n in enumerate(shape))
+    data = da.map_blocks(plane, chunks=chunks, dtype=np.uint16, meta=np.zeros((0, 0, 0), np.uint16))
+    features = pd.DataFrame(
+        {"index": np.arange(len(rows)), "region": [s.acronym for s in rows], "name": [s.name for s in rows]}
+    )
+    colours: dict[int | None, Any] = {k: s.colour for k, s in enumerate(rows)}
+    colours[0] = colours[None] = "transparent"
+    return LayerSpec(
+        NAMES["outlines"],
+        "labels",
+        data,
+        {
+            "scale": voxel, "translate": origin, "features": features, "opacity": 0.75, "contour": 1,
+            "direct_colours": colours, "axis_labels": axis_names(finest.code),
+        },
+    )  # fmt: skip
+
+
+def track_spec(tracks: Mapping[tuple[str, int], Track], code: str) -> LayerSpec:
+    """Every track as a chain of small points (lines show in 2-D on one plane only)."""
+    import pandas as pd
+
+    points, rows = [], []
+    for (penetration, shank), track in sorted(tracks.items()):
+        depth = np.arange(0.0, track.length_um + 1.0, TRACK_STEP_UM)
+        points.append(track.stack_at(depth))
+        rows += [(penetration, shank, float(d)) for d in depth]
+    data = np.concatenate(points) if points else np.zeros((0, 3))
+    return LayerSpec(
+        NAMES["tracks"],
+        "points",
+        data,
+        {
+            "features": pd.DataFrame(rows, columns=["penetration", "shank", "track_depth_um"]),
+            "size": 22.0, "face_color": "white", "border_width": 0.0, "opacity": 0.85, "symbol": "disc",
+            "blending": "translucent_no_depth", "projection_mode": "all", "axis_labels": axis_names(code),
+        },
+    )  # fmt: skip
+
+
+def contact_spec(
+    channels: pd.DataFrame, tracks: Mapping[tuple[str, int], Track], structures: Structures, code: str
+) -> LayerSpec:
+    """Every located contact, coloured by region, with its whole row of the channel table."""
+    table = channels[channels["track_depth_um"].notna()].reset_index(drop=True)
+    points = np.zeros((len(table), 3))
+    for (penetration, shank), rows in table.groupby(["penetration", "shank"], sort=False).groups.items():
+        track = tracks.get((str(penetration), int(shank)))
+        if track is not None:
+            points[rows] = track.stack_at(table.loc[rows, "track_depth_um"].to_numpy(float))
+    return LayerSpec(
+        NAMES["contacts"],
+        "points",
+        points,
+        {
+            "features": table,
+            "size": CONTACT_PX_UM, "face_color": contact_colours(table["region_id"].to_numpy(), structures),
+            "border_color": "#101010", "border_width": 0.0, "symbol": "disc", "opacity": 1.0,
+            "blending": "translucent_no_depth", "projection_mode": "all", "axis_labels": axis_names(code),
+        },
+    )  # fmt: skip
+
+
+def contact_colours(region_id: Any, structures: Structures) -> AnyArray:
+    """RGBA ``(n, 4)`` from 0 to 1 of regions."""
+    ids, codes = np.unique(np.asarray(region_id).astype(np.int64), return_inverse=True)
+    hexes = [structures[int(i)].colour if i else "#4a4a4a" for i in ids]
+    rgb = np.array([[int(h[k : k + 2], 16) for k in (1, 3, 5)] for h in hexes], float).reshape(-1, 3) / 255
+    return np.column_stack([rgb[codes], np.ones(len(codes))])
+
+
+def surface_specs(atlas: Atlas, registration: Registration, results: Results, code: str) -> list[LayerSpec]:
+    """The brain's hull and the regions that the tracks cross, as smooth surfaces in stack um."""
+    labels = atlas.labels.array()
+    step = np.maximum(np.rint(SURFACE_GRAIN_UM / atlas.voxel_um).astype(int), 1)
+    small = labels[:: step[0], :: step[1], :: step[2]]
+    grain = atlas.voxel_um * step
+    specs = [_surface(NAMES["hull"], small > 0, grain, "#9aa3ad", 0.12, registration, code)]
+    for structure_id in crossed(results, atlas):
+        row = atlas.structures[structure_id]
+        inside = small == structure_id
+        if inside.any():
+            specs.append(_surface(f"{row.acronym} surface", inside, grain, row.colour, 0.28, registration, code))
+    return specs
+
+
+def crossed(results: Results, atlas: Atlas, at_most: int = 12) -> list[int]:
+    """Structures that the tracks cross, those crossed longest first; outside left out."""
+    lengths: dict[int, int] = {}
+    for track in results.tracks.values():
+        ids, counts = np.unique(
+            atlas.label_at(track.atlas_at(np.arange(0.0, track.length_um, 10.0))), return_counts=True
+        )
+        for structure_id, count in zip(ids.tolist(), counts.tolist(), strict=True):
+            lengths[structure_id] = lengths.get(structure_id, 0) + count
+    lengths.pop(0, None)
+    return sorted(lengths, key=lambda i: -lengths[i])[:at_most]
+
+
+def _surface(
+    name: str,
+    inside: AnyArray,
+    grain_um: FloatArray,
+    colour: str,
+    opacity: float,
+    registration: Registration,
+    code: str,
+) -> LayerSpec:
+    from scipy.ndimage import gaussian_filter
+    from skimage.measure import marching_cubes
+
+    field = gaussian_filter(np.pad(inside.astype(np.float32), 2), 1.0)
+    vertices, faces, _, _ = marching_cubes(field, min(0.5, float(field.max()) * 0.6))
+    points = registration.atlas_to_stack((vertices - 2) * grain_um)
+    rgb = [int(colour[k : k + 2], 16) / 255 for k in (1, 3, 5)]
+    return LayerSpec(
+        name,
+        "surface",
+        (points, faces, np.ones(len(points))),
+        {
+            "vertex_colors": np.tile([*rgb, 1.0], (len(points), 1)), "opacity": opacity, "shading": "smooth",
+            "blending": "translucent", "axis_labels": axis_names(code),
+        },
+    )  # fmt: skip
+
+
+def slice_plane(track: Track) -> tuple[FloatArray, FloatArray]:
+    """A point of the track and its direction, for a plane that contains it."""
+    way = track.stack_um[-1] - track.stack_um[0]
+    return track.stack_at(np.array(track.length_um / 2)), way / np.linalg.norm(way)
+
+
+def edit_spec(points_um: FloatArray, code: str, name: str) -> LayerSpec:
+    """Points of a track that can be moved, added and deleted."""
+    return LayerSpec(
+        name,
+        "points",
+        np.asarray(points_um, float).reshape(-1, 3),
+        {
+            "size": 90.0, "face_color": SKY, "border_color": "white", "border_width": 0.12, "symbol": "disc",
+            "blending": "translucent_no_depth", "projection_mode": "all", "axis_labels": axis_names(code),
+        },
+    )  # fmt: skip
+
+
+def pair_specs(stack_um: FloatArray, atlas_um: FloatArray, registration: Registration, code: str) -> list[LayerSpec]:
+    """Both ends of every pair in stack um: where it is in the stack, and where the atlas place now falls."""
+    specs = []
+    for name, points, colour, symbol in (
+        ("Pairs: seen in the stack", stack_um, VERMILION, "cross"),
+        (
+            "Pairs: place in the atlas",
+            registration.atlas_to_stack(atlas_um) if len(atlas_um) else atlas_um,
+            PINK,
+            "ring",
+        ),
+    ):
+        spec = edit_spec(points, code, name)
+        specs.append(LayerSpec(name, "points", spec.data, spec.options | {"face_color": colour, "symbol": symbol}))
+    return specs

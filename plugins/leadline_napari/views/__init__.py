@@ -1,0 +1,1 @@
+"""Widgets that draw snapshots and say what the user did; no science, no session."""

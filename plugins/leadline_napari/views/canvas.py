@@ -1,0 +1,121 @@
+"""The canvas: layer specifications become napari layers, every one in um."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from napari.utils import Colormap, DirectLabelColormap
+
+if TYPE_CHECKING:
+    from collections.abc import Callable, Iterable
+
+    import napari
+    from napari.layers import Layer
+
+    from leadline_napari.states import LayerSpec, Pose
+
+MAKERS = {"image": "add_image", "labels": "add_labels", "points": "add_points", "surface": "add_surface"}
+
+
+class Canvas:
+    """Layers of one brain in one viewer."""
+
+    def __init__(self, viewer: napari.Viewer) -> None:
+        self.viewer = viewer
+
+    def put(self, spec: LayerSpec) -> Layer:
+        """Add a layer, or give the layer of that name its new data."""
+        if spec.name in self.viewer.layers:
+            layer = self.viewer.layers[spec.name]
+            if spec.kind == "points" and len(layer.data) == len(spec.data) and "features" in spec.options:
+                return self._refresh_points(layer, spec)
+            index, visible = self.viewer.layers.index(layer), layer.visible
+            self.viewer.layers.remove(layer)
+            fresh = self._add(spec)
+            fresh.visible = visible
+            self.viewer.layers.move(self.viewer.layers.index(fresh), index)
+            return fresh
+        return self._add(spec)
+
+    def _refresh_points(self, layer: Any, spec: LayerSpec) -> Layer:
+        layer.data = spec.data
+        layer.features = spec.options["features"]
+        layer.face_color = spec.options["face_color"]
+        return layer
+
+    def _add(self, spec: LayerSpec) -> Layer:
+        options = dict(spec.options)
+        if "colormap" in options and str(options["colormap"]).startswith("#"):
+            options["colormap"] = Colormap(["#000000", options["colormap"]], name="dye")
+        contour = options.pop("contour", None)
+        if "direct_colours" in options:
+            options["colormap"] = DirectLabelColormap(color_dict=options.pop("direct_colours"))
+        layer = getattr(self.viewer, MAKERS[spec.kind])(spec.data, name=spec.name, units="um", **options)
+        if contour is not None:
+            layer.contour = contour
+            layer.editable = False
+        if spec.kind == "points":
+            layer.selected_data = set()
+        return layer
+
+    def remove(self, names: Iterable[str]) -> None:
+        """Take layers away."""
+        for name in names:
+            if name in self.viewer.layers:
+                self.viewer.layers.remove(name)
+
+    def pose(self, pose: Pose) -> None:
+        """Turn the canvas to coronal sections with dorsal up, show names of axes and a scale bar."""
+        self.viewer.dims.order = pose.order
+        away = self.viewer.scene.camera.orientation[0]
+        self.viewer.scene.camera.orientation = (away, pose.vertical, pose.horizontal)
+        bar = self.viewer.canvas.overlays["scale_bar"]
+        bar.visible = True
+        bar.box = True
+        self.viewer.reset_view()
+
+    def go_to(self, point_um: Any) -> None:
+        """Scroll to the plane that holds a point."""
+        step = [float(v) for v in point_um]
+        self.viewer.dims.set_point(range(len(step)), step)
+
+    def thick(self, um: float) -> None:
+        """Show points within ``um`` of the plane."""
+        margins = [um] * self.viewer.dims.ndim
+        self.viewer.dims.margin_left = margins
+        self.viewer.dims.margin_right = margins
+
+    def lay_plane(self, name: str, point_um: Any, way: Any) -> None:
+        """In 3-D, cut an image along a plane that holds a line of direction ``way``; napari wants voxel places."""
+        layer = self.viewer.layers[name]
+        self.viewer.dims.ndisplay = 3
+        way = np.asarray(way, float)
+        other = np.eye(3)[int(np.argmin(np.abs(way)))]
+        normal = np.cross(way, np.cross(way, other))
+        layer.depiction = "plane"
+        layer.plane.position = tuple(layer.world_to_data(np.asarray(point_um, float)))
+        layer.plane.normal = tuple(normal * np.asarray(layer.scale) / np.linalg.norm(normal))
+        layer.plane.thickness = 1
+        layer.visible = True
+
+    def on_pick(self, name: str, chosen: Callable[[int], None]) -> None:
+        """Call ``chosen`` with the row of a point that is clicked."""
+        layer = self.viewer.layers[name]
+
+        def pressed(layer: Any, event: Any) -> Any:
+            value = layer.get_value(
+                event.position, view_direction=event.view_direction, dims_displayed=event.dims_displayed, world=True
+            )
+            if value is not None:
+                chosen(int(value))
+            yield
+
+        layer.mouse_drag_callbacks.append(pressed)
+
+    def mark(self, name: str, row: int | None) -> None:
+        """Frame one point."""
+        if name in self.viewer.layers:
+            layer = self.viewer.layers[name]
+            layer.selected_data = set() if row is None else {row}
+            layer.refresh()

@@ -1,0 +1,336 @@
+"""The log: lanes side by side on one vertical scale, as a borehole is correlated with its strata."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+import pyqtgraph as pg
+from qtpy.QtCore import QRectF, Qt, Signal
+from qtpy.QtGui import QColor, QFontMetricsF
+
+from leadline_napari.views.marks import BandMark, LaneMark, Mark, RibbonMark, SitesMark, StrataMark, TissueMark
+
+if TYPE_CHECKING:
+    from qtpy.QtCore import QPointF
+
+    from leadline_napari.states import Readout, SectionState
+    from leadline_napari.style import Theme
+
+HEAD_PX = 42
+FOOT_PX = 18
+AXIS_PX = 44
+WIDTHS = {"tissue": 96, "strata": 70, "band": 150, "sites": 46, "odds": 76, "lane": 84}
+LEFT = ("tissue", "strata")
+
+
+class Title(pg.GraphicsWidget):
+    """What a lane shows, on two lines, and its unit on a third; the tool tip says it whole."""
+
+    def __init__(self, theme: Theme, text: str = "", unit: str = "") -> None:
+        super().__init__()
+        self.theme, self.text, self.unit = theme, text, unit
+        self.setMinimumHeight(HEAD_PX)
+        self.setMaximumHeight(HEAD_PX)
+
+    def set_text(self, text: str, unit: str) -> None:
+        """Change the words."""
+        self.text, self.unit = text, unit
+        self.setToolTip(f"{text} ({unit})" if unit else text)
+        self.update()
+
+    def paint(self, painter: object, *_: object) -> None:
+        """Draw the words, cut only where a single one is too long."""
+        box = self.boundingRect().adjusted(0, 1, 0, -2)
+        line = box.height() / 3
+        font = painter.font()
+        font.setPointSizeF(7.5)
+        font.setBold(True)
+        first, second = _two_lines(self.text, QFontMetricsF(font), box.width())
+        for k, (text, colour, bold) in enumerate(
+            ((first, self.theme.ink, True), (second, self.theme.ink, True), (self.unit, self.theme.soft, False))
+        ):
+            font.setBold(bold)
+            painter.setFont(font)
+            painter.setPen(QColor(colour))
+            short = QFontMetricsF(font).elidedText(text, Qt.TextElideMode.ElideRight, box.width())
+            painter.drawText(
+                QRectF(box.x(), box.y() + k * line, box.width(), line), Qt.AlignmentFlag.AlignCenter, short
+            )
+
+
+def _two_lines(text: str, measures: QFontMetricsF, width: float) -> tuple[str, str]:
+    """Words on two lines: as many on the first as fit, none there where one line is enough."""
+    if measures.horizontalAdvance(text) <= width:
+        return "", text
+    words = text.replace("-", "- ").split()
+    count = max(
+        (n for n in range(1, len(words)) if measures.horizontalAdvance(" ".join(words[:n])) <= width), default=1
+    )
+    return " ".join(words[:count]).replace("- ", "-"), " ".join(words[count:]).replace("- ", "-")
+
+
+class Foot(pg.GraphicsWidget):
+    """The scale below a lane: what its left and right ends mean, or places in between."""
+
+    def __init__(self, theme: Theme) -> None:
+        super().__init__()
+        self.theme = theme
+        self.ticks: tuple[tuple[float, str], ...] = ()
+        self.setMinimumHeight(FOOT_PX)
+        self.setMaximumHeight(FOOT_PX)
+
+    def set_ticks(self, ticks: tuple[tuple[float, str], ...], left_px: float, right_px: float) -> None:
+        """Write these texts at places from 0 to 1 across the lane, which begins and ends so far inside the column."""
+        if (ticks, left_px, right_px) != (self.ticks, getattr(self, "left_px", None), getattr(self, "right_px", None)):
+            self.ticks, self.left_px, self.right_px = ticks, left_px, right_px
+            self.setToolTip("  ".join(text for _, text in ticks))
+            self.update()
+
+    def paint(self, painter: object, *_: object) -> None:
+        """Write what there is room for, the ends first."""
+        if not self.ticks:
+            return
+        font = painter.font()
+        font.setPointSizeF(7.0)
+        painter.setFont(font)
+        painter.setPen(QColor(self.theme.soft))
+        measures = QFontMetricsF(font)
+        width = self.boundingRect().width() - self.left_px - self.right_px
+        taken: list[QRectF] = []
+        for place, text in sorted(self.ticks, key=lambda t: -abs(t[0] - 0.5)):
+            wide = measures.horizontalAdvance(text)
+            left = self.left_px + min(max(place * width - wide / 2, 0.0), width - wide)
+            box = QRectF(left, 3, wide, measures.height())
+            if not any(box.adjusted(-3, 0, 3, 0).intersects(other) for other in taken):
+                taken.append(box)
+                painter.drawText(box, Qt.AlignmentFlag.AlignCenter, text)
+
+
+class TipAxis(pg.AxisItem):
+    """Ticks at round tip distances on a scale that is drawn in track depth."""
+
+    end_um = 0.0
+
+    def tickValues(self, low: float, high: float, size: float) -> list[tuple[float, list[float]]]:
+        """Places of the ticks, on the drawn scale."""
+        levels = super().tickValues(self.end_um - high, self.end_um - low, size)
+        return [(step, [self.end_um - v for v in values]) for step, values in levels]
+
+    def tickStrings(self, values: list[float], scale: float, spacing: float) -> list[str]:
+        """Tip distances."""
+        return [f"{self.end_um - v:.0f}" for v in values]
+
+
+class DepthAxis(pg.AxisItem):
+    """Track depths, in whole um."""
+
+    def tickStrings(self, values: list[float], scale: float, spacing: float) -> list[str]:
+        """Plain numbers."""
+        return [f"{v:.0f}" for v in values]
+
+
+class Log(pg.GraphicsLayoutWidget):
+    """All lanes. Signals speak of ``side`` 'depth' (left lanes, um of track depth) or 'tip' (right lanes, um from
+    the tip)."""
+
+    hovered = Signal(str, object)
+    double_clicked = Signal(str, float)
+    picked = Signal(float)
+
+    def __init__(self, theme: Theme) -> None:
+        super().__init__()
+        self.theme = theme
+        self.setBackground(theme.paper)
+        self.ci.layout.setContentsMargins(4, 2, 4, 2)
+        self.ci.layout.setHorizontalSpacing(4)
+        self.ci.layout.setVerticalSpacing(0)
+        self.plots: list[tuple[str, pg.PlotItem, Title, Mark, pg.InfiniteLine]] = []
+        self.feet: list[Foot] = []
+        self.end_um = 0.0
+        self.tissue, self.strata = TissueMark(theme), StrataMark(theme)
+        self.band, self.sites, self.odds = BandMark(theme), SitesMark(theme), RibbonMark(theme)
+        self.lanes: list[LaneMark] = []
+        self._names: tuple[str, ...] = ()
+        self._extent: tuple[float, float, float] | None = None
+        self.tip_axis = TipAxis("right")
+        self.depth_axis = DepthAxis("left")
+        self.scene().sigMouseMoved.connect(self._moved)
+        self.scene().sigMouseClicked.connect(self._clicked)
+        self.setMinimumSize(360, 240)
+
+    # -- laying out ---------------------------------------------------------------------------------------------
+
+    def lay_out(self, lane_names: tuple[str, ...]) -> None:
+        """Build the columns; only when the choice of lanes changes."""
+        self._names = lane_names
+        self.clear()
+        self.plots.clear()
+        self.feet.clear()
+        self.tip_axis, self.depth_axis = TipAxis("right"), DepthAxis("left")
+        self.tissue, self.strata = TissueMark(self.theme), StrataMark(self.theme)
+        sites, odds = SitesMark(self.theme), RibbonMark(self.theme)
+        self.band = BandMark(self.theme)
+        self.sites, self.odds = sites, odds
+        self.lanes = [LaneMark(self.theme) for _ in lane_names]
+        columns = [("tissue", self.tissue), ("strata", self.strata), ("band", self.band), ("sites", sites)]
+        columns += [("lane", lane) for lane in self.lanes] + [("odds", odds)]
+        for column, (kind, mark) in enumerate(columns):
+            self._add_column(column, kind, mark, last=column == len(columns) - 1)
+        self.rebuilt()
+
+    def rebuilt(self) -> None:
+        """Hook for the owner: marks are new objects now."""
+
+    def _add_column(self, column: int, kind: str, mark: Mark, *, last: bool) -> None:
+        title = Title(self.theme)
+        self.addItem(title, row=0, col=column)
+        axes = {"left": self.depth_axis} if column == 0 else {"right": self.tip_axis} if last else {}
+        plot = self.addPlot(row=1, col=column, axisItems=axes)
+        for name in ("left", "right", "top", "bottom"):
+            plot.showAxis(name, name in axes)
+        for axis in axes.values():
+            self._dress(axis)
+            axis.setWidth(AXIS_PX)
+        foot = Foot(self.theme)
+        self.addItem(foot, row=2, col=column)
+        box = plot.getViewBox()
+        box.setMouseEnabled(x=False, y=True)
+        box.setMenuEnabled(False)
+        box.setDefaultPadding(0)
+        box.invertY(True)
+        box.setXRange(0, 1, padding=0)
+        box.setBorder(pg.mkPen(self.theme.faint, width=1))
+        plot.hideButtons()
+        if self.plots:
+            plot.setYLink(self.plots[0][1])
+        plot.addItem(mark)
+        cursor = pg.InfiniteLine(angle=0, pen=pg.mkPen(self.theme.ink, width=1, style=Qt.PenStyle.DotLine))
+        cursor.setZValue(50)
+        cursor.hide()
+        plot.addItem(cursor)
+        layout = self.ci.layout
+        layout.setColumnMinimumWidth(column, WIDTHS[kind] * 0.5 + (AXIS_PX if axes else 0))
+        layout.setColumnPreferredWidth(column, WIDTHS[kind] + (AXIS_PX if axes else 0))
+        layout.setColumnStretchFactor(column, WIDTHS[kind])
+        self.plots.append((kind, plot, title, mark, cursor))
+        self.feet.append(foot)
+
+    def _dress(self, axis: pg.AxisItem) -> None:
+        font = self.font()
+        font.setPointSizeF(7.5)
+        axis.setStyle(tickFont=font, tickLength=-4, hideOverlappingLabels=True, autoExpandTextSpace=False)
+        axis.setPen(pg.mkPen(self.theme.faint))
+        axis.setTextPen(pg.mkPen(self.theme.soft))
+
+    # -- showing ------------------------------------------------------------------------------------------------
+
+    def show(self, state: SectionState | None = None) -> None:
+        """Draw a snapshot; parts that are the same object as before stay as they are."""
+        if state is None:
+            super().show()
+            return
+        names = tuple(lane.name for lane in state.lanes)
+        if names != self._names or not self.plots:
+            self.lay_out(names)
+            self._extent = None
+        self._set_extent(state)
+        for mark, value, give in (
+            (self.tissue, state.tissue, "tissue"),
+            (self.strata, state.strata, "strata"),
+            (self.band, state.band, "band"),
+            (self.sites, state.sites, "sites"),
+            (self.odds, state.ribbon, "ribbon"),
+        ):
+            if getattr(mark, give) is not value:
+                if value is None:
+                    setattr(mark, give, None)
+                    mark.update()
+                else:
+                    getattr(mark, f"set_{give}")(value)
+        for mark, lane in zip(self.lanes, state.lanes, strict=True):
+            if mark.lane is not lane:
+                mark.set_lane(lane)
+        self._set_titles(state)
+
+    def _set_extent(self, state: SectionState) -> None:
+        extent = (state.top_um, state.bottom_um, state.end_um)
+        if extent == self._extent:
+            return
+        self._extent, self.end_um = extent, state.end_um
+        self.tip_axis.end_um = state.end_um
+        for _, plot, _, mark, _ in self.plots:
+            mark.set_extent(*extent)
+            plot.getViewBox().setLimits(yMin=extent[0], yMax=extent[1], minYRange=100.0)
+        self.whole()
+
+    def whole(self) -> None:
+        """Show the whole track."""
+        if self._extent and self.plots:
+            self.plots[0][1].getViewBox().setYRange(*self._extent[:2], padding=0)
+
+    def _set_titles(self, state: SectionState) -> None:
+        heads = {
+            "tissue": (state.tissue.title if state.tissue else "Tissue", "± 400 um"),
+            "strata": ("Strata", "atlas"),
+            "band": ("Anchors", "depth ↔ from tip"),
+            "sites": ("Sites", ""),
+            "odds": ("Odds", "exact" if state.ribbon and state.ribbon.exact else "preview"),
+        }
+        lanes = iter(state.lanes)
+        last = len(self.plots) - 1
+        for column, (kind, _, title, _, _) in enumerate(self.plots):
+            ticks: tuple[tuple[float, str], ...] = ()
+            if kind == "lane":
+                lane = next(lanes)
+                words = (lane.title, f"{lane.across_unit} · {lane.unit}" if lane.across_unit else lane.unit)
+                ticks = lane.ticks
+            else:
+                words = heads[kind]
+                if kind == "odds":
+                    ticks = ((0.0, "0"), (1.0, "1"))
+            if (title.text, title.unit) != words:
+                title.set_text(*words)
+            left, right = AXIS_PX if column == 0 else 0.0, AXIS_PX if column == last else 0.0
+            self.feet[column].set_ticks(ticks, left, right)
+
+    def show_cursor(self, readout: Readout | None) -> None:
+        """A line across every lane, at the depth on the left and at the contact on the right."""
+        for kind, _, _, _, line in self.plots:
+            if readout is None or kind == "band":
+                line.hide()
+                continue
+            line.setPos(readout.depth_um if kind in LEFT else self.end_um - readout.tip_um)
+            line.show()
+
+    # -- mouse --------------------------------------------------------------------------------------------------
+
+    def side_at(self, at: QPointF) -> tuple[str, float] | None:
+        """Side and um under a place in the scene; in the tie band the nearer side counts."""
+        for kind, plot, _, _, _ in self.plots:
+            box = plot.getViewBox()
+            if box.sceneBoundingRect().contains(at):
+                view = box.mapSceneToView(at)
+                left = kind in LEFT or (kind == "band" and view.x() < 0.5)
+                return ("depth", view.y()) if left else ("tip", self.end_um - view.y())
+        return None
+
+    def _moved(self, at: QPointF) -> None:
+        found = self.side_at(at)
+        self.hovered.emit(*(found or ("", None)))
+
+    def leaveEvent(self, event: object) -> None:
+        """The cursor has left."""
+        super().leaveEvent(event)
+        self.hovered.emit("", None)
+
+    def _clicked(self, event: object) -> None:
+        if event.button() != Qt.MouseButton.LeftButton:
+            return
+        found = self.side_at(event.scenePos())
+        if found is None:
+            return
+        if event.double():
+            event.accept()
+            self.double_clicked.emit(*found)
+        elif not event.isAccepted() and found[0] == "tip":
+            self.picked.emit(found[1])

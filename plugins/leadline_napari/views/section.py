@@ -1,0 +1,310 @@
+"""The section dock: the log, a tool bar above it, what is in hand and what lies under the cursor below it."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from typing import TYPE_CHECKING
+
+from qtpy.QtCore import QSignalBlocker, Qt, Signal
+from qtpy.QtGui import QKeySequence, QShortcut
+from qtpy.QtWidgets import (
+    QComboBox,
+    QDoubleSpinBox,
+    QHBoxLayout,
+    QLabel,
+    QSizePolicy,
+    QToolButton,
+    QVBoxLayout,
+    QWidget,
+)
+
+from leadline_napari.views.log import Log
+
+if TYPE_CHECKING:
+    from leadline.model.anchor import Anchor
+    from leadline_napari.states import InHand, Readout, SectionState
+    from leadline_napari.style import Theme
+
+KEYS = (
+    ("Up", "nudge", ("depth", -5.0)),
+    ("Down", "nudge", ("depth", 5.0)),
+    ("Shift+Up", "nudge", ("depth", -1.0)),
+    ("Shift+Down", "nudge", ("depth", 1.0)),
+    ("Alt+Up", "nudge", ("tip", 5.0)),
+    ("Alt+Down", "nudge", ("tip", -5.0)),
+    ("Alt+Shift+Up", "nudge", ("tip", 1.0)),
+    ("Alt+Shift+Down", "nudge", ("tip", -1.0)),
+    ("PgDown", "stepped", (1,)),
+    ("PgUp", "stepped", (-1,)),
+    ("Delete", "deleted", ()),
+    ("Return", "accepted", ()),
+    ("Escape", "let_go", ()),
+    ("Insert", "insert_asked", ()),
+    ("Ctrl+Z", "undo_asked", ()),
+    ("Ctrl+Shift+Z", "redo_asked", ()),
+    ("Ctrl+S", "update_asked", ()),
+    ("Home", "whole_asked", ()),
+)
+HINT = (
+    "Double-click in a lane adds an anchor; drag either end; arrow keys nudge by 5 um (Shift: 1 um, Alt: the contact's "
+    "end); Page Up/Down goes from anchor to anchor."
+)
+
+
+class SectionView(QWidget):
+    """Shows :class:`SectionState`; every signal is something the user did."""
+
+    nudge = Signal(str, float)
+    stepped = Signal(int)
+    deleted = Signal()
+    accepted = Signal()
+    let_go = Signal()
+    insert_asked = Signal()
+    undo_asked = Signal()
+    redo_asked = Signal()
+    update_asked = Signal()
+    whole_asked = Signal()
+    lanes_asked = Signal()
+    second_asked = Signal()
+    save_asked = Signal()
+    restore_asked = Signal()
+    shank_chosen = Signal(str, int)
+    tissue_chosen = Signal(int)
+    anchor_chosen = Signal(object)
+    anchor_changed = Signal(object, object)
+    dragged = Signal(object, str, float)
+    dropped = Signal()
+
+    def __init__(self, theme: Theme) -> None:
+        super().__init__()
+        self.setObjectName("leadline-section")
+        self.log = Log(theme)
+        self.log.rebuilt = self._wire_band
+        self.theme = theme
+        self._state: SectionState | None = None
+        self._shown_in_hand: InHand | None = None
+        layout = QVBoxLayout(self)
+        layout.setContentsMargins(6, 4, 6, 4)
+        layout.setSpacing(4)
+        layout.addLayout(self._bar())
+        self.banner = QLabel()
+        self.banner.setWordWrap(True)
+        self.banner.setObjectName("leadline-banner")
+        self.banner.hide()
+        layout.addWidget(self.banner)
+        layout.addWidget(self.log, 1)
+        layout.addWidget(self._hand())
+        self.readout = QLabel()
+        self.readout.setObjectName("leadline-readout")
+        self.readout.setTextInteractionFlags(Qt.TextInteractionFlag.TextSelectableByMouse)
+        self.readout.setWordWrap(True)
+        self.readout.setAlignment(Qt.AlignmentFlag.AlignTop | Qt.AlignmentFlag.AlignLeft)
+        self.readout.setMinimumHeight(self.fontMetrics().lineSpacing() * 4)
+        self.readout.setMaximumHeight(self.fontMetrics().lineSpacing() * 4)
+        self.readout.setSizePolicy(QSizePolicy.Policy.Ignored, QSizePolicy.Policy.Fixed)
+        layout.addWidget(self.readout)
+        self._shortcuts()
+        self.whole_asked.connect(self.log.whole)
+        self.show_readout(None)
+
+    # -- building -----------------------------------------------------------------------------------------------
+
+    def _bar(self) -> QHBoxLayout:
+        bar = QHBoxLayout()
+        bar.setSpacing(4)
+        self.shank = QComboBox()
+        self.shank.setToolTip("Which shank is shown")
+        self.shank.setAccessibleName("Shank")
+        self.shank.setMinimumContentsLength(8)
+        self.shank.activated.connect(lambda i: self.shank_chosen.emit(*self.shank.itemData(i)))
+        bar.addWidget(self.shank, 1)
+        self.tissue = QComboBox()
+        self.tissue.addItems(["Stack", "Template"])
+        self.tissue.setToolTip("What the tissue lane shows: the stack with its dye, or the atlas template")
+        self.tissue.setAccessibleName("Tissue lane")
+        self.tissue.activated.connect(self.tissue_chosen.emit)
+        bar.addWidget(self.tissue)
+        for name, text, tip, signal in (
+            ("undo", "↶", "Undo (Ctrl+Z)", self.undo_asked),
+            ("redo", "↷", "Redo (Ctrl+Shift+Z)", self.redo_asked),
+            ("whole", "⤢", "Show the whole track (Home); the wheel zooms, dragging pans", self.whole_asked),
+            ("lanes", "Lanes…", "Choose and order the physiology lanes, set their ranges", self.lanes_asked),
+            ("second", "Compare…", "Show a second reader's anchors beside yours", self.second_asked),
+            ("save", "Save…", "Save this section as PNG, SVG or PDF", self.save_asked),
+            ("update", "Update tables", "Write channels.csv and all other tables anew with these anchors and tracks "
+             "(Ctrl+S); anchors themselves are saved at once", self.update_asked),
+        ):  # fmt: skip
+            button = QToolButton()
+            button.setText(text)
+            button.setToolTip(tip)
+            button.setAccessibleName(tip)
+            button.setFocusPolicy(Qt.FocusPolicy.TabFocus)
+            button.clicked.connect(signal.emit)
+            setattr(self, f"{name}_button", button)
+            bar.addWidget(button)
+        return bar
+
+    def _hand(self) -> QWidget:
+        self.hand = QWidget()
+        rows = QVBoxLayout(self.hand)
+        rows.setContentsMargins(0, 0, 0, 0)
+        rows.setSpacing(3)
+        self.landmark = QComboBox()
+        self.landmark.setEditable(True)
+        self.landmark.setInsertPolicy(QComboBox.InsertPolicy.NoInsert)
+        self.landmark.setToolTip("What this anchor marks: choose a border or landmark, or write your own words")
+        self.landmark.setAccessibleName("Landmark")
+        self.landmark.lineEdit().setPlaceholderText("What the anchor in hand marks")
+        self.landmark.setMinimumContentsLength(12)
+        self.landmark.lineEdit().editingFinished.connect(self._edited)
+        self.landmark.activated.connect(lambda _: self._edited())
+        self.depth = self._spin("Depth", "Track depth of this anchor, um", -2000.0, 20000.0)
+        self.tip = self._spin("From tip", "Distance of its contact from the tip, um", -2000.0, 20000.0)
+        self.sd = self._spin("±", "Standard deviation of this anchor, um: how sure you are", 1.0, 1000.0)
+        delete = "Delete this anchor, or refuse this suggestion (Delete)"
+        self.accept_button = self._button("Accept", "Make this suggestion an anchor (Enter)", self.accepted)
+        self.delete_button = self._button("Delete", delete, self.deleted)
+        restore = "Show refused suggestions of this shank again"
+        self.restore_button = self._button("Show refused", restore, self.restore_asked)
+        for widgets in (
+            (self.landmark, self.accept_button, self.delete_button),
+            (self.depth, self.tip, self.sd, self.restore_button),
+        ):
+            row = QHBoxLayout()
+            row.setSpacing(4)
+            for widget in widgets:
+                row.addWidget(widget, 0 if isinstance(widget, QToolButton) else 1)
+            rows.addLayout(row)
+        return self.hand
+
+    def _button(self, text: str, tip: str, signal: Signal) -> QToolButton:
+        button = QToolButton()
+        button.setText(text)
+        button.setToolTip(tip)
+        button.setAccessibleName(tip)
+        button.setFocusPolicy(Qt.FocusPolicy.TabFocus)
+        button.clicked.connect(signal.emit)
+        return button
+
+    def _spin(self, prefix: str, tip: str, low: float, high: float) -> QDoubleSpinBox:
+        spin = QDoubleSpinBox()
+        spin.setRange(low, high)
+        spin.setDecimals(1)
+        spin.setSingleStep(5.0)
+        spin.setPrefix(f"{prefix} ")
+        spin.setSuffix(" um")
+        spin.setToolTip(tip)
+        spin.setAccessibleName(tip)
+        spin.setKeyboardTracking(False)
+        spin.setButtonSymbols(QDoubleSpinBox.ButtonSymbols.NoButtons)
+        spin.setFocusPolicy(Qt.FocusPolicy.StrongFocus)
+        spin.editingFinished.connect(self._edited)
+        return spin
+
+    def _shortcuts(self) -> None:
+        for keys, name, values in KEYS:
+            shortcut = QShortcut(QKeySequence(keys), self.log)
+            shortcut.setContext(Qt.ShortcutContext.WidgetWithChildrenShortcut)
+            shortcut.activated.connect(lambda name=name, values=values: getattr(self, name).emit(*values))
+        self.log.setFocusPolicy(Qt.FocusPolicy.StrongFocus)
+        self.log.setAccessibleName("Section of the track")
+
+    def _wire_band(self) -> None:
+        self.log.band.chosen.connect(self._chosen)
+        self.log.band.dragged.connect(self.dragged)
+        self.log.band.dropped.connect(self.dropped)
+
+    def _chosen(self, anchor: Anchor) -> None:
+        self.log.setFocus()
+        self.anchor_chosen.emit(anchor)
+
+    # -- showing ------------------------------------------------------------------------------------------------
+
+    def set_theme(self, theme: Theme) -> None:
+        """Change colours; lanes are built anew."""
+        if theme is self.theme:
+            return
+        self.theme = self.log.theme = theme
+        self.log.setBackground(theme.paper)
+        self.log.lay_out(())
+        self.log._names = ("",)
+        if self._state is not None:
+            state, self._state = self._state, None
+            self.show_state(state)
+
+    def show_state(self, state: SectionState) -> None:
+        """Draw a snapshot."""
+        before, self._state = self._state, state
+        if before is None or before.shanks != state.shanks or before.shank != state.shank:
+            self._show_shanks(state)
+        self.undo_button.setEnabled(state.can_undo)
+        self.redo_button.setEnabled(state.can_redo)
+        words = state.message or (state.band.out_of_range if state.band else "")
+        if words != self.banner.text():
+            self.banner.setText(words)
+        warning = bool(state.band and state.band.out_of_range and not state.message)
+        self.banner.setStyleSheet(f"color: {self.theme.warning if warning else self.theme.soft}; padding: 1px 3px;")
+        self.banner.setVisible(bool(words))
+        if state.in_hand != self._shown_in_hand or before is None:
+            self._show_in_hand(state.in_hand)
+        self.log.show(state)
+
+    def _show_shanks(self, state: SectionState) -> None:
+        with QSignalBlocker(self.shank):
+            self.shank.clear()
+            for name, shank in state.shanks:
+                self.shank.addItem(f"{name} · shank {shank}", (name, shank))
+            if state.shank in state.shanks:
+                self.shank.setCurrentIndex(state.shanks.index(state.shank))
+
+    def _show_in_hand(self, held: InHand | None) -> None:
+        self._shown_in_hand = held
+        boxes = (self.landmark, self.depth, self.tip, self.sd)
+        blockers = [QSignalBlocker(box) for box in boxes]
+        editable = held is not None and held.editable
+        for box in boxes:
+            box.setEnabled(editable)
+        self.accept_button.setVisible(held is not None and held.kind == "suggested")
+        self.delete_button.setText("Refuse" if held is not None and held.kind == "suggested" else "Delete")
+        self.delete_button.setEnabled(held is not None and held.kind != "fixed")
+        self.landmark.clear()
+        if held is not None:
+            self.landmark.addItems(list(held.landmarks))
+            self.landmark.setEditText(held.anchor.landmark)
+            self.landmark.lineEdit().setCursorPosition(0)
+            for spin, value in (
+                (self.depth, held.anchor.track_depth_um),
+                (self.tip, held.anchor.tip_distance_um),
+                (self.sd, held.anchor.sd_um),
+            ):
+                if not spin.hasFocus() or abs(spin.value() - value) > 0.05:
+                    spin.setValue(value)
+        else:
+            self.landmark.setEditText("")
+        del blockers
+        if held is not None and held.evidence:
+            self.readout.setText(held.evidence)
+
+    def _edited(self) -> None:
+        """A box of the strip was changed; boxes that still show what they showed keep the exact value."""
+        held = self._shown_in_hand
+        if held is None or not held.editable:
+            return
+        old = held.anchor
+        changes: dict[str, object] = {}
+        for name, spin in (("track_depth_um", self.depth), ("tip_distance_um", self.tip), ("sd_um", self.sd)):
+            if abs(spin.value() - getattr(old, name)) > 0.051:
+                changes[name] = spin.value()
+        if self.landmark.currentText() != old.landmark:
+            changes["landmark"] = self.landmark.currentText()
+        if changes:
+            self.anchor_changed.emit(old, replace(old, **changes))
+
+    def show_readout(self, readout: Readout | None) -> None:
+        """Tell what lies under the cursor; without one, the evidence of a suggestion in hand, or how to begin."""
+        held = self._shown_in_hand
+        if readout is None:
+            self.readout.setText(held.evidence if held is not None and held.evidence else HINT)
+        else:
+            self.readout.setText(readout.text)
+        self.log.show_cursor(readout)
