@@ -15,14 +15,28 @@ from leadline.io.images import READ_FAULTS, UNIT_UM, Image, Picked, letters_of, 
 
 NIFTI_SUFFIXES = (".nii", ".nii.gz")
 NRRD_SUFFIXES = (".nrrd", ".nhdr")
+_NRRD_TYPES = {
+    **dict.fromkeys(("uchar", "unsigned char", "uint8", "uint8_t"), "u1"),
+    **dict.fromkeys(("signed char", "int8", "int8_t"), "i1"),
+    **dict.fromkeys(("ushort", "unsigned short", "unsigned short int", "uint16", "uint16_t"), "u2"),
+    **dict.fromkeys(("short", "short int", "signed short", "signed short int", "int16", "int16_t"), "i2"),
+    **dict.fromkeys(("uint", "unsigned int", "uint32", "uint32_t"), "u4"),
+    **dict.fromkeys(("int", "signed int", "int32", "int32_t"), "i4"),
+    **dict.fromkeys(("ulonglong", "unsigned long long", "unsigned long long int", "uint64", "uint64_t"), "u8"),
+    **dict.fromkeys(("longlong", "long long", "long long int", "signed long long", "int64", "int64_t"), "i8"),
+    "float": "f4",
+    "double": "f8",
+}
 _SPACES = {"r": (0, 1), "l": (0, -1), "a": (1, 1), "p": (1, -1), "s": (2, 1), "i": (2, -1)}
 
 
 class Block:
     """Voxels of one file as a memory map in Fortran order, made on first reading.
 
-    Compressed voxels are inflated into an unnamed temporary file, once, so that memory stays bounded.
-    ``slope``, ``shift`` : stored value to voxel value; with them the voxels are float32.
+    ``offset`` : bytes before the first voxel. ``packed_at`` : where in the file a gzip stream begins, of which
+    ``offset`` then counts; None where nothing is compressed. Compressed voxels are inflated into an unnamed temporary
+    file, once, so that memory stays bounded. ``slope``, ``shift`` : stored value to voxel value; with them the voxels
+    are float32.
     """
 
     def __init__(
@@ -32,23 +46,17 @@ class Block:
         shape: tuple[int, ...],
         offset: int,
         *,
-        compressed: bool,
+        packed_at: int | None = None,
         slope: float = 1.0,
         shift: float = 0.0,
     ) -> None:
         self.path, self.shape, self._stored, self._offset = path, shape, np.dtype(dtype), offset
-        self._compressed, self._slope, self._shift = compressed, slope, shift
+        self._packed_at, self._slope, self._shift = packed_at, slope, shift
+        self._scaled = (slope, shift) != (1.0, 0.0)
         self.dtype = np.dtype(np.float32) if self._scaled else self._stored
+        self._end = offset + int(np.prod(shape, dtype=np.int64)) * self._stored.itemsize
         self._map: Any = None
-        self._require_length()
-
-    @property
-    def _scaled(self) -> bool:
-        return (self._slope, self._shift) != (1.0, 0.0)
-
-    @property
-    def _bytes(self) -> int:
-        return int(np.prod(self.shape, dtype=np.int64) * self._stored.itemsize)
+        self._require_whole()
 
     def __getitem__(self, key: Any) -> Any:
         block = self._mapped()[key]
@@ -56,44 +64,41 @@ class Block:
 
     def _mapped(self) -> Any:
         if self._map is None:
-            file: Any = self._inflate() if self._compressed else self.path
-            offset = 0 if self._compressed and self._nrrd else self._offset
-            self._map = np.memmap(file, self._stored, "r", offset, self.shape, order="F")
+            file: Any = self.path if self._packed_at is None else self._inflated(self._packed_at)
+            self._map = np.memmap(file, self._stored, "r", self._offset, self.shape, order="F")
         return self._map
 
-    @property
-    def _nrrd(self) -> bool:
-        """An NRRD header stands before the compressed voxels, a NIfTI header is compressed with them."""
-        return not self.path.name.lower().endswith(".nii.gz")
-
-    def _inflate(self) -> Any:
+    def _inflated(self, packed_at: int) -> Any:
         file = tempfile.TemporaryFile()  # noqa: SIM115 - lives as long as the memory map
         with self.path.open("rb") as packed:
-            packed.seek(self._offset if self._nrrd else 0)
-            with gzip.open(packed) as voxels:
-                shutil.copyfileobj(voxels, file, 2**20)
+            packed.seek(packed_at)
+            with gzip.open(packed) as stream:
+                shutil.copyfileobj(stream, file, 2**20)
         file.flush()
-        self._require(file.tell() - (0 if self._nrrd else self._offset))
+        self._require(file.tell())
         return file
 
-    def _require_length(self) -> None:
+    def _require_whole(self) -> None:
+        """Raise LeadlineError when the file is cut short. Of a gzip file, the length is read that stands at its end."""
         size = self.path.stat().st_size
-        if not self._compressed:
-            self._require(size - self._offset)
+        if self._packed_at is None:
+            self._require(size)
             return
         with self.path.open("rb") as packed:
             packed.seek(max(0, size - 4))
             length = int.from_bytes(packed.read(4), "little")
-        if length != (self._bytes + (0 if self._nrrd else self._offset)) % 2**32:
-            try:  # not what one whole gzip member ends with: several members, or cut short
+        if length != self._end % 2**32:
+            try:  # several gzip members, or cut short: only inflating tells
                 self._mapped()
+            except LeadlineError:
+                raise
             except READ_FAULTS as error:
-                raise error if isinstance(error, LeadlineError) else unreadable(self.path, error) from error
+                raise unreadable(self.path, error) from error
 
-    def _require(self, available: int) -> None:
-        if available < self._bytes:
+    def _require(self, length: int) -> None:
+        if length < self._end:
             raise LeadlineError(
-                f"is cut short: its header promises {self._bytes} bytes of voxels, {max(0, available)} are there",
+                f"is cut short: its header promises {self._end} bytes, {length} are there",
                 where=str(self.path),
                 mend="Copy or export it again",
             )
@@ -114,17 +119,16 @@ def open_nifti(path: Path, channel: int) -> Image:
     except (ImageFileError, *READ_FAULTS) as error:
         raise unreadable(path, error) from error
     header = image.header
-    slope, shift = (np.nan_to_num(value, nan=default) for value, default in zip(
-        (image.dataobj.slope, image.dataobj.inter), (1.0, 0.0), strict=True))  # fmt: skip
     shape = tuple(int(n) for n in image.shape)
+    stored = image.dataobj
     block = Block(
         path,
         header.get_data_dtype(),
         shape,
-        int(image.dataobj.offset),
-        compressed=path.name.lower().endswith(".gz"),
-        slope=float(slope),
-        shift=float(shift),
+        int(stored.offset),
+        packed_at=0 if path.name.lower().endswith(".gz") else None,
+        slope=float(stored.slope),
+        shift=float(stored.inter),
     )
     data = pick(block, _axes(shape, path), channel, path)
     sizes = voxel_sizes(image.affine)
@@ -228,24 +232,14 @@ def _nrrd_block(path: Path, header: Any, shape: tuple[int, ...], offset: int) ->
                             mend="Keep header and data file together; lists of data files are not read")  # fmt: skip
     plain = not header.get("byte skip") and not header.get("line skip")
     if encoding in ("raw", "gzip", "gz") and plain:
-        types = {
-            "uchar": "u1", "uint8": "u1", "unsigned char": "u1", "uint8_t": "u1",
-            "signed char": "i1", "int8": "i1", "int8_t": "i1",
-            "ushort": "u2", "uint16": "u2", "unsigned short": "u2", "uint16_t": "u2", "unsigned short int": "u2",
-            "short": "i2", "int16": "i2", "int16_t": "i2", "short int": "i2", "signed short": "i2",
-            "uint": "u4", "uint32": "u4", "unsigned int": "u4", "uint32_t": "u4",
-            "int": "i4", "int32": "i4", "int32_t": "i4", "signed int": "i4",
-            "ulonglong": "u8", "uint64": "u8", "uint64_t": "u8", "unsigned long long": "u8",
-            "longlong": "i8", "int64": "i8", "int64_t": "i8", "long long": "i8",
-            "float": "f4", "double": "f8",
-        }  # fmt: skip
-        if str(header["type"]) not in types:
+        if str(header["type"]) not in _NRRD_TYPES:
             raise LeadlineError(
                 f"voxels are of type {header['type']!r}", where=str(path), mend="Export one grey channel"
             )
         order = ">" if str(header.get("endian", "little")) == "big" else "<"
-        dtype = np.dtype(order + types[str(header["type"])])
-        return Block(file, dtype, shape, offset if name is None else 0, compressed=encoding != "raw")
+        dtype = np.dtype(order + _NRRD_TYPES[str(header["type"])])
+        start = offset if name is None else 0
+        return Block(file, dtype, shape, start) if encoding == "raw" else Block(file, dtype, shape, 0, packed_at=start)
     try:
         return nrrd.read(str(path), index_order="F")[0]
     except (nrrd.NRRDError, *READ_FAULTS) as error:
