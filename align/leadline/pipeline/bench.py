@@ -10,15 +10,14 @@ import numpy as np
 
 from leadline.base.errors import LeadlineError
 from leadline.base.progress import SILENT, Progress
-from leadline.model.brain import Brain, Penetration, RecordingSource
-from leadline.model.recording import Recording
+from leadline.model.brain import Brain, Penetration
 
 if TYPE_CHECKING:
     from leadline.anchoring.knowledge import Knowledge
     from leadline.model.anchor import Anchor
     from leadline.model.atlas import Atlas
     from leadline.model.probe import Probe
-    from leadline.model.recording import Traces
+    from leadline.model.recording import Recording
     from leadline.model.volume import Stack, Volume
 
 WORK_VOXELS_MAX = 200e6
@@ -79,35 +78,24 @@ class Bench:
     def probe(self, penetration: Penetration) -> Probe:
         """The probe of a penetration, wired to its recordings; contacts that were not recorded left out."""
         from leadline.io.probes import is_wired, read_probe, wire
+        from leadline.io.sources import wired_to
 
         probe = read_probe(
             penetration.probe, tip_offset_um=penetration.tip_offset_um, probe_index=penetration.probe_index
         )
         for source in penetration.recordings:
             if source.lfp is not None:
-                probe = wire(probe, self.traces(source).n_channels, source.skip_channels)
+                probe = wired_to(source, probe, penetration.name)
         if not is_wired(probe):
             probe = wire(probe, len(probe.contact_id))
         return probe.recorded
 
-    def traces(self, source: RecordingSource) -> Traces:
-        """The traces of one recording, opened."""
-        from leadline.io.recordings import open_traces
-
-        return open_traces(source)
-
     def recordings(self, penetration: Penetration, probe: Probe) -> tuple[Recording, ...]:
         """The recordings of a penetration: traces opened, spikes, events and exclusions read."""
-        from leadline.io.spikes import read_events, read_excluded, read_spikes
+        from leadline.io.sources import open_recording
 
         return tuple(
-            Recording(
-                traces=self.traces(source) if source.lfp else None,
-                spikes=read_spikes(source.spikes, probe) if source.spikes else None,
-                events=read_events(source.events) if source.events else None,
-                excluded_s=read_excluded(source.exclude) if source.exclude else np.zeros((0, 2)),
-                name=f"{penetration.name}, recording {number}",
-            )
+            open_recording(source, probe, penetration.name, f"{penetration.name}, recording {number}")
             for number, source in enumerate(penetration.recordings, 1)
         )
 

@@ -81,13 +81,12 @@ class _Look:
             self.notes.append(f"{about}: shank_toward says nothing of a probe with one shank")
 
     def _left_out(self, penetration: Penetration, probe: Probe, about: str) -> None:
-        from leadline.io.probes import in_words, unreferenced
+        from leadline.io.sources import left_out
 
         for source in penetration.recordings:
-            if source.lfp is not None:
-                idle = unreferenced(probe, self.bench.traces(source).n_channels, source.skip_channels)
-                if idle.size:
-                    self.notes.append(f"{about}: traces {in_words(idle)} of {source.lfp.name} are no contact, left out")
+            unused = left_out(source, probe, penetration.name)
+            if unused:
+                self.notes.append(f"{about}: {unused}")
 
     def _points(self, penetration: Penetration, probe: Probe, about: str) -> None:
         from leadline.io.points import read_hand_points

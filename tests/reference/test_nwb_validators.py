@@ -1,0 +1,82 @@
+"""What the NWB community's own checkers say of an exported file.
+
+pynwb's validator holds the schema, nwbinspector the best practices of the archive. Both are run on the source and on
+the copy; the copy may add nothing of weight.
+"""
+
+import json
+
+import pytest
+from nwbinspector import Importance, inspect_nwbfile
+from probeinterface import read_probeinterface
+from pynwb import validate
+from tests.finished_brain import write_finished_brain
+from tests.made_nwb import write_nwb
+
+from leadline.pipeline.export import export_bids, export_nwb, export_probeinterface
+
+
+@pytest.fixture(scope="module")
+def brain(tmp_path_factory):
+    return write_finished_brain(tmp_path_factory.mktemp("validators"))
+
+
+def test_an_exported_file_is_valid_and_adds_no_complaint_of_weight(brain):
+    source = write_nwb(brain.folder)
+    export_nwb(brain, source, brain.folder / "out.nwb", groups={})
+    assert validate(path=str(brain.folder / "out.nwb")) == []
+    heavy = []
+    for path in (source, brain.folder / "out.nwb"):
+        found = list(inspect_nwbfile(nwbfile_path=str(path)))
+        assert not [m for m in found if m.importance in (Importance.CRITICAL, Importance.ERROR)]
+        heavy.append({(m.check_function_name, m.object_name) for m in found if m.importance.value >= 2})
+    # The tiny atlas is invented, so its acronyms are no terms of the mouse ontology: that alone may be new.
+    assert {name for name, _ in heavy[1] - heavy[0]} <= {"check_electrodes_location_allen_ccf"}
+
+
+def test_an_annotated_probe_file_is_one_to_probeinterface(brain, tmp_path):
+    import pandas as pd
+
+    (path,) = export_probeinterface(brain, tmp_path)
+    probe = read_probeinterface(path).probes[0]
+    table = pd.read_csv(brain.out / "channels.csv", keep_default_na=False).set_index("contact_id")
+    table = table.loc[list(probe.contact_ids)]
+    assert probe.contact_annotations["brain_area"].tolist() == table["region"].tolist()
+    assert probe.contact_annotations["ap_um"].tolist() == table["ap_um"].tolist()
+    assert probe.contact_annotations["p_region"].tolist() == table["p_region"].tolist()
+    before = json.loads((brain.folder / "probe_a.json").read_text())["probes"][0]
+    after = json.loads(path.read_text())["probes"][0]
+    assert {k: v for k, v in after.items() if "annotations" not in k} == {
+        k: v for k, v in before.items() if "annotations" not in k
+    }
+
+
+def test_an_annotated_probe_file_fits_the_published_schema(brain, tmp_path):
+    """The JSON schema that probeinterface ships."""
+    from importlib.resources import files
+
+    import jsonschema
+
+    schemas = [p for p in (files("probeinterface") / "schema").iterdir() if p.name.startswith("probe")]
+    (path,) = export_probeinterface(brain, tmp_path)
+    for schema in schemas:
+        jsonschema.validate(json.loads(path.read_text()), json.loads(schema.read_text()))
+    assert schemas
+
+
+def test_bids_tables_have_their_sidecars(brain, tmp_path):
+    import pandas as pd
+
+    files = {p.name: p for p in export_bids(brain, tmp_path)}
+    assert set(files) == {
+        f"sub-tiny01_{n}" for n in ("electrodes.tsv", "electrodes.json", "probes.tsv", "coordsystem.json")
+    }
+    table = pd.read_csv(files["sub-tiny01_electrodes.tsv"], sep="\t", keep_default_na=False)
+    sidecar = json.loads(files["sub-tiny01_electrodes.json"].read_text())
+    assert list(table.columns[:5]) == ["name", "probe_name", "x", "y", "z"]
+    assert set(table.columns) <= set(sidecar)
+    assert table["name"].is_unique
+    channels = pd.read_csv(brain.out / "channels.csv")
+    assert table["x"].tolist() == channels["ap_um"].tolist()
+    assert (table["layer"] == "n/a").sum() == channels["layer"].isna().sum()
+    assert json.loads(files["sub-tiny01_coordsystem.json"].read_text())["MicroephysCoordinateUnits"] == "um"
