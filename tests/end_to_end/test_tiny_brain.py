@@ -56,6 +56,13 @@ def brain(done, tmp_path):
     return folder
 
 
+def with_anchors(folder, *pairs):
+    """Write brain.toml anew, with these anchors (tip distance, track depth) and no others."""
+    text = (folder / "brain.toml").read_text().split("[[anchor]]")[0]
+    rows = [f'[[anchor]]\npenetration = "A"\ntip_distance_um = {t}\ntrack_depth_um = {d}\n' for t, d in pairs]
+    (folder / "brain.toml").write_text(text + "\n".join(rows))
+
+
 def channels(folder):
     return pd.read_csv(folder / "out" / "channels.csv", keep_default_na=False)
 
@@ -116,9 +123,7 @@ def test_a_lost_file_is_made_again_as_it_was(brain, capsys):
 
 
 def test_by_hand_alone_anchors_draw_the_contract_map(brain, capsys):
-    with (brain / "brain.toml").open("a") as handle:
-        for tip, depth in ((700.0, 1800.0), (1500.0, 1100.0)):
-            handle.write(f'\n[[anchor]]\npenetration = "A"\ntip_distance_um = {tip}\ntrack_depth_um = {depth}\n')
+    with_anchors(brain, *((700.0, 1800.0), (1500.0, 1100.0)))
     code, out, err = leadline(capsys, "run", brain, "--no-physiology", "--json")
     assert code == 0, err
     assert json.loads(out)["done"] == ["anchor", "locate"]
@@ -131,20 +136,16 @@ def test_by_hand_alone_anchors_draw_the_contract_map(brain, capsys):
 
 
 def test_an_anchor_that_left_brain_toml_is_gone(brain, capsys):
-    text = (brain / "brain.toml").read_text()
-    anchor = '\n[[anchor]]\npenetration = "A"\ntip_distance_um = 700.0\ntrack_depth_um = 1800.0\n'
-    (brain / "brain.toml").write_text(text + anchor)
+    with_anchors(brain, (700.0, 1800.0))
     leadline(capsys, "anchor", brain)
     assert len(pd.read_csv(brain / "out" / "anchors.csv")) == 1
-    (brain / "brain.toml").write_text(text)
+    with_anchors(brain)
     leadline(capsys, "anchor", brain)
     assert len(pd.read_csv(brain / "out" / "anchors.csv")) == 0
 
 
 def test_crossing_anchors_name_both_and_change_nothing(brain, capsys):
-    with (brain / "brain.toml").open("a") as handle:
-        for tip, depth in ((700.0, 1100.0), (1500.0, 1800.0)):
-            handle.write(f'\n[[anchor]]\npenetration = "A"\ntip_distance_um = {tip}\ntrack_depth_um = {depth}\n')
+    with_anchors(brain, *((700.0, 1100.0), (1500.0, 1800.0)))
     before = state(brain)
     code, _, err = leadline(capsys, "run", brain)
     assert code == 2
@@ -174,6 +175,7 @@ def test_points_go_to_the_atlas_and_back(brain, tmp_path, capsys):
 def test_the_transform_files_say_the_same_as_map(done):
     # Outside judge: SimpleITK reads the files and carries points itself.
     import SimpleITK as sitk
+
     from leadline.registration._sitk import read_point_transform
 
     path = str(done / "out" / "registration" / "stack_to_atlas.h5")
