@@ -113,10 +113,11 @@ def open_nifti(path: Path, channel: int) -> Image:
     import nibabel
     from nibabel.affines import voxel_sizes
     from nibabel.filebasedimages import ImageFileError
+    from nibabel.spatialimages import HeaderDataError
 
     try:
         image: Any = nibabel.load(path)
-    except (ImageFileError, *READ_FAULTS) as error:
+    except (ImageFileError, HeaderDataError, *READ_FAULTS) as error:
         raise unreadable(path, error) from error
     header = image.header
     shape = tuple(int(n) for n in image.shape)
@@ -189,6 +190,9 @@ def open_nrrd(path: Path, channel: int) -> Image:
             offset = handle.tell()
     except (nrrd.NRRDError, *READ_FAULTS) as error:
         raise unreadable(path, error) from error
+    missing = [key for key in ("sizes", "type", "encoding") if key not in header]
+    if missing:
+        raise unreadable(path, KeyError(*missing))
     shape = tuple(int(n) for n in header["sizes"])
     space = _spatial(header, len(shape), path)
     axes, names = "", iter("xyz")

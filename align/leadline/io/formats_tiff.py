@@ -38,6 +38,7 @@ def open_tiff(path: Path, channel: int) -> Image:
         series = _only_series(file, path)
         axes = _axis_names(series.axes, path)
         _require_grey(series.keyframe, path)
+        sizes = dict(zip("xyz", _sizes(file), strict=True))
         sources = [_source(file, level, series, k) for k, level in enumerate(series.levels)]
     finest = pick(sources[0], axes, channel, path)
     coarser = [source for source in sources[1:] if min(_spatial(source.shape, axes)) > 1]
@@ -45,7 +46,6 @@ def open_tiff(path: Path, channel: int) -> Image:
         _level(pick(source, axes, channel, path), finest.shape, _chunk(source, axes))
         for source in (sources[0], *coarser)
     )
-    sizes = dict(zip("xyz", _sizes(file), strict=True))
     z, y, x = (sizes[a] for a in axes if a in "xyz")
     return Image(path, placed(levels), (z, y, x))
 

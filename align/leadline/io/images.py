@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import struct
 import zlib
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
@@ -30,7 +31,10 @@ UNIT_UM = {
     **dict.fromkeys(("m", "meter", "meters", "metre"), 1e6),
     **dict.fromkeys(("in", "inch", "inches"), 25400.0),
 }
-READ_FAULTS = (OSError, EOFError, ValueError, KeyError, IndexError, RuntimeError, TypeError, zlib.error)
+READ_FAULTS = (
+    OSError, EOFError, ValueError, LookupError, ArithmeticError, RuntimeError, TypeError, AssertionError, SystemError,
+    struct.error, zlib.error,
+)  # fmt: skip
 """What the format libraries raise on a damaged file."""
 
 
