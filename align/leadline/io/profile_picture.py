@@ -35,10 +35,23 @@ LANES: tuple[tuple[str, tuple[tuple[str, str], ...]], ...] = (
         "likeness",
         (("theta_coherence", GREEN), ("neighbour_correlation", BLUE), ("neighbour_coherence", ORANGE)),
     ),
+    ("theta phase (°)", (("theta_phase_rad", GREEN),)),
     ("units per 100 µm", (("unit_density_per_100um", BLUE),)),
     ("spikes/s per 100 µm", (("spike_rate_hz", RED), ("evoked_rate_hz", SKY))),
     ("spike amplitude (µV)", (("spike_amplitude_uv", PINK),)),
 )
+SHORT = {
+    "delta_power_db": "delta",
+    "theta_power_db": "theta",
+    "gamma_power_db": "gamma",
+    "ripple_power_db": "ripple",
+    "high_frequency_power_db": "high-frequency",
+    "theta_coherence": "theta, with the reference",
+    "neighbour_correlation": "neighbours, all bands",
+    "neighbour_coherence": "neighbours, gamma",
+    "spike_rate_hz": "all spikes",
+    "evoked_rate_hz": "added after events",
+}
 GAP = 2.5  # times the usual pitch; a wider step between rows is left white
 FLAG_COLOUR = "#999999"
 
@@ -61,19 +74,27 @@ def draw_profiles(
     lanes = [lane for lane in LANES if any(_has(profile, name) for name, _ in lane[1])]
     maps = 1 + bool(spectra.time_s.size)
     widths = [2.2] * maps + [1.5] * len(lanes)
-    figure = Figure(figsize=(sum(widths) * 1.05 + 1.2, 0.9 + 6.2 * len(shanks)), dpi=110, layout="constrained")
+    size = (sum(widths) * 1.05 + 1.4, 1.7 + (5.5 if len(shanks) == 1 else 3.4 * len(shanks)))
+    figure = Figure(figsize=size, dpi=110, layout="constrained")
     FigureCanvasAgg(figure)
-    axes = figure.subplots(len(shanks), len(widths), squeeze=False, sharey="row", gridspec_kw={"width_ratios": widths})
+    axes = figure.subplots(
+        len(shanks), len(widths), squeeze=False, sharey="row", sharex="col", gridspec_kw={"width_ratios": widths}
+    )
+    _draw_spectra(axes[:, 0], profile, spectra, shanks)
+    if maps == 2:
+        _draw_sources(axes[:, 1], profile, spectra, shanks)
     for line, shank in zip(axes, shanks, strict=True):
         rows = np.flatnonzero(profile.shank == shank)
-        _draw_spectrum(line[0], profile.tip_distance_um[rows], spectra, rows)
-        if maps == 2:
-            _draw_sources(line[1], profile.tip_distance_um[rows], spectra, rows)
-        for axis, (title, features) in zip(line[maps:], lanes, strict=True):
-            _draw_lane(axis, profile, rows, title, features)
+        for axis, (_, features) in zip(line[maps:], lanes, strict=True):
+            _draw_lane(axis, profile, rows, features)
         _finish(line, profile, rows, [b for b in boundaries or () if b[0] == shank])
-        label = "tip distance (µm)" if len(shanks) == 1 else f"shank {shank}: tip distance (µm)"
-        line[0].set_ylabel(label)
+        line[0].set_ylabel("tip distance (µm)" if len(shanks) == 1 else f"shank {shank}: tip distance (µm)")
+    for axis, bottom, (title, features) in zip(axes[0, maps:], axes[-1, maps:], lanes, strict=True):
+        axis.set_title(title, fontsize=9)
+        if len(features) > 1:
+            bottom.legend(
+                fontsize=6.5, loc="upper center", bbox_to_anchor=(0.5, -0.09), frameon=False, handlelength=1.2
+            )
     figure.suptitle(f"Penetration {profile.penetration}", fontsize=11)
     with whole_file(path) as part:
         figure.savefig(part, format="png", metadata={"Software": None})
@@ -114,39 +135,52 @@ def _draw_map(axis: Any, across: FloatArray, tip_um: FloatArray, values: AnyArra
     return image
 
 
-def _draw_spectrum(axis: Any, tip_um: FloatArray, spectra: Spectra, rows: AnyArray) -> None:
-    """Power at each frequency against its own median over depth, so that every frequency shows its pattern."""
-    power = spectra.power_uv2_per_hz[rows].astype(float)
-    known = np.isfinite(power).any(axis=0)
-    if known.any():
-        decibels = 10 * np.log10(np.maximum(power[:, known], 1e-9))
-        contrast = decibels - np.nanmedian(decibels, axis=0)
-        frequency = spectra.frequency_hz[known]
-        edges = np.concatenate([[frequency[0] / 2 ** (1 / 16)], frequency * 2 ** (1 / 16)])
-        limit = max(3.0, float(np.nanpercentile(np.abs(contrast), 98)))
-        image = _draw_map(axis, edges, tip_um, contrast, limit, "PuOr_r")
-        axis.figure.colorbar(image, ax=axis, location="bottom", aspect=14, pad=0.01, label="dB from the median")
-    axis.set_xscale("log")
-    axis.set_title("power", fontsize=9)
-    axis.set_xlabel("frequency (Hz)")
+def _draw_spectra(axes: AnyArray, profile: Profile, spectra: Spectra, shanks: AnyArray) -> None:
+    """Power at each frequency against its own median over the shank, so that every frequency shows its pattern."""
+    axes[0].set_title("power", fontsize=9)
+    axes[-1].set_xlabel("frequency (Hz)", fontsize=8)
+    axes[0].set_xscale("log")
+    known = np.isfinite(spectra.power_uv2_per_hz).any(axis=0)
+    if not known.any():
+        return
+    decibels = 10 * np.log10(np.maximum(spectra.power_uv2_per_hz[:, known].astype(float), 1e-9))
+    contrast = np.full(decibels.shape, np.nan)
+    for shank in shanks:
+        rows = profile.shank == shank
+        if np.isfinite(decibels[rows]).any():
+            contrast[rows] = decibels[rows] - np.nanmedian(decibels[rows], axis=0)
+    frequency = spectra.frequency_hz[known]
+    edges = np.concatenate([[frequency[0] / 2 ** (1 / 16)], frequency * 2 ** (1 / 16)])
+    limit = max(3.0, float(np.nanpercentile(np.abs(contrast), 98)))
+    for axis, shank in zip(axes, shanks, strict=True):
+        rows = profile.shank == shank
+        image = _draw_map(axis, edges, profile.tip_distance_um[rows], contrast[rows], limit, "PuOr_r")
+    _bar(axes, image, "dB from the median")
 
 
-def _draw_sources(axis: Any, tip_um: FloatArray, spectra: Spectra, rows: AnyArray) -> None:
-    density = spectra.csd_ua_per_mm3[rows].astype(float)
-    if np.isfinite(density).any():
-        limit = max(1e-6, float(np.nanpercentile(np.abs(density), 99.5)))
-        step = float(spectra.time_s[1] - spectra.time_s[0]) * 1e3
-        edges = np.append(spectra.time_s * 1e3, spectra.time_s[-1] * 1e3 + step) - step / 2
-        image = _draw_map(axis, edges, tip_um, density, limit, "RdBu_r")
-        axis.figure.colorbar(
-            image, ax=axis, location="bottom", aspect=14, pad=0.01, label="source density (µA/mm³)\nblue: sink"
-        )
-    axis.axvline(0, color="black", lw=0.6)
-    axis.set_title(f"after {spectra.event_kind or 'events'}", fontsize=9)
-    axis.set_xlabel("time (ms)")
+def _draw_sources(axes: AnyArray, profile: Profile, spectra: Spectra, shanks: AnyArray) -> None:
+    axes[0].set_title(f"after {spectra.event_kind or 'events'}", fontsize=9)
+    axes[-1].set_xlabel("time (ms)", fontsize=8)
+    density = spectra.csd_ua_per_mm3.astype(float)
+    if not np.isfinite(density).any():
+        return
+    limit = max(1e-6, float(np.nanpercentile(np.abs(density), 99.5)))
+    step = float(spectra.time_s[1] - spectra.time_s[0]) * 1e3
+    edges = np.append(spectra.time_s * 1e3, spectra.time_s[-1] * 1e3 + step) - step / 2
+    for axis, shank in zip(axes, shanks, strict=True):
+        rows = profile.shank == shank
+        image = _draw_map(axis, edges, profile.tip_distance_um[rows], density[rows], limit, "RdBu_r")
+        axis.axvline(0, color="black", lw=0.6)
+    _bar(axes, image, "sources (µA/mm³); blue: sink")
 
 
-def _draw_lane(axis: Any, profile: Profile, rows: AnyArray, title: str, features: tuple[tuple[str, str], ...]) -> None:
+def _bar(axes: AnyArray, image: Any, label: str) -> None:
+    bar = axes[0].figure.colorbar(image, ax=list(axes), location="bottom", aspect=16, pad=0.01, shrink=0.9)
+    bar.set_label(label, fontsize=8)
+    bar.ax.tick_params(labelsize=7)
+
+
+def _draw_lane(axis: Any, profile: Profile, rows: AnyArray, features: tuple[tuple[str, str], ...]) -> None:
     tip_um = profile.tip_distance_um[rows]
     for name, colour in features:
         if not _has(profile, name):
@@ -155,12 +189,13 @@ def _draw_lane(axis: Any, profile: Profile, rows: AnyArray, title: str, features
         if name.endswith("_db"):
             values = values - np.nanmedian(values) if np.isfinite(values).any() else values
         for number, block in enumerate(_blocks(tip_um)):
-            words = FEATURE_BY_NAME[name].words.replace("correlation between neighbours", "neighbours' correlation")
-            label = words.replace(" power", "") if number == 0 and len(features) > 1 else None
-            axis.plot(values[block], tip_um[block], color=colour, lw=1.2, label=label)
-    axis.set_title(title, fontsize=9)
-    if len(features) > 1:
-        axis.legend(fontsize=6.5, loc="upper center", bbox_to_anchor=(0.5, -0.06), frameon=False, handlelength=1.2)
+            label = SHORT.get(name, FEATURE_BY_NAME[name].words) if number == 0 else None
+            if FEATURE_BY_NAME[name].circular:
+                axis.plot((np.degrees(values[block]) + 90) % 360 - 90, tip_um[block], ".", color=colour, ms=3)
+                axis.set_xlim(-90, 270)
+                axis.set_xticks([-90, 0, 90, 180, 270])
+            else:
+                axis.plot(values[block], tip_um[block], color=colour, lw=1.2, label=label)
 
 
 def _finish(line: AnyArray, profile: Profile, rows: AnyArray, boundaries: list[tuple[int, float, str]]) -> None:
@@ -177,12 +212,9 @@ def _finish(line: AnyArray, profile: Profile, rows: AnyArray, boundaries: list[t
                 axis.axhspan(at - half, at + half, color=FLAG_COLOUR, alpha=0.3, lw=0)
         for _, border_um, _ in boundaries:
             axis.axhline(border_um, color="black", lw=0.5, ls=(0, (4, 3)))
-    for _, border_um, name in boundaries:
-        line[-1].annotate(
-            name,
-            (1.02, border_um),
-            xycoords=("axes fraction", "data"),
-            fontsize=6.5,
-            va="top",
-            annotation_clip=True,
-        )
+    room_um = 0.025 * (tip_um[-1] - tip_um[0])
+    lowest_um = np.inf
+    for _, border_um, name in sorted(boundaries, key=lambda b: -b[1]):
+        if tip_um[0] <= border_um <= min(tip_um[-1] + 2 * half, lowest_um - room_um):
+            lowest_um = border_um
+            line[-1].text(1.02, border_um, name, transform=line[-1].get_yaxis_transform(), fontsize=6.5, va="top")

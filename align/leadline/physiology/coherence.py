@@ -15,7 +15,7 @@ if TYPE_CHECKING:
 
 NEIGHBOUR_UM = 40.0  # how far apart two neighbours are, at the least: finer rows would all be alike
 TOGETHER = 0.1  # coherence above which the rhythms of two shanks are one
-FARTHEST = 1.75  # times that distance, or times the pitch where it is wider; beyond it lies a gap
+NEAREST, FARTHEST = 0.75, 1.75  # times that distance, or times the pitch where it is wider; beyond it lies a gap
 
 
 def reference_row(cross: AnyArray, usable: BoolArray) -> int:
@@ -109,9 +109,10 @@ def _pairs(probe: Probe, rows: Rows, good: BoolArray) -> tuple[IntArray, IntArra
         above = np.flatnonzero((rows.shank == shank) & usable & (rows.tip_distance_um > rows.tip_distance_um[row]))
         want = max(NEIGHBOUR_UM, rows.pitch_um(shank))
         step = rows.tip_distance_um[above] - rows.tip_distance_um[row]
-        if not above.size or np.abs(step - want).min() > (FARTHEST - 1) * want:
+        above = above[(step >= NEAREST * want) & (step <= FARTHEST * want)]
+        if not above.size:
             continue
-        partner = above[np.argmin(np.abs(step - want))]
+        partner = above[np.argmin(np.abs(rows.tip_distance_um[above] - rows.tip_distance_um[row] - want))]
         mine = np.flatnonzero((rows.row_of_contact == row) & good)
         theirs = np.flatnonzero((rows.row_of_contact == partner) & good)
         aside = np.abs(probe.x_um[mine][:, None] - probe.x_um[theirs])

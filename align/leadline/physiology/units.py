@@ -111,7 +111,7 @@ def _coverage(rows: Rows) -> FloatArray:
     for shank in np.unique(rows.shank):
         members = np.flatnonzero(rows.shank == shank)
         tip = rows.tip_distance_um[members]
-        reach = min(max(rows.pitch_um(int(shank)) / 2, 20.0), 50.0) if members.size > 1 else 50.0
+        reach = min(max(rows.pitch_um(int(shank)) / 2, 10.0), 50.0) if members.size > 1 else 50.0
         edges = np.stack([tip - reach, tip + reach], axis=1)
         starts = np.maximum(edges[:, 0], np.concatenate([[-np.inf], edges[:-1, 1]]))
         z = (edges[:, 1] - tip[:, None]) / KERNEL_SD_UM, (starts - tip[:, None]) / KERNEL_SD_UM

@@ -107,7 +107,7 @@ def test_the_picture_shows_every_shank_and_border(tmp_path, profile, spectra):
     plain = imread(path)
     draw_profiles(path, profile, spectra, [(0, 200.0, "above"), (2, 1200.0, "below")])
     with_borders = imread(path)
-    assert plain.shape[0] > 1000  # two shanks, one above the other
+    assert plain.shape[0] > 900  # two shanks, one above the other
     assert plain[..., :3].std() > 10
     assert plain.shape != with_borders.shape or (plain != with_borders).any()
 
