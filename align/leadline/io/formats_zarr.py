@@ -47,7 +47,9 @@ def open_zarr(path: Path, channel: int) -> Image:
         return Image(path, (Level(data, np.ones(3), np.zeros(3), _three(node.chunks)),))
     try:
         return _image(path, node, channel)
-    except (KeyError, TypeError, IndexError, AttributeError) as error:
+    except LeadlineError:
+        raise
+    except (KeyError, TypeError, IndexError, AttributeError, ValueError) as error:
         raise LeadlineError(
             f"its OME-Zarr metadata are not as 0.4 or 0.5 wants them ({type(error).__name__}: {error})",
             where=str(path),
