@@ -1,6 +1,6 @@
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from leadline.atlas.crossing import runs_along
@@ -24,6 +24,7 @@ def test_borders_are_found_within_half_a_micrometre():
     assert np.abs(runs.edge_um - [0, 123.4, 130.1, 777.7, 1000]).max() <= 0.25
 
 
+@settings(deadline=None)
 @given(
     st.lists(st.floats(20, 1980), min_size=1, max_size=8, unique=True)
     .map(sorted)

@@ -1,7 +1,7 @@
 import re
 
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from leadline.atlas.importing import LARGEST_ID, structures_from, whole_number
@@ -59,6 +59,7 @@ def test_columns_are_known_by_their_usual_names(record):
     assert (row.id, row.acronym, row.name, row.parent_id, row.colour) == (5, "A", "Area", 1, "#102030")
 
 
+@settings(deadline=None)
 @given(st.integers(1, LARGEST_ID))
 def test_ids_are_exact(identity):
     assert (

@@ -3,7 +3,7 @@ import nrrd
 import numpy as np
 import pytest
 import tifffile
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 from hypothesis.extra.numpy import arrays
 
@@ -185,6 +185,7 @@ def test_the_structure_table_may_have_more_columns_and_a_byte_order_mark(tmp_pat
     assert columns == ("layer",)
 
 
+@settings(deadline=None)
 @given(arrays(np.uint32, (3, 4, 5), elements=st.sampled_from([0, 1, 2**24 + 1, 2**32 - 1])))
 def test_voxels_are_counted_exactly(labels):
     ids, counts = np.unique(labels, return_counts=True)

@@ -3,7 +3,7 @@ import json
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from leadline.base.errors import LeadlineError
@@ -126,6 +126,7 @@ def below_tip():
     return Probe(tuple("0123"), np.zeros(4), np.arange(4) * -20.0, np.zeros(4, int), np.full(4, -1))
 
 
+@settings(deadline=None)
 @given(st.integers(1, 60), st.sets(st.integers(0, 70), max_size=8))
 def test_an_unwired_probe_takes_the_traces_that_are_not_skipped_in_order(n, skip):
     total = n + len(skip)

@@ -7,7 +7,7 @@ import numpy as np
 import pytest
 import tifffile
 import zarr
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from leadline.base.errors import LeadlineError
@@ -287,6 +287,7 @@ def test_faults_of_a_folder_of_planes(tmp_path):
     refuses(write_planes(tmp_path / "single", [1]), "single plane")
 
 
+@settings(deadline=None)
 @given(st.integers(0, 50), st.integers(1, 7), st.integers(2, 200))
 def test_numbers_may_start_and_step_as_they_like(first, step, n):
     from pathlib import Path
