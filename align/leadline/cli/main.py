@@ -9,7 +9,7 @@ import typer
 
 from leadline.base.errors import Faults, LeadlineError
 from leadline.base.progress import Cancelled
-from leadline.cli import atlas, brains, demo, export, points, report, units
+from leadline.cli import atlas, brains, compare, demo, export, points, report, units
 from leadline.cli.terminal import err
 
 app = typer.Typer(
@@ -28,6 +28,7 @@ points.add_to(app)
 units.add_to(app)
 report.add_to(app)
 export.add_to(app)
+compare.add_to(app)
 
 
 def main() -> None:
