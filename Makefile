@@ -3,7 +3,7 @@ PYTHON ?= $(shell command -v python3.13 || command -v python3.12 || command -v p
 BIN := .venv/bin
 ONE_THREAD := OMP_NUM_THREADS=1 OPENBLAS_NUM_THREADS=1 MKL_NUM_THREADS=1 NUMBA_NUM_THREADS=1
 
-.PHONY: demo test lint study bench clean
+.PHONY: demo test lint study clean
 demo: .venv/.core
 	$(BIN)/leadline demo leadline-demo
 
@@ -17,10 +17,7 @@ lint: .venv/.dev
 	$(BIN)/lint-imports
 
 study: .venv/.dev
-	$(BIN)/python -m tests.studies
-
-bench: .venv/.dev
-	$(BIN)/python -m tests.benchmarks
+	$(ONE_THREAD) $(BIN)/python -m tests.studies
 
 clean:
 	rm -rf .venv leadline-demo
