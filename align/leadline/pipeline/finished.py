@@ -4,15 +4,11 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING
 
-from leadline.base.fingerprint import fingerprint_path
 from leadline.base.progress import SILENT, Progress
-from leadline.pipeline.record import Record
-from leadline.pipeline.run import _key, _needed, _short, run, without_physiology
-from leadline.pipeline.stages import plan
+from leadline.pipeline.run import run, without_physiology
+from leadline.pipeline.standing import standing
 
 if TYPE_CHECKING:
-    from pathlib import Path
-
     from leadline.model.brain import Brain
 
 
@@ -30,13 +26,4 @@ def located(brain: Brain, progress: Progress = SILENT, threads: int = 2) -> Brai
 
 def is_current(brain: Brain) -> bool:
     """Whether every step up to the channel table has been done with these very inputs and settings."""
-    record = Record(brain.folder, brain.cache)
-    marks: dict[Path, str] = {}
-    for step in _needed(plan(brain, record), "locate"):
-        done = record.steps.get(step.name)
-        if done is None or not all(name in record.steps for name in step.needs):
-            return False
-        inputs = {str(_short(path, brain)): marks.setdefault(path, fingerprint_path(path)) for path in step.reads}
-        if done.key != _key(step, inputs, record) or not done.intact(brain.folder):
-            return False
-    return True
+    return all(step.state == "done" for step in standing(brain))
