@@ -93,7 +93,7 @@ def dye(recipe: Recipe, chart: TrueMap, grid: Grid, shank: Shank) -> Glow:
     line = chart.inverse(shank.at(depth))
     radius = rng.uniform(14.0, 24.0)
     level = DYE_COUNTS * rng.uniform(0.6, 1.4) * np.exp(0.25 * _wander(rng, depth, 600.0))
-    level *= np.interp(depth, [0, shank.dye_end_um], [1.3, rng.uniform(0.5, 1.1)])
+    level *= np.interp(depth, [0, 0.6 * shank.dye_end_um, shank.dye_end_um], [1.3, 1.0, 1 - 0.9 * recipe.faint])
     level[(depth < 0) | (depth > shank.dye_end_um)] = 0
     for _ in range(recipe.gaps):
         start = rng.uniform(0.15, 0.75) * shank.dye_end_um

@@ -24,7 +24,8 @@ class Recipe:
 
     Image: ``noise``, ``shading``, ``stripes`` are 1 for a usual sample. ``torn`` : pieces of tissue missing;
     ``bubbles``, ``vessels`` : how many; ``pools`` : dye on the surface and in the meninges; ``gaps`` : interruptions
-    of the dye per shank; ``crosstalk`` : share of the dye that shows in the background.
+    of the dye per shank; ``faint`` : how far it pales toward its end (0 to 1); ``crosstalk`` : share of the dye that
+    shows in the background.
 
     Tracks: ``bend_um`` bow of a track; ``dye_end_sd_um`` dye end against the tip; ``law_sd_um, scale_sd, slope_sd``
     offset, scale and local stretch of in-vivo tip distance against track depth; ``border_sd_um`` how far the
@@ -44,7 +45,7 @@ class Recipe:
     voxel_um: tuple[float, float, float] = (32.0, 25.0, 25.0)
     one_file: bool = False
     tilt_deg: float = 8.0
-    warp_um: float = 220.0
+    warp_um: float = 300.0
     fine_um: float = 0.0
     dent_um: float = 0.0
     noise: float = 1.0
@@ -55,6 +56,7 @@ class Recipe:
     vessels: int = 6
     pools: bool = True
     gaps: int = 1
+    faint: float = 0.3
     crosstalk: float = 0.03
     bend_um: float = 80.0
     dye_end_sd_um: float = 40.0
@@ -93,6 +95,7 @@ def hard(recipe: Recipe) -> Recipe:
         bubbles=8,
         vessels=14,
         gaps=2,
+        faint=0.8,
         crosstalk=0.06,
     )
 

@@ -22,6 +22,7 @@ if TYPE_CHECKING:
 
 ON_TRACK_UM = 100.0
 _KEYS = ["penetration", "shank"]
+_WORDS = ("penetration", "layer", "mark", "region", "coarse_region")
 
 
 @dataclass(frozen=True, slots=True)
@@ -48,6 +49,9 @@ class TrackScore:
 class ChannelScore:
     """Channels that truly are in the brain, against the truth. Depth errors are along the true track, atlas um.
 
+    ``number`` of them; ``placed`` : how many have a place at all (a penetration without a track has none; its channels
+    count as wrong, not as deep).
+
     ``histology_um`` : (median, 95th percentile) of perfect histology: the true dye end and 1 probe um = 1 track um.
     ``region, coarse, layer`` : shares right; ``layer`` where the truth has one. ``calibration`` : expected calibration
     error of ``p_region``. ``covered`` : share of depth errors within 1.645 ``track_depth_sd_um``.
@@ -55,6 +59,7 @@ class ChannelScore:
     """
 
     number: int
+    placed: int
     median_um: float
     p95_um: float
     histology_um: tuple[float, float]
@@ -110,9 +115,9 @@ def score(folder: Path, to_atlas: Callable[[FloatArray], FloatArray] | None = No
 def _read(path: Path) -> pd.DataFrame:
     import pandas as pd
 
-    # Text columns stay text: layer "1" is no number, an empty layer no NaN.
-    words = {"layer": str, "mark": str, "penetration": str, "region": str, "coarse_region": str}
-    return pd.read_csv(path, dtype=words, keep_default_na=False, na_values={"track_depth_um": [""]})
+    # Layer "1" is no number and an empty layer no gap; an empty number is a channel without a place.
+    table = pd.read_csv(path, dtype=dict.fromkeys(_WORDS, str), keep_default_na=False, na_values=[""])
+    return table.fillna(dict.fromkeys([name for name in _WORDS if name in table.columns], ""))
 
 
 def _carrier(folder: Path) -> Callable[[FloatArray], FloatArray]:
@@ -130,6 +135,7 @@ def _voxel_um(truth: Path) -> float:
 
 def _middle_and_tail(values: FloatArray) -> tuple[float, float]:
     size = np.abs(np.asarray(values, float))
+    size = size[np.isfinite(size)]
     return (float(np.median(size)), float(np.percentile(size, 95))) if size.size else (float("nan"), float("nan"))
 
 
@@ -208,9 +214,9 @@ def matched(folder: Path) -> pd.DataFrame:
     table["histology_error_um"] = np.nan
     for key, line in tracks.groupby(_KEYS):
         rows = table.index[(table["penetration"] == key[0]) & (table["shank"] == key[1])]
-        place, _ = to_line(
-            table.loc[rows, [*ATLAS_COLUMNS]].to_numpy(float), line.sort_values("order")[[*ATLAS_COLUMNS]].to_numpy()
-        )
+        placed = table.loc[rows, [*ATLAS_COLUMNS]].to_numpy(float)
+        place, _ = to_line(placed, line.sort_values("order")[[*ATLAS_COLUMNS]].to_numpy())
+        place = np.where(np.isfinite(placed).all(axis=1), place, np.nan)
         end = float(line.loc[line["mark"] == "dye_end", "track_depth_um"].iloc[0])
         depth = table.loc[rows, "track_depth_um_true"]
         table.loc[rows, "depth_error_um"] = place - depth
@@ -221,12 +227,14 @@ def matched(folder: Path) -> pd.DataFrame:
 def score_channels(table: pd.DataFrame) -> ChannelScore:
     """Score rows of :func:`matched`."""
     inside = table[table["in_brain_true"]]
+    placed = inside["depth_error_um"].notna()
     right = inside["region_id"] == inside["region_id_true"]
     coarse = inside["coarse_region"] == inside["coarse_region_true"]
     layered = inside[inside["layer_true"] != ""]
     middle, tail = _middle_and_tail(inside["depth_error_um"].to_numpy())
     return ChannelScore(
         len(inside),
+        int(placed.sum()),
         middle,
         tail,
         _middle_and_tail(inside["histology_error_um"].to_numpy()),
@@ -234,9 +242,9 @@ def score_channels(table: pd.DataFrame) -> ChannelScore:
         float(coarse.mean()),
         float((layered["layer"] == layered["layer_true"]).mean()),
         float((table["in_brain"] == table["in_brain_true"]).mean()),
-        calibration_error(inside["p_region"].to_numpy(), right.to_numpy()),
-        calibration_error(inside["p_coarse"].to_numpy(), coarse.to_numpy()),
-        coverage(inside["depth_error_um"].to_numpy(), inside["track_depth_sd_um"].to_numpy()),
+        calibration_error(inside["p_region"][placed].to_numpy(), right[placed].to_numpy()),
+        calibration_error(inside["p_coarse"][placed].to_numpy(), coarse[placed].to_numpy()),
+        coverage(inside["depth_error_um"][placed].to_numpy(), inside["track_depth_sd_um"][placed].to_numpy()),
     )
 
 
@@ -250,7 +258,7 @@ def as_text(result: Score) -> str:
         ("centre line", f"{t.median_um:.1f} um median, {t.p95_um:.1f} at 95 %", "in the stack"),
         ("entry; dye end", f"{t.entry_um:.0f}; {t.end_um:.0f} um median", f"dye end bias {t.end_bias_um:+.0f} um"),
         ("depth of channels", f"{c.median_um:.0f} um median, {c.p95_um:.0f} at 95 %", worse),
-        ("region right", f"{c.region:.1%}", f"of {c.number} channels in the brain"),
+        ("region right", f"{c.region:.1%}", f"of {c.number} channels in the brain, {c.placed} placed"),
         ("coarse region right", f"{c.coarse:.1%}", ""),
         ("layer right", f"{c.layer:.1%}", "where the truth has a layer"),
         ("inside or outside right", f"{c.in_brain:.1%}", "of all channels"),

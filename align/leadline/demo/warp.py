@@ -51,9 +51,12 @@ class Spline:
     def on_grid(self, axes_um: Axes) -> AnyArray:
         """The same values, float32 ``(n0, n1, n2, c)``, on a grid: exact, by one axis after the other."""
         a, b, c = (self.basis(axis, k).astype(np.float32) for k, axis in enumerate(axes_um))
-        part = np.tensordot(a, self.coefficients.astype(np.float32), axes=(1, 0))
-        part = np.einsum("nj,ajkc->ankc", b, part, optimize=True)
-        return np.asarray(np.einsum("nk,abkc->abnc", c, part, optimize=True))
+        shape = (len(a), len(b), len(c))
+        value = np.empty((*shape, self.coefficients.shape[3]), np.float32)
+        for k in range(value.shape[3]):
+            part = np.tensordot(a, self.coefficients[..., k].astype(np.float32), axes=(1, 0))
+            value[..., k] = ((b @ part).reshape(-1, c.shape[1]) @ c.T).reshape(shape)
+        return value
 
 
 def random_spline(

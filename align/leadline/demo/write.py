@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import csv
 import json
+import shutil
 from dataclasses import asdict, dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -63,7 +64,9 @@ def write_brain(folder: Path, recipe: Recipe, progress: Progress = SILENT) -> No
         raise LeadlineError(
             "is not empty and holds no invented brain", where=str(folder), mend="Name a folder that is new or empty"
         )
-    mark.unlink(missing_ok=True)
+    for name in ("truth", "stack", "atlas"):
+        shutil.rmtree(folder / name, ignore_errors=True)
+    mark.parent.mkdir(parents=True)
     brain = invent(recipe)
     write_atlas(folder / "atlas", make_atlas(recipe), recipe)
     _write_stack(folder, brain, progress)

@@ -15,6 +15,7 @@ from leadline.base.errors import LeadlineError
 from leadline.base.progress import SILENT
 from leadline.demo import formats
 from leadline.demo.recipe import ATLAS_FORMATS, STACK_FORMATS, Recipe, small
+from leadline.demo.sample import draw
 from leadline.demo.warp import Frame
 from leadline.demo.write import brain_toml, invent, write_brain
 from leadline.io.atlases import read_atlas
@@ -26,7 +27,17 @@ if TYPE_CHECKING:
     from pathlib import Path
 
 # One bright, gapless track on a dull ground, so that a wrong axis or voxel size cannot go unseen.
-PLAIN = small(Recipe(), seconds=0.0, penetrations=1, gaps=0, vessels=0, bubbles=0, pools=False, n_points=300)
+PLAIN = small(
+    Recipe(),
+    voxel_um=(75.0, 75.0, 75.0),
+    seconds=0.0,
+    penetrations=1,
+    gaps=0,
+    vessels=0,
+    bubbles=0,
+    pools=False,
+    n_points=300,
+)
 
 
 @pytest.fixture(scope="module")
@@ -34,6 +45,18 @@ def brain(tmp_path_factory: pytest.TempPathFactory) -> Path:
     folder = tmp_path_factory.mktemp("brain") / "b"
     write_brain(folder, PLAIN)
     return folder
+
+
+@pytest.fixture(scope="module")
+def images() -> tuple[np.ndarray, np.ndarray]:
+    """The two channels laid out as PIR: with cubic voxels they are the same for every code and format."""
+    made = invent(PLAIN)
+    return draw(PLAIN, made.chart, made.frame, made.penetrations)
+
+
+@pytest.fixture
+def drawn(monkeypatch: pytest.MonkeyPatch, images: tuple[np.ndarray, np.ndarray]) -> None:
+    monkeypatch.setattr("leadline.demo.write.draw", lambda *_: images)
 
 
 def _dye(folder: Path) -> tuple[object, np.ndarray]:
@@ -53,6 +76,7 @@ def _lit(volume: object, points: np.ndarray) -> float:
 
 
 @pytest.mark.parametrize("kind", STACK_FORMATS)
+@pytest.mark.usefixtures("drawn")
 def test_dye_shines_where_the_truth_says_in_every_format(kind: str, tmp_path: Path) -> None:
     write_brain(tmp_path / "b", replace(PLAIN, stack_format=kind))
     volume, points = _dye(tmp_path / "b")
@@ -61,6 +85,7 @@ def test_dye_shines_where_the_truth_says_in_every_format(kind: str, tmp_path: Pa
 
 
 @pytest.mark.parametrize("kind", ["ome-zarr-0.4", "ome-tiff"])
+@pytest.mark.usefixtures("drawn")
 def test_two_channels_in_one_file(kind: str, tmp_path: Path) -> None:
     write_brain(tmp_path / "b", replace(PLAIN, stack_format=kind, one_file=True))
     volume, points = _dye(tmp_path / "b")
@@ -80,6 +105,7 @@ def test_every_code_stores_a_point_where_its_voxel_goes(code: str) -> None:
 
 
 @pytest.mark.parametrize("code", ["RAS", "SLP"])
+@pytest.mark.usefixtures("drawn")
 def test_files_of_another_code_show_the_track(code: str, tmp_path: Path) -> None:
     write_brain(tmp_path / "b", replace(PLAIN, stack_code=code, stack_format="nrrd"))
     volume, points = _dye(tmp_path / "b")
@@ -180,3 +206,12 @@ def test_formats_that_carry_nothing_are_told_in_the_brain_file() -> None:
         stack = tomllib.loads(brain_toml(invent(replace(PLAIN, stack_format=kind)), {}))["stack"]
         assert ("voxel_um" in stack) == (kind not in formats.CARRIES_VOXEL)
         assert ("orientation" in stack) == (kind not in formats.CARRIES_CODE)
+
+
+def test_another_recipe_replaces_all_of_the_former(brain: Path, tmp_path: Path) -> None:
+    folder = tmp_path / "b"
+    write_brain(folder, replace(PLAIN, stack_format="tiff-folder"))
+    shorter = replace(PLAIN, stack_format="tiff-folder", voxel_um=(200.0, 160.0, 160.0))
+    write_brain(folder, shorter)
+    assert len(list((folder / "stack/dye").iterdir())) == invent(shorter).frame.shape[0]
+    assert json.loads((folder / "truth/recipe.json").read_text())["voxel_um"] == [200.0, 160.0, 160.0]
