@@ -11,7 +11,7 @@ from typing import Any
 import numpy as np
 
 from leadline.base.errors import LeadlineError
-from leadline.io.images import READ_FAULTS, UNIT_UM, Image, Picked, letters_of, pick, unreadable, whole_level
+from leadline.io.images import READ_FAULTS, UNIT_UM, Image, Mapped, Picked, letters_of, pick, unreadable, whole_level
 
 NIFTI_SUFFIXES = (".nii", ".nii.gz")
 NRRD_SUFFIXES = (".nrrd", ".nhdr")
@@ -31,7 +31,7 @@ _SPACES = {"r": (0, 1), "l": (0, -1), "a": (1, 1), "p": (1, -1), "s": (2, 1), "i
 
 
 class Block:
-    """Voxels of one file as a memory map in Fortran order, made on first reading.
+    """Voxels of one file in Fortran order, mapped on reading.
 
     ``offset`` : bytes before the first voxel. ``packed_at`` : where in the file a gzip stream begins, of which
     ``offset`` then counts; None where nothing is compressed. Compressed voxels are inflated into an unnamed temporary
@@ -55,7 +55,7 @@ class Block:
         self._scaled = (slope, shift) != (1.0, 0.0)
         self.dtype = np.dtype(np.float32) if self._scaled else self._stored
         self._end = offset + int(np.prod(shape, dtype=np.int64)) * self._stored.itemsize
-        self._map: Any = None
+        self._map: Mapped | None = None
         self._require_whole()
 
     def __getitem__(self, key: Any) -> Any:
@@ -65,11 +65,11 @@ class Block:
     def _mapped(self) -> Any:
         if self._map is None:
             file: Any = self.path if self._packed_at is None else self._inflated(self._packed_at)
-            self._map = np.memmap(file, self._stored, "r", self._offset, self.shape, order="F")
+            self._map = Mapped(file, self._stored, self._offset, self.shape, "F")
         return self._map
 
     def _inflated(self, packed_at: int) -> Any:
-        file = tempfile.TemporaryFile()  # noqa: SIM115 - lives as long as the memory map
+        file = tempfile.TemporaryFile()  # noqa: SIM115 - lives as long as this object
         with self.path.open("rb") as packed:
             packed.seek(packed_at)
             with gzip.open(packed) as stream:

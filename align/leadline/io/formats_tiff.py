@@ -12,7 +12,7 @@ from xml.etree import ElementTree
 import numpy as np
 
 from leadline.base.errors import LeadlineError
-from leadline.io.images import READ_FAULTS, UNIT_UM, Image, Level, pick, unreadable, whole_level
+from leadline.io.images import READ_FAULTS, UNIT_UM, Image, Level, Mapped, pick, unreadable, whole_level
 from leadline.io.levels import placed
 
 if TYPE_CHECKING:
@@ -97,7 +97,7 @@ def _source(file: Any, level: Any, series: Any, k: int) -> Any:
         if level.dataoffset + level.nbytes > size:
             raise EOFError(f"{level.nbytes} bytes of voxels promised, {size - level.dataoffset} there")
         dtype = level.dtype.newbyteorder(file.byteorder)
-        return np.memmap(file.filehandle.path, dtype, "r", level.dataoffset, tuple(level.shape))
+        return Mapped(file.filehandle.path, dtype, level.dataoffset, tuple(level.shape), "C")
     pages = list(series.pages) if k == 0 else []
     if any(page is None for page in pages):
         raise EOFError(f"plane {[p is None for p in pages].index(True)} of {len(pages)} is missing")

@@ -5,7 +5,7 @@ from __future__ import annotations
 import struct
 import zlib
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, Literal
 
 import numpy as np
 
@@ -60,6 +60,25 @@ class Picked:
         except READ_FAULTS as error:
             raise unreadable(self._where, error) from error
         return block.astype(self.dtype, copy=False)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Mapped:
+    """Voxels that lie in one piece in a file. Every read maps it anew, so that what has been read is let go of and
+    memory does not grow with the file.
+
+    ``file`` : a path or an open file. ``offset`` : bytes before the first voxel. ``order`` : 'C' where the last axis
+    runs fastest, 'F' where the first does.
+    """
+
+    file: Any
+    dtype: np.dtype[Any]
+    offset: int
+    shape: tuple[int, ...]
+    order: Literal["C", "F"]
+
+    def __getitem__(self, key: Any) -> Any:
+        return np.memmap(self.file, self.dtype, "r", self.offset, self.shape, self.order)[key]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
