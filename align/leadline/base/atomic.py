@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import shutil
+import time
 from contextlib import contextmanager
 from pathlib import Path
 from tempfile import mkdtemp, mkstemp
@@ -11,6 +12,9 @@ from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
     from collections.abc import Iterator
+
+PART, OLD = ".part-", ".old-"
+LEFT_BEHIND_S = 600.0
 
 
 @contextmanager
@@ -21,7 +25,7 @@ def whole_file(path: Path) -> Iterator[Path]:
     """
     path = Path(path)
     path.parent.mkdir(parents=True, exist_ok=True)
-    handle, name = mkstemp(prefix=".part-", suffix="-" + path.name, dir=path.parent)
+    handle, name = mkstemp(prefix=PART, suffix="-" + path.name, dir=path.parent)
     os.close(handle)
     part = Path(name)
     try:
@@ -39,12 +43,12 @@ def whole_folder(path: Path) -> Iterator[Path]:
     """Give an empty folder beside ``path`` to fill; it takes the place of ``path`` only when the block ends well."""
     path = Path(path)
     path.parent.mkdir(parents=True, exist_ok=True)
-    part = Path(mkdtemp(prefix=".part-", suffix="-" + path.name, dir=path.parent))
+    part = Path(mkdtemp(prefix=PART, suffix="-" + path.name, dir=path.parent))
     try:
         yield part
         part.chmod(0o777 & ~_umask())
         if path.exists():
-            old = Path(mkdtemp(prefix=".old-", dir=path.parent))
+            old = Path(mkdtemp(prefix=OLD, dir=path.parent))
             os.replace(path, old / path.name)
             os.replace(part, path)
             shutil.rmtree(old)
@@ -63,6 +67,15 @@ def write_text(path: Path, text: str) -> None:
         return
     with whole_file(path) as part:
         part.write_bytes(data)
+
+
+def sweep(folder: Path) -> None:
+    """Remove what writers that were killed left below ``folder``: parts that nobody has touched for ten minutes."""
+    now = time.time()
+    for pattern in (PART, OLD):
+        for part in folder.rglob(f"{pattern}*"):
+            if now - part.lstat().st_mtime > LEFT_BEHIND_S:
+                shutil.rmtree(part) if part.is_dir() else part.unlink(missing_ok=True)
 
 
 def _flush(path: Path) -> None:

@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
+from leadline.base.progress import Cancelled
 from leadline.cli.terminal import err, out, out_json, terminal_progress
 
 if TYPE_CHECKING:
@@ -113,7 +114,11 @@ def _run(path: Path, until: str, no_physiology: bool, json: bool, quiet: bool, v
     if no_physiology:
         brain = without_physiology(brain)
     with terminal_progress(quiet or json) as progress:
-        summary = run_brain(brain, until=until, progress=progress)
+        try:
+            summary = run_brain(brain, until=until, progress=progress)
+        except (KeyboardInterrupt, Cancelled):
+            err("leadline: stopped; finished stages are kept, run again to go on")
+            raise typer.Exit(1) from None
     if json:
         out_json(_as_json(brain, summary, until))
         return

@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
+from leadline.base.atomic import sweep
 from leadline.base.errors import LeadlineError
 from leadline.base.fingerprint import fingerprint_path, fingerprint_value
 from leadline.base.progress import SILENT, Progress
@@ -54,6 +55,8 @@ def _run(bench: Bench, until: str) -> Summary:
             continue
         if not checked:
             _check(bench)
+            sweep(brain.out)
+            sweep(brain.cache)
             checked = True
         bench.progress.begin(step.name, 0)
         warnings = step.run(bench)
