@@ -9,7 +9,7 @@ import typer
 
 from leadline.base.errors import Faults, LeadlineError
 from leadline.base.progress import Cancelled
-from leadline.cli import atlas, brains, compare, demo, export, points, report, units
+from leadline.cli import atlas, brains, compare, demo, export, learn, points, report, units
 from leadline.cli.terminal import err
 
 app = typer.Typer(
@@ -25,6 +25,7 @@ demo.add_to(app)
 app.add_typer(atlas.app, name="atlas", help="Build or check an atlas folder.")
 brains.add_to(app)
 points.add_to(app)
+learn.add_to(app)
 units.add_to(app)
 report.add_to(app)
 export.add_to(app)
