@@ -77,7 +77,7 @@ def _design(p, s, g, c, copy, depth, white):  # type: ignore[no-untyped-def]  # 
             label = p.active[s, g, copy, cell, a]
             if label < 0:
                 break
-            share = p.weight[s, g, copy, cell, a]
+            share = np.float32(p.weight[s, g, copy, cell, a])
             for t in range(r, rows):
                 white[label, t] += share * p.whitener[s, g, c, r, t]
     for t in range(rows):
@@ -88,18 +88,18 @@ def _design(p, s, g, c, copy, depth, white):  # type: ignore[no-untyped-def]  # 
 def _products(p, s, g, c, row_weight, white, gram, cross):  # type: ignore[no-untyped-def]  # pragma: no cover
     """Weighted products of whitened labels with each other, ``gram`` (L, L), and with the data, ``cross`` (F, L)."""
     rows, features = p.n_rows[s], p.n_features[s, g]
-    weighted = np.empty(rows)
+    weighted = np.empty(rows, np.float32)
     for i in range(gram.shape[0]):
         for t in range(rows):
-            weighted[t] = white[i, t] * row_weight[t]
+            weighted[t] = white[i, t] * np.float32(row_weight[t])
         for j in range(i + 1):
-            total = 0.0
+            total = np.float32(0.0)
             for t in range(rows):
                 total += weighted[t] * white[j, t]
             gram[i, j] = total
             gram[j, i] = total
         for f in range(features):
-            total = 0.0
+            total = np.float32(0.0)
             for t in range(rows):
                 total += weighted[t] * p.white_data[s, g, c, f, t]
             cross[f, i] = total
@@ -192,7 +192,7 @@ def log_offset_ratio(p, z):  # type: ignore[no-untyped-def]  # pragma: no cover
 def evaluate(p, z, c, copy, feature_weight, row_weight, out):  # type: ignore[no-untyped-def]  # pragma: no cover
     """Log likelihood of paths ``z`` (N, J) into ``out`` (N,)."""
     width = p.centre.shape[1]
-    depth, white = np.empty(width), np.empty((p.mean.shape[3], width))
+    depth, white = np.empty(width), np.empty((p.mean.shape[3], width), np.float32)
     scratch = np.empty(max(1, p.mean.shape[2]))
     for i in range(z.shape[0]):
         out[i] = log_likelihood(p, z[i], c[i], copy[i], feature_weight[i], row_weight[i], depth, white, scratch)
@@ -206,7 +206,7 @@ def slice_move(  # type: ignore[no-untyped-def]  # pragma: no cover
     generalised to a fitted Gaussian as in Nishihara et al. 2014, JMLR 15, 2087). Changes ``z``, ``ll``, ``a``."""
     dims = z.shape[1]
     width = p.centre.shape[1]
-    depth, white = np.empty(width), np.empty((p.mean.shape[3], width))
+    depth, white = np.empty(width), np.empty((p.mean.shape[3], width), np.float32)
     scratch = np.empty(max(1, p.mean.shape[2]))
     new_a, new_z = np.empty(dims), np.empty(dims)
     for i in range(z.shape[0]):

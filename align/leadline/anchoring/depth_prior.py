@@ -27,6 +27,7 @@ SHANK_OFFSET_SD_UM = 25.0
 SHANK_SCALE_SD = 0.012
 SHANK_SLOPE_SHARE = 0.25
 OBLIQUE = 0.8
+CANDIDATES = 16
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -77,18 +78,22 @@ class DepthPrior:
         return np.asarray(np.logaddexp(*parts) - wide, np.float64)
 
     def draw(self, rng: np.random.Generator, n: int) -> FloatArray:
-        """Exact prior draws of z ``(n, J)`` (rejection on the offset), in antithetic pairs where both are kept."""
-        kept: list[FloatArray] = []
-        count = 0
+        """Prior draws of z ``(n, J)`` by rejection on the offset, in antithetic pairs.
+
+        Every slot has its own candidates, so that a slight change of the anchors changes few slots.
+        """
+        half = (n + 1) // 2
+        candidates = rng.standard_normal((half, CANDIDATES, self.dims))
+        uniform = np.log(rng.random((half, CANDIDATES)))
         top = float(self.log_ratio(np.zeros(1))[0])
-        while count < n:
-            half = rng.standard_normal((n, self.dims))
-            uniform = np.log(rng.random(n))
-            pairs = np.stack([half, -half], axis=1)
-            accept = uniform[:, None] < self.log_ratio(self.offset_mean_um + pairs @ self.offset_basis) - top
-            kept.append(pairs[accept])
-            count += len(kept[-1])
-        return np.concatenate(kept)[:n]
+        slot = np.arange(half)
+        drawn = np.empty((half, 2, self.dims))
+        for side, sign in enumerate((1.0, -1.0)):
+            offset = self.offset_mean_um + sign * (candidates @ self.offset_basis)
+            accepted = uniform < self.log_ratio(offset) - top
+            accepted[:, -1] = True
+            drawn[:, side] = sign * candidates[slot, accepted.argmax(axis=1)]
+        return drawn.reshape(2 * half, self.dims)[:n]
 
 
 def interpolation(node_um: FloatArray, at_um: FloatArray) -> FloatArray:
@@ -188,6 +193,13 @@ def _integrated(x: FloatArray, length_um: float, step_um: float = 20.0) -> Float
     full = at @ summed @ at.T
     pinned = full - full[-1:, :] - full[:, -1:] + full[-1, -1]
     return np.asarray(pinned[:-1, :-1], np.float64)
+
+
+def slope_variance(tip_distance_um: FloatArray, law: DepthLaw) -> float:
+    """Variance that local stretch alone gives to the slope of a straight line fitted to a depth map."""
+    centred = tip_distance_um - tip_distance_um.mean()
+    weight = centred / (centred @ centred)
+    return float(law.slope_sd**2 * weight @ _integrated(tip_distance_um, law.slope_length_um) @ weight)
 
 
 def _observations(

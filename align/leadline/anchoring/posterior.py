@@ -77,12 +77,22 @@ def _infer_probe(
     packed = assemble(shanks, prior, structures, knowledge)
     if not packed.informative:
         return _results(shanks, prior, z, copy, rng, 0.0, {})
-    drawn = sample(packed, prior, rng, draws, POWER, progress)
+    drawn = sample(packed, prior, rng, POWER, progress)
     informed = chance_informed(packed, drawn)
-    keep = np.arange(draws) < round(informed * draws)
-    chosen = rng.permutation(draws)
-    z[keep], copy[keep] = drawn.ensemble.z[chosen][keep], drawn.ensemble.copy[chosen][keep]
+    kept = round(informed * draws)
+    if kept:
+        best_z, best_copy = _thinned(drawn, prior, kept, rng)
+        z, copy = np.concatenate([best_z, z[kept:]]), np.concatenate([best_copy, copy[kept:]])
     return _results(shanks, prior, z, copy, rng, informed, _diagnostics(drawn, packed))
+
+
+def _thinned(drawn: Drawn, prior: DepthPrior, n: int, rng: np.random.Generator) -> tuple[FloatArray, IntArray]:
+    """``n`` of the draws, evenly along the leading direction, moved so that their mean is that of all draws."""
+    spread = drawn.z - drawn.z.mean(axis=0)
+    label = spread @ prior.basis.T
+    order = np.argsort(label.mean(axis=1), kind="stable")
+    rows = order[np.minimum(((np.arange(n) + rng.random()) / n * len(order)).astype(int), len(order) - 1)]
+    return drawn.z[rows] + (drawn.z.mean(axis=0) - drawn.z[rows].mean(axis=0)), drawn.copy[rows]
 
 
 def chance_informed(packed: Packed, drawn: Drawn) -> float:
@@ -109,7 +119,7 @@ def _results(
     diagnostics: dict[str, float],
 ) -> list[DepthPosterior]:
     """Physical depth and label of every row, draw by draw."""
-    left_open = rng.standard_normal((len(z), prior.mean_um.size)) @ prior.physical_rest.T
+    left_open = _balanced_noise(rng, len(z), prior.mean_um.size) @ prior.physical_rest.T
     physical = prior.physical_mean_um + z @ prior.physical_basis.T + left_open
     label = prior.mean_um + z @ prior.basis.T
     out = []
@@ -129,6 +139,13 @@ def _results(
             )
         )
     return out
+
+
+def _balanced_noise(rng: np.random.Generator, draws: int, nodes: int) -> FloatArray:
+    """Standard normal noise, opposite in every other draw: neighbouring draws are mirrored or lie side by side, so
+    what z leaves open widens the draws and hardly moves their centre."""
+    half = rng.standard_normal(((draws + 1) // 2, nodes))
+    return np.asarray(np.stack([half, -half], axis=1).reshape(-1, nodes)[:draws], np.float64)
 
 
 def falling(depth_um: FloatArray) -> FloatArray:

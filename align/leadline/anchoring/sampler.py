@@ -19,10 +19,13 @@ if TYPE_CHECKING:
     from leadline.anchoring.depth_prior import DepthPrior
     from leadline.anchoring.pack import Packed
 
-SCOUTS = 6
+PARTICLES = 256
+SCOUTS = 2048
 KEEP_ESS = 0.5
 MOVES = 2
-LAST_MOVES = 4
+LAST_MOVES = 6
+SNAPSHOTS = 4
+ALLFIT = True
 MAX_SHRINK = 24
 MAX_LEVELS = 60
 
@@ -50,11 +53,12 @@ class Ensemble:
         )
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class Drawn:
-    """The outcome: ``ensemble``, log evidence of the tempered model, and how the run went."""
+    """The outcome: draws ``z`` (N, J) and lateral ``copy`` (N,), log evidence of the tempered model, how it went."""
 
-    ensemble: Ensemble
+    z: FloatArray
+    copy: IntArray
     log_evidence: float
     levels: int
     evaluations: int
@@ -82,15 +86,15 @@ class Crew:
 
 
 def sample(
-    packed: Packed, prior: DepthPrior, rng: np.random.Generator, n: int, power: float, progress: Progress = SILENT
+    packed: Packed, prior: DepthPrior, rng: np.random.Generator, power: float, progress: Progress = SILENT
 ) -> Drawn:
-    """Draw ``n`` depth maps from prior x likelihood^``power``.
+    """Draw depth maps from prior x likelihood^``power``: the particles as they stood after each of the last moves.
 
     Adaptive tempering (Del Moral, Doucet & Jasra 2006, J. R. Stat. Soc. B 68, 411) from many prior draws; at each
     level particles are resampled and moved by elliptical slices under their own fitted Gaussian and under the prior.
     """
     crew = Crew()
-    particles = _scouts(packed, prior, rng, SCOUTS * n)
+    particles = _scouts(packed, prior, rng, SCOUTS)
     _evaluate(crew, packed, particles)
     beta, log_z, levels, spent = 0.0, 0.0, 0, len(particles.z)
     progress.begin("depth posterior", 1.0)
@@ -100,13 +104,18 @@ def sample(
         top = gain.max()
         weight = np.exp(gain - top)
         log_z += float(top + np.log(weight.mean()))
-        particles = particles.take(_resample(weight, particles.z @ prior.offset_basis, n, rng))
+        particles = particles.take(_resample(weight, particles.z @ prior.offset_basis, PARTICLES, rng))
         beta += step
         levels += 1
-        for move in range(MOVES if beta < 1.0 else LAST_MOVES):
-            spent += move_all(crew, packed, particles, power * beta, rng, fitted=move % 2 == 0)
+        for move in range(MOVES):
+            spent += move_all(crew, packed, particles, power * beta, rng, fitted=ALLFIT or move % 2 == 0)
         progress.step(step)
-    return Drawn(particles, log_z, levels, spent)
+    stills = []
+    for move in range(LAST_MOVES):
+        spent += move_all(crew, packed, particles, power, rng, fitted=ALLFIT or move % 2 == 0)
+        stills.append((particles.z.copy(), particles.copy.copy()))
+    z, copy = (np.concatenate(part) for part in zip(*stills[-SNAPSHOTS:], strict=True))
+    return Drawn(z, copy, log_z, levels, spent)
 
 
 def move_all(
