@@ -20,9 +20,9 @@ def turn(raw: Any, channels: Any, scale: Any, out: Any) -> None:
         t1 = min(t0 + TILE_SAMPLES, samples)
         for c0 in range(0, count, TILE_CHANNELS):
             for c in range(c0, min(c0 + TILE_CHANNELS, count)):
-                trace = channels[c]
-                for t in range(t0, t1):
-                    out[c, t] = raw[t, trace] * scale
+                source, target = raw[t0:t1, channels[c]], out[c, t0:t1]
+                for t in range(t1 - t0):
+                    target[t] = source[t] * scale
 
 
 def as_microvolts(raw: Any, channels: Any, uv_per_bit: float) -> Any:

@@ -21,7 +21,7 @@ def add_hann_power(spectrum: Any, kept: Any, power: Any) -> None:
     """
     channels, segments, width = spectrum.shape
     bins = width // 2
-    square = np.zeros(width, np.float32)
+    square = np.zeros(width - 4, np.float32)
     for c in range(channels):
         total = power[c]
         for s in range(segments):
@@ -30,11 +30,13 @@ def add_hann_power(spectrum: Any, kept: Any, power: Any) -> None:
             x[1] = 0
             if not kept[s]:
                 continue
-            for k in range(2, width - 2):
-                y = HALF * x[k] - QUARTER * (x[k - 2] + x[k + 2])
+            before, here, after = x[: width - 4], x[2 : width - 2], x[4:]
+            for k in range(width - 4):
+                y = HALF * here[k] - QUARTER * (before[k] + after[k])
                 square[k] = y * y
-            for k in range(1, bins - 1):
-                total[k] += square[2 * k] + square[2 * k + 1]
+            inner = total[1 : bins - 1]
+            for k in range(bins - 2):
+                inner[k] += square[2 * k] + square[2 * k + 1]
             first = HALF * x[2]
             last = HALF * (x[width - 2] - x[width - 4])
             total[0] += first * first
@@ -48,8 +50,8 @@ def filter_and_thin(samples: Any, taps: Any, factor: int, out: Any) -> None:
     for c in range(out.shape[0]):
         row = samples[c]
         for t in range(out.shape[1]):
-            start = t * factor
+            window = row[t * factor : t * factor + length]
             total = np.float32(0)
             for k in range(length):
-                total += taps[k] * row[start + k]
+                total += taps[k] * window[k]
             out[c, t] = total

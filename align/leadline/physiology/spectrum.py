@@ -19,11 +19,12 @@ if TYPE_CHECKING:
 
 GROUP = 64  # channels transformed at once: their spectra stay in the cache
 CROSS_BINS = 24  # bins of a band that enter the cross-spectra; neighbouring bins say much the same
-CROSS_SEGMENTS = 100
+CROSS_SEGMENTS = 64
+FLUSH_SEGMENTS = 64  # segments that are summed in float32 before float64 takes over
 USABLE = 0.45  # of the sampling rate; above it anti-alias filters have taken the power away
 LINE_EXCESS = 4.0  # 6 dB above its surroundings, and narrow, is pickup
-SCAN_SEGMENTS = 32
-WATCHED_CHANNELS = 16  # contacts whose median level tells an artefact, which all hear, from a ripple, which few hear
+SCAN_SEGMENTS = 24
+WATCHED_CHANNELS = 10  # contacts whose median level tells an artefact, which all hear, from a ripple, which few hear
 WATCHED_HZ = ((4.0, 12.0), (12.0, 30.0), (30.0, 90.0), (140.0, 220.0), (300.0, 1000.0))
 ARTEFACT_DB = 3.0
 ARTEFACT_SD = 4.0
@@ -102,7 +103,8 @@ class _Sums:
     ) -> None:
         self.frequency_hz, self.line, self.plan = frequency_hz, line, plan
         self.power = np.zeros((n_channels, frequency_hz.size))
-        self.kept = self.seen = self.crossed = 0
+        self.recent = np.zeros(self.power.shape, np.float32)
+        self.kept = self.seen = self.crossed = self.unflushed = 0
         self.every = max(2, -(-plan.n_segments // CROSS_SEGMENTS))
         self.bins: dict[str, IntArray] = {}
         self.weight: dict[str, float] = {}
@@ -125,38 +127,50 @@ class _Sums:
         parts: dict[str, list[AnyArray]] = {name: [] for name in self.bins}
         for first in range(0, len(segments), GROUP):
             spectrum = rfft(segments[first : first + GROUP], axis=-1)
-            power = np.zeros((len(spectrum), self.frequency_hz.size), np.float32)
-            add_hann_power(spectrum.view(np.float32), kept, power)
-            self.power[first : first + GROUP] += power
+            add_hann_power(spectrum.view(np.float32), kept, self.recent[first : first + GROUP])
             if chosen.size:
                 for name, bins in self.bins.items():
                     parts[name].append(_hann(spectrum, chosen, bins))
         for name, pieces in parts.items():
             if pieces:
-                self.cross[name] += _outer(np.concatenate(pieces).reshape(len(segments), -1))
+                self.cross[name] += _half_outer(np.concatenate(pieces).reshape(len(segments), -1))
         self.seen += kept.size
         self.kept += int(kept.sum())
         self.crossed += chosen.size
+        self.unflushed += kept.size
+        if self.unflushed >= FLUSH_SEGMENTS:
+            self._flush()
+
+    def _flush(self) -> None:
+        self.power += self.recent
+        self.recent[:] = 0
+        self.unflushed = 0
 
     def result(self, sampling_hz: float) -> FieldStatistics:
         """Means in uV^2 and uV^2/Hz."""
+        self._flush()
         density = 2.0 / (sampling_hz * 0.375 * self.plan.segment)  # the squares of a periodic Hann window sum to 3/8 N
         power = self.power * density / max(self.kept, 1)
         power[:, [0, -1]] /= 2.0
         step = float(self.frequency_hz[1])
         cross = {
-            name: total * (density * step * self.weight[name] / max(self.crossed, 1))
-            for name, total in self.cross.items()
+            name: _whole(half) * (density * step * self.weight[name] / max(self.crossed, 1))
+            for name, half in self.cross.items()
         }
         seconds = (self.kept + min(self.kept, 1)) * self.plan.hop / sampling_hz
         return FieldStatistics(self.frequency_hz, power, self.line, cross, seconds, 1.0 - self.kept / max(self.seen, 1))
 
 
-def _outer(values: AnyArray) -> AnyArray:
-    """``values @ values^H`` of complex64 (C, K), by the half that tells all."""
+def _half_outer(values: AnyArray) -> AnyArray:
+    """Upper half of ``conj(values) @ values^T`` of complex64 (C, K); the lower half, which says the same, is zero."""
     from scipy.linalg.blas import cherk
 
     half: AnyArray = cherk(1.0, values.T, trans=2)
+    return half
+
+
+def _whole(half: AnyArray) -> AnyArray:
+    """``values @ values^H`` from the sum of :func:`_half_outer`."""
     whole: AnyArray = np.conj(half) + np.triu(half, 1).T
     return whole
 
@@ -173,17 +187,20 @@ def _watched(segments: AnyArray) -> AnyArray:
 
     spectrum = rfft(segments[:: max(1, len(segments) // WATCHED_CHANNELS)], axis=-1)
     spectrum[..., 0] = 0.0
+    power = np.empty(spectrum.shape, np.float32)
     inner = 0.5 * spectrum[..., 1:-1] - 0.25 * (spectrum[..., :-2] + spectrum[..., 2:])
-    return np.pad(np.square(inner.real) + np.square(inner.imag), ((0, 0), (0, 0), (1, 1)), mode="edge")
+    np.add(np.square(inner.real), np.square(inner.imag), out=power[..., 1:-1])
+    power[..., 0], power[..., -1] = power[..., 1], power[..., -2]
+    return power
 
 
 def _levels(power: AnyArray, frequency_hz: FloatArray) -> FloatArray:
     """Level ``(S, B)`` in dB of each segment in the watched bands: the median over contacts."""
     levels = []
     for low, high in WATCHED_HZ:
-        inside = (frequency_hz >= low) & (frequency_hz <= high)
-        if inside.any():
-            levels.append(np.median(power[..., inside].mean(axis=-1), axis=0))
+        first, last = np.searchsorted(frequency_hz, (low, high))
+        if last > first:
+            levels.append(np.median(power[..., first:last].mean(axis=-1), axis=0))
     return np.asarray(10.0 * np.log10(np.stack(levels, axis=-1) + 1e-12), float)
 
 
