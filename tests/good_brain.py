@@ -1,7 +1,8 @@
 """A tiny brain that is right in every file: the ground on which broken inputs and readers are tested.
 
-Anatomy: an ellipsoid of 6 x 4 x 5 mm with cortical layers, white matter, a hippocampus of blobs, a ventricle and a
-notch on the left, so that it is no mirror image of itself. No part of Leadline is used to write it.
+Anatomy: 6 x 4 x 5 mm, two hemispheres with cortical layers, white matter and hippocampus as shells; thalamus,
+commissure, ventricles, bulbs and cerebellum as blobs; and a notch on the left, so that it is no mirror image of itself.
+No part of Leadline is used to write it.
 """
 
 from __future__ import annotations
@@ -34,8 +35,14 @@ ROWS = (
     (4294967295, "CA1p", "Field CA1, pyramidal layer", 30, "#3080b0", "sp", "false", "grey", 100),
     (32, "DGY", "Dentate gyrus", 30, "#80c0d0", "", "false", "grey", 190),
     (40, "VS", "Lateral ventricle", 997, "#aaaaaa", "", "false", "ventricle", 20),
+    (22, "ACO", "Anterior commissure", 20, "#d0d0d0", "", "false", "white", 60),
     (50, "THL", "Thalamus", 997, "#e07070", "", "true", "grey", 120),
+    (51, "THV", "Ventral nucleus of the thalamus", 50, "#e08080", "", "false", "grey", 155),
+    (60, "OBU", "Olfactory bulb", 997, "#9060c0", "", "true", "grey", 200),
+    (70, "CBL", "Cerebellum", 997, "#f0e080", "", "true", "grey", 175),
 )
+CORTEX = ((1050, 32), (930, 4294967295), (850, 21), (700, 14), (520, 13), (320, 12), (120, 614454277))
+MIDLINE_UM = 2750.0
 _GREY = {row[0]: row[-1] for row in ROWS}
 BRAIN_TOML = """\
 format = 1
@@ -70,8 +77,8 @@ points = "a_points.csv"
 
 [[anchor]]
 penetration = "A"
-tip_distance_um = 1000.0
-track_depth_um = 1200.0
+tip_distance_um = 870.0
+track_depth_um = 910.0
 sd_um = 40.0
 note = "white matter, upper edge"
 """
@@ -148,8 +155,8 @@ def _stored(pir: np.ndarray) -> np.ndarray:
 
 
 def entry_um() -> np.ndarray:
-    """Atlas point near which the probe goes in."""
-    return np.array([4000.0, 620.0, 3700.0])
+    """Atlas point where the probe goes in, at the surface."""
+    return np.array([4000.0, 545.0, 3700.0])
 
 
 def tip_um() -> np.ndarray:
@@ -159,26 +166,29 @@ def tip_um() -> np.ndarray:
 
 def label_at(at: np.ndarray) -> np.ndarray:
     """Structure id (...) at atlas um (..., 3)."""
-    u = (at - np.array([3150.0, 2150.0, 2750.0])) / np.array([2900.0, 1850.0, 2400.0])
-    radius = np.linalg.norm(u, axis=-1)
+    side = np.abs(at[..., 2] - MIDLINE_UM)
+    mirrored = np.stack([at[..., 0], at[..., 1], side], -1)
+
+    def blob(ap: float, dv: float, lateral: float, *radii: float, where: np.ndarray = mirrored) -> np.ndarray:
+        return np.linalg.norm((where - [ap, dv, lateral]) / radii, axis=-1)
+
+    radius = blob(3300, 2150, 0, 2400, 1850, 2400)
     depth_um = (1.0 - radius) * 1850.0
     ids = np.full(radius.shape, 50)
-    for below_um, structure in (
-        (1050, 32),
-        (930, 4294967295),
-        (850, 21),
-        (700, 14),
-        (520, 13),
-        (320, 12),
-        (120, 614454277),
-    ):
+    for below_um, structure in CORTEX:
         ids[depth_um < below_um] = structure
-    low = (u[..., 1] > 0.25) & (depth_um < 1050)
-    ids[low] = 50
-    vent = np.linalg.norm((at - [3000.0, 2000.0, 2300.0]) / [900.0, 250.0, 250.0], axis=-1) < 1
-    ids[vent] = 40
-    notch = np.linalg.norm((at - [900.0, 900.0, 1300.0]) / 700.0, axis=-1) < 1
-    return np.where((depth_um < 0) | notch, 0, ids)
+    ids[(at[..., 1] > 2600) & (depth_um < 1050)] = 50
+    ids[(depth_um < 0) | ((side < 80) & (at[..., 1] < 1300))] = 0
+    for structure, where in (
+        (60, blob(650, 2100, 400, 600, 550, 380)),
+        (70, blob(5450, 1800, 0, 750, 1000, 1400)),
+        (51, blob(3700, 2500, 700, 600, 450, 450)),
+        (40, blob(2900, 1700, 600, 1000, 250, 300)),
+        (22, np.hypot(at[..., 0] - 2100, at[..., 1] - 2700) / 170 + (side > 1500)),
+    ):
+        ids[where < 1] = structure
+    ids[blob(1500, 900, -1500, 500, 500, 500, where=at - [0, 0, MIDLINE_UM]) < 1] = 0
+    return ids
 
 
 def probe() -> dict[str, object]:

@@ -297,7 +297,7 @@ ATLASES = (
            ("parent 23, which has no row",)),
     Broken("a structure is its own ancestor", edit(TABLE, '"FT","Fibre tracts","997"', '"FT","Fibre tracts","21"'),
            ("own ancestor",)),
-    Broken("a colour is none", edit(TABLE, "#e07070", "reddish"), ("line 15", "'reddish'", "hexadecimal")),
+    Broken("a colour is none", edit(TABLE, "#e07070", "reddish"), ("line 16", "'reddish'", "hexadecimal")),
     Broken("an id is negative", edit(TABLE, '"50",', '"-50",'), ("id is '-50'",)),
     Broken("an id is a fraction", edit(TABLE, '"50",', '"50.5",'), ("id is '50.5'",)),
 )  # fmt: skip
