@@ -48,7 +48,8 @@ class Findings:
     @property
     def warnings(self) -> list[str]:
         """Sentences for the user, each once."""
-        return list(dict.fromkeys(str(w["warning"]) for w in self.provenance["warnings"]))
+        told = (_in_words(str(w["step"]), str(w["warning"])) for w in self.provenance["warnings"])
+        return list(dict.fromkeys(told))
 
     def shanks(self) -> list[tuple[str, int]]:
         """(penetration, shank) of every shank with channels, in the order of the table."""
@@ -122,6 +123,12 @@ def gather(bench: Bench) -> Findings:
         registration=products.RegistrationFiles(brain).read(),
         provenance=json.loads((brain.out / "provenance.json").read_text(encoding="utf-8")),
     )
+
+
+def _in_words(step: str, warning: str) -> str:
+    """A warning with the penetration that it is about, where it does not say so itself."""
+    stage, _, name = step.partition(" ")
+    return f"penetration {name}, {stage}: {warning}" if name and name not in warning.split() else warning
 
 
 def _table(path: Any) -> pd.DataFrame:

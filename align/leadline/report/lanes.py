@@ -26,9 +26,11 @@ HALF_WIDTH_UM = 300.0
 TISSUE_STEP_UM = 10.0
 STRATA_STEP_UM = 5.0
 STRETCH_BOUNDS = (0.8, 1.25)
+STRETCH_COLOURS = {0: "#dfe5ea", 1: "#d55e00", -1: "#0072b2"}
 STRETCH_WINDOW_UM = 200.0
 MOST_CURVES = 5
 SMALL_SHARE = 0.02
+LEAST_FOR_NAME = 0.017
 # In order of what tells most about where a contact is; the first five that were measured are drawn.
 CURVES = (
     "ripple_power_db",
@@ -88,7 +90,7 @@ def strata(axis: Any, shank: Shank, scale: Scale, atlas: Atlas) -> None:
         if structure.id == 0:
             continue
         axis.axhspan(top, bottom, color=structure.colour, lw=0)
-        if bottom - top > 0.017 * (scale.bottom_um - scale.top_um):
+        if bottom - top > LEAST_FOR_NAME * (scale.bottom_um - scale.top_um):
             axis.text(0.5, (top + bottom) / 2, structure.acronym, ha="center", va="center", fontsize=7,
                       fontweight="bold", color=style.readable_on(structure.colour))  # fmt: skip
     borders = depth[np.flatnonzero(np.diff(labels)) + 1]
@@ -107,11 +109,12 @@ def ties(axis: Any, shank: Shank, scale: Scale) -> None:
     rows = shank.channels.dropna(subset=["track_depth_um"]).drop_duplicates("tip_distance_um")
     tip, depth = rows["tip_distance_um"].to_numpy(float), rows["track_depth_um"].to_numpy(float)
     right, stretch = scale.of_tip(tip), local_stretch(tip, depth)
-    for i in range(len(tip) - 1):
-        worst = stretch[i]
-        low, high = STRETCH_BOUNDS
-        colour = "#d55e00" if worst > high else "#0072b2" if worst < low else "#dfe5ea"
-        axis.fill([0, 1, 1, 0], [depth[i], right[i], right[i + 1], depth[i + 1]], color=colour, alpha=0.85, lw=0)
+    kind = (stretch[:-1] > STRETCH_BOUNDS[1]).astype(int) - (stretch[:-1] < STRETCH_BOUNDS[0]).astype(int)
+    for start, stop in _runs(kind):
+        left_edge, right_edge = depth[start : stop + 1], right[start : stop + 1]
+        heights = np.concatenate([left_edge, right_edge[::-1]])
+        across = np.concatenate([np.zeros(len(left_edge)), np.ones(len(right_edge))])
+        axis.fill(across, heights, color=STRETCH_COLOURS[int(kind[start])], alpha=0.85, lw=0)
     for i in range(0, len(tip), max(1, len(tip) // 24)):
         axis.plot([0, 1], [depth[i], right[i]], color="white", lw=0.7)
     for anchor in shank.anchors:
@@ -214,8 +217,10 @@ def odds(axis: Any, shank: Shank, scale: Scale, atlas: Atlas) -> None:
         right = left + share[:, k]
         axis.fill_betweenx(np.repeat(edges, 2)[1:-1], np.repeat(left, 2), np.repeat(right, 2), color=colour, lw=0.25,
                            edgecolor="white")  # fmt: skip
-        best = int(share[:, k].argmax())
-        if structure is not None and share[best, k] > 0.35:
+        likely = np.flatnonzero(share[:, k] > max(0.35, 0.9 * float(share[:, k].max())))
+        room = abs(edges[likely.max() + 1] - edges[likely.min()]) if likely.size else 0.0
+        if structure is not None and room > LEAST_FOR_NAME * (scale.bottom_um - scale.top_um):
+            best = int(likely[len(likely) // 2])
             ink = style.SOFT if structure.id == 0 else style.readable_on(structure.colour)
             axis.text((left[best] + right[best]) / 2, y[best], structure.acronym, ha="center", va="center",
                       fontsize=6.5, color=ink, clip_on=True)  # fmt: skip

@@ -149,12 +149,14 @@ def chip(findings: Findings, region_id: Any) -> str:
 
 def _definitions(rows: Iterable[tuple[str, str]], *, columns: bool = False) -> str:
     text = "".join(f"<dt>{escape(key)}</dt><dd>{escape(value)}</dd>" for key, value in rows)
-    return f'<div class="columns"><dl>{text}</dl></div>' if columns else f"<dl>{text}</dl>"
+    return f'<dl class="short">{text}</dl>' if columns else f"<dl>{text}</dl>"
 
 
 def _plain(value: Any) -> str:
     if isinstance(value, list | tuple):
         return ", ".join(_plain(v) for v in value)
+    if isinstance(value, float):
+        return f"{value:.5g}"
     return value if isinstance(value, str) else json.dumps(value, ensure_ascii=False, default=str)
 
 
