@@ -10,6 +10,7 @@ from numba import njit
 
 FLATNESS = 0.25
 STEP_VOX = 0.75
+SLOPE = 0.7
 COLUMNS = 7
 
 
@@ -61,6 +62,9 @@ def ridge_points(  # pragma: no cover - compiled
                 g0 = (smooth[i + 1, j, k] - smooth[i - 1, j, k]) * 0.5 / voxel_um[0]
                 g1 = (smooth[i, j + 1, k] - smooth[i, j - 1, k]) * 0.5 / voxel_um[1]
                 g2 = (smooth[i, j, k + 1] - smooth[i, j, k - 1]) * 0.5 / voxel_um[2]
+                # the flank of a ball looks like a tube that points at it, but grows along it; a tube does not
+                if abs(g0 * vector[0, 2] + g1 * vector[1, 2] + g2 * vector[2, 2]) * scale_um > SLOPE * strength:
+                    continue
                 s1 = -(g0 * vector[0, 0] + g1 * vector[1, 0] + g2 * vector[2, 0]) / l1
                 s2 = -(g0 * vector[0, 1] + g1 * vector[1, 1] + g2 * vector[2, 1]) / l2
                 o0 = (s1 * vector[0, 0] + s2 * vector[0, 1]) / voxel_um[0]

@@ -6,14 +6,14 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from leadline.base.arrays import Float32Array, FloatArray
+from leadline.base.arrays import AnyArray, Float32Array, FloatArray
 from leadline.model.volume import Volume
-from leadline.tracing.grid import sampled
+from leadline.tracing.grid import grown, sampled
 
 TILE_UM = 320.0
 ROUNDS = 5
 INLIER_LOW, INLIER_HIGH = -3.5, 2.5
-MIN_SHARE = 0.02
+THIN = 2
 SLAB = 32
 
 
@@ -38,58 +38,51 @@ class Foretold:
 
     def planes(self, grid: Volume, rows: slice) -> Float32Array:
         """The maps ``(3, rows, n1, n2)`` on planes of a grid, linear between tile centres."""
-        weights = []
-        for axis in range(3):
-            at = np.arange(grid.shape[axis], dtype=float)[rows if axis == 0 else slice(None)]
-            at = (at * grid.voxel_um[axis] + grid.origin_um[axis] - self.origin_um[axis]) / self.tile_um[axis]
-            weights.append(_hat(at, self.maps.shape[axis]))
-        return np.asarray(np.einsum("ia,jb,kc,abcm->mijk", *weights, self.maps, optimize=True), np.float32)
+        frame = zip(grid.shape, grid.voxel_um, grid.origin_um, self.origin_um, self.tile_um, strict=True)
+        a, b, c = ((np.arange(n) * v + o - so) / size for n, v, o, so, size in frame)
+        return np.asarray(np.moveaxis(grown(self.maps, (a[rows], b, c)), -1, 0), np.float32)
 
 
 def foretell(dye: Volume, background: Volume, inside: np.ndarray) -> Foretold:
     """Regress dye on background in tiles of 320 um, robust against the dye itself.
 
-    Values more than 2.5 sd above or 3.5 sd below the line are left out and the line is fitted again, five times; sums
-    are smoothed over neighbouring tiles, and slopes of tiles with little contrast lean on the slope of the whole
-    brain.
+    Values more than 2.5 sd above or 3.5 sd below the line are left out and the line is fitted again, five times. Sums
+    over every second voxel of each axis are smoothed over neighbouring tiles, and slopes of tiles with little contrast
+    lean on the slope of the whole brain.
 
     Parameters
     ----------
     dye, background : volumes in memory on one grid.
     inside : bool on that grid; only these voxels count.
     """
-    shape = np.asarray(dye.shape)
-    size = np.maximum(1, np.round(TILE_UM / dye.voxel_um)).astype(int)
-    tiles = np.ceil(shape / size).astype(int)
+    thin = tuple(slice(None, None, THIN if n > 2 * THIN else 1) for n in dye.shape)
+    y, x = (
+        Volume(v.array()[thin], v.voxel_um * [s.step for s in thin], v.code, v.origin_um) for v in (dye, background)
+    )
+    keep, shape = inside[thin], np.asarray(y.shape)
+    size = np.maximum(1, np.round(TILE_UM / y.voxel_um)).astype(int)
     labels = [np.arange(n) // s for n, s in zip(shape, size, strict=True)]
-    y, x = dye.array(), background.array()
-    fit = None
-    frame = (size * dye.voxel_um, dye.origin_um + (size - 1) / 2 * dye.voxel_um)
-    for _ in range(ROUNDS):
-        sums = np.zeros((*tiles, 6))
-        for start in range(0, shape[0], SLAB):
-            rows = slice(start, min(start + SLAB, int(shape[0])))
-            keep = inside[rows]
-            if fit is not None:
-                offset, slope, sd = fit.planes(dye, rows)
-                z = (y[rows] - offset - slope * x[rows]) / sd
-                keep = keep & (z < INLIER_HIGH) & (z > INLIER_LOW)
-            _add_sums(sums, y[rows], x[rows], keep, labels, rows)
-        fit = Foretold(_solve(sums, first=fit is None), *frame)
-    assert fit is not None
+    frame = (size * y.voxel_um, y.origin_um + (size - 1) / 2 * y.voxel_um)
+    fit = Foretold(_solve(_sums(y.array(), x.array(), keep, labels), first=True), *frame)
+    for _ in range(ROUNDS - 1):
+        near = np.empty_like(keep)
+        for start in range(0, int(shape[0]), SLAB):
+            rows = slice(start, start + SLAB)
+            offset, slope, sd = fit.planes(y, rows)
+            z = (y.array()[rows] - offset - slope * x.array()[rows]) / sd
+            near[rows] = keep[rows] & (z < INLIER_HIGH) & (z > INLIER_LOW)
+        fit = Foretold(_solve(_sums(y.array(), x.array(), near, labels), first=False), *frame)
     return fit
 
 
-def _add_sums(
-    sums: FloatArray, y: np.ndarray, x: np.ndarray, keep: np.ndarray, labels: list[np.ndarray], rows: slice
-) -> None:
-    """Add counts and moments of the kept voxels of one slab to the tiles."""
+def _sums(y: AnyArray, x: AnyArray, keep: AnyArray, labels: list[AnyArray]) -> FloatArray:
+    """Counts and moments ``(t0, t1, t2, 6)`` of the kept voxels of every tile."""
+    shape = tuple(int(at[-1]) + 1 for at in labels)
     i, j, k = np.nonzero(keep)
-    flat = np.ravel_multi_index((labels[0][rows][i], labels[1][j], labels[2][k]), sums.shape[:3])
+    flat = np.ravel_multi_index((labels[0][i], labels[1][j], labels[2][k]), shape)
     yy, xx = y[i, j, k].astype(np.float64), x[i, j, k].astype(np.float64)
-    many = int(np.prod(sums.shape[:3]))
-    for m, values in enumerate((None, xx, yy, xx * xx, xx * yy, yy * yy)):
-        sums[..., m] += np.bincount(flat, values, minlength=many).reshape(sums.shape[:3])
+    moments = (None, xx, yy, xx * xx, xx * yy, yy * yy)
+    return np.stack([np.bincount(flat, v, minlength=int(np.prod(shape))).reshape(shape) for v in moments], axis=-1)
 
 
 def _solve(sums: FloatArray, *, first: bool) -> Float32Array:
@@ -117,11 +110,6 @@ def _line(moments: FloatArray, slope_all: float, ridge: float) -> tuple[FloatArr
     slope = (cov + ridge * slope_all) / np.maximum(vx + ridge, 1e-12)
     left = np.maximum(vy - 2 * slope * cov + slope**2 * vx, 0.0)
     return my - slope * mx, slope, np.sqrt(left)
-
-
-def _hat(at: FloatArray, many: int) -> FloatArray:
-    """Linear interpolation weights ``(len(at), many)`` of tile centres, constant beyond the outer ones."""
-    return np.maximum(0.0, 1.0 - np.abs(np.clip(at, 0, many - 1)[:, None] - np.arange(many)[None, :]))
 
 
 def excess(dye: Volume, background: Volume, foretold: Foretold) -> Volume:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -16,7 +16,14 @@ EVIDENCE_COST = 1.6
 RING_OUT = 3.2
 NOISE_SD_UM = 30.0
 LEVEL = 0.45
-REFERENCE_UM = (70.0, 320.0)
+REFERENCE_UM = (40.0, 130.0)
+USUAL_UM = 800.0
+LEAST_SHARE = 0.13
+CLEAR_SD = 2.0
+HIDDEN_UM, HIDDEN_SHARE_SD = 60.0, 10.0
+WIDER = 2.5
+FINE_UM = 4.0
+BRIGHT = 3.5
 RAY_RADII_UM = (130.0, 200.0, 270.0)
 RAYS = 10
 RAY_UM = 500.0
@@ -25,61 +32,79 @@ RAY_STEP_UM = 10.0
 
 @dataclass(frozen=True, slots=True, eq=False)
 class DyeProfile:
-    """Dye along a curve.
+    """Dye along a curve, in noise sd of the tracing grid.
 
-    ``amount`` : (n,) height of a Gaussian of the track's width over its surroundings, in noise sd of the tracing grid.
-    ``noise``, ``noise_smooth`` : sd of that height beside the track, as it is and smoothed along the track.
+    ``amount`` : (n,) height of a Gaussian of the track's width over its surroundings. ``narrow`` : (n,) the same with
+    a wider Gaussian beside it that takes up halos; noisier. ``noise``, ``noise_smooth``, ``noise_narrow`` : sd beside
+    the track of the amount, and of both smoothed along the track.
     """
 
     amount: FloatArray
+    narrow: FloatArray
     noise: float
     noise_smooth: float
+    noise_narrow: float
 
     @property
     def clearness(self) -> FloatArray:
         """Dye ``(n,)`` smoothed along the track, in its own noise sd."""
-        smooth = smoothed_along(self.amount[:, None], NOISE_SD_UM / STATION_UM)[:, 0]
-        return np.asarray(smooth / self.noise_smooth, np.float64)
+        return _along(self.amount) / self.noise_smooth
 
     def reversed(self) -> DyeProfile:
         """The same dye, read from the other end."""
-        return DyeProfile(self.amount[::-1], self.noise, self.noise_smooth)
+        return replace(self, amount=self.amount[::-1], narrow=self.narrow[::-1])
+
+
+def _along(amount: FloatArray) -> FloatArray:
+    return smoothed_along(amount[:, None], NOISE_SD_UM / STATION_UM)[:, 0]
 
 
 def dye_profile(stations: Stations, sigma_um: float) -> DyeProfile:
     """Height of a Gaussian of known width at the centre of every plane, over a floor fitted with it.
 
-    A broad halo goes into the floor. The same measure at eight places around the centre, what was fitted there taken
-    off, tells the noise.
+    The same measure at eight places around the centre, what was fitted there taken off, tells the noise.
     """
     grid = stations.grid_um
     width = float(np.clip(sigma_um, 12.0, 60.0))
-    amount, floor, bell = _height(stations.values, grid, np.zeros(2), width)
+    away2 = (grid**2).sum(axis=1)
+    bell, wide = (np.exp(-away2 / (2 * w**2)) for w in (width, min(WIDER * width, 110.0)))
+    near = away2 < (3.0 * width) ** 2
+    (amount, floor), spread = _heights(stations.values, [bell, np.ones_like(bell)], near)
+    (narrow, _, _), spread_narrow = _heights(
+        stations.values, [bell, wide, np.ones_like(bell)], np.full(len(bell), True)
+    )
     rest = stations.values - floor[:, None] - amount[:, None] * bell
     turn = np.arange(8) * np.pi / 4
     ring = float(min(RING_OUT * width, 110.0)) * np.column_stack([np.cos(turn), np.sin(turn)])
-    beside = np.stack([_height(rest, grid, middle, width)[0] for middle in ring], axis=1)
-    inner = smoothed_along(beside, NOISE_SD_UM / STATION_UM)
-    noise, noise_smooth = (1.4826 * float(np.nanmedian(np.abs(v))) for v in (beside, inner))
-    return DyeProfile(np.nan_to_num(amount), max(noise, 0.05), max(noise_smooth, 0.03))
+    beside = []
+    for middle in ring:
+        gap2 = ((grid - middle) ** 2).sum(axis=1)
+        shape = np.exp(-gap2 / (2 * width**2))
+        beside.append(_heights(rest, [shape, np.ones_like(shape)], gap2 < (3.0 * width) ** 2)[0][0])
+    around = np.stack(beside, axis=1)
+    noise, smooth = (max(_mad(v), 0.03) for v in (around, smoothed_along(around, NOISE_SD_UM / STATION_UM)))
+    return DyeProfile(np.nan_to_num(amount), np.nan_to_num(narrow), noise, smooth, smooth * spread_narrow / spread)
 
 
-def _height(
-    values: FloatArray, grid: FloatArray, middle: FloatArray, width: float
-) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """Least-squares height and floor ``(n,)`` of a Gaussian at one place (NaN: too little is seen), and its shape."""
-    away2 = ((grid - middle) ** 2).sum(axis=1)
-    bell = np.exp(-away2 / (2 * width**2))
-    there = np.isfinite(values) & (away2 < (3.0 * width) ** 2)
-    many = there.sum(axis=1).clip(1)
-    mean_bell = (there * bell).sum(axis=1) / many
-    known = np.where(there, values, 0.0)
-    mean_value = known.sum(axis=1) / many
-    centred = (bell - mean_bell[:, None]) * there
-    height = (centred * known).sum(axis=1) / np.maximum((centred**2).sum(axis=1), 1e-9)
-    enough = there.sum(axis=1) > 0.6 * (away2 < (3.0 * width) ** 2).sum()
-    height = np.where(enough, height, np.nan)
-    return height, mean_value - np.nan_to_num(height) * mean_bell, bell
+def _mad(values: FloatArray) -> float:
+    return 1.4826 * float(np.nanmedian(np.abs(values))) if np.isfinite(values).any() else 1.0
+
+
+def _heights(values: FloatArray, shapes: list[FloatArray], use: BoolArray) -> tuple[FloatArray, float]:
+    """Least-squares heights ``(k, n)`` of shapes in every plane, NaN where too little is seen, and the factor from
+    noise of one place to noise of the first height."""
+    design = np.stack(shapes, axis=1)[use]
+    part = values[:, use]
+    there = np.isfinite(part)
+    known = np.where(there, part, 0.0)
+    whole = design.T @ design + 1e-9 * np.eye(len(shapes))
+    heights = np.linalg.solve(whole, design.T @ known.T)
+    for i in np.flatnonzero(~there.all(axis=1)):
+        mine = design[there[i]]
+        heights[:, i] = np.nan
+        if len(mine) > 0.6 * len(design):
+            heights[:, i] = np.linalg.solve(mine.T @ mine + 1e-9 * np.eye(len(shapes)), mine.T @ part[i, there[i]])
+    return np.asarray(heights, np.float64), float(np.sqrt(np.linalg.inv(whole)[0, 0]))
 
 
 def dye_run(profile: DyeProfile, suspect: BoolArray) -> tuple[int, int]:
@@ -91,6 +116,8 @@ def dye_run(profile: DyeProfile, suspect: BoolArray) -> tuple[int, int]:
     .. [1] Bentley (1984). Commun. ACM 27, 865. doi:10.1145/358234.381162 (maximum sub-array)
     """
     evidence = np.clip(profile.clearness, -1.0, EVIDENCE_CAP) - EVIDENCE_COST
+    clear = profile.amount[profile.clearness > 3]
+    suspect = suspect | (profile.amount > BRIGHT * np.median(clear)) if len(clear) > 10 else suspect
     evidence = np.where(suspect, np.minimum(evidence, 0.0), evidence)
     best, total, start, out = 0.0, 0.0, 0, (0, 0)
     for i, value in enumerate(evidence):
@@ -105,32 +132,26 @@ def dye_run(profile: DyeProfile, suspect: BoolArray) -> tuple[int, int]:
 def dye_end(profile: DyeProfile, run: tuple[int, int], step_um: float, sigma_um: float) -> tuple[float, float]:
     """Place of the end of the dye, in stations (fractional), and its sd in um.
 
-    The amount of dye around the end of a blurred line is half the amount before it. The end is the last crossing of
-    0.45 of the median over 70-320 um before it, found by going to and fro until it stays.
+    Dye around the end of a blurred line falls to half of what it was just before. Coming from beyond, the end is the
+    first place with 0.45 of the median over the 40-130 um before it, provided that this median is dye: clear of the
+    noise, and not less than a share of the track's usual amount (a halo or a vessel's flank is; a faint tip is not).
+    The sd grows where noise could hide a faint tip, and where traces of dye went on beyond the end.
     """
-    amount, first, last = profile.amount, run[0], run[1]
-    near, far = (round(v / step_um) for v in REFERENCE_UM)
-    end = float(last)
-    reference = 1.0
-    for _ in range(8):
-        lo, hi = max(first, int(end) - far), max(first + 1, int(end) - near)
-        before = amount[lo : hi + 1]
-        seen = before[before > 2 * profile.noise]
-        reference = float(np.median(seen if len(seen) >= 3 else before))
-        level = LEVEL * max(reference, 1.5 * profile.noise)
-        above = np.flatnonzero(amount[first : last + 2] > level) + first
-        if not len(above):
-            break
-        k = int(above[-1])
-        after = amount[k + 1] if k + 1 < len(amount) else 0.0
-        new = k + float(np.clip((amount[k] - level) / max(amount[k] - after, 1e-9), 0, 1))
-        if abs(new - end) < 0.05:
-            end = new
-            break
-        end = new
-    slope_um = max(2.5 * sigma_um, step_um)  # over about this length the dye goes from all to none
-    jitter = slope_um * profile.noise / max(reference, profile.noise)
-    return end, float(np.hypot(np.hypot(20.0, 0.4 * sigma_um), jitter))
+    amount, first, last = _along(profile.narrow), run[0], run[1]
+    usual = float(np.median(amount[max(first, last - round(USUAL_UM / step_um)) : last + 1]))
+    least = max(LEAST_SHARE * usual, CLEAR_SD * profile.noise_narrow)
+    s = np.arange(len(amount)) * step_um
+    at = np.arange(s[min(last + 3, len(s) - 1)], s[first] + REFERENCE_UM[1], -FINE_UM)
+    window = np.arange(REFERENCE_UM[0], REFERENCE_UM[1] + 1, 10.0)
+    before = np.median(np.interp(at[:, None] - window, s, amount), axis=1)
+    here = np.interp(at, s, amount)
+    good = np.flatnonzero((before > least) & (here > LEVEL * before))
+    end, reference = (at[good[0]], before[good[0]]) if len(good) else (s[last], profile.noise_narrow)
+    noise = profile.noise_narrow
+    jitter = max(2.5 * sigma_um, step_um) * noise / max(float(reference), noise)  # the fall is about that long
+    hidden = HIDDEN_UM * min(HIDDEN_SHARE_SD * noise / max(usual, noise), 1.5) ** 2  # a faint tip that noise may hide
+    doubtful = 0.4 * max(s[last] - float(end) - 2 * sigma_um, 0.0)  # evidence of dye went on, the level did not
+    return float(end / step_um), float(np.linalg.norm([16.0, 0.3 * sigma_um, jitter, hidden, doubtful]))
 
 
 @dataclass(frozen=True, slots=True)

@@ -10,6 +10,7 @@ import numpy as np
 
 from leadline.base.arrays import BoolArray, FloatArray
 from leadline.base.progress import SILENT, Progress
+from leadline.model.frames import axes_matrix
 from leadline.model.settings import TraceSettings
 from leadline.model.track import Trace
 from leadline.model.volume import Volume
@@ -25,13 +26,18 @@ if TYPE_CHECKING:
 DETECT_UM = 27.0
 SEED = 20
 SKIN_UM = 120.0
-THRESHOLD = 0.55
-MAX_POINTS = 30_000
+MIN_GAIN = 0.15
+THRESHOLD = 0.28
+MAX_POINTS = 40_000
 MIN_SCORE = 6.0
 MAX_TRIES = 150
 EXTEND_UM = 500.0
 SAME_UM = 45.0
 LOOKS = 4
+HOPELESS = 0.75
+WIND_LENGTH_UM, WIND_UM = (1000.0, 1500.0, 2000.0, 3000.0, 4500.0), (3.0, 4.0, 5.5, 8.0, 10.0)
+DEEP_TOP_UM = 600.0
+BOTH_NEAR_UM = 250.0
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -159,7 +165,7 @@ def _best_first(lines: path.Lines, ridges: Ridges, alive: BoolArray) -> Iterator
 def examine(scene: Scene, rough_um: FloatArray, others: tuple[Candidate, ...] = ()) -> Candidate:
     """Refine a rough curve in sub-voxel centring, find its run of dye, and judge it."""
     curve, sigma = centre.even(rough_um), 30.0
-    pixel = max(12.0, scene.voxel_um / 2)
+    pixel = max(14.0, 0.6 * scene.voxel_um)
     n = len(curve)
     run = (0, n - 1)
     for look in range(LOOKS):
@@ -179,6 +185,8 @@ def examine(scene: Scene, rough_um: FloatArray, others: tuple[Candidate, ...] = 
         if good.sum() > 5:
             sigma = float(np.clip(np.median(centres.sigma_um[good]), 12.0, 80.0))
         curve, gap = centre.join(stations, centres, counts)
+        if look and (run[1] - run[0]) * centre.STATION_UM < HOPELESS * scene.settings.min_length_um:
+            break
     item = Candidate(curve, sigma, run, profile, _measures(scene, curve, run, profile, gap, centres, counts))
     return _judged(scene, item)
 
@@ -214,14 +222,15 @@ def _measures(
     turn /= np.linalg.norm(turn, axis=1)[:, None]
     chord = (curve[run[1]] - curve[run[0]]) / max(np.linalg.norm(curve[run[1]] - curve[run[0]]), 1e-9)
     sure = counts & (profile.amount > 3 * profile.noise)
-    gaps = gap[sure] if sure.any() else gap[counts]
+    sure = sure if sure.sum() > 5 else counts
+    wind = np.median(gap[sure] ** 2) - np.median(centres.error_um[sure] ** 2)
     return {
         "length": length,
         "top": float(min(depth[0], depth[-1])),
-        "gain": float(abs(depth[-1] - depth[0]) / max(length, 1.0)),
+        "gain": float((depth.max() - min(depth[0], depth[-1])) / max(length, 1.0)),
         "contrast": float(np.median(z)),
         "coverage": float((z > 2).mean()),
-        "residual": float(np.sqrt(np.median(gaps**2))),
+        "residual": float(np.sqrt(max(wind, 0.0))),
         "bend_deg": float(np.degrees(np.arccos(np.clip(np.quantile(turn @ chord, 0.05), -1, 1)))),
         "sigma": float(np.median(centres.sigma_um[counts])),
     }
@@ -230,12 +239,14 @@ def _measures(
 def _judged(scene: Scene, item: Candidate) -> Candidate:
     m = item.measures
     faint = 2.5 / scene.settings.sensitivity
+    # silicon is stiff, vessels are not; the shorter a candidate, the less a bend of the tissue may excuse it
+    winding = m["residual"] / float(np.interp(m["length"], WIND_LENGTH_UM, WIND_UM))
     checks = (
         (m["length"] < scene.settings.min_length_um, "shorter than a track"),
         (m["coverage"] < 0.5, "dye on less than half of it"),
-        (m["top"] > 600.0, "does not come near the brain surface"),
-        (m["residual"] > max(16.0, 0.4 * scene.voxel_um), "winds about its smooth curve"),
-        (m["gain"] < 0.2, "runs along the surface"),
+        (m["top"] > DEEP_TOP_UM, "does not come near the brain surface"),
+        (winding + 0.5 * m["top"] / DEEP_TOP_UM > 1.0, "winds about its smooth curve"),
+        (m["gain"] < MIN_GAIN, "runs along the surface"),
         (m["contrast"] < faint, "fainter than noise allows"),
         (m["bend_deg"] > 25.0, "bends more than a shank can"),
     )
@@ -267,13 +278,20 @@ def _second_look(scene: Scene, kept: list[Candidate]) -> list[Candidate]:
     return out
 
 
+def _upside_down(scene: Scene, first_um: FloatArray, last_um: FloatArray) -> bool:
+    """Whether the entry is at the last point: the one nearer to the surface, or the upper one where both are near."""
+    depth = scene.tissue.depth_at(np.stack([first_um, last_um]))
+    if depth.max() < BOTH_NEAR_UM:
+        return bool((axes_matrix(scene.dye.code) @ (last_um - first_um))[1] < 0)
+    return bool(depth[0] > depth[1])
+
+
 def _finish(scene: Scene, item: Candidate) -> Trace:
     """Cut a candidate to its ends and state their doubt."""
     curve, profile = item.curve_um, item.profile
     first, last = item.run
-    depth = scene.tissue.depth_at(curve)
-    if depth[first] > depth[last]:  # the entry comes first
-        curve, depth = curve[::-1], depth[::-1]
+    if _upside_down(scene, curve[first], curve[last]):
+        curve = curve[::-1]
         profile = profile.reversed()
         first, last = len(curve) - 1 - last, len(curve) - 1 - first
     step = centre.STATION_UM

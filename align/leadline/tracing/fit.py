@@ -115,7 +115,7 @@ def _joined(points: FloatArray) -> FloatArray:
     np.add.at(total, nearest, (points - chord) * (share / centre.FIT_SD_UM**2)[:, None])
     mean = total / np.maximum(weight, 1e-12)[:, None]
     straight = points[0] + (at / s[-1])[:, None] * (points[-1] - points[0])
-    return np.asarray(straight + centre.stiff(mean, weight, step, CUTOFF_UM), np.float64)
+    return np.asarray(straight + centre.stiff(mean, weight, step, CUTOFF_UM, order=2), np.float64)
 
 
 def _dye_along(line: FloatArray, dye: Volume) -> tuple[float, float, float]:

@@ -13,7 +13,7 @@ from leadline.model.volume import Volume
 if TYPE_CHECKING:
     from collections.abc import Iterator
 
-    from leadline.base.arrays import Float32Array, FloatArray
+    from leadline.base.arrays import AnyArray, Float32Array, FloatArray
 
 SLAB_VOXELS = 8_000_000
 READ_VOXELS = 4_000_000
@@ -105,6 +105,22 @@ def _runs(index: FloatArray, last: FloatArray) -> Iterator[slice]:
             stack += [slice(middle, rows.stop), slice(rows.start, middle)]
         elif len(part):
             yield rows
+
+
+def grown(values: AnyArray, places: tuple[FloatArray, FloatArray, FloatArray]) -> Float32Array:
+    """A coarse volume on the finer grid of three axes of fractional indices, linear between voxels, constant beyond.
+
+    ``values`` may carry further axes behind the first three. One axis after the other: the cost is that of writing.
+    """
+    out = np.asarray(values, np.float32)
+    for axis in (0, 1, 2):
+        at = np.clip(places[axis], 0, out.shape[axis] - 1)
+        low = np.minimum(at.astype(int), max(out.shape[axis] - 2, 0))
+        part = (at - low).astype(np.float32).reshape([-1 if k == axis else 1 for k in range(out.ndim)])
+        high = np.minimum(low + 1, out.shape[axis] - 1)
+        lower = out.take(low, axis=axis)
+        out = lower + part * (out.take(high, axis=axis) - lower)
+    return out
 
 
 def blocks(shape: tuple[int, ...], size: int, margin: tuple[int, ...]) -> Iterator[tuple[tuple[slice, ...], ...]]:

@@ -9,7 +9,7 @@ import numpy as np
 from leadline.base.arrays import AnyArray, Float32Array, FloatArray
 from leadline.base.errors import LeadlineError
 from leadline.model.volume import Volume
-from leadline.tracing.grid import reduced
+from leadline.tracing.grid import grown, reduced
 
 MASK_UM = 80.0
 OUTSIDE_SHARE = 0.002
@@ -23,11 +23,11 @@ class Tissue:
     level: float
 
     def depth_at(self, points_um: FloatArray) -> FloatArray:
-        """Depth ``(n,)`` below the surface, 0 outside the volume."""
+        """Depth ``(n,)`` below the surface; beyond the volume, that of its nearest voxel (a cut is no surface)."""
         from scipy.ndimage import map_coordinates
 
         index = self.depth_um.index(points_um).T
-        depth = map_coordinates(self.depth_um.array(), index, order=1, mode="constant", cval=0.0, output=np.float64)
+        depth = map_coordinates(self.depth_um.array(), index, order=1, mode="nearest", output=np.float64)
         return np.asarray(depth, np.float64)
 
 
@@ -91,17 +91,11 @@ def _edge(shape: tuple[int, ...]) -> AnyArray:
 
 def depth_on(tissue: Tissue, grid: Volume) -> Float32Array:
     """Depth below the surface at every voxel of another grid of the same stack."""
-    from scipy.ndimage import map_coordinates
-
     source = tissue.depth_um
-    axes = [
+    a, b, c = (
         (np.arange(n) * v + o - so) / sv
         for n, v, o, sv, so in zip(
             grid.shape, grid.voxel_um, grid.origin_um, source.voxel_um, source.origin_um, strict=True
         )
-    ]
-    out = np.empty(grid.shape, np.float32)
-    for i, a in enumerate(axes[0]):
-        plane = np.stack(np.broadcast_arrays(a, axes[1][:, None], axes[2][None, :]))
-        map_coordinates(source.array(), plane, order=1, mode="nearest", output=out[i])
-    return out
+    )
+    return grown(source.array(), (a, b, c))

@@ -140,7 +140,7 @@ def test_length_tells_tracks_apart_where_nothing_else_does():
 
 
 def test_shanks_and_places_must_agree_in_number():
-    with pytest.raises(LeadlineError, match="'A'.*one place for each shank"):
+    with pytest.raises(LeadlineError, match=r"'A'.*one place for each shank"):
         Wanted("A", (0.0, 250.0), shanks=(0,))
 
 
