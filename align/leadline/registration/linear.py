@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from leadline.model.transform import Affine
-from leadline.registration.matching import PAIRS, believable, compare, pulled, still
+from leadline.registration.matching import NEAR_UM, PAIRS, believable, compare, pulled, still
 
 if TYPE_CHECKING:
     from leadline.registration.matching import Target
@@ -21,16 +21,21 @@ MAX_STEP_VOXELS = 2.0
 def refine_affine(
     goal: Target, sample: Image, start: Affine, *, iterations: int, tolerance_um: float
 ) -> tuple[Affine, float]:
-    """Improve an affine from atlas um to sample um at one resolution; returns it and the mean local correlation."""
+    """Improve an affine from atlas um to sample um at one resolution; returns it and the score of the last step.
+
+    The score is the sum of the local correlations over the whole neighbourhood of the template, so that not believing
+    the sample is never rewarded.
+    """
     grid = goal.image.grid
     centre = grid.middle_um
     reach = (grid.points_um() - centre) / LENGTH_UM
     shift, affine, agreement = still(grid), start, 0.0
+    near = max(1, int((goal.outside_um <= NEAR_UM).sum()))
     for _ in range(iterations):
         weight = believable(goal, sample, affine, shift, tolerance_um=tolerance_um)
         moved = pulled(sample.intensity, sample.grid, grid, affine, shift)
         evidence = compare(goal.image.intensity, moved, weight, step_um=grid.step_um)
-        agreement = evidence.agreement
+        agreement = float((evidence.correlation * weight).sum()) / near
         used = evidence.weight.ravel() > 0
         if not used.any():
             break

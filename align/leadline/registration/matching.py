@@ -39,7 +39,7 @@ class Evidence:
 
     @property
     def agreement(self) -> float:
-        """Mean local correlation."""
+        """Mean local correlation where the images are believed."""
         return float((self.correlation * self.weight).sum() / max(float(self.weight.sum()), 1e-9))
 
 

@@ -77,6 +77,20 @@ class Prior:
             way = guided + (size / before) * way
         return found
 
+    def draw(self, stiffness: tuple[Float32Array, ...], rng: np.random.Generator) -> Float32Array:
+        """Draw a displacement error from the posterior N(0, (S + precision)^-1), by perturbing and solving [1]_.
+
+        .. [1] Papandreou & Yuille (2010). Gaussian sampling by local perturbations. NeurIPS 23, 1858.
+        """
+        shape = (3, *stiffness[0].shape)
+        noise = _in_modes(_interior(rng.standard_normal(shape).astype(np.float32)), np.sqrt(self.precision))
+        xx, xy, xz, yy, yz, zz = (np.asarray(s, np.float64) for s in stiffness)
+        tensor = np.stack([xx, xy, xz, xy, yy, yz, xz, yz, zz], axis=-1).reshape(-1, 3, 3)
+        tensor += np.eye(3) * (1e-9 + 1e-5 * np.trace(tensor, axis1=1, axis2=2))[:, None, None]
+        root = np.linalg.cholesky(tensor)
+        kick = np.einsum("nij,nj->ni", root, rng.standard_normal((len(root), 3))).T.reshape(shape)
+        return self.solve(stiffness, _interior(noise + kick.astype(np.float32)))
+
 
 def bending_prior(nodes: Grid, stiffness: float) -> Prior:
     """Bending energy, ``stiffness`` per node volume in mm^3, for displacements of the order of 100 um."""

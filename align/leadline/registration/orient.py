@@ -27,11 +27,12 @@ STARTS = 3
 ITERATIONS = 15
 TOLERANCE_UM = 600.0
 CLEARLY_BETTER = 0.05
+MOST_STRETCH = 1.5
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Start:
-    """``affine`` from atlas um to sample um under the orientation ``code``; ``agreement`` of the images there."""
+    """``affine`` from atlas um to sample um under the orientation ``code``; ``agreement`` : the score there."""
 
     code: str
     affine: Affine
@@ -111,5 +112,12 @@ def _best(goal: Target, sample: Image, stored: str, code: str, tilts: tuple[floa
         refine_affine(goal, sample, affine, iterations=ITERATIONS, tolerance_um=TOLERANCE_UM)
         for _, affine in ranked[:STARTS]
     ]
-    affine, agreement = max(refined, key=lambda pair: pair[1])
+    sane = [pair for pair in refined if _sane(pair[0], ranked[0][1])]
+    affine, agreement = max(sane, key=lambda pair: pair[1]) if sane else (ranked[0][1], 0.0)
     return Start(code, affine, agreement)
+
+
+def _sane(affine: Affine, start: Affine) -> bool:
+    """Whether every stretch stayed within a factor of the start's: a brain neither doubles nor halves."""
+    stretch = np.linalg.svd(affine.matrix @ np.linalg.inv(start.matrix), compute_uv=False)
+    return bool(stretch.max() < MOST_STRETCH and stretch.min() > 1 / MOST_STRETCH)

@@ -117,13 +117,13 @@ def find_tissue(raw: Float32Array) -> BoolArray:
     if high <= low:
         return np.zeros(raw.shape, bool)
     root = np.sqrt(np.clip((smooth - low) / (high - low), 0, 1))
-    bright = root > threshold_otsu(root[::2, ::2, ::2])
+    bright = np.asarray(root > threshold_otsu(root[::2, ::2, ::2]), bool)
     pieces, count = ndimage.label(bright)
     if count == 0:
         return bright
     sizes = np.bincount(pieces.ravel())
     sizes[0] = 0
-    return np.asarray(pieces == sizes.argmax())
+    return np.asarray(pieces == sizes.argmax(), bool)
 
 
 def _dye_stain(dye: Volume, background: Float32Array, tissue: BoolArray, step_um: float) -> BoolArray:

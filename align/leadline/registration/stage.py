@@ -21,11 +21,13 @@ if TYPE_CHECKING:
     from leadline.model.volume import Volume
     from leadline.registration.orient import Start
 
-FINE, WORK, COARSE, FIRST = 0, 1, 2, 3  # grids: half the working resolution, itself, twice, four times
-AFFINE_STEPS = ((COARSE, 12, 400.0), (WORK, 4, 300.0))
-FIELD_STEPS = ((COARSE, 4, 0.25), (WORK, 5, 0.4))
-MATCHED_STEPS = ((WORK, 6, 0.5),)
+FINE, WORK = 0, 1  # grids of half the working resolution, and of itself; each further one is twice as coarse
+SEARCH_UM, COARSE_UM = 400.0, 200.0
+AFFINE_STEPS, AFFINE_WORK_STEPS = 12, 4
+FIELD_COARSE_STEPS, FIELD_STEPS, MATCHED_STEPS = 4, 5, 6
+BELIEF_COARSE, BELIEF, BELIEF_MATCHED = 0.25, 0.4, 0.5
 SURE = 0.7
+SEED = 1
 
 
 def register(
@@ -50,24 +52,47 @@ def register(
     Raises LeadlineError when a volume shows no tissue or holds values that are not finite.
     """
     del threads
-    progress.begin("register", 24)
-    step = settings.resolution_um / 2
-    sample = prepare_sample(background, dye, step_um=step, levels=4)
-    atlas = prepare_atlas(template, labels, step_um=step, levels=4)
-    progress.step(2)
-    start, rival, codes = orient.search(
-        target(atlas[FIRST]), sample.images[FIRST], background.code, other_codes=settings.search_orientation
-    )
-    affine = start.affine
-    for level, iterations, tolerance_um in AFFINE_STEPS:
-        affine, _ = refine_affine(
-            target(atlas[level]), sample.images[level], affine, iterations=iterations, tolerance_um=tolerance_um
-        )
+    fine_um = settings.resolution_um / 2
+    coarse, first = (max(WORK, round(np.log2(um / fine_um))) for um in (COARSE_UM, SEARCH_UM))
+    progress.begin("register", 6 + _field_steps(coarse) if settings.deformable else 6)
+    sample = prepare_sample(background, dye, step_um=fine_um, levels=first + 1)
+    atlas = prepare_atlas(template, labels, step_um=fine_um, levels=first + 1)
     progress.step(3)
-    field = deformable.undeformed(atlas[COARSE], 2 * settings.resolution_um)
+    start, rival, codes = orient.search(
+        target(atlas[first]), sample.images[first], background.code, other_codes=settings.search_orientation
+    )
+    affine = _refined(atlas, sample.images, start.affine, coarse)
+    progress.step(3)
+    field = deformable.undeformed(atlas[coarse], 2 * settings.resolution_um)
     if settings.deformable:
-        field = _deform(atlas, sample.images, labels, affine, field, progress)
-    return _registration(atlas, sample, affine, field, start, rival, codes)
+        fitted = _deform(atlas, sample.images, labels, affine, field, coarse, progress)
+        field, error_um = fitted.deformation, fitted.error_um(SEED)
+    else:
+        # what the affine leaves is what a deformation would find, and what that would not
+        fitted = deformable.fit(
+            atlas[coarse],
+            sample.images[coarse],
+            affine,
+            field,
+            belief=BELIEF,
+            iterations=AFFINE_STEPS // 2,
+            progress=SILENT,
+        )
+        error_um = float(np.hypot(fitted.error_um(SEED), fitted.size_um))
+    return _registration(atlas, sample, affine, field, error_um, start, rival, codes)
+
+
+def _refined(atlas: tuple[Image, ...], sample: tuple[Image, ...], affine: Affine, coarse: int) -> Affine:
+    steps = [(coarse, AFFINE_STEPS, 400.0)] + ([(WORK, AFFINE_WORK_STEPS, 300.0)] if coarse > WORK else [])
+    for level, iterations, tolerance_um in steps:
+        affine, _ = refine_affine(
+            target(atlas[level]), sample[level], affine, iterations=iterations, tolerance_um=tolerance_um
+        )
+    return affine
+
+
+def _field_steps(coarse: int) -> int:
+    return FIELD_STEPS + MATCHED_STEPS + (FIELD_COARSE_STEPS if coarse > WORK else 0)
 
 
 def _deform(
@@ -76,18 +101,18 @@ def _deform(
     labels: Volume,
     affine: Affine,
     field: deformable.Deformation,
+    coarse: int,
     progress: Progress,
-) -> deformable.Deformation:
-    for level, iterations, belief in FIELD_STEPS:
-        field, _ = deformable.fit(
-            atlas[level], sample[level], affine, field, belief=belief, iterations=iterations, progress=progress
+) -> deformable.Fit:
+    def fit(images: tuple[Image, ...], level: int, iterations: int, belief: float) -> deformable.Fit:
+        return deformable.fit(
+            images[level], sample[level], affine, field, belief=belief, iterations=iterations, progress=progress
         )
-    matched = _matched(atlas, sample, labels, affine, field)
-    for level, iterations, belief in MATCHED_STEPS:
-        field, _ = deformable.fit(
-            matched[level], sample[level], affine, field, belief=belief, iterations=iterations, progress=progress
-        )
-    return field
+
+    if coarse > WORK:
+        field = fit(atlas, coarse, FIELD_COARSE_STEPS, BELIEF_COARSE).deformation
+    field = fit(atlas, WORK, FIELD_STEPS, BELIEF).deformation
+    return fit(_matched(atlas, sample, labels, affine, field), WORK, MATCHED_STEPS, BELIEF_MATCHED)
 
 
 def _matched(
@@ -116,6 +141,7 @@ def _registration(
     sample: Sample,
     affine: Affine,
     field: deformable.Deformation,
+    error_um: float,
     start: Start,
     rival: Start | None,
     codes: int,
@@ -131,7 +157,6 @@ def _registration(
     last = sample.to_stack.after(affine)
     atlas_to_stack = PointTransform(field=forth, last=last)
     stack_to_atlas = PointTransform(first=last.inverse(), field=Field(np.moveaxis(back, 0, -1), step, forth.origin_um))
-    error_um = 30.0
     numbers: dict[str, float | str | list[float]] = {
         "local_correlation_affine": before[0],
         "local_correlation": after[0],
