@@ -77,10 +77,10 @@ points = "a_points.csv"
 
 [[anchor]]
 penetration = "A"
-tip_distance_um = 870.0
-track_depth_um = 910.0
+tip_distance_um = 1060.0
+track_depth_um = 640.0
 sd_um = 40.0
-note = "white matter, upper edge"
+note = "layer 5 to layer 6"
 """
 
 
@@ -160,8 +160,8 @@ def entry_um() -> np.ndarray:
 
 
 def tip_um() -> np.ndarray:
-    """Atlas point of the tip: 1.8 mm deeper, in the dentate gyrus."""
-    return np.array([4000.0, 2320.0, 3700.0])
+    """Atlas point of the tip: 1.7 mm deeper, in the dentate gyrus."""
+    return np.array([4000.0, 2245.0, 3700.0])
 
 
 def label_at(at: np.ndarray) -> np.ndarray:
@@ -182,7 +182,7 @@ def label_at(at: np.ndarray) -> np.ndarray:
     for structure, where in (
         (60, blob(650, 2100, 400, 600, 550, 380)),
         (70, blob(5450, 1800, 0, 750, 1000, 1400)),
-        (51, blob(3700, 2500, 700, 600, 450, 450)),
+        (51, blob(3500, 2600, 450, 500, 400, 400)),
         (40, blob(2900, 1700, 600, 1000, 250, 300)),
         (22, np.hypot(at[..., 0] - 2100, at[..., 1] - 2700) / 170 + (side > 1500)),
     ):
