@@ -14,6 +14,7 @@ import numpy as np
 
 from leadline.base.atomic import whole_file
 from leadline.base.errors import LeadlineError
+from leadline.io.nwb import opened
 from leadline.io.nwb_electrodes import need_pynwb, read_electrodes
 
 if TYPE_CHECKING:
@@ -57,10 +58,8 @@ def electrodes_of(path: Path) -> Electrodes:
     Raises LeadlineError when the file is no NWB file or cannot be edited safely.
     """
     require_safe(path)
-    from pynwb import NWBHDF5IO
-
-    with NWBHDF5IO(str(path), "r") as io:
-        return read_electrodes(io.read().electrodes)
+    with opened(path) as nwb:
+        return read_electrodes(nwb.electrodes)
 
 
 def require_safe(path: Path) -> None:
@@ -283,10 +282,8 @@ def _edit(path: Path, rows: IntArray, columns: Mapping[str, Column]) -> None:
 
 def _require_written(path: Path, rows: IntArray, columns: Mapping[str, Column]) -> None:
     """Read the file back through pynwb and compare."""
-    from pynwb import NWBHDF5IO
-
-    with NWBHDF5IO(str(path), "r") as io:
-        table = io.read().electrodes
+    with opened(path) as nwb:
+        table = nwb.electrodes
         for name, column in columns.items():
             found = _values(table[name].data)[rows]
             if not _same(found, column.values).all():

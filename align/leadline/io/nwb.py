@@ -102,7 +102,7 @@ def open_nwb(path: Path, probe: Probe, group: str) -> NwbTraces:
     Raises LeadlineError when the file has no such series or more than one, is unevenly sampled or too short, or its
     electrodes are not the probe's.
     """
-    with _opened(path) as nwb:
+    with opened(path) as nwb:
         series = _series(nwb, group, path)
         rows = np.asarray(series.electrodes.data[:], np.int64)
         electrodes = _electrodes(nwb, path)
@@ -150,8 +150,10 @@ def _rounded(values: FloatArray) -> FloatArray:
 
 
 @contextmanager
-def _opened(path: Path) -> Iterator[Any]:
+def opened(path: Path) -> Iterator[Any]:
+    """An NWB file as pynwb reads it, closed at the end; raises LeadlineError when it cannot be read."""
     need_pynwb(path)
+    from hdmf.build import ConstructError
     from pynwb import NWBHDF5IO
 
     if not path.is_file():
@@ -159,7 +161,7 @@ def _opened(path: Path) -> Iterator[Any]:
     try:
         io = NWBHDF5IO(str(path), "r")
         nwb = io.read()
-    except (OSError, TypeError, KeyError, ValueError) as error:
+    except (OSError, TypeError, KeyError, ValueError, ConstructError) as error:
         raise LeadlineError(f"cannot be read as NWB ({error})", where=str(path), mend="Check it with pynwb") from error
     try:
         yield nwb
@@ -228,7 +230,7 @@ def read_nwb_spikes(path: Path, probe: Probe, group: str) -> Spikes:
 
     Raises LeadlineError when the file has no units or does not say where they are.
     """
-    with _opened(path) as nwb:
+    with opened(path) as nwb:
         units, electrodes = nwb.units, _electrodes(nwb, path)
         if units is None or "spike_times" not in units.colnames:
             raise LeadlineError("has no table of units with spike times", where=str(path), mend="Correct 'spikes'")
@@ -309,7 +311,7 @@ def read_nwb_events(path: Path) -> Events:
 
     Raises LeadlineError when there is no such table.
     """
-    with _opened(path) as nwb:
+    with opened(path) as nwb:
         start = _start_s(nwb)
         tables = [t for name, t in (nwb.intervals or {}).items() if name not in NOT_EVENTS]
         tables += [nwb.trials] if nwb.trials is not None and nwb.trials not in tables else []
@@ -328,7 +330,7 @@ def _kinds(table: Any) -> list[str]:
 
 def read_nwb_excluded(path: Path) -> FloatArray:
     """``invalid_times`` of the session as intervals ``(k, 2)`` from the first sample of the LFP on."""
-    with _opened(path) as nwb:
+    with opened(path) as nwb:
         table, start = nwb.invalid_times, _start_s(nwb)
         if table is None:
             return np.zeros((0, 2))

@@ -180,6 +180,7 @@ def numbers_for_layers(handle):
         (numbers_for_layers, "column 'layer' holds float64, Leadline writes text there"),
         (lambda h: h[ELECTRODES.rsplit("/", 1)[0]].pop("electrodes"), "has no electrode table"),
         (lambda h: h.attrs.pop("nwb_version"), "is HDF5, but no NWB file"),
+        (lambda h: h[ELECTRODES].pop("group"), "cannot be read as NWB"),
     ],
 )
 def test_what_is_not_safe_is_refused_and_nothing_is_left(brain, source, tmp_path, spoil, words):
