@@ -17,7 +17,7 @@ if TYPE_CHECKING:
     from leadline.physiology.spectrum import FieldStatistics
 
 REACH_UM = 250.0  # neighbours that a channel is judged against
-FLAT_DB = -40.0  # below the shank's median: no tissue is that quiet
+FLAT_DB = -40.0  # below the shank's median, or re 1 uV^2: no tissue is that quiet
 QUIET_DB, MUTE_DB = -6.0, -25.0  # below the neighbours: with little, and even with much, in common with them
 LONE = 0.8  # likeness to the neighbours, as a share of the usual likeness around
 CLOSE_UM = 50.0
@@ -33,8 +33,8 @@ def bad_channels(statistics: FieldStatistics, probe: Probe) -> tuple[BoolArray, 
     """Which channels ``(C,)`` are dead and which are noisy.
 
     Each is judged against the contacts of its shank within 250 um, so that a whole quiet stretch (a ventricle, white
-    matter) is neither. Dead: 40 dB below the shank, 25 dB below the neighbours, or 6 dB below them and also below the
-    nearest four, sharing less of their signals than they share of each other's. Noisy: what it shares with no
+    matter) is neither. Dead: 40 dB below the shank or below 1 uV^2, 25 dB below the neighbours, or 6 dB below them and
+    also below the nearest four, sharing less of their signals than they share of each other's. Noisy: what it shares with no
     neighbour is 8 dB more than the neighbours' own noise and at least two fifths of its power (only where a neighbour
     stands within 50 um: on a coarser probe it may be the one contact in a thin cell layer); or it stands 20 dB above
     its neighbours from 100 Hz up.
@@ -47,7 +47,7 @@ def bad_channels(statistics: FieldStatistics, probe: Probe) -> tuple[BoolArray, 
     noisy = np.zeros(level.size, bool)
     for shank in probe.shanks:
         members = np.flatnonzero(probe.shank == shank)
-        flat = level[members] < np.nanmedian(level[members]) + FLAT_DB
+        flat = level[members] < max(float(np.median(level[members])), 0.0) + FLAT_DB
         dead[members[flat]] = True
         live = members[~flat]
         if live.size < 5:
@@ -81,7 +81,7 @@ def outside_rows(
     outside = np.zeros(len(rows), bool)
     for shank in np.unique(rows.shank):
         members = np.flatnonzero(rows.shank == shank)
-        if members.size < 3 * OUTSIDE_ROWS:
+        if members.size < 3 * OUTSIDE_ROWS or not np.isfinite(level_db[members]).any():
             continue
         strange = level_db[members] < np.nanmedian(level_db[members]) + OUTSIDE_DB
         if cross is not None:

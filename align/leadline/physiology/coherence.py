@@ -62,8 +62,7 @@ def theta_features(cross: AnyArray, rows: Rows, usable: BoolArray) -> tuple[Floa
     power = np.real(np.diagonal(cross))
     main = max(references.values(), key=lambda row: power[row])
     for shank, row in references.items():
-        together = np.abs(cross[row, main]) ** 2 / (power[row] * power[main])
-        if row != main and together > TOGETHER:
+        if row != main and np.abs(cross[row, main]) ** 2 > TOGETHER * power[row] * power[main]:
             phase[rows.shank == shank] += np.angle(cross[row, main])
     return np.angle(np.exp(1j * phase)), coherence
 

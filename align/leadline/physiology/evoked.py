@@ -70,6 +70,7 @@ def responses(
     cut to it, which bounds what an artefact can do.
     """
     usable = np.flatnonzero(usable_events(events, traces.n_samples, traces.sampling_hz, excluded_s, window_s))
+    usable = usable[np.unique(events.time_s[usable], return_index=True)[1]]
     if usable.size < MIN_EVENTS:
         return ()
     usable = usable[np.floor(np.linspace(0, usable.size - 1, min(usable.size, MAX_EVENTS))).astype(int)]
@@ -185,7 +186,8 @@ def _spread(noise: FloatArray) -> FloatArray:
     """Standard deviation ``(R,)`` of the noise ``(R, T)`` of each row; at least half of the median row's."""
     sd = np.sqrt(np.square(noise).mean(axis=1))
     known = sd[np.isfinite(sd)]
-    return np.asarray(np.maximum(sd, 0.5 * float(np.median(known)) if known.size else 1.0), float)
+    least = 0.5 * float(np.median(known)) if known.size else 0.0
+    return np.asarray(np.maximum(sd, max(least, 1e-9)), float)
 
 
 def _apply(matrix: FloatArray, values: FloatArray) -> FloatArray:

@@ -83,9 +83,7 @@ def _add_units(reading: Reading, recording: Recording, spikes: Spikes, settings:
         duration = recording.traces.n_samples / recording.traces.sampling_hz
         late = int((spikes.time_s > duration).sum())
         if late:
-            reading.warnings.append(
-                f"{late} spikes lie after the recording's end at {duration:.0f} s and were left out"
-            )
+            reading.warnings.append(f"spikes after the recording's end at {duration:.0f} s were left out: {late}")
     if recording.events is not None:
         usable = usable_events(
             recording.events, 1000 * int(duration), 1000.0, recording.excluded_s, settings.event_window_s
@@ -142,6 +140,8 @@ def _add_fields(
 
 
 def _note_bad(reading: Reading, probe: Probe, dead: BoolArray, noisy: BoolArray) -> None:
+    if dead.all():
+        reading.warnings.append("no channel holds a signal; are 'dtype' and 'uv_per_bit' right?")
     for word, which in (("dead", dead), ("noisy", noisy)):
         if which.any():
             names = ", ".join(str(c) for c in np.sort(probe.channel[which])[:12])
@@ -173,7 +173,9 @@ def _add_powers(reading: Reading, statistics: FieldStatistics, good: BoolArray, 
         if np.isnan(power).all():
             missing.append(name.replace("_", " "))
     if missing:
-        reading.warnings.append(f"the sampling rate holds no {', '.join(missing)} band")
+        reading.warnings.append(
+            f"no {', '.join(missing)} band: the sampling rate or the length of undisturbed stretches does not reach it"
+        )
     reading.power_uv2_per_hz = rows.mean(even_octaves(statistics), good)
 
 

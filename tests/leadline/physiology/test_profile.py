@@ -210,3 +210,22 @@ def test_the_same_recording_gives_the_same_profile(made, found):
     again, _ = profile_of("A", made.probe, [made.recording], settings=SETTINGS)
     for name, values in found[0].features.items():
         assert np.array_equal(values, again.features[name], equal_nan=True)
+
+
+def test_an_open_circuit_is_dead_from_end_to_end():
+    made = column(seed=8, seconds=4)
+    silent = replace(made.recording, traces=InMemory(np.full_like(made.recording.traces.samples, 7.0), 2500.0))
+    profile, _ = profile_of("A", made.probe, [silent], settings=SETTINGS)
+    assert set(profile.flags) == {"dead"}
+    assert any("no channel holds a signal" in text for text in profile.warnings)
+    assert np.isnan(profile.features["theta_power_db"]).all()
+    assert np.isfinite(profile.features["spike_rate_hz"]).all()
+
+
+@pytest.mark.parametrize("contacts", [1, 2, 3, 5])
+def test_a_few_contacts_are_enough(contacts):
+    rng = np.random.default_rng(9)
+    traces = InMemory(rng.normal(0, 50, (4000, contacts)), 1000.0)
+    events = Events(np.linspace(0.5, 3.5, 20), ("e",) * 20)
+    profile, _ = profile_of("A", line_probe(contacts), [Recording(traces, None, events)], settings=SETTINGS)
+    assert np.isfinite(profile.features["gamma_power_db"]).all()
