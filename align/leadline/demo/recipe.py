@@ -60,9 +60,9 @@ class Recipe:
     crosstalk: float = 0.03
     bend_um: float = 80.0
     dye_end_sd_um: float = 40.0
-    law_sd_um: float = 90.0
-    scale_sd: float = 0.06
-    slope_sd: float = 0.08
+    law_sd_um: float = 100.0
+    scale_sd: float = 0.055
+    slope_sd: float = 0.065
     border_sd_um: float = 0.0
     seconds: float = 64.0
     rough: float = 0.0
@@ -113,8 +113,8 @@ def rough(recipe: Recipe) -> Recipe:
         border_sd_um=35.0,
         silent="C",
         stripes=2.0,
-        law_sd_um=110.0,
-        slope_sd=0.1,
+        law_sd_um=120.0,
+        slope_sd=0.08,
         dye_end_sd_um=60.0,
     )
 

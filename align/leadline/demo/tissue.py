@@ -62,7 +62,10 @@ def own_codes(shank: Shank, depth_um: FloatArray, shift: Callable[[FloatArray], 
 def make_tissue(recipe: Recipe, shank: Shank) -> Tissue:
     """Features along a shank: means of its structures, gradients and noise of this place, injuries."""
     depth = np.arange(-1500.0, shank.tip_depth_um + 1500.0, STEP_UM)
-    codes = own_codes(shank, depth, border_shift(recipe))
+    astray = np.random.default_rng([recipe.seed, 85, ord(shank.penetration[0])])
+    # In a rough brain what is heard changes some way off the border that a histologist would draw.
+    heard_at = depth + 25.0 * recipe.rough * _wiggles(astray, len(depth), 1, 200.0)[:, 0]
+    codes = own_codes(shank, np.where(depth > 0, np.clip(heard_at, 0, None), depth), border_shift(recipe))
     # Shanks of one probe share the animal and the place, not the wiggles along each.
     rng = np.random.default_rng([recipe.seed, 81, ord(shank.penetration[0])])
     features = structure_means(recipe)[codes]
