@@ -93,7 +93,7 @@ def _open_binary(path: Path, source: RecordingSource) -> BinaryTraces:
             raise LeadlineError(
                 f"'{key}' is missing; a flat file does not carry it", where=where, mend=f"Add {meaning}"
             )
-    assert_known_dtype(str(source.dtype), where)
+    _check_dtype(str(source.dtype), where)
     sampling_hz, n_channels = float(source.sampling_hz or 0), int(source.n_channels or 0)
     uv_per_bit = source.uv_per_bit
     if uv_per_bit is None:
@@ -112,7 +112,7 @@ def _open_binary(path: Path, source: RecordingSource) -> BinaryTraces:
     return traces
 
 
-def assert_known_dtype(word: str, where: str) -> None:
+def _check_dtype(word: str, where: str) -> None:
     """Raises LeadlineError, which names the nearest known word, unless ``word`` is a sample type that can be read."""
     if word not in DTYPES:
         raise LeadlineError(

@@ -34,10 +34,10 @@ def bad_channels(statistics: FieldStatistics, probe: Probe) -> tuple[BoolArray, 
 
     Each is judged against the contacts of its shank within 250 um, so that a whole quiet stretch (a ventricle, white
     matter) is neither. Dead: 40 dB below the shank or below 1 uV^2, 25 dB below the neighbours, or 6 dB below them and
-    also below the nearest four, sharing less of their signals than they share of each other's. Noisy: what it shares with no
-    neighbour is 8 dB more than the neighbours' own noise and at least two fifths of its power (only where a neighbour
-    stands within 50 um: on a coarser probe it may be the one contact in a thin cell layer); or it stands 20 dB above
-    its neighbours from 100 Hz up.
+    also below the nearest four, sharing less of their signals than they share of each other's. Noisy: what it shares
+    with no neighbour is 8 dB more than the neighbours' own noise and at least two fifths of its power (only where a
+    neighbour stands within 50 um: on a coarser probe it may be the one contact in a thin cell layer); or it stands
+    20 dB above its neighbours from 100 Hz up.
     """
     top = USABLE * 2 * float(statistics.frequency_hz[-1])
     level = band_power_db(statistics, (1.0, min(300.0, top)))
