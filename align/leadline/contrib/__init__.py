@@ -1,0 +1,1 @@
+"""Scripts for other environments: nothing here is imported by Leadline, and nothing here imports it."""
