@@ -63,41 +63,47 @@ def foretell(dye: Volume, background: Volume, inside: np.ndarray) -> Foretold:
     size = np.maximum(1, np.round(TILE_UM / y.voxel_um)).astype(int)
     labels = [np.arange(n) // s for n, s in zip(shape, size, strict=True)]
     frame = (size * y.voxel_um, y.origin_um + (size - 1) / 2 * y.voxel_um)
-    fit = Foretold(_solve(_sums(y.array(), x.array(), keep, labels), first=True), *frame)
+    fit = Foretold(_solve(_sums(y.array(), x.array(), None, keep, labels)), *frame)
+    left = np.empty(y.shape, np.float32)
     for _ in range(ROUNDS - 1):
         near = np.empty_like(keep)
         for start in range(0, int(shape[0]), SLAB):
             rows = slice(start, start + SLAB)
             offset, slope, sd = fit.planes(y, rows)
-            z = (y.array()[rows] - offset - slope * x.array()[rows]) / sd
-            near[rows] = keep[rows] & (z < INLIER_HIGH) & (z > INLIER_LOW)
-        fit = Foretold(_solve(_sums(y.array(), x.array(), near, labels), first=False), *frame)
+            left[rows] = y.array()[rows] - offset - slope * x.array()[rows]
+            near[rows] = keep[rows] & (left[rows] < INLIER_HIGH * sd) & (left[rows] > INLIER_LOW * sd)
+        fit = Foretold(_solve(_sums(y.array(), x.array(), left, near, labels)), *frame)
     return fit
 
 
-def _sums(y: AnyArray, x: AnyArray, keep: AnyArray, labels: list[AnyArray]) -> FloatArray:
-    """Counts and moments ``(t0, t1, t2, 6)`` of the kept voxels of every tile."""
+def _sums(y: AnyArray, x: AnyArray, left: AnyArray | None, keep: AnyArray, labels: list[AnyArray]) -> FloatArray:
+    """Counts, moments and squares of what an earlier fit left ``(t0, t1, t2, 7)`` of the kept voxels of every tile."""
     shape = tuple(int(at[-1]) + 1 for at in labels)
     i, j, k = np.nonzero(keep)
     flat = np.ravel_multi_index((labels[0][i], labels[1][j], labels[2][k]), shape)
     yy, xx = y[i, j, k].astype(np.float64), x[i, j, k].astype(np.float64)
-    moments = (None, xx, yy, xx * xx, xx * yy, yy * yy)
+    rest = np.zeros_like(yy) if left is None else left[i, j, k].astype(np.float64) ** 2
+    moments = (None, xx, yy, xx * xx, xx * yy, yy * yy, rest)
     return np.stack([np.bincount(flat, v, minlength=int(np.prod(shape))).reshape(shape) for v in moments], axis=-1)
 
 
-def _solve(sums: FloatArray, *, first: bool) -> Float32Array:
-    """Offset, slope and sd of every tile from its smoothed moments."""
+def _solve(sums: FloatArray) -> Float32Array:
+    """Offset, slope and sd of every tile from its smoothed sums.
+
+    The sd is that of what an earlier fit left, where there was one: the sums of a tile and its neighbours also hold
+    how the line itself changes from place to place, which is no noise.
+    """
     from scipy.ndimage import gaussian_filter
 
     whole = sums.sum(axis=(0, 1, 2))
-    _, slope_all, _ = _line(whole, 0.0, 0.0)
-    smooth = np.stack([gaussian_filter(sums[..., m], 0.8, mode="constant") for m in range(6)], axis=-1)
+    _, slope_all, _ = _line(whole[:6], 0.0, 0.0)
+    smooth = np.stack([gaussian_filter(sums[..., m], 0.8, mode="constant") for m in range(7)], axis=-1)
     # every tile sees a little of the whole brain, so that empty tiles have a value too
     smooth = smooth + whole * (1.0 / max(whole[0], 1.0))
     ridge = 0.25 * max(whole[3] / max(whole[0], 1.0) - (whole[1] / max(whole[0], 1.0)) ** 2, 0.0)
-    offset, slope, sd = _line(np.moveaxis(smooth, -1, 0), float(slope_all), ridge)
-    if not first:
-        sd = sd * 1.06  # cutting the tails made the spread smaller: sd of a normal cut at -3.5 and +2.5 is 0.95
+    offset, slope, sd = _line(np.moveaxis(smooth[..., :6], -1, 0), float(slope_all), ridge)
+    if whole[6] > 0:  # cutting the tails made the spread smaller: the sd of a normal cut at -3.5 and +2.5 is 0.95
+        sd = np.sqrt(smooth[..., 6] / np.maximum(smooth[..., 0], 1e-9)) * 1.06
     floor = max(float(np.median(sd)) * 0.2, 1e-6)
     return np.stack([offset, slope, np.maximum(sd, floor)], axis=-1).astype(np.float32)
 

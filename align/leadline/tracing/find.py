@@ -37,6 +37,7 @@ LOOKS = 4
 HOPELESS = 0.75
 WIND_LENGTH_UM, WIND_UM = (1000.0, 1500.0, 2000.0, 3000.0, 4500.0), (3.0, 4.0, 5.5, 8.0, 10.0)
 DEEP_TOP_UM = 600.0
+MAX_BEND_DEG, SOFT_BEND_DEG = 14.0, 30.0
 BOTH_NEAR_UM = 250.0
 
 
@@ -245,10 +246,10 @@ def _judged(scene: Scene, item: Candidate) -> Candidate:
         (m["length"] < scene.settings.min_length_um, "shorter than a track"),
         (m["coverage"] < 0.5, "dye on less than half of it"),
         (m["top"] > DEEP_TOP_UM, "does not come near the brain surface"),
-        (winding + 0.5 * m["top"] / DEEP_TOP_UM > 1.0, "winds about its smooth curve"),
+        (winding + 0.5 * m["top"] / DEEP_TOP_UM + m["bend_deg"] / SOFT_BEND_DEG > 1.0, "winds more than a shank can"),
         (m["gain"] < MIN_GAIN, "runs along the surface"),
         (m["contrast"] < faint, "fainter than noise allows"),
-        (m["bend_deg"] > 25.0, "bends more than a shank can"),
+        (m["bend_deg"] > MAX_BEND_DEG, "bends more than a shank can"),
     )
     fault = next((text for wrong, text in checks if wrong), "")
     return Candidate(item.curve_um, item.sigma_um, item.run, item.profile, m, fault)
