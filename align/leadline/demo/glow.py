@@ -91,6 +91,8 @@ def dye(recipe: Recipe, chart: TrueMap, grid: Grid, shank: Shank) -> Glow:
     rng = np.random.default_rng([recipe.seed, 50, ord(shank.penetration[0]), shank.number])
     depth = np.arange(-300.0, shank.dye_end_um + 300.0, FINE_UM)
     line = chart.inverse(shank.at(depth))
+    # Dye soaks into the tissue unevenly: its middle wanders some um about the shank.
+    line = line + 5.0 * np.column_stack([_wander(rng, depth, 180.0) for _ in range(3)])
     radius = rng.uniform(14.0, 24.0)
     level = DYE_COUNTS * rng.uniform(0.6, 1.4) * np.exp(0.25 * _wander(rng, depth, 600.0))
     level *= np.interp(depth, [0, 0.6 * shank.dye_end_um, shank.dye_end_um], [1.3, 1.0, 1 - 0.9 * recipe.faint])
