@@ -77,8 +77,8 @@ points = "a_points.csv"
 
 [[anchor]]
 penetration = "A"
-tip_distance_um = 1060.0
-track_depth_um = 640.0
+tip_distance_um = 1140.0
+track_depth_um = 600.0
 sd_um = 40.0
 note = "layer 5 to layer 6"
 """
@@ -155,13 +155,13 @@ def _stored(pir: np.ndarray) -> np.ndarray:
 
 
 def entry_um() -> np.ndarray:
-    """Atlas point where the probe goes in, at the surface."""
-    return np.array([4000.0, 545.0, 3700.0])
+    """Atlas point near which the probe goes in, where the hand-traced points begin."""
+    return np.array([4000.0, 620.0, 3700.0])
 
 
 def tip_um() -> np.ndarray:
-    """Atlas point of the tip: 1.7 mm deeper, in the dentate gyrus."""
-    return np.array([4000.0, 2245.0, 3700.0])
+    """Atlas point of the tip: 1.7 mm deeper, in the hippocampus."""
+    return np.array([4000.0, 2320.0, 3700.0])
 
 
 def label_at(at: np.ndarray) -> np.ndarray:
