@@ -17,6 +17,8 @@ from leadline.model.probe import NOT_RECORDED, Probe
 from leadline.pipeline import products
 from leadline.pipeline.bench import Bench
 from leadline.pipeline.finished import located
+from leadline.pipeline.laminar import COLUMNS as LAMINAR_COLUMNS
+from leadline.pipeline.laminar import with_cortical_depth
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -76,7 +78,8 @@ def posterior_at(posterior: DepthPosterior, tip_distance_um: FloatArray) -> Dept
 def unit_table(brain: Brain, bench: Bench | None = None) -> pd.DataFrame:
     """A row for every unit of every recording, in the order of ``brain.toml``; the brain must be located.
 
-    Columns are :data:`UNIT_COLUMNS`, then the bregma-based ones where the atlas has them, then the user's own.
+    Columns are :data:`UNIT_COLUMNS`, then the bregma-based ones where the atlas has them, ``cortical_depth`` and
+    ``layer_source`` where it has cortex, then the user's own.
     A column of the user's that bears one of these names comes out as ``NAME_user``.
 
     Raises LeadlineError when no recording has spikes, or a unit table is wrong.
@@ -98,7 +101,8 @@ def unit_table(brain: Brain, bench: Bench | None = None) -> pd.DataFrame:
     table = pd.concat(parts, ignore_index=True)
     stereo = [name for name in STEREO_COLUMNS if name in table.columns]
     own = [name for name in table.columns if name not in UNIT_COLUMNS and name not in stereo]
-    return table[[*UNIT_COLUMNS, *stereo, *own]]
+    placed = with_cortical_depth(table[[*UNIT_COLUMNS, *stereo]], shelf.bench)
+    return pd.concat([placed, table[own]], axis=1)
 
 
 class _Shelf:
@@ -193,7 +197,7 @@ def _carried(rows: pd.DataFrame, penetration: Penetration) -> pd.DataFrame:
     from leadline.io.units import KEYS, read_unit_table
 
     own = read_unit_table(penetration.unit_table)
-    taken = {*UNIT_COLUMNS, *STEREO_COLUMNS} - set(KEYS)
+    taken = {*UNIT_COLUMNS, *STEREO_COLUMNS, *LAMINAR_COLUMNS} - set(KEYS)
     own = own.rename(columns={name: f"{name}_user" for name in own.columns if name in taken})
     keys = [key for key in KEYS if key in own.columns]
     if not set(own["unit_id"]) & set(rows["unit_id"]):

@@ -56,6 +56,14 @@ def test_columns_are_ours_then_the_users(table):
     assert table.set_index("unit_id").loc["u11", ["cell_type", "latency_ms"]].isna().all()
 
 
+def test_units_in_cortex_have_a_cortical_depth_that_grows_with_their_depth(table):
+    cortical = table[table["coarse_region"] == "CTX"].sort_values("track_depth_um")
+    assert (cortical["cortical_depth"].diff().dropna() > 0).all()
+    assert cortical["cortical_depth"].between(0, 1).all()
+    assert set(cortical["layer_source"]) == {"atlas"}
+    assert table.loc[table["coarse_region"] != "CTX", "cortical_depth"].isna().all()
+
+
 def test_every_unit_has_one_row_and_all_its_spikes(brain, table):
     spikes = pd.read_csv(brain.folder / "a_spikes.csv")
     assert table["n_spikes"].sum() == len(spikes)
