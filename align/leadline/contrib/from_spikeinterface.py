@@ -85,10 +85,9 @@ def _write_traces(recording: Any, path: Path, lfp_hz: float) -> float:
     """Write float32 microvolts, time-major, chunk by chunk; returns their rate."""
     sampling_hz = float(recording.get_sampling_frequency())
     if sampling_hz >= 1.5 * lfp_hz:
-        from spikeinterface.preprocessing import bandpass_filter, resample
+        from spikeinterface.preprocessing import resample
 
-        recording = bandpass_filter(recording, freq_min=0.5, freq_max=0.4 * lfp_hz, dtype="float32")
-        recording = resample(recording, round(lfp_hz))
+        recording = resample(recording, round(lfp_hz))  # filters against aliasing by itself
         sampling_hz = float(recording.get_sampling_frequency())
     step = max(1, round(CHUNK_S * sampling_hz))
     with path.open("wb") as handle:
