@@ -35,9 +35,10 @@ EXTEND_UM = 500.0
 SAME_UM = 45.0
 LOOKS = 4
 HOPELESS = 0.75
-WIND_LENGTH_UM, WIND_UM = (1000.0, 1500.0, 2000.0, 3000.0, 4500.0), (3.0, 4.0, 5.5, 8.0, 10.0)
+LENGTHS_UM = (1000.0, 1500.0, 2000.0, 3000.0, 4500.0)
+WANDER_UM = (2.5, 5.0, 6.2, 7.5, 9.0)
+BEND_DEG = (8.0, 10.0, 12.0, 14.0, 16.0)
 DEEP_TOP_UM = 600.0
-MAX_BEND_DEG, SOFT_BEND_DEG = 14.0, 30.0
 BOTH_NEAR_UM = 250.0
 
 
@@ -185,10 +186,11 @@ def examine(scene: Scene, rough_um: FloatArray, others: tuple[Candidate, ...] = 
         good = counts & (centres.error_um < 20)
         if good.sum() > 5:
             sigma = float(np.clip(np.median(centres.sigma_um[good]), 12.0, 80.0))
-        curve, gap = centre.join(stations, centres, counts)
+        curve, _ = centre.join(stations, centres, counts)
         if look and (run[1] - run[0]) * centre.STATION_UM < HOPELESS * scene.settings.min_length_um:
             break
-    item = Candidate(curve, sigma, run, profile, _measures(scene, curve, run, profile, gap, centres, counts))
+    measures = _measures(scene, curve, run, profile) | {"wander": centre.wander(stations, centres, counts)}
+    item = Candidate(curve, sigma, run, profile, measures)
     return _judged(scene, item)
 
 
@@ -206,34 +208,23 @@ def _excess_without(scene: Scene, others: tuple[Candidate, ...], points_um: Floa
     return value
 
 
-def _measures(
-    scene: Scene,
-    curve: FloatArray,
-    run: tuple[int, int],
-    profile: ends.DyeProfile,
-    gap: FloatArray,
-    centres: centre.Centres,
-    counts: BoolArray,
-) -> dict[str, float]:
+def _measures(scene: Scene, curve: FloatArray, run: tuple[int, int], profile: ends.DyeProfile) -> dict[str, float]:
+    """What is judged: length and depths in um, dye, and the turning of the curve against its chord."""
     inside = slice(run[0], run[1] + 1)
     depth = scene.tissue.depth_at(curve[inside])
-    z = profile.clearness[inside]
+    clear = profile.clearness[inside]
     length = (run[1] - run[0]) * centre.STATION_UM
     turn = np.diff(curve[inside], axis=0)
     turn /= np.linalg.norm(turn, axis=1)[:, None]
     chord = (curve[run[1]] - curve[run[0]]) / max(np.linalg.norm(curve[run[1]] - curve[run[0]]), 1e-9)
-    sure = counts & (profile.amount > 3 * profile.noise)
-    sure = sure if sure.sum() > 5 else counts
-    wind = np.median(gap[sure] ** 2) - np.median(centres.error_um[sure] ** 2)
+    top = float(min(depth[0], depth[-1]))
     return {
         "length": length,
-        "top": float(min(depth[0], depth[-1])),
-        "gain": float((depth.max() - min(depth[0], depth[-1])) / max(length, 1.0)),
-        "contrast": float(np.median(z)),
-        "coverage": float((z > 2).mean()),
-        "residual": float(np.sqrt(max(wind, 0.0))),
+        "top": top,
+        "gain": float((depth.max() - top) / max(length, 1.0)),
+        "contrast": float(np.median(clear)),
+        "coverage": float((clear > 2).mean()),
         "bend_deg": float(np.degrees(np.arccos(np.clip(np.quantile(turn @ chord, 0.05), -1, 1)))),
-        "sigma": float(np.median(centres.sigma_um[counts])),
     }
 
 
@@ -241,15 +232,15 @@ def _judged(scene: Scene, item: Candidate) -> Candidate:
     m = item.measures
     faint = 2.5 / scene.settings.sensitivity
     # silicon is stiff, vessels are not; the shorter a candidate, the less a bend of the tissue may excuse it
-    winding = m["residual"] / float(np.interp(m["length"], WIND_LENGTH_UM, WIND_UM))
+    winding = m["wander"] / float(np.interp(m["length"], LENGTHS_UM, WANDER_UM))
     checks = (
         (m["length"] < scene.settings.min_length_um, "shorter than a track"),
         (m["coverage"] < 0.5, "dye on less than half of it"),
         (m["top"] > DEEP_TOP_UM, "does not come near the brain surface"),
-        (winding + 0.5 * m["top"] / DEEP_TOP_UM + m["bend_deg"] / SOFT_BEND_DEG > 1.0, "winds more than a shank can"),
+        (winding + 0.5 * m["top"] / DEEP_TOP_UM > 1.0, "winds more than a shank can"),
         (m["gain"] < MIN_GAIN, "runs along the surface"),
         (m["contrast"] < faint, "fainter than noise allows"),
-        (m["bend_deg"] > MAX_BEND_DEG, "bends more than a shank can"),
+        (m["bend_deg"] > np.interp(m["length"], LENGTHS_UM, BEND_DEG), "bends more than a shank can"),
     )
     fault = next((text for wrong, text in checks if wrong), "")
     return Candidate(item.curve_um, item.sigma_um, item.run, item.profile, m, fault)
