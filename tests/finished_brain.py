@@ -30,6 +30,13 @@ from leadline.pipeline.stages import plan
 
 TIP_DISTANCE_UM = 100.0 + 50.0 * np.arange(N_CONTACTS)
 DEPTH_SD_UM = 40.0
+ANCHOR = """\
+[[anchor]]
+penetration = "A"
+tip_distance_um = 870.0
+track_depth_um = 830.0
+note = "white matter, upper edge"
+"""
 ERROR_UM = 30.0
 UNIT_TABLE = "unit_id,cell_type,latency_ms,orientation_deg,region\n" + "".join(
     f"u{k},{('wide', 'narrow')[k % 2]},{20 + 3 * k},{(37 * k) % 180},mine\n" for k in range(11)
@@ -41,9 +48,7 @@ def write_finished_brain(folder: Path, *, name: str = "tiny-01", shift_um: float
     file = write_good_brain(folder)
     (folder / "a_units.csv").write_text(UNIT_TABLE)
     text = file.read_text().replace('"tiny-01"', f'"{name}"')
-    text = text.replace(
-        "tip_distance_um = 1000.0\ntrack_depth_um = 1200.0", "tip_distance_um = 870.0\ntrack_depth_um = 830.0"
-    )
+    text = text[: text.index("[[anchor]]")] + ANCHOR
     file.write_text(text.replace('name = "A"', 'name = "A"\nunit_table = "a_units.csv"'))
     brain = read_brain(file)
     files = products.RegistrationFiles(brain)
