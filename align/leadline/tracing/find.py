@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import partial
 from typing import TYPE_CHECKING
 
@@ -36,9 +36,11 @@ SAME_UM = 45.0
 LOOKS = 4
 HOPELESS = 0.75
 LENGTHS_UM = (1000.0, 1500.0, 2000.0, 3000.0, 4500.0)
-WANDER_UM = (2.5, 5.0, 6.2, 7.5, 9.0)
-BEND_DEG = (8.0, 10.0, 12.0, 14.0, 16.0)
+WANDER_UM = (2.0, 4.5, 6.2, 7.5, 9.0)
+BEND_DEG = (5.0, 8.0, 12.0, 14.0, 16.0)
 DEEP_TOP_UM = 600.0
+WINDS = "winds more than a shank can"
+BESIDE_UM, BESIDE_SPREAD_UM = (80.0, 450.0), 80.0
 BOTH_NEAR_UM = 250.0
 
 
@@ -128,6 +130,7 @@ def _ridges(image: Volume, inside: BoolArray, sensitivity: float) -> Ridges:
 def _candidates(scene: Scene, ridges: Ridges) -> list[Candidate]:
     """Take the best line, look closely, keep or drop it, take its points away, and so on until lines are poor."""
     kept: list[Candidate] = []
+    doubtful: list[Candidate] = []
     if len(ridges) < 10:
         return kept
     alive = np.ones(len(ridges), bool)
@@ -137,11 +140,17 @@ def _candidates(scene: Scene, ridges: Ridges) -> list[Candidate]:
         item = examine(scene, rough)
         if not item.fault and not any(_same(item, other) for other in kept):
             kept.append(item)
+        elif item.fault == WINDS:
+            doubtful.append(item)
         spent = path.near_curve(ridges.points_um, ridges.axes, item.curve_um, max(50.0, scene.voxel_um * 1.5), 0.95)
         spent |= path.near_curve(ridges.points_um, ridges.axes, rough, 60.0, 0.95) if item.fault else False
         alive &= ~spent
         if not spent.any():
             break
+    # a winding curve that runs beside a track, like the next shank of its probe, is one
+    for item in doubtful:
+        if any(_beside(item, other) for other in kept) and not any(_same(item, other) for other in kept):
+            kept.append(replace(item, fault=""))
     return kept
 
 
@@ -237,13 +246,23 @@ def _judged(scene: Scene, item: Candidate) -> Candidate:
         (m["length"] < scene.settings.min_length_um, "shorter than a track"),
         (m["coverage"] < 0.5, "dye on less than half of it"),
         (m["top"] > DEEP_TOP_UM, "does not come near the brain surface"),
-        (winding + 0.5 * m["top"] / DEEP_TOP_UM > 1.0, "winds more than a shank can"),
+        (winding + 0.5 * m["top"] / DEEP_TOP_UM > 1.0, WINDS),
         (m["gain"] < MIN_GAIN, "runs along the surface"),
         (m["contrast"] < faint, "fainter than noise allows"),
         (m["bend_deg"] > np.interp(m["length"], LENGTHS_UM, BEND_DEG), "bends more than a shank can"),
     )
     fault = next((text for wrong, text in checks if wrong), "")
     return Candidate(item.curve_um, item.sigma_um, item.run, item.profile, m, fault)
+
+
+def _beside(a: Candidate, b: Candidate) -> bool:
+    """Whether two candidates run side by side at the distance of two shanks, all along."""
+    from scipy.spatial import cKDTree
+
+    one, two = (c.curve_um[c.run[0] : c.run[1] + 1] for c in (a, b))
+    low, high = np.quantile(cKDTree(two).query(one)[0], [0.1, 0.9])
+    alike = 0.6 < len(one) / len(two) < 1.6
+    return bool(alike and low > BESIDE_UM[0] and high < BESIDE_UM[1] and high - low < BESIDE_SPREAD_UM)
 
 
 def _same(a: Candidate, b: Candidate) -> bool:
