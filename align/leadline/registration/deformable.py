@@ -108,10 +108,12 @@ def fit(
     belief: float,
     iterations: int,
     progress: Progress,
+    far: bool = False,
 ) -> Fit:
     """Improve a deformation at one resolution.
 
     ``belief`` : how many independent observations a voxel counts for (voxels of real tissue are not independent).
+    ``far`` : the images may still be further apart than a voxel or two.
     """
     nodes = start.nodes
     last = nodes.origin_um + (np.asarray(nodes.shape) - 1) * nodes.step_um
@@ -130,7 +132,7 @@ def fit(
         if step % REFRESH == 0:
             weight = believable(goal, sample, affine, shift, tolerance_um=TOLERANCE_UM)
         moved = pulled(sample.intensity, sample.grid, grid, affine, shift, weight > 0)
-        evidence = compare(goal.image.intensity, moved, weight, step_um=grid.step_um)
+        evidence = compare(goal.image.intensity, moved, weight, step_um=grid.step_um, far=far)
         stiffness = tuple(to_nodes(linear, s) * np.float32(belief) for s in evidence.stiffness)
         force = np.stack([to_nodes(cubic, f) * np.float32(belief) for f in evidence.force])
         change = prior.solve(stiffness, force - prior.times(values))

@@ -97,12 +97,16 @@ def believable(
     return np.asarray((goal.outside_um <= NEAR_UM) & ~odd & (clean > 0.6), np.float32)
 
 
-def compare(fixed: Float32Array, moved: Float32Array, weight: Float32Array, *, step_um: float) -> Evidence:
+def compare(
+    fixed: Float32Array, moved: Float32Array, weight: Float32Array, *, step_um: float, far: bool = False
+) -> Evidence:
     """Compare two images under ``moved = a + b fixed + noise`` with a, b and the noise of every window its own.
 
     The negative log likelihood of that model is half the log of the residual variance, a function of the local
-    correlation alone [1]_; its Gauss-Newton step uses the mean of both images' gradients [2]_, and residuals beyond
-    ``OUTLIER`` standard deviations lose their weight (Cauchy).
+    correlation alone [1]_. Residuals beyond ``OUTLIER`` standard deviations lose their weight (Cauchy). The gradient
+    is the template's: the sample's holds the same noise as the residual, and where the weights vary the product of
+    the two does not average out. While the images are still ``far`` apart the mean of both gradients is used, which
+    converges from further away [2]_.
 
     .. [1] Cachier et al. (2003). Comput. Vis. Image Underst. 89, 272. doi:10.1016/S1077-3142(03)00002-X
     .. [2] Vercauteren et al. (2009). NeuroImage 45, S61. doi:10.1016/j.neuroimage.2008.10.040
@@ -122,9 +126,10 @@ def compare(fixed: Float32Array, moved: Float32Array, weight: Float32Array, *, s
     unexplained = np.maximum(var_m - slope * covariance, floor)
     residual = moved - mean_m - slope * (fixed - mean_f)
     precision = weight / (unexplained * (1 + residual**2 / (OUTLIER**2 * unexplained)))
-    half = np.float32(0.5)
+    share = np.float32(0.5 if far else 0.0)
     gradient = [
-        half * (slope * f + m) for f, m in zip(np.gradient(fixed, step_um), np.gradient(moved, step_um), strict=True)
+        (1 - share) * slope * f + share * m
+        for f, m in zip(np.gradient(fixed, step_um), np.gradient(moved, step_um), strict=True)
     ]
     force = tuple(-precision * g * residual for g in gradient)
     stiffness = tuple(precision * gradient[i] * gradient[j] for i, j in PAIRS)

@@ -47,7 +47,7 @@ def register(
     background : the autofluorescence channel, reduced to voxels of 25 to 50 um, with its orientation code.
     template, labels : PIR volumes on one grid; label 0 is outside the brain.
     dye : the dye channel on the background's grid; what it stains is not believed.
-    threads : threads for the linear algebra.
+    threads : taken for the stage table's sake; the work is done in one thread, and the same whatever it says.
 
     Raises LeadlineError when a volume shows no tissue or holds values that are not finite.
     """
@@ -77,6 +77,7 @@ def register(
             belief=BELIEF,
             iterations=AFFINE_STEPS // 2,
             progress=SILENT,
+            far=True,
         )
         error_um = float(np.hypot(fitted.error_um(SEED), fitted.size_um))
     return _registration(atlas, sample, affine, field, error_um, start, rival, codes)
@@ -104,15 +105,22 @@ def _deform(
     coarse: int,
     progress: Progress,
 ) -> deformable.Fit:
-    def fit(images: tuple[Image, ...], level: int, iterations: int, belief: float) -> deformable.Fit:
-        return deformable.fit(
-            images[level], sample[level], affine, field, belief=belief, iterations=iterations, progress=progress
-        )
-
-    if coarse > WORK:
-        field = fit(atlas, coarse, FIELD_COARSE_STEPS, BELIEF_COARSE).deformation
-    field = fit(atlas, WORK, FIELD_STEPS, BELIEF).deformation
-    return fit(_matched(atlas, sample, labels, affine, field), WORK, MATCHED_STEPS, BELIEF_MATCHED)
+    steps = [(coarse, FIELD_COARSE_STEPS, BELIEF_COARSE)] if coarse > WORK else []
+    for level, iterations, belief in [*steps, (WORK, FIELD_STEPS, BELIEF)]:
+        field = deformable.fit(
+            atlas[level],
+            sample[level],
+            affine,
+            field,
+            belief=belief,
+            iterations=iterations,
+            progress=progress,
+            far=True,
+        ).deformation
+    matched = _matched(atlas, sample, labels, affine, field)[WORK]
+    return deformable.fit(
+        matched, sample[WORK], affine, field, belief=BELIEF_MATCHED, iterations=MATCHED_STEPS, progress=progress
+    )
 
 
 def _matched(
@@ -129,7 +137,7 @@ def _matched(
     wanted = rank > 0
     moved = pulled(seen.intensity, seen.grid, fine.grid, affine, shift, wanted)
     sure = pulled(seen.trust * seen.tissue, seen.grid, fine.grid, affine, shift, wanted) > SURE
-    intensity = contrast.matched_contrast(fine.intensity, rank, moved, sure)
+    intensity = contrast.matched_contrast(fine.intensity, rank, moved, sure, fine.grid)
     images = [replace(fine, intensity=intensity)]
     for image in atlas[1:]:
         images.append(replace(image, intensity=halve(images[-1].intensity)))
