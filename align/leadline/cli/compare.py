@@ -78,13 +78,13 @@ def _tell(found: Comparison) -> None:
 
 
 def _write(found: list[Comparison], reading: Reading, folder: Path) -> list[Path]:
-    from leadline.io.atlases import read_atlas
     from leadline.io.tables import write_table
+    from leadline.pipeline.atlas_import import load_atlas
     from leadline.pipeline.compare import comparison_rows
     from leadline.report.comparison import draw_comparison
     from leadline.report.style import save
 
-    structures = None if reading.atlas is None else read_atlas(reading.atlas).structures
+    structures = None if reading.atlas is None else load_atlas(reading.atlas).structures
     files = []
     for stem, comparison in zip(("comparison", "first_against_truth", "second_against_truth"), found, strict=False):
         write_table(comparison_rows(comparison), folder / f"{stem}.csv")

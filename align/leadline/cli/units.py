@@ -62,14 +62,14 @@ def _draw(
 ) -> list[Path]:
     import re
 
-    from leadline.io.atlases import read_atlas
+    from leadline.pipeline.atlas_import import load_atlas
     from leadline.pipeline.units import require_value
     from leadline.report.atlas_view import draw_value
     from leadline.report.style import save
 
     require_value(table, value, period)
     folder = output or (brains[0].out if len(brains) == 1 else Path())
-    figure = draw_value(table, value, read_atlas(brains[0].atlas), period=period)
+    figure = draw_value(table, value, load_atlas(brains[0].atlas), period=period)
     stem = "units_" + re.sub(r"[^\w.+-]+", "_", value)
     files = [folder / f"{stem}.png", folder / f"{stem}.svg"]
     for file in files:

@@ -34,9 +34,9 @@ class Bench:
     @cached_property
     def atlas(self) -> Atlas:
         """The atlas folder, read."""
-        from leadline.io.atlases import read_atlas
+        from leadline.pipeline.atlas_import import load_atlas
 
-        return read_atlas(self.brain.atlas)
+        return load_atlas(self.brain.atlas)
 
     @cached_property
     def background(self) -> Stack:

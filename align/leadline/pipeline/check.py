@@ -33,7 +33,7 @@ def check(brain: Brain, bench: Bench | None = None) -> Findings:
         look.penetration(penetration)
     look.anchors()
     look.hear(lambda: look.bench.knowledge)
-    return Findings(tuple(dict.fromkeys(look.faults)), tuple(look.notes))
+    return Findings(tuple({str(f): f for f in look.faults}.values()), tuple(look.notes))
 
 
 class _Look:

@@ -64,8 +64,8 @@ def export_nwb(
 
     Raises LeadlineError when electrodes cannot be matched or the file cannot be written safely.
     """
-    from leadline.io.atlases import read_atlas
     from leadline.io.export_nwb import changes, electrodes_of, write_copy, write_in_place
+    from leadline.pipeline.atlas_import import load_atlas
 
     if in_place == (output is not None):
         raise LeadlineError(
@@ -74,7 +74,7 @@ def export_nwb(
     table = located_channels(brain)
     electrodes = electrodes_of(source)
     rows, channels, matches = _matched(table, electrodes, groups, source)
-    columns = _nwb_columns(channels, read_atlas(brain.atlas))
+    columns = _nwb_columns(channels, load_atlas(brain.atlas))
     target = source if output is None else output
     found = tuple(changes(source, rows, columns))
     if not dry_run:
@@ -176,10 +176,10 @@ def _nwb_columns(channels: pd.DataFrame, atlas: Atlas) -> dict[str, Column]:
 
 def export_probeinterface(brain: Brain, folder: Path, *, dry_run: bool = False) -> list[Path]:
     """A copy of each penetration's probe file with where its contacts sat as contact annotations; returns the files."""
-    from leadline.io.atlases import read_atlas
     from leadline.io.export_probeinterface import annotated, write_probe_file
+    from leadline.pipeline.atlas_import import load_atlas
 
-    table, atlas = located_channels(brain), read_atlas(brain.atlas)
+    table, atlas = located_channels(brain), load_atlas(brain.atlas)
     written = []
     for penetration in brain.penetrations:
         path = folder / f"{penetration.name}.json"
@@ -194,10 +194,10 @@ def export_probeinterface(brain: Brain, folder: Path, *, dry_run: bool = False) 
 def export_bids(brain: Brain, folder: Path, *, dry_run: bool = False) -> list[Path]:
     """BIDS tables of electrodes, probes and the coordinate system; returns the files."""
     from leadline.base.atomic import write_text
-    from leadline.io.atlases import read_atlas
     from leadline.io.export_bids import bids_files
+    from leadline.pipeline.atlas_import import load_atlas
 
-    atlas = read_atlas(brain.atlas)
+    atlas = load_atlas(brain.atlas)
     files = bids_files(brain.name, located_channels(brain), atlas, _provenance(brain, atlas))
     for name, text in files.items():
         if not dry_run:

@@ -34,14 +34,14 @@ def _finished(brain: Brain) -> list[FinishedShank]:
     import pandas as pd
 
     from leadline.anchoring.learn import FinishedShank
-    from leadline.io.atlases import read_atlas
     from leadline.io.profiles import read_profile
+    from leadline.pipeline.atlas_import import load_atlas
 
     table_file = brain.out / "channels.csv"
     if not table_file.is_file():
         raise LeadlineError("has not been run", where=str(brain.file), mend=f"Run 'leadline run {brain.folder}' first")
     table = pd.read_csv(table_file, dtype={"penetration": str}, keep_default_na=False)
-    structures = read_atlas(brain.atlas).structures
+    structures = load_atlas(brain.atlas).structures
     found = []
     for track in products.read_tracks(brain)[0]:
         file = products.ProfileFiles(brain, track.penetration).table

@@ -24,8 +24,8 @@ def map_points(brain: Brain, points: Path, to: str) -> pd.DataFrame:
 
     Raises LeadlineError when the table lacks a column or holds a cell that is no number.
     """
-    from leadline.io.atlases import read_atlas
     from leadline.io.points import read_points
+    from leadline.pipeline.atlas_import import load_atlas
 
     registration = RegistrationFiles(brain).read()
     if to == "stack":
@@ -33,7 +33,7 @@ def map_points(brain: Brain, points: Path, to: str) -> pd.DataFrame:
         return _with(table, STACK_COLUMNS, registration.atlas_to_stack(atlas_um))
     table, stack_um = read_points(points, STACK_COLUMNS)
     atlas_um = registration.stack_to_atlas(stack_um)
-    atlas = read_atlas(brain.atlas)
+    atlas = load_atlas(brain.atlas)
     region_id = atlas.label_at(atlas_um)
     named = _with(table, ATLAS_COLUMNS, atlas_um)
     named["region_id"] = region_id

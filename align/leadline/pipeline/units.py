@@ -248,9 +248,9 @@ def pool(brains: Sequence[Brain], tables: Sequence[pd.DataFrame]) -> pd.DataFram
 
 def _content(atlas: Path) -> str:
     """Fingerprint of what an atlas says, wherever its files lie and however they were packed."""
-    from leadline.io.atlases import read_atlas
+    from leadline.pipeline.atlas_import import load_atlas
 
-    read = read_atlas(atlas)
+    read = load_atlas(atlas)
     return fingerprint_value([read.name, read.labels.array(), read.voxel_um, read.structures])
 
 
