@@ -33,13 +33,13 @@ def _probe(tip=invented.TIP[:40], law=None):
 def _plain(packed, depth, c):
     """Log likelihood of one path by dense algebra."""
     feature, table = packed.features[0], packed.tables[0]
-    cell = np.clip(np.floor((depth - table.start_um) / CELL_UM + 0.5).astype(int), 0, table.active.shape[2] - 1)
+    cell = np.clip(np.floor((depth - table.start_um) / CELL_UM + 0.5).astype(int), 0, table.active.shape[1] - 1)
     total = 0.0
     for g, group in enumerate(GROUPS):
         design = np.zeros((depth.size, table.ids.size + 1))
         design[:, -1] = 1.0
         for r, one in enumerate(cell):
-            for label, share in zip(table.active[g, 0, one], table.weight[g, 0, one], strict=True):
+            for label, share in zip(table.active[g, one], table.weight[g, one], strict=True):
                 if label >= 0:
                     design[r, label] += share
         noise = correlation(feature.tip_distance_um, MODELS[group][c[g]])
@@ -61,7 +61,7 @@ def test_the_compiled_evidence_is_that_of_dense_algebra():
     c = rng.integers(0, 4, (12, 2))
     out = np.empty(12)
     ones = (np.ones((12, 1, 2, packed.pack.mean.shape[2])), np.ones((12, 1, packed.pack.centre.shape[1])))
-    evaluate(packed.pack, z, c, np.zeros(12, np.int64), *ones, out)
+    evaluate(packed.pack, z, c, *ones, out)
     rows = prior.weights(0, packed.features[0].tip_distance_um)
     for i in range(12):
         depth = rows @ (prior.mean_um + prior.basis @ z[i])
@@ -83,7 +83,7 @@ def test_the_sampler_finds_the_mean_spread_and_evidence_of_brute_force():
     parts, out = [], np.empty(n)
     models = list(product(range(4), range(4)))
     for c in models:
-        evaluate(packed.pack, grid, np.tile(c, (n, 1)), np.zeros(n, np.int64), *ones, out)
+        evaluate(packed.pack, grid, np.tile(c, (n, 1)), *ones, out)
         parts.append(power * out + log_prior - np.log(len(models)))
     joint = np.logaddexp.reduce(parts, axis=0)
     log_z = float(np.logaddexp.reduce(joint))

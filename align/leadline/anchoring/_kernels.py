@@ -17,7 +17,7 @@ class Pack(NamedTuple):
     R, R) : entry [r, t] carries row r into whitened row t. ``white_one`` (S, G, C, R), ``white_data``
     (S, G, C, F, R). ``log_scale`` (S, G, C, R) : log of the whitener's diagonal. ``mean`` (S, G, F, L).
     ``precision`` (S, L, L), ``log_covariance`` (S,). ``log_null`` (S, G, C, F). ``active``, ``weight``
-    (S, G, K, M, 8) and ``start`` (S,) : cells of the label tables.
+    (S, G, M, 8) and ``start`` (S,) : cells of the label tables.
     """
 
     n_rows: Any
@@ -66,18 +66,18 @@ def _cholesky(a, n):  # type: ignore[no-untyped-def]  # pragma: no cover
 
 
 @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
-def _design(p, s, g, c, copy, depth, white):  # type: ignore[no-untyped-def]  # pragma: no cover
+def _design(p, s, g, c, depth, white):  # type: ignore[no-untyped-def]  # pragma: no cover
     """Whitened label membership of every row, ``white`` (L, R)."""
     rows, last = p.n_rows[s], p.n_labels[s] - 1
     white[: last + 1, :rows] = 0.0
     for r in range(rows):
         cell = int((depth[r] - p.start[s]) / p.cell_um + 0.5)
         cell = min(max(cell, 0), p.n_cells[s] - 1)
-        for a in range(p.active.shape[4]):
-            label = p.active[s, g, copy, cell, a]
+        for a in range(p.active.shape[3]):
+            label = p.active[s, g, cell, a]
             if label < 0:
                 break
-            share = np.float32(p.weight[s, g, copy, cell, a])
+            share = np.float32(p.weight[s, g, cell, a])
             for t in range(r, rows):
                 white[label, t] += share * p.whitener[s, g, c, r, t]
     for t in range(rows):
@@ -125,14 +125,14 @@ def _explained(mean, gram, cross, factor, b):  # type: ignore[no-untyped-def]  #
 
 
 @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
-def group_evidence(p, s, g, c, copy, depth, row_weight, white, out):  # type: ignore[no-untyped-def]  # pragma: no cover
+def group_evidence(p, s, g, c, depth, row_weight, white, out):  # type: ignore[no-untyped-def]  # pragma: no cover
     """Log evidence of each feature of a group, emissions integrated out (Student-t), into ``out`` (F,).
 
     With y ~ N(A mu, v C), mu ~ N(m, v V), v ~ IG(shape, rate): Bishop 2006, section 2.3.7; rows carry powers
     ``row_weight``.
     """
     rows, labels, features = p.n_rows[s], p.n_labels[s], p.n_features[s, g]
-    _design(p, s, g, c, copy, depth, white)
+    _design(p, s, g, c, depth, white)
     gram, cross = np.empty((labels, labels)), np.empty((features, labels))
     _products(p, s, g, c, row_weight, white, gram, cross)
     factor = gram + p.precision[s, :labels, :labels]
@@ -150,7 +150,7 @@ def group_evidence(p, s, g, c, copy, depth, row_weight, white, out):  # type: ig
 
 
 @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
-def log_likelihood(p, z, c, copy, feature_weight, row_weight, depth, white, out):  # type: ignore[no-untyped-def]  # pragma: no cover
+def log_likelihood(p, z, c, feature_weight, row_weight, depth, white, out):  # type: ignore[no-untyped-def]  # pragma: no cover
     """Log evidence of all shanks for one path, each feature mixed with one that says nothing."""
     total = 0.0
     for s in range(p.n_rows.size):
@@ -164,7 +164,7 @@ def log_likelihood(p, z, c, copy, feature_weight, row_weight, depth, white, out)
         for g in range(p.n_features.shape[1]):
             if p.n_features[s, g] == 0:
                 continue
-            group_evidence(p, s, g, c[g], copy, depth, row_weight[s], white, out)
+            group_evidence(p, s, g, c[g], depth, row_weight[s], white, out)
             for f in range(p.n_features[s, g]):
                 null = p.log_null[s, g, c[g], f]
                 gain = out[f] - null
@@ -189,18 +189,18 @@ def log_offset_ratio(p, z):  # type: ignore[no-untyped-def]  # pragma: no cover
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def evaluate(p, z, c, copy, feature_weight, row_weight, out):  # type: ignore[no-untyped-def]  # pragma: no cover
+def evaluate(p, z, c, feature_weight, row_weight, out):  # type: ignore[no-untyped-def]  # pragma: no cover
     """Log likelihood of paths ``z`` (N, J) into ``out`` (N,)."""
     width = p.centre.shape[1]
     depth, white = np.empty(width), np.empty((p.mean.shape[3], width), np.float32)
     scratch = np.empty(max(1, p.mean.shape[2]))
     for i in range(z.shape[0]):
-        out[i] = log_likelihood(p, z[i], c[i], copy[i], feature_weight[i], row_weight[i], depth, white, scratch)
+        out[i] = log_likelihood(p, z[i], c[i], feature_weight[i], row_weight[i], depth, white, scratch)
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
 def slice_move(  # type: ignore[no-untyped-def]  # pragma: no cover
-    p, power, z, ll, c, copy, feature_weight, row_weight, centre, root, a, nu, log_u, angle, evaluations
+    p, power, z, ll, c, feature_weight, row_weight, centre, root, a, nu, log_u, angle, evaluations
 ):
     """One elliptical slice move of every path under the Gaussian ``centre + root @ a`` (Murray et al. 2010, AISTATS;
     generalised to a fitted Gaussian as in Nishihara et al. 2014, JMLR 15, 2087). Changes ``z``, ``ll``, ``a``."""
@@ -224,7 +224,7 @@ def slice_move(  # type: ignore[no-untyped-def]  # pragma: no cover
                 for k in range(j + 1):
                     total += root[j, k] * new_a[k]
                 new_z[j] = total
-            value = log_likelihood(p, new_z, c[i], copy[i], feature_weight[i], row_weight[i], depth, white, scratch)
+            value = log_likelihood(p, new_z, c[i], feature_weight[i], row_weight[i], depth, white, scratch)
             evaluations[i] += 1
             here = power * value + log_offset_ratio(p, new_z)
             for j in range(dims):

@@ -60,7 +60,10 @@ class ShankEvidence:
         object.__setattr__(self, "anchors", tuple(self.anchors))
 
     def label_at(self, depth_um: FloatArray, copy: IntArray | None = None) -> IntArray:
-        """Structure id at track depths ``(...)``, of lateral copy ``copy`` (broadcast) where given."""
+        """Structure id at track depths ``(...)``; of lateral copy ``copy`` (broadcast) where that is not negative."""
         mid = (self.depth_um[1:] + self.depth_um[:-1]) / 2
         cell = np.searchsorted(mid, depth_um)
-        return self.label_id[cell] if copy is None else self.lateral_label_id[copy, cell]
+        if copy is None:
+            return self.label_id[cell]
+        moved = self.lateral_label_id[np.maximum(copy, 0), cell]
+        return np.where(copy < 0, self.label_id[cell], moved)

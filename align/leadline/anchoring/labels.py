@@ -29,8 +29,9 @@ NOISE_VARIANCE = 0.4
 class LabelTable:
     """Blurred label membership along a track, on cells of 2.5 um, and the prior of the features of each label.
 
-    ``start_um`` : depth of cell 0. ``ids`` : (L,) structures. ``active``, ``weight`` : (G, K, M, 8) labels that a
-    contact in the cell records and their shares, for each group of features and lateral copy; -1 where there is none.
+    ``start_um`` : depth of cell 0. ``ids`` : (L,) structures. ``active``, ``weight`` : (G, M, 8) labels that a contact
+    in the cell records and their shares, for each group of features, averaged over the lateral copies of the track; -1
+    where there is none.
     ``mean`` : group -> (L + 1, F) prior means; ``covariance`` : (L + 1, L + 1) in units of the noise variance. The
     last entry is an intercept, since the scaling of a feature depends on what the shank covers.
     """
@@ -54,18 +55,21 @@ def tabulate(
     cells = np.arange(low, high + CELL_UM, CELL_UM)
     copies = shank.lateral_label_id[:, np.searchsorted((shank.depth_um[1:] + shank.depth_um[:-1]) / 2, cells)]
     ids = np.unique(copies)
-    shape = (len(GROUPS), len(copies), cells.size, ACTIVE)
-    active, weight = np.full(shape, -1, np.int64), np.zeros(shape)
-    for k, row in enumerate(copies):
-        one_hot = (row[:, None] == ids[None, :]).astype(float)
-        for g, group in enumerate(GROUPS):
-            blurred = gaussian_filter1d(one_hot, BLUR_UM[group] / CELL_UM, axis=0, mode="nearest", truncate=3.0)
-            order = np.argsort(-blurred, axis=1, kind="stable")[:, :ACTIVE]
-            share = np.take_along_axis(blurred, order, axis=1)
-            share[share < MIN_WEIGHT] = 0.0
-            share /= share.sum(axis=1, keepdims=True)
-            active[g, k, :, : order.shape[1]] = np.where(share > 0, order, -1)
-            weight[g, k, :, : order.shape[1]] = share
+    share = np.zeros((cells.size, ids.size))
+    for row in copies:
+        share[np.arange(cells.size), np.searchsorted(ids, row)] += 1.0 / len(copies)
+    active, weight = (
+        np.full((len(GROUPS), cells.size, ACTIVE), -1, np.int64),
+        np.zeros((len(GROUPS), cells.size, ACTIVE)),
+    )
+    for g, group in enumerate(GROUPS):
+        blurred = gaussian_filter1d(share, BLUR_UM[group] / CELL_UM, axis=0, mode="nearest", truncate=3.0)
+        order = np.argsort(-blurred, axis=1, kind="stable")[:, :ACTIVE]
+        most = np.take_along_axis(blurred, order, axis=1)
+        most[most < MIN_WEIGHT] = 0.0
+        most /= most.sum(axis=1, keepdims=True)
+        active[g, :, : order.shape[1]] = np.where(most > 0, order, -1)
+        weight[g, :, : order.shape[1]] = most
     mean, covariance = _prior(ids, features, structures, knowledge)
     return LabelTable(float(cells[0]), ids.astype(np.int64), active, weight, mean, covariance)
 

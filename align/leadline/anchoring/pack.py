@@ -22,6 +22,7 @@ if TYPE_CHECKING:
 
 SHAPE, RATE = 4.0, 1.2
 NULL_SHARE = 0.15
+USUAL_INDEPENDENCE = 0.8
 MIN_STEP_UM = 2.0
 REACH_SD = 4.0
 REACH_UM = 300.0
@@ -29,14 +30,15 @@ REACH_UM = 300.0
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Packed:
-    """``pack`` : the kernel's arrays. ``features``, ``tables`` : of each shank. ``log_silent`` : log evidence of all
-    features as smooth noise that knows no labels. ``copies`` : number of lateral copies of the track."""
+    """``pack`` : the kernel's arrays. ``features``, ``tables`` : of each shank. ``power`` (S, G, F) : what a feature
+    counts beside its correlated fellows. ``log_silent`` : log evidence of all features as smooth noise that knows no
+    labels, so weighted."""
 
     pack: Any
     features: tuple[FeatureSet, ...]
     tables: tuple[LabelTable | None, ...]
+    power: FloatArray
     log_silent: float
-    copies: int
 
     @property
     def informative(self) -> bool:
@@ -60,26 +62,42 @@ def assemble(
         span = prior.law.offset_sd_um / prior.law.stray_offset_sd_um
         reach = np.array([(mean - REACH_SD * spread * span).min(), (mean + REACH_SD * spread * span).max()])
         tables.append(tabulate(shank, feature, structures, knowledge, reach + np.array([-REACH_UM, REACH_UM])))
-    copies = max((t.active.shape[1] for t in tables if t is not None), default=1)
-    return Packed(_pack(prior, features, tables, copies), features, tuple(tables), _log_silent(features), copies)
+    pack = _pack(prior, features, tables)
+    power = np.zeros(pack.log_null[:, :, 0].shape)
+    for s, feature in enumerate(features):
+        for g, group in enumerate(GROUPS):
+            power[s, g, : len(feature.values[group])] = independence(feature.values[group])
+    return Packed(pack, features, tuple(tables), power, _log_silent(features, power))
 
 
-def _pack(prior: DepthPrior, features: Sequence[FeatureSet], tables: Sequence[LabelTable | None], copies: int) -> Any:
+def independence(data: FloatArray) -> float:
+    """What one feature of ``data`` (F, R) counts: the effective number of independent features over their number.
+
+    The number is the participation ratio of the correlations of row-to-row differences, over that of usual
+    recordings, since the power of the whole likelihood was learned on those.
+    """
+    if len(data) < 2:
+        return 1.0
+    values = np.linalg.eigvalsh(np.corrcoef(np.diff(data, axis=1)))
+    return float(min(1.0, values.sum() ** 2 / (values**2).sum() / len(data) / USUAL_INDEPENDENCE))
+
+
+def _pack(prior: DepthPrior, features: Sequence[FeatureSet], tables: Sequence[LabelTable | None]) -> Any:
     from leadline.anchoring._kernels import Pack
 
     n, g_count, c_count = len(features), len(GROUPS), len(MODELS["lfp"])
     rows = max(1, *(f.tip_distance_um.size for f in features))
     wide = max(1, *(len(f.values[g]) for f in features for g in GROUPS))
     labels = max([2, *(t.ids.size + 1 for t in tables if t is not None)])
-    cells = max([1, *(t.active.shape[2] for t in tables if t is not None)])
-    slots = max([1, *(t.active.shape[3] for t in tables if t is not None)])
+    cells = max([1, *(t.active.shape[1] for t in tables if t is not None)])
+    slots = max([1, *(t.active.shape[2] for t in tables if t is not None)])
     shape = (n, g_count, c_count)
     law = prior.law
     pack = Pack(
         n_rows=np.array([f.tip_distance_um.size for f in features], np.int64),
         n_features=np.array([[len(f.values[g]) for g in GROUPS] for f in features], np.int64),
         n_labels=np.array([2 if t is None else t.ids.size + 1 for t in tables], np.int64),
-        n_cells=np.array([1 if t is None else t.active.shape[2] for t in tables], np.int64),
+        n_cells=np.array([1 if t is None else t.active.shape[1] for t in tables], np.int64),
         centre=np.zeros((n, rows)),
         basis=np.zeros((n, rows, prior.dims)),
         whitener=np.zeros((*shape, rows, rows), np.float32),
@@ -90,8 +108,8 @@ def _pack(prior: DepthPrior, features: Sequence[FeatureSet], tables: Sequence[La
         precision=np.zeros((n, labels, labels)),
         log_covariance=np.zeros(n),
         log_null=np.zeros((*shape, wide)),
-        active=np.full((n, g_count, copies, cells, slots), -1, np.int64),
-        weight=np.zeros((n, g_count, copies, cells, slots)),
+        active=np.full((n, g_count, cells, slots), -1, np.int64),
+        weight=np.zeros((n, g_count, cells, slots)),
         start=np.zeros(n),
         cell_um=CELL_UM,
         shape=SHAPE,
@@ -123,10 +141,9 @@ def _fill_shank(pack: Any, s: int, prior: DepthPrior, feature: FeatureSet, table
     pack.basis[s, :r] = at @ prior.basis[prior.slice(s)]
     pack.precision[s, :labels, :labels] = np.linalg.inv(table.covariance)
     pack.log_covariance[s] = np.linalg.slogdet(table.covariance)[1]
-    copies, cells = table.active.shape[1:3]
-    for k in range(pack.active.shape[2]):
-        pack.active[s, :, k, :cells] = table.active[:, k % copies]
-        pack.weight[s, :, k, :cells] = table.weight[:, k % copies]
+    cells = table.active.shape[1]
+    pack.active[s, :, :cells] = table.active
+    pack.weight[s, :, :cells] = table.weight
     pack.start[s] = table.start_um
     for g, group in enumerate(GROUPS):
         data = feature.values[group]
@@ -148,14 +165,15 @@ def _flat_evidence(data: FloatArray, noise: FloatArray) -> FloatArray:
     return student_evidence(data, one, noise, np.array([[1 / 0.4]]), np.zeros((1, len(data))), SHAPE, RATE)
 
 
-def _log_silent(features: Sequence[FeatureSet]) -> float:
+def _log_silent(features: Sequence[FeatureSet], power: FloatArray) -> float:
     """Log evidence that no feature knows of labels: smooth noise of unknown length, averaged over lengths."""
     total = 0.0
-    for feature in features:
-        for group in GROUPS:
+    for s, feature in enumerate(features):
+        for g, group in enumerate(GROUPS):
             data = feature.values[group]
             if not len(data):
                 continue
             each = [_flat_evidence(data, correlation(feature.tip_distance_um, m)) for m in SILENT_MODELS]
-            total += float((np.logaddexp.reduce(np.array(each), axis=0) - np.log(len(SILENT_MODELS))).sum())
+            one = np.logaddexp.reduce(np.array(each), axis=0) - np.log(len(SILENT_MODELS))
+            total += float(power[s, g, : len(data)] @ one)
     return total

@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
 
 from leadline.anchoring.depth_prior import DepthPrior, build
+from leadline.anchoring.doubts import doubts
 from leadline.anchoring.pack import Packed, assemble
 from leadline.anchoring.preview import preview
 from leadline.anchoring.sampler import Drawn, sample
@@ -28,7 +30,19 @@ POWER = 0.35
 # how much tempered evidence makes labels as likely as not, and how fast it convinces: learned on invented tracks,
 # because the evidence of a tempered model is no calibrated Bayes factor
 EVEN_AT, CONVINCES = 4.0, 0.7
+# a median strays 1.25 times as far as a mean, two runs sqrt(2) times as far as one
+SHIFT_OF_MEDIAN = 1.25 * 2**0.5
+ON_TRACK = -1
+TOLD = 0.6
 MIN_STEP_UM = 1e-3
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Draws:
+    """Coordinates ``z`` (S, J) of depth maps, and for each a lateral ``copy`` (S,) of the track, or -1 for itself."""
+
+    z: FloatArray
+    copy: IntArray
 
 
 def infer(
@@ -71,28 +85,49 @@ def _infer_probe(
     progress: Progress,
 ) -> list[DepthPosterior]:
     prior = build(shanks, knowledge.depth)
-    z, copy = prior.draw(rng, draws), rng.integers(0, 2**31, draws)
-    if not physiology:
-        return _results(shanks, prior, z, copy, rng, 0.0, {})
-    packed = assemble(shanks, prior, structures, knowledge)
-    if not packed.informative:
-        return _results(shanks, prior, z, copy, rng, 0.0, {})
+    before = Draws(prior.draw(rng, draws), rng.integers(0, 2**31, draws))
+    packed = assemble(shanks, prior, structures, knowledge) if physiology else None
+    if packed is None or not packed.informative:
+        return [_result(s, prior, i, before, rng) for i, s in enumerate(shanks)]
     drawn = sample(packed, prior, rng, POWER, progress)
     informed = chance_informed(packed, drawn)
     kept = round(informed * draws)
-    if kept:
-        best_z, best_copy = _thinned(drawn, prior, kept, rng)
-        z, copy = np.concatenate([best_z, z[kept:]]), np.concatenate([best_copy, copy[kept:]])
-    return _results(shanks, prior, z, copy, rng, informed, _diagnostics(drawn, packed))
+    # where the recording speaks, it tells most of the border displacement itself; the rest stays with some draws
+    told = (np.arange(draws) < kept) & (rng.random(draws) < TOLD)
+    copy = np.where(told, ON_TRACK, before.copy)
+    after = Draws(np.concatenate([_thinned(drawn, prior, kept, rng), before.z[kept:]]), copy)
+    out = []
+    for i, shank in enumerate(shanks):
+        plain = _result(shank, prior, i, before, rng)
+        found = _result(shank, prior, i, after, rng)
+        shift = SHIFT_OF_MEDIAN * float(found.sd_um.mean()) / np.sqrt(drawn.effective)
+        notes = doubts(shank, plain.depth_um, found.depth_um, informed, shift)
+        out.append(
+            replace(
+                found,
+                informed=informed if shank.profile is not None else 0.0,
+                warnings=notes if shank.profile is not None else (),
+                diagnostics={
+                    "log_bayes_factor": drawn.log_evidence - POWER * packed.log_silent,
+                    "effective_draws": drawn.effective,
+                    "expected_shift_um": shift,
+                    "levels": float(drawn.levels),
+                    "evaluations": float(drawn.evaluations),
+                },
+            )
+        )
+    return out
 
 
-def _thinned(drawn: Drawn, prior: DepthPrior, n: int, rng: np.random.Generator) -> tuple[FloatArray, IntArray]:
+def _thinned(drawn: Drawn, prior: DepthPrior, n: int, rng: np.random.Generator) -> FloatArray:
     """``n`` of the draws, evenly along the leading direction, moved so that their mean is that of all draws."""
+    if not n:
+        return drawn.z[:0]
     spread = drawn.z - drawn.z.mean(axis=0)
     label = spread @ prior.basis.T
     order = np.argsort(label.mean(axis=1), kind="stable")
     rows = order[np.minimum(((np.arange(n) + rng.random()) / n * len(order)).astype(int), len(order) - 1)]
-    return drawn.z[rows] + (drawn.z.mean(axis=0) - drawn.z[rows].mean(axis=0)), drawn.copy[rows]
+    return np.asarray(drawn.z[rows] + (drawn.z.mean(axis=0) - drawn.z[rows].mean(axis=0)), np.float64)
 
 
 def chance_informed(packed: Packed, drawn: Drawn) -> float:
@@ -101,44 +136,22 @@ def chance_informed(packed: Packed, drawn: Drawn) -> float:
     return float(1 / (1 + np.exp(-np.clip(CONVINCES * (log_bayes - EVEN_AT), -50, 50))))
 
 
-def _diagnostics(drawn: Drawn, packed: Packed) -> dict[str, float]:
-    return {
-        "levels": float(drawn.levels),
-        "evaluations": float(drawn.evaluations),
-        "log_bayes_factor": drawn.log_evidence - POWER * packed.log_silent,
-    }
-
-
-def _results(
-    shanks: Sequence[ShankEvidence],
-    prior: DepthPrior,
-    z: FloatArray,
-    copy: IntArray,
-    rng: np.random.Generator,
-    informed: float,
-    diagnostics: dict[str, float],
-) -> list[DepthPosterior]:
-    """Physical depth and label of every row, draw by draw."""
-    left_open = _balanced_noise(rng, len(z), prior.mean_um.size) @ prior.physical_rest.T
-    physical = prior.physical_mean_um + z @ prior.physical_basis.T + left_open
-    label = prior.mean_um + z @ prior.basis.T
-    out = []
-    for i, shank in enumerate(shanks):
-        at = prior.weights(i, shank.tip_distance_um).T
-        depth = falling(physical[:, prior.slice(i)] @ at)
-        ids = shank.label_at(falling(label[:, prior.slice(i)] @ at), copy[:, None] % len(shank.lateral_label_id))
-        out.append(
-            DepthPosterior(
-                shank.penetration,
-                shank.shank,
-                shank.tip_distance_um,
-                depth,
-                informed if shank.profile is not None else 0.0,
-                diagnostics,
-                label_id=ids,
-            )
-        )
-    return out
+def _result(
+    shank: ShankEvidence, prior: DepthPrior, position: int, draws: Draws, rng: np.random.Generator
+) -> DepthPosterior:
+    """Physical depth and label of every row of one shank, draw by draw."""
+    rows, at = prior.slice(position), prior.weights(position, shank.tip_distance_um).T
+    left_open = _balanced_noise(rng, len(draws.z), prior.mean_um.size) @ prior.physical_rest[rows].T
+    physical = prior.physical_mean_um[rows] + draws.z @ prior.physical_basis[rows].T + left_open
+    label = prior.mean_um[rows] + draws.z @ prior.basis[rows].T
+    copies = np.where(draws.copy == ON_TRACK, ON_TRACK, draws.copy % len(shank.lateral_label_id))[:, None]
+    return DepthPosterior(
+        shank.penetration,
+        shank.shank,
+        shank.tip_distance_um,
+        falling(physical @ at),
+        label_id=shank.label_at(falling(label @ at), copies),
+    )
 
 
 def _balanced_noise(rng: np.random.Generator, draws: int, nodes: int) -> FloatArray:

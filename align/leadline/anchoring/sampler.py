@@ -25,19 +25,17 @@ KEEP_ESS = 0.5
 MOVES = 2
 LAST_MOVES = 6
 SNAPSHOTS = 4
-ALLFIT = True
 MAX_SHRINK = 24
 MAX_LEVELS = 60
 
 
 @dataclass
 class Ensemble:
-    """Particles in motion: ``z`` (N, J), their log likelihood, noise models ``c`` (N, G), lateral ``copy`` (N,)."""
+    """Particles in motion: ``z`` (N, J), log likelihood (N,), noise models ``c`` (N, G), powers of features, rows."""
 
     z: FloatArray
     log_likelihood: FloatArray
     c: IntArray
-    copy: IntArray
     feature_weight: FloatArray
     row_weight: FloatArray
 
@@ -47,7 +45,6 @@ class Ensemble:
             self.z[rows].copy(),
             self.log_likelihood[rows].copy(),
             self.c[rows].copy(),
-            self.copy[rows].copy(),
             self.feature_weight[rows].copy(),
             self.row_weight[rows].copy(),
         )
@@ -55,13 +52,14 @@ class Ensemble:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Drawn:
-    """The outcome: draws ``z`` (N, J) and lateral ``copy`` (N,), log evidence of the tempered model, how it went."""
+    """The outcome: draws ``z`` (N, J), log evidence of the tempered model, and how the run
+    went: tempering ``levels``, ``evaluations`` of the likelihood, ``effective`` number of independent draws."""
 
     z: FloatArray
-    copy: IntArray
     log_evidence: float
     levels: int
     evaluations: int
+    effective: float
 
 
 class Crew:
@@ -91,7 +89,7 @@ def sample(
     """Draw depth maps from prior x likelihood^``power``: the particles as they stood after each of the last moves.
 
     Adaptive tempering (Del Moral, Doucet & Jasra 2006, J. R. Stat. Soc. B 68, 411) from many prior draws; at each
-    level particles are resampled and moved by elliptical slices under their own fitted Gaussian and under the prior.
+    level particles are resampled and moved by elliptical slices under the Gaussian fitted to them.
     """
     crew = Crew()
     particles = _scouts(packed, prior, rng, SCOUTS)
@@ -107,29 +105,34 @@ def sample(
         particles = particles.take(_resample(weight, particles.z @ prior.offset_basis, PARTICLES, rng))
         beta += step
         levels += 1
-        for move in range(MOVES):
-            spent += move_all(crew, packed, particles, power * beta, rng, fitted=ALLFIT or move % 2 == 0)
+        for _ in range(MOVES):
+            spent += move_all(crew, packed, particles, power * beta, rng)
         progress.step(step)
     stills = []
-    for move in range(LAST_MOVES):
-        spent += move_all(crew, packed, particles, power, rng, fitted=ALLFIT or move % 2 == 0)
-        stills.append((particles.z.copy(), particles.copy.copy()))
-    z, copy = (np.concatenate(part) for part in zip(*stills[-SNAPSHOTS:], strict=True))
-    return Drawn(z, copy, log_z, levels, spent)
+    for _ in range(LAST_MOVES):
+        spent += move_all(crew, packed, particles, power, rng)
+        stills.append(particles.z.copy())
+    last = np.array(stills[-SNAPSHOTS:])
+    return Drawn(np.concatenate(last), log_z, levels, spent, _effective(last))
 
 
-def move_all(
-    crew: Crew, packed: Packed, particles: Ensemble, power: float, rng: np.random.Generator, *, fitted: bool
-) -> int:
-    """One slice move and one switch of noise model and lateral copy for every particle; returns evaluations."""
+def _effective(z: FloatArray) -> float:
+    """Independent draws in the last moves ``(moves, N, J)``: particles, times how well the last moves forget."""
+    first, last = z[0] - z[0].mean(axis=0), z[-1] - z[-1].mean(axis=0)
+    kept = float((first * last).sum() / np.sqrt((first**2).sum() * (last**2).sum()))
+    return float(z.shape[1] * np.clip(1 - kept, 0.05, 1.0))
+
+
+def move_all(crew: Crew, packed: Packed, particles: Ensemble, power: float, rng: np.random.Generator) -> int:
+    """One slice move and one switch of noise model for every particle; returns evaluations."""
     from leadline.anchoring._kernels import slice_move
 
     n, dims = particles.z.shape
-    centre, root = (fit(particles.z)) if fitted else (np.zeros(dims), np.eye(dims))
+    centre, root = fit(particles.z)
     a = np.linalg.solve(root, (particles.z - centre).T).T.copy()
     count = np.zeros(n, np.int64)
     crew_args = (
-        particles.z, particles.log_likelihood, particles.c, particles.copy,
+        particles.z, particles.log_likelihood, particles.c,
         particles.feature_weight, particles.row_weight,
     )  # fmt: skip
     random = (a, rng.standard_normal((n, dims)), np.log(rng.random(n)), rng.random((n, MAX_SHRINK)), count)
@@ -139,7 +142,7 @@ def move_all(
 
 def _slice_in_order(kernel: Any) -> Any:
     def call(pack: Any, power: float, centre: Any, root: Any, *rest: Any) -> None:
-        kernel(pack, power, *rest[:6], centre, root, *rest[6:])
+        kernel(pack, power, *rest[:5], centre, root, *rest[5:])
 
     return call
 
@@ -154,32 +157,28 @@ def fit(z: FloatArray) -> tuple[FloatArray, FloatArray]:
 
 
 def _switch(crew: Crew, packed: Packed, particles: Ensemble, power: float, rng: np.random.Generator) -> int:
-    """Metropolis step on the noise model of one group, or on the lateral copy of the track."""
+    """Metropolis step on the noise model of one group."""
     n = len(particles.z)
     proposal = particles.take(np.arange(n))
-    which = rng.integers(0, len(GROUPS) + (packed.copies > 1), n)
+    which = rng.integers(0, len(GROUPS), n)
     models = len(MODELS["lfp"])
     for g in range(len(GROUPS)):
         rows = np.flatnonzero(which == g)
         proposal.c[rows, g] = (proposal.c[rows, g] + rng.integers(1, models, rows.size)) % models
-    rows = np.flatnonzero(which == len(GROUPS))
-    proposal.copy[rows] = rng.integers(0, packed.copies, rows.size)
     _evaluate(crew, packed, proposal)
     accept = np.log(rng.random(n)) < power * (proposal.log_likelihood - particles.log_likelihood)
-    particles.c[accept], particles.copy[accept] = proposal.c[accept], proposal.copy[accept]
+    particles.c[accept] = proposal.c[accept]
     particles.log_likelihood[accept] = proposal.log_likelihood[accept]
     return n
 
 
 def _scouts(packed: Packed, prior: DepthPrior, rng: np.random.Generator, n: int) -> Ensemble:
-    shanks, groups, _, wide = packed.pack.log_null.shape
-    rows = packed.pack.centre.shape[1]
+    shanks, rows = packed.pack.centre.shape
     return Ensemble(
         prior.draw(rng, n),
         np.empty(n),
         rng.integers(0, len(MODELS["lfp"]), (n, len(GROUPS))),
-        rng.integers(0, packed.copies, n),
-        np.ones((n, shanks, groups, wide)),
+        np.repeat(packed.power[None], n, axis=0),
         np.ones((n, shanks, rows)),
     )
 
@@ -187,7 +186,7 @@ def _scouts(packed: Packed, prior: DepthPrior, rng: np.random.Generator, n: int)
 def _evaluate(crew: Crew, packed: Packed, p: Ensemble) -> None:
     from leadline.anchoring._kernels import evaluate
 
-    arrays = (p.z, p.c, p.copy, p.feature_weight, p.row_weight, p.log_likelihood)
+    arrays = (p.z, p.c, p.feature_weight, p.row_weight, p.log_likelihood)
     crew.run(evaluate, (packed.pack,), arrays)
 
 

@@ -216,14 +216,14 @@ def path_evidence(packed: Packed, depth_um: FloatArray, noise_model: int = 0) ->
 
     pack = packed.pack
     rows = pack.centre.shape[1]
-    white = np.empty((pack.mean.shape[3], rows))
+    white = np.empty((pack.mean.shape[3], rows), np.float32)
     out = {}
     for g, group in enumerate(GROUPS):
         values = np.empty(max(1, pack.mean.shape[2]))
         count = int(pack.n_features[0, g])
         if count:
             padded = np.concatenate([depth_um, np.zeros(rows - depth_um.size)])
-            group_evidence(pack, 0, g, noise_model, 0, padded, np.ones(rows), white, values)
+            group_evidence(pack, 0, g, noise_model, padded, np.ones(rows), white, values)
         out[group] = values[:count].copy()
     return out
 
