@@ -85,3 +85,16 @@ def _section(viewer: napari.Viewer, name: str) -> None:
     sections = workbench(viewer).sections
     if sections is not None:
         getattr(sections, name)()
+
+
+def show(path: Any) -> None:
+    """Open a window on a brain and stay until it is closed (``leadline view``)."""
+    import napari
+
+    from leadline_napari.docks import workbench
+
+    viewer = napari.Viewer()
+    bench = workbench(viewer)
+    bench.open(path)
+    bench.show_docks()
+    napari.run()

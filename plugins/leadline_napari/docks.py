@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from functools import partial
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -17,10 +18,12 @@ from leadline_napari.controllers.desk import Desk
 from leadline_napari.controllers.runs import RunController, save_settings, settings_of
 from leadline_napari.controllers.section import SectionController
 from leadline_napari.controllers.table import table_of
+from leadline_napari.editing import Editing
 from leadline_napari.results import Results, read_results
 from leadline_napari.style import DARK, LIGHT, Theme
 from leadline_napari.views.brain import BrainView
 from leadline_napari.views.canvas import Canvas
+from leadline_napari.views.corrections import CorrectionView
 from leadline_napari.views.section import SectionView
 from leadline_napari.views.table import TableView
 from leadline_napari.views.work import QtProgress, QtRunner
@@ -28,7 +31,7 @@ from leadline_napari.views.work import QtProgress, QtRunner
 if TYPE_CHECKING:
     import napari
 
-    from leadline.model.brain import Brain
+    from leadline.model.track import Track
     from leadline_napari.session import Session
 
 CANVAS_DELAY_MS = 50
@@ -56,6 +59,8 @@ class Workbench(QObject):
         self.canvas = Canvas(viewer)
         self.runner = QtRunner(self)
         self.brain, self.section, self.table = BrainView(theme), SectionView(theme), TableView(theme)
+        self.corrections = CorrectionView(theme)
+        self.editing = Editing(self, self.corrections)
         self.docks: dict[str, Any] = {}
         self.desk: Desk | None = None
         self.bench: Bench | None = None
@@ -74,14 +79,13 @@ class Workbench(QObject):
 
     def view(self, name: str) -> QWidget:
         """The widget of a dock: 'brain', 'section', 'table' or 'corrections'."""
-        return {"brain": self.brain, "section": self.section, "table": self.table}[name]
+        views = {"brain": self.brain, "section": self.section, "table": self.table, "corrections": self.corrections}
+        return views[name]
 
     def show_docks(self) -> None:
         """Add every dock that is not there yet, as tabs on the right."""
         tabs = None
         for title, name in DOCKS:
-            if name == "corrections" and not hasattr(self, "corrections"):
-                continue
             if name not in self.docks:
                 self.docks[name] = self.viewer.window.add_dock_widget(
                     self.view(name), name=title, area="right", tabify=tabs is not None
@@ -150,7 +154,15 @@ class Workbench(QObject):
         self._show_table()
         self.runs.open(results)
         self.sections.open(self.bench, results)
+        self.editing.open()
         self.opened.emit()
+
+    def retrack(self, results: Results) -> None:
+        """Take products in which a track has just been redrawn; the tables follow at the next run."""
+        self.results = results
+        self.canvas.put(layers.track_spec(results.tracks, self.bench.background.finest.code))
+        self.sections.open(self.bench, results)
+        self.editing.controller.results = results
 
     def tell(self, words: str) -> None:
         """Say something to the user: in the Brain dock, and as napari's own notification."""
@@ -308,7 +320,7 @@ class Workbench(QObject):
         colours = layer.face_color.copy()
         colours[rows] = layers.contact_colours(live.contact_region[mine], self.bench.atlas.structures)
         layer.data = data
-        layer.face_color = colours
+        layer.face_color = layer.border_color = colours
 
     def show_surfaces(self) -> None:
         """Work out the surfaces and turn to 3-D, or back to sections."""
@@ -344,18 +356,38 @@ class Workbench(QObject):
         for layer in self.viewer.layers:
             if layer.name in flat:
                 layer.visible = not on
+            elif layer.name == layers.NAMES["plane"]:
+                layer.visible = False
             elif layer.name == layers.NAMES["hull"] or layer.name.endswith(" surface"):
                 layer.visible = on
         self.viewer.dims.ndisplay = 3 if on else 2
         self.viewer.reset_view()
+        if on:
+            self.canvas.look_down()
 
     def lay_plane(self) -> None:
         """Lay the slice plane along the selected track."""
-        if self.sections is None or self.sections.scene is None:
+        if self.sections is None or self.sections.scene is None or self.bench is None:
             self.tell("Choose a track first")
             return
-        point, way = layers.slice_plane(self.sections.scene.shank.track)
-        self.canvas.lay_plane(layers.NAMES["background"], point, way)
+        bench, track = self.bench, self.sections.scene.shank.track
+        if layers.NAMES["plane"] in self.viewer.layers:
+            self._lay(track)
+            return
+        ready = partial(self._plane_ready, track)
+        self.runner.submit("plane", lambda: layers.plane_spec(bench), ready, self.tell)
+
+    def _plane_ready(self, track: Track, spec: Any) -> None:
+        self.canvas.put(spec)
+        self.viewer.layers.move(self.viewer.layers.index(spec.name), 0)
+        self._lay(track)
+
+    def _lay(self, track: Track) -> None:
+        self._show_in_3d(True)
+        for layer in self.viewer.layers:
+            if layer.name.endswith(" surface") or layer.name == layers.NAMES["hull"]:
+                layer.visible = False
+        self.canvas.lay_plane(layers.NAMES["plane"], *layers.slice_plane(track))
 
     # -- table --------------------------------------------------------------------------------------------------
 
@@ -410,11 +442,11 @@ class Workbench(QObject):
         self.read()
 
     def _save_section(self) -> None:
-        from leadline_napari.views.figures import FILTER, save_widget
+        from leadline_napari.views.figures import FILTER, save_view
 
         file, _ = QFileDialog.getSaveFileName(self.section, "Save the section", "section.svg", FILTER)
         if file:
-            save_widget(self.section.log, Path(file))
+            save_view(self.section.log, Path(file))
 
     def close(self) -> None:
         """Let go of everything."""
@@ -456,7 +488,8 @@ def workbench(viewer: napari.Viewer) -> Workbench:
     return _BENCHES[key]
 
 
-def brain_of(viewer: napari.Viewer) -> Brain | None:
-    """The brain that is open in a viewer."""
-    bench = _BENCHES.get(id(viewer))
-    return bench.desk.brain if bench is not None and bench.desk is not None else None
+def close_workbench(viewer: napari.Viewer) -> None:
+    """Let go of a viewer's workbench, where it has one; its docks go with the window."""
+    bench = _BENCHES.pop(id(viewer), None)
+    if bench is not None:
+        bench.close()

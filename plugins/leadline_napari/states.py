@@ -227,3 +227,19 @@ class Pose:
     order: tuple[int, int, int]
     vertical: str
     horizontal: str
+
+
+@dataclass(frozen=True, slots=True)
+class CorrectionState:
+    """What the corrections dock shows. ``by_hand`` : the track in hand was drawn. ``pairs`` : in words. ``in_force`` :
+    pairs refine the registration from the next run on; ``same`` : they are the ones shown."""
+
+    title: str = ""
+    editing: bool = False
+    by_hand: bool = False
+    can_edit: bool = False
+    pairs: tuple[str, ...] = ()
+    errors: str = ""
+    in_force: bool = False
+    same: bool = True
+    registered: bool = False

@@ -2,10 +2,10 @@
 
 from __future__ import annotations
 
-import sys
 from pathlib import Path
 
 import numpy as np
+from tests.good_brain import SHAPE, STACK_UM, entry_um, tip_um, write_good_brain
 
 from leadline.io.brainfile import read_brain
 from leadline.io.tables import anchors_text, suggestions_text
@@ -15,9 +15,6 @@ from leadline.model.transform import Affine, PointTransform, Registration
 from leadline.pipeline import products, work
 from leadline.pipeline.bench import Bench
 from leadline.pipeline.exact import answer, ground
-
-sys.path.insert(0, str(Path(__file__).parents[1]))
-from good_brain import SHAPE, STACK_UM, entry_um, tip_um, write_good_brain
 
 SUGGESTED = Anchor("A", 0, 600.0, 1200.0, 45.0, "upper edge of the hippocampus")
 

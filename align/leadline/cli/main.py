@@ -9,7 +9,7 @@ import typer
 
 from leadline.base.errors import Faults, LeadlineError
 from leadline.base.progress import Cancelled
-from leadline.cli import atlas, brains, compare, demo, export, learn, points, report, units
+from leadline.cli import atlas, brains, compare, demo, export, learn, points, report, units, view
 from leadline.cli.terminal import err
 
 app = typer.Typer(
@@ -30,6 +30,7 @@ units.add_to(app)
 report.add_to(app)
 export.add_to(app)
 compare.add_to(app)
+view.add_to(app)
 
 
 def main() -> None:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from functools import cached_property
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -20,7 +21,7 @@ if TYPE_CHECKING:
 MIN_STEP_UM = 1e-3
 
 
-@dataclass(frozen=True, slots=True, eq=False)
+@dataclass(frozen=True, eq=False)
 class LabelTable:
     """Structures along a track and along copies of it moved sideways, evenly spaced in depth.
 
@@ -43,6 +44,15 @@ class LabelTable:
         object.__setattr__(self, "ids", frozen(ids, np.int64))
         object.__setattr__(self, "code", frozen(np.searchsorted(ids, self.label_id), np.uint16))
         object.__setattr__(self, "lateral_code", frozen(np.searchsorted(ids, self.lateral_label_id), np.uint16))
+
+    @cached_property
+    def mean_cell(self) -> FloatArray:
+        """Where along the track each of ``ids`` lies on average, in cells."""
+        codes = self.lateral_code.ravel()
+        cells = np.tile(np.arange(self.depth_um.size), len(self.lateral_code))
+        count = np.bincount(codes, minlength=self.ids.size)
+        place = np.bincount(codes, weights=cells, minlength=self.ids.size)
+        return np.asarray(np.where(count > 0, place / np.maximum(count, 1), np.inf), np.float64)
 
     def cell(self, depth_um: FloatArray) -> IntArray:
         """Index of the nearest depth ``(...)``."""
@@ -85,16 +95,22 @@ def odds_of(region_id: IntArray, region_draws: IntArray) -> Odds:
 
 
 def shifted(
-    posterior: DepthPosterior, before: Sequence[Anchor], after: Sequence[Anchor], by_hand: DepthMap | None = None
+    posterior: DepthPosterior,
+    before: Sequence[Anchor],
+    after: Sequence[Anchor],
+    by_hand: DepthMap | None = None,
+    *,
+    median_um: FloatArray | None = None,
 ) -> DepthPosterior:
     """The draws of ``posterior``, in which the anchors ``before`` counted, moved so that their median meets ``after``.
 
     Anchors that stay hold their place; at one that was placed or moved the median goes through it; between them the
     shift is linear in tip distance and beyond the outermost it is constant (slope 1, as for anchors by hand). Taking
     one away moves nothing: only the exact posterior knows where the recording pulls then. With ``by_hand`` the median
-    becomes that map instead. The spread stays as it was.
+    becomes that map instead. The spread stays as it was. ``median_um`` : the posterior's own, where it is known.
     """
-    tip, median = posterior.tip_distance_um, posterior.median_um
+    tip = posterior.tip_distance_um
+    median = posterior.median_um if median_um is None else median_um
     if by_hand is not None:
         return _moved(posterior, by_hand(tip) - median)
     if not after or set(after) <= set(before):

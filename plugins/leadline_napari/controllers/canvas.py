@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from leadline.base.errors import LeadlineError
+from leadline.model.frames import axes_matrix
 from leadline_napari.states import LayerSpec, Pose
 from leadline_napari.style import ORANGE, PINK, SKY, VERMILION
 
@@ -30,9 +31,12 @@ NAMES = {
     "tracks": "Tracks",
     "contacts": "Contacts",
     "hull": "Brain hull",
+    "plane": "Plane along track",
 }
 OUTLINE_GRAIN_UM = 25.0
 TRACK_STEP_UM = 25.0
+PLANES_KEPT = 32
+PLANE_VOXELS = 60e6
 CONTACT_PX_UM = 60.0
 SAMPLE_PLANES = 3
 SURFACE_GRAIN_UM = 100.0
@@ -57,7 +61,7 @@ def stack_specs(bench: Bench) -> list[LayerSpec]:
     """Background and dye, every resolution, read as they are looked at."""
     specs = [_stack(NAMES["background"], bench.background, "gray", "translucent", (1.0, 99.8), 1.0)]
     if bench.dye is not None:
-        specs.append(_stack(NAMES["dye"], bench.dye, ORANGE, "additive", (50.0, 99.95), 0.9))
+        specs.append(_stack(NAMES["dye"], bench.dye, ORANGE, "additive", (98.0, 99.99), 1.0))
     return specs
 
 
@@ -108,28 +112,49 @@ def _limits(volume: Volume, percentiles: tuple[float, float]) -> tuple[float, fl
     return (low, high) if high > low else (low, low + 1.0)
 
 
+class AtlasInStack:
+    """Atlas regions on a grid in stack space, worked out for just the voxels that are asked for.
+
+    An array to those who slice it: ``shape``, ``dtype``, ``ndim`` and basic indexing; values are rows of ``ids``.
+    """
+
+    ndim = 3
+    dtype = np.dtype(np.uint16)
+
+    def __init__(self, stack: Volume, atlas: Atlas, registration: Registration, grain_um: float) -> None:
+        factor = np.maximum(np.rint(grain_um / stack.voxel_um), 1)
+        self.voxel_um = stack.voxel_um * factor
+        self.origin_um = stack.origin_um + (self.voxel_um - stack.voxel_um) / 2
+        self.shape = tuple(int(n) for n in np.ceil(np.asarray(stack.shape) / factor))
+        self.ids = np.array(sorted(atlas.structures.by_id))
+        self._atlas, self._registration = atlas, registration
+        self._kept: dict[str, AnyArray] = {}
+
+    def __getitem__(self, key: Any) -> AnyArray:
+        """Rows of ``ids`` at the voxels of a basic index; the last few planes are remembered."""
+        parts = (key if isinstance(key, tuple) else (key,)) + (slice(None),) * 3
+        axes = [np.arange(n)[part] for n, part in zip(self.shape, parts, strict=False)]
+        name = str([(a.shape, a[:1].tolist(), a[-1:].tolist()) if a.ndim else int(a) for a in axes])
+        if name not in self._kept:
+            while len(self._kept) >= PLANES_KEPT:
+                self._kept.pop(next(iter(self._kept)))
+            self._kept[name] = self._at(axes)
+        return self._kept[name]
+
+    def _at(self, axes: list[AnyArray]) -> AnyArray:
+        grid = np.stack(np.meshgrid(*(np.atleast_1d(a) for a in axes), indexing="ij"), axis=-1)
+        points = grid.reshape(-1, 3) * self.voxel_um + self.origin_um
+        found = self._atlas.label_at(self._registration.stack_to_atlas(points))
+        shape = tuple(a.size for a in axes if a.ndim)
+        return np.searchsorted(self.ids, found).astype(self.dtype).reshape(shape)
+
+
 def outline_spec(bench: Bench, registration: Registration) -> LayerSpec:
-    """Atlas regions in stack space, one plane worked out when it is looked at; hovering names the region."""
-    import dask.array as da
+    """Atlas regions in stack space; hovering names the region."""
     import pandas as pd
 
-    finest, atlas = bench.background.finest, bench.atlas
-    factor = np.maximum(np.rint(OUTLINE_GRAIN_UM / finest.voxel_um), 1)
-    voxel = finest.voxel_um * factor
-    shape = tuple(int(n) for n in np.ceil(np.asarray(finest.shape) / factor))
-    origin = finest.origin_um + (voxel - finest.voxel_um) / 2
-    axis = pose_of(finest.code).order[0]
-    rows = sorted(atlas.structures.by_id.values(), key=lambda s: s.id)
-    ids = np.array([s.id for s in rows])
-
-    def plane(block_info: Any = None) -> AnyArray:
-        spans = block_info[None]["array-location"]
-        grid = np.stack(np.meshgrid(*(np.arange(a, b) for a, b in spans), indexing="ij"), axis=-1)
-        found = atlas.label_at(registration.stack_to_atlas(grid.reshape(-1, 3) * voxel + origin))
-        return np.searchsorted(ids, found).astype(np.uint16).reshape(grid.shape[:3])
-
-    chunks = tuple((1,) * n if k == axis else (n,) for k, n in enumerate(shape))
-    data = da.map_blocks(plane, chunks=chunks, dtype=np.uint16, meta=np.zeros((0, 0, 0), np.uint16))
+    data = AtlasInStack(bench.background.finest, bench.atlas, registration, OUTLINE_GRAIN_UM)
+    rows = [bench.atlas.structures[int(i)] for i in data.ids]
     features = pd.DataFrame(
         {"index": np.arange(len(rows)), "region": [s.acronym for s in rows], "name": [s.name for s in rows]}
     )
@@ -140,8 +165,8 @@ def outline_spec(bench: Bench, registration: Registration) -> LayerSpec:
         "labels",
         data,
         {
-            "scale": voxel, "translate": origin, "features": features, "opacity": 0.75, "contour": 1,
-            "direct_colours": colours, "axis_labels": axis_names(finest.code),
+            "scale": data.voxel_um, "translate": data.origin_um, "features": features, "opacity": 0.6, "contour": 1,
+            "direct_colours": colours, "axis_labels": axis_names(bench.background.finest.code), "multiscale": False,
         },
     )  # fmt: skip
 
@@ -178,15 +203,16 @@ def contact_spec(
         track = tracks.get((str(penetration), int(shank)))
         if track is not None:
             points[rows] = track.stack_at(table.loc[rows, "track_depth_um"].to_numpy(float))
+    colours = contact_colours(table["region_id"].to_numpy(), structures)
     return LayerSpec(
         NAMES["contacts"],
         "points",
         points,
         {
             "features": table,
-            "size": CONTACT_PX_UM, "face_color": contact_colours(table["region_id"].to_numpy(), structures),
-            "border_color": "#101010", "border_width": 0.0, "symbol": "disc", "opacity": 1.0,
-            "blending": "translucent_no_depth", "projection_mode": "all", "axis_labels": axis_names(code),
+            "size": CONTACT_PX_UM, "face_color": colours, "border_color": colours, "border_width": 0.0,
+            "symbol": "disc", "opacity": 1.0, "blending": "translucent_no_depth", "projection_mode": "all",
+            "axis_labels": axis_names(code),
         },
     )  # fmt: skip
 
@@ -205,12 +231,12 @@ def surface_specs(atlas: Atlas, registration: Registration, results: Results, co
     step = np.maximum(np.rint(SURFACE_GRAIN_UM / atlas.voxel_um).astype(int), 1)
     small = labels[:: step[0], :: step[1], :: step[2]]
     grain = atlas.voxel_um * step
-    specs = [_surface(NAMES["hull"], small > 0, grain, "#9aa3ad", 0.12, registration, code)]
+    specs = [_surface(NAMES["hull"], small > 0, grain, "#c9d2dc", 0.25, registration, code)]
     for structure_id in crossed(results, atlas):
         row = atlas.structures[structure_id]
         inside = small == structure_id
         if inside.any():
-            specs.append(_surface(f"{row.acronym} surface", inside, grain, row.colour, 0.28, registration, code))
+            specs.append(_surface(f"{row.acronym} surface", inside, grain, row.colour, 0.5, registration, code))
     return specs
 
 
@@ -242,6 +268,8 @@ def _surface(
     field = gaussian_filter(np.pad(inside.astype(np.float32), 2), 1.0)
     vertices, faces, _, _ = marching_cubes(field, min(0.5, float(field.max()) * 0.6))
     points = registration.atlas_to_stack((vertices - 2) * grain_um)
+    if np.linalg.det(axes_matrix(code)) > 0:  # the canvas is left-handed; faces must look outward to be lit
+        faces = faces[:, ::-1]
     rgb = [int(colour[k : k + 2], 16) / 255 for k in (1, 3, 5)]
     return LayerSpec(
         name,
@@ -250,6 +278,22 @@ def _surface(
         {
             "vertex_colors": np.tile([*rgb, 1.0], (len(points), 1)), "opacity": opacity, "shading": "smooth",
             "blending": "translucent", "axis_labels": axis_names(code),
+        },
+    )  # fmt: skip
+
+
+def plane_spec(bench: Bench) -> LayerSpec:
+    """The background in memory at one resolution, to be cut along a plane in 3-D (only whole volumes can be)."""
+    levels = [v for v in bench.background.levels if float(np.prod(v.shape)) <= PLANE_VOXELS]
+    volume = levels[0] if levels else bench.background.levels[-1]
+    code = bench.background.finest.code
+    return LayerSpec(
+        NAMES["plane"],
+        "image",
+        volume.array(),
+        {
+            "scale": volume.voxel_um, "translate": volume.origin_um, "colormap": "gray", "blending": "translucent",
+            "contrast_limits": _limits(volume, (1.0, 99.8)), "axis_labels": axis_names(code), "multiscale": False,
         },
     )  # fmt: skip
 

@@ -22,6 +22,20 @@ UNITS = (
     ("_ua_per_mm3", "uA/mm³"), ("_per_100um", "per 100 um"), ("_uv2_per_hz", "uV²/Hz"), ("_db", "dB"), ("_hz", "Hz"),
     ("_uv", "uV"), ("_rad", "rad"), ("_s", "s"),
 )  # fmt: skip
+TITLES = {
+    "ripple_power_db": "Ripple power",
+    "high_frequency_power_db": "Fast power",
+    "unit_density_per_100um": "Unit density",
+    "spike_amplitude_uv": "Spike size",
+    "theta_coherence": "Theta coherence",
+    "neighbour_correlation": "Neighbour corr.",
+    "neighbour_coherence": "Neighbour coh.",
+    "evoked_csd_ua_per_mm3": "Evoked CSD",
+    "evoked_amplitude_uv": "Evoked size",
+    "evoked_latency_s": "Evoked latency",
+    "sink_latency_s": "Sink latency",
+    "evoked_rate_hz": "Evoked spikes",
+}
 SHOWN_FIRST = ("lfp_power", "csd", "ripple_power_db", "unit_density_per_100um", "spike_amplitude_uv")
 RANGE = (2.0, 98.0)
 
@@ -104,7 +118,7 @@ def chosen(lanes: Sequence[Lane], names: Sequence[str]) -> tuple[Lane, ...]:
 def _curve(name: str, tip_um: FloatArray, values: FloatArray) -> Lane:
     feature = FEATURE_BY_NAME[name]
     low, high = (-np.pi, np.pi) if feature.circular else _range(values, 0.0, 100.0)
-    words = feature.words[0].upper() + feature.words[1:]
+    words = TITLES.get(name, feature.words[0].upper() + feature.words[1:])
     palette = "cyclic" if feature.circular else "sequential"
     ticks = ((0.0, _short(low)), (1.0, _short(high)))
     return Lane(name, words, _unit(name), tip_um, values, low, high, palette=palette, ticks=ticks)
@@ -121,7 +135,7 @@ def _pictures(spectra: Spectra, shank: int) -> list[Lane]:
         mean = np.nansum(power, axis=0, keepdims=True) / np.maximum(there.sum(axis=0, keepdims=True), 1)
         relative = power - mean
         lane = Lane(
-            "lfp_power", "LFP power", "dB re depth mean", tip, relative, 0.0, 1.0,
+            "lfp_power", "LFP power", "dB", tip, relative, 0.0, 1.0,
             across=spectra.frequency_hz, across_unit="Hz", across_log=True,
         )  # fmt: skip
         lanes.append(with_range(lane, *RANGE))

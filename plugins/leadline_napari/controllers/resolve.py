@@ -177,15 +177,9 @@ def ribbon_of(scene: Scene, live: Live, structures: Structures) -> Ribbon:
 
 
 def _rank(shank: ShankGround, ids: IntArray) -> AnyArray:
-    """Where along the track each structure lies, on average; unknown ones last."""
-    table = shank.table
-    cells = np.arange(table.depth_um.size)
-    weight = np.bincount(table.lateral_code.ravel(), minlength=table.ids.size)
-    place = np.bincount(
-        table.lateral_code.ravel(), weights=np.tile(cells, len(table.lateral_code)), minlength=table.ids.size
-    )
-    mean = dict(zip(table.ids.tolist(), (place / np.maximum(weight, 1)).tolist(), strict=True))
-    return np.array([mean.get(int(i), float(cells.size)) for i in ids])
+    """Where along the track each structure lies, on average; ones that the track's copies never meet last."""
+    mean = dict(zip(shank.table.ids.tolist(), shank.table.mean_cell.tolist(), strict=True))
+    return np.array([mean.get(int(i), np.inf) for i in ids])
 
 
 def readout_of(scene: Scene, live: Live, structures: Structures, lanes: Iterable[Lane], tip_um: float) -> Readout:

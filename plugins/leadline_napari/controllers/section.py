@@ -161,7 +161,7 @@ class SectionController:
         by_hand = None
         if not self.bench.brain.settings.anchor.physiology or scene.shank.evidence.profile is None:
             by_hand = manual_map(anchors, scene.end_um)
-        posterior = shifted(base.posterior, base.anchors, anchors, by_hand)
+        posterior = shifted(base.posterior, base.anchors, anchors, by_hand, median_um=base.median_um)
         self.live = live_preview(posterior, scene.shank, anchors, base.sd_um)
 
     def _session_changed(self, before: Session, after: Session) -> None:

@@ -68,7 +68,6 @@ class BrainView(QWidget):
         layout.addWidget(self._heading("Messages"))
         self.messages = QListWidget()
         self.messages.setWordWrap(True)
-        self.messages.setAlternatingRowColors(True)
         self.messages.setToolTip("What the last run said, and how to mend what went wrong")
         self.messages.setAccessibleName("Messages")
         self.messages.setHorizontalScrollBarPolicy(Qt.ScrollBarPolicy.ScrollBarAlwaysOff)

@@ -41,7 +41,7 @@ class Canvas:
     def _refresh_points(self, layer: Any, spec: LayerSpec) -> Layer:
         layer.data = spec.data
         layer.features = spec.options["features"]
-        layer.face_color = spec.options["face_color"]
+        layer.face_color = layer.border_color = spec.options["face_color"]
         return layer
 
     def _add(self, spec: LayerSpec) -> Layer:
@@ -87,17 +87,27 @@ class Canvas:
         self.viewer.dims.margin_right = margins
 
     def lay_plane(self, name: str, point_um: Any, way: Any) -> None:
-        """In 3-D, cut an image along a plane that holds a line of direction ``way``; napari wants voxel places."""
+        """In 3-D, cut an image along the plane that holds a line of direction ``way``, and look straight at it."""
         layer = self.viewer.layers[name]
         self.viewer.dims.ndisplay = 3
         way = np.asarray(way, float)
-        other = np.eye(3)[int(np.argmin(np.abs(way)))]
-        normal = np.cross(way, np.cross(way, other))
+        across = np.eye(3)[self.viewer.dims.order[0]]
+        normal = across - (across @ way) * way
+        normal /= np.linalg.norm(normal)
         layer.depiction = "plane"
-        layer.plane.position = tuple(layer.world_to_data(np.asarray(point_um, float)))
-        layer.plane.normal = tuple(normal * np.asarray(layer.scale) / np.linalg.norm(normal))
+        layer.plane.position = tuple(np.asarray(layer.world_to_data(np.asarray(point_um, float)), float))
+        in_voxels = normal * np.asarray(layer.scale, float)
+        layer.plane.normal = tuple(in_voxels / np.linalg.norm(in_voxels))
         layer.plane.thickness = 1
         layer.visible = True
+        camera = self.viewer.scene.camera
+        camera.center = tuple(float(v) for v in point_um)
+        camera.set_view_direction(tuple(normal), tuple(-way))
+
+    def look_down(self) -> None:
+        """Look at the brain a little from above and from one side."""
+        first, second, third = self.viewer.scene.camera.angles
+        self.viewer.scene.camera.angles = (first + 20.0, second + 35.0, third + 10.0)
 
     def on_pick(self, name: str, chosen: Callable[[int], None]) -> None:
         """Call ``chosen`` with the row of a point that is clicked."""

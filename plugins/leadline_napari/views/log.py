@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import pyqtgraph as pg
@@ -21,6 +22,7 @@ FOOT_PX = 18
 AXIS_PX = 44
 WIDTHS = {"tissue": 96, "strata": 70, "band": 150, "sites": 46, "odds": 76, "lane": 84}
 LEFT = ("tissue", "strata")
+ODDS_COLUMN = 60
 
 
 class Title(pg.GraphicsWidget):
@@ -44,12 +46,10 @@ class Title(pg.GraphicsWidget):
         line = box.height() / 3
         font = painter.font()
         font.setPointSizeF(7.5)
-        font.setBold(True)
         first, second = _two_lines(self.text, QFontMetricsF(font), box.width())
-        for k, (text, colour, bold) in enumerate(
-            ((first, self.theme.ink, True), (second, self.theme.ink, True), (self.unit, self.theme.soft, False))
+        for k, (text, colour) in enumerate(
+            ((first, self.theme.ink), (second, self.theme.ink), (self.unit, self.theme.soft))
         ):
-            font.setBold(bold)
             painter.setFont(font)
             painter.setPen(QColor(colour))
             short = QFontMetricsF(font).elidedText(text, Qt.TextElideMode.ElideRight, box.width())
@@ -129,9 +129,22 @@ class DepthAxis(pg.AxisItem):
         return [f"{v:.0f}" for v in values]
 
 
+@dataclass(frozen=True, slots=True, eq=False)
+class Column:
+    """One lane with its heading and its scale."""
+
+    kind: str
+    at: int
+    plot: pg.PlotItem
+    title: Title
+    mark: Mark
+    cursor: pg.InfiniteLine
+    foot: Foot
+
+
 class Log(pg.GraphicsLayoutWidget):
     """All lanes. Signals speak of ``side`` 'depth' (left lanes, um of track depth) or 'tip' (right lanes, um from
-    the tip)."""
+    the tip). Columns are made on first need and then hidden or shown: nothing is torn down while the window lives."""
 
     hovered = Signal(str, object)
     double_clicked = Signal(str, float)
@@ -140,99 +153,110 @@ class Log(pg.GraphicsLayoutWidget):
     def __init__(self, theme: Theme) -> None:
         super().__init__()
         self.theme = theme
-        self.setBackground(theme.paper)
         self.ci.layout.setContentsMargins(4, 2, 4, 2)
         self.ci.layout.setHorizontalSpacing(4)
         self.ci.layout.setVerticalSpacing(0)
-        self.plots: list[tuple[str, pg.PlotItem, Title, Mark, pg.InfiniteLine]] = []
-        self.feet: list[Foot] = []
         self.end_um = 0.0
+        self._extent: tuple[float, float, float] | None = None
+        self._shown = 0
+        self.tip_axis, self.depth_axis = TipAxis("right"), DepthAxis("left")
         self.tissue, self.strata = TissueMark(theme), StrataMark(theme)
         self.band, self.sites, self.odds = BandMark(theme), SitesMark(theme), RibbonMark(theme)
-        self.lanes: list[LaneMark] = []
-        self._names: tuple[str, ...] = ()
-        self._extent: tuple[float, float, float] | None = None
-        self.tip_axis = TipAxis("right")
-        self.depth_axis = DepthAxis("left")
+        fixed = (("tissue", self.tissue), ("strata", self.strata), ("band", self.band), ("sites", self.sites))
+        self._fixed: list[Column] = []
+        for at, (kind, mark) in enumerate(fixed):
+            axes = {"left": self.depth_axis} if at == 0 else {}
+            self._fixed.append(self._column(at, kind, mark, axes))
+        self._lanes: list[Column] = []
+        self._odds = self._column(ODDS_COLUMN, "odds", self.odds, {"right": self.tip_axis})
+        self.set_theme(theme)
         self.scene().sigMouseMoved.connect(self._moved)
         self.scene().sigMouseClicked.connect(self._clicked)
         self.setMinimumSize(360, 240)
 
+    @property
+    def columns(self) -> list[Column]:
+        """Columns that are shown, from left to right."""
+        return [*self._fixed, *self._lanes[: self._shown], self._odds]
+
     # -- laying out ---------------------------------------------------------------------------------------------
 
-    def lay_out(self, lane_names: tuple[str, ...]) -> None:
-        """Build the columns; only when the choice of lanes changes."""
-        self._names = lane_names
-        self.clear()
-        self.plots.clear()
-        self.feet.clear()
-        self.tip_axis, self.depth_axis = TipAxis("right"), DepthAxis("left")
-        self.tissue, self.strata = TissueMark(self.theme), StrataMark(self.theme)
-        sites, odds = SitesMark(self.theme), RibbonMark(self.theme)
-        self.band = BandMark(self.theme)
-        self.sites, self.odds = sites, odds
-        self.lanes = [LaneMark(self.theme) for _ in lane_names]
-        columns = [("tissue", self.tissue), ("strata", self.strata), ("band", self.band), ("sites", sites)]
-        columns += [("lane", lane) for lane in self.lanes] + [("odds", odds)]
-        for column, (kind, mark) in enumerate(columns):
-            self._add_column(column, kind, mark, last=column == len(columns) - 1)
-        self.rebuilt()
-
-    def rebuilt(self) -> None:
-        """Hook for the owner: marks are new objects now."""
-
-    def _add_column(self, column: int, kind: str, mark: Mark, *, last: bool) -> None:
-        title = Title(self.theme)
-        self.addItem(title, row=0, col=column)
-        axes = {"left": self.depth_axis} if column == 0 else {"right": self.tip_axis} if last else {}
-        plot = self.addPlot(row=1, col=column, axisItems=axes)
+    def _column(self, at: int, kind: str, mark: Mark, axes: dict[str, pg.AxisItem]) -> Column:
+        title, foot = Title(self.theme), Foot(self.theme)
+        self.addItem(title, row=0, col=at)
+        plot = self.addPlot(row=1, col=at, axisItems=axes)
+        self.addItem(foot, row=2, col=at)
         for name in ("left", "right", "top", "bottom"):
             plot.showAxis(name, name in axes)
-        for axis in axes.values():
-            self._dress(axis)
-            axis.setWidth(AXIS_PX)
-        foot = Foot(self.theme)
-        self.addItem(foot, row=2, col=column)
         box = plot.getViewBox()
         box.setMouseEnabled(x=False, y=True)
         box.setMenuEnabled(False)
         box.setDefaultPadding(0)
         box.invertY(True)
         box.setXRange(0, 1, padding=0)
-        box.setBorder(pg.mkPen(self.theme.faint, width=1))
         plot.hideButtons()
-        if self.plots:
-            plot.setYLink(self.plots[0][1])
+        if at:
+            plot.setYLink(self._fixed[0].plot)
         plot.addItem(mark)
-        cursor = pg.InfiniteLine(angle=0, pen=pg.mkPen(self.theme.ink, width=1, style=Qt.PenStyle.DotLine))
+        cursor = pg.InfiniteLine(angle=0)
         cursor.setZValue(50)
         cursor.hide()
         plot.addItem(cursor)
-        layout = self.ci.layout
-        layout.setColumnMinimumWidth(column, WIDTHS[kind] * 0.5 + (AXIS_PX if axes else 0))
-        layout.setColumnPreferredWidth(column, WIDTHS[kind] + (AXIS_PX if axes else 0))
-        layout.setColumnStretchFactor(column, WIDTHS[kind])
-        self.plots.append((kind, plot, title, mark, cursor))
-        self.feet.append(foot)
+        column = Column(kind, at, plot, title, mark, cursor, foot)
+        self._make_room(column, shown=True)
+        for axis in axes.values():
+            axis.setWidth(AXIS_PX)
+        return column
 
-    def _dress(self, axis: pg.AxisItem) -> None:
+    def _make_room(self, column: Column, *, shown: bool) -> None:
+        axis = AXIS_PX if column.kind in ("tissue", "odds") else 0
+        width = WIDTHS[column.kind]
+        layout = self.ci.layout
+        layout.setColumnMinimumWidth(column.at, width * 0.5 + axis if shown else 0)
+        layout.setColumnPreferredWidth(column.at, width + axis if shown else 0)
+        layout.setColumnStretchFactor(column.at, width if shown else 0)
+        layout.setColumnMaximumWidth(column.at, 10_000 if shown else 0)
+
+    def _show_lanes(self, count: int) -> None:
+        """Show so many physiology columns."""
+        while len(self._lanes) < count:
+            lane = self._column(len(self._fixed) + len(self._lanes), "lane", LaneMark(self.theme), {})
+            self._dress(lane)
+            if self._extent is not None:
+                self._stretch(lane, self._extent)
+            self._lanes.append(lane)
+        for k, lane in enumerate(self._lanes):
+            for item in (lane.title, lane.plot, lane.foot):
+                item.setVisible(k < count)
+            self._make_room(lane, shown=k < count)
+        self._shown = count
+
+    def set_theme(self, theme: Theme) -> None:
+        """Change colours."""
+        self.theme = theme
+        self.setBackground(theme.paper)
+        for column in (*self._fixed, *self._lanes, self._odds):
+            self._dress(column)
         font = self.font()
         font.setPointSizeF(7.5)
-        axis.setStyle(tickFont=font, tickLength=-4, hideOverlappingLabels=True, autoExpandTextSpace=False)
-        axis.setPen(pg.mkPen(self.theme.faint))
-        axis.setTextPen(pg.mkPen(self.theme.soft))
+        for axis in (self.tip_axis, self.depth_axis):
+            axis.setStyle(tickFont=font, tickLength=-4, hideOverlappingLabels=True, autoExpandTextSpace=False)
+            axis.setPen(pg.mkPen(theme.faint))
+            axis.setTextPen(pg.mkPen(theme.soft))
+
+    def _dress(self, column: Column) -> None:
+        for part in (column.mark, column.title, column.foot):
+            part.theme = self.theme
+            part.update()
+        column.plot.getViewBox().setBorder(pg.mkPen(self.theme.faint, width=1))
+        column.cursor.setPen(pg.mkPen(self.theme.ink, width=1, style=Qt.PenStyle.DotLine))
 
     # -- showing ------------------------------------------------------------------------------------------------
 
-    def show(self, state: SectionState | None = None) -> None:
+    def draw(self, state: SectionState) -> None:
         """Draw a snapshot; parts that are the same object as before stay as they are."""
-        if state is None:
-            super().show()
-            return
-        names = tuple(lane.name for lane in state.lanes)
-        if names != self._names or not self.plots:
-            self.lay_out(names)
-            self._extent = None
+        if len(state.lanes) != self._shown:
+            self._show_lanes(len(state.lanes))
         self._set_extent(state)
         for mark, value, give in (
             (self.tissue, state.tissue, "tissue"),
@@ -243,13 +267,12 @@ class Log(pg.GraphicsLayoutWidget):
         ):
             if getattr(mark, give) is not value:
                 if value is None:
-                    setattr(mark, give, None)
-                    mark.update()
+                    mark.clear()
                 else:
                     getattr(mark, f"set_{give}")(value)
-        for mark, lane in zip(self.lanes, state.lanes, strict=True):
-            if mark.lane is not lane:
-                mark.set_lane(lane)
+        for column, lane in zip(self._lanes, state.lanes, strict=False):
+            if column.mark.lane is not lane:
+                column.mark.set_lane(lane)
         self._set_titles(state)
 
     def _set_extent(self, state: SectionState) -> None:
@@ -258,59 +281,61 @@ class Log(pg.GraphicsLayoutWidget):
             return
         self._extent, self.end_um = extent, state.end_um
         self.tip_axis.end_um = state.end_um
-        for _, plot, _, mark, _ in self.plots:
-            mark.set_extent(*extent)
-            plot.getViewBox().setLimits(yMin=extent[0], yMax=extent[1], minYRange=100.0)
+        for column in (*self._fixed, *self._lanes, self._odds):
+            self._stretch(column, extent)
         self.whole()
+
+    def _stretch(self, column: Column, extent: tuple[float, float, float]) -> None:
+        column.mark.set_extent(*extent)
+        column.plot.getViewBox().setLimits(yMin=extent[0], yMax=extent[1], minYRange=100.0)
 
     def whole(self) -> None:
         """Show the whole track."""
-        if self._extent and self.plots:
-            self.plots[0][1].getViewBox().setYRange(*self._extent[:2], padding=0)
+        if self._extent:
+            self._fixed[0].plot.getViewBox().setYRange(*self._extent[:2], padding=0)
 
     def _set_titles(self, state: SectionState) -> None:
+        exact = "exact" if state.ribbon and state.ribbon.exact else "preview"
         heads = {
             "tissue": (state.tissue.title if state.tissue else "Tissue", "± 400 um"),
             "strata": ("Strata", "atlas"),
             "band": ("Anchors", "depth ↔ from tip"),
             "sites": ("Sites", ""),
-            "odds": ("Odds", "exact" if state.ribbon and state.ribbon.exact else "preview"),
+            "odds": ("Odds", exact),
         }
         lanes = iter(state.lanes)
-        last = len(self.plots) - 1
-        for column, (kind, _, title, _, _) in enumerate(self.plots):
+        for column in self.columns:
             ticks: tuple[tuple[float, str], ...] = ()
-            if kind == "lane":
+            if column.kind == "lane":
                 lane = next(lanes)
                 words = (lane.title, f"{lane.across_unit} · {lane.unit}" if lane.across_unit else lane.unit)
                 ticks = lane.ticks
             else:
-                words = heads[kind]
-                if kind == "odds":
-                    ticks = ((0.0, "0"), (1.0, "1"))
-            if (title.text, title.unit) != words:
-                title.set_text(*words)
-            left, right = AXIS_PX if column == 0 else 0.0, AXIS_PX if column == last else 0.0
-            self.feet[column].set_ticks(ticks, left, right)
+                words = heads[column.kind]
+                ticks = ((0.0, "0"), (1.0, "1")) if column.kind == "odds" else ()
+            if (column.title.text, column.title.unit) != words:
+                column.title.set_text(*words)
+            left, right = AXIS_PX if column.kind == "tissue" else 0.0, AXIS_PX if column.kind == "odds" else 0.0
+            column.foot.set_ticks(ticks, left, right)
 
     def show_cursor(self, readout: Readout | None) -> None:
         """A line across every lane, at the depth on the left and at the contact on the right."""
-        for kind, _, _, _, line in self.plots:
-            if readout is None or kind == "band":
-                line.hide()
+        for column in self.columns:
+            if readout is None or column.kind == "band":
+                column.cursor.hide()
                 continue
-            line.setPos(readout.depth_um if kind in LEFT else self.end_um - readout.tip_um)
-            line.show()
+            column.cursor.setPos(readout.depth_um if column.kind in LEFT else self.end_um - readout.tip_um)
+            column.cursor.show()
 
     # -- mouse --------------------------------------------------------------------------------------------------
 
     def side_at(self, at: QPointF) -> tuple[str, float] | None:
         """Side and um under a place in the scene; in the tie band the nearer side counts."""
-        for kind, plot, _, _, _ in self.plots:
-            box = plot.getViewBox()
+        for column in self.columns:
+            box = column.plot.getViewBox()
             if box.sceneBoundingRect().contains(at):
                 view = box.mapSceneToView(at)
-                left = kind in LEFT or (kind == "band" and view.x() < 0.5)
+                left = column.kind in LEFT or (column.kind == "band" and view.x() < 0.5)
                 return ("depth", view.y()) if left else ("tip", self.end_um - view.y())
         return None
 

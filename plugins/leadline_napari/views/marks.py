@@ -40,6 +40,19 @@ class Mark(pg.GraphicsObject):
             self.prepareGeometryChange()
             self._top, self._bottom, self.end_um = top_um, bottom_um, end_um
 
+    def seen(self) -> tuple[float, float]:
+        """The part of the scale that is in view: vector figures do not cut off what lies beyond it."""
+        box = self.getViewBox()
+        low, high = box.viewRange()[1] if box is not None else (self._top, self._bottom)
+        return max(low, self._top), min(high, self._bottom)
+
+    def clear(self) -> None:
+        """Draw nothing."""
+        for name in ("tissue", "image", "strata", "band", "sites", "ribbon", "lane"):
+            if hasattr(self, name):
+                setattr(self, name, None)
+        self.update()
+
     def boundingRect(self) -> QRectF:
         """The whole lane."""
         return QRectF(0.0, self._top, 1.0, self._bottom - self._top)
@@ -69,15 +82,18 @@ class StrataMark(Mark):
         """Draw runs, then borders, then names where there is room for them."""
         if self.strata is None:
             return
+        low, high = self.seen()
         for run in self.strata.runs:
-            painter.fillRect(QRectF(0, run.top_um, 1, run.bottom_um - run.top_um), QColor(*run.colour))
-        self._borders(painter)
+            top, bottom = max(run.top_um, low), min(run.bottom_um, high)
+            if bottom > top:
+                painter.fillRect(QRectF(0, top, 1, bottom - top), QColor(*run.colour))
+        self._borders(painter, low, high)
         transform = painter.transform()
         painter.save()
         painter.resetTransform()
         measures = self.font_of(painter)
         for run in self.strata.runs:
-            top, bottom = max(run.top_um, self._top), min(run.bottom_um, self._bottom)
+            top, bottom = max(run.top_um, low), min(run.bottom_um, high)
             box = transform.mapRect(QRectF(0, top, 1, bottom - top))
             if box.height() > measures.height() * 0.92:
                 painter.setPen(QColor(ink_on(run.colour)))
@@ -85,12 +101,14 @@ class StrataMark(Mark):
                 painter.drawText(box, Qt.AlignmentFlag.AlignCenter, text)
         painter.restore()
 
-    def _borders(self, painter: QPainter) -> None:
+    def _borders(self, painter: QPainter, low: float, high: float) -> None:
         """A line at each border and, on both sides, a whisker as long as one standard deviation."""
         sd = self.strata.border_sd_um
         pen = QPen(QColor(self.theme.paper), 1.4)
         pen.setCosmetic(True)
         for run in self.strata.runs[1:]:
+            if not low < run.top_um < high:
+                continue
             painter.setPen(pen)
             painter.drawLine(QLineF(0, run.top_um, 1, run.top_um))
             veil = QColor(self.theme.paper)
@@ -164,8 +182,12 @@ class SitesMark(Mark):
         if self.sites is None:
             return
         chosen = None
-        for (rect, channel), rgb in zip(self._rects, self.sites.rgb.tolist(), strict=True):
-            painter.fillRect(rect, QColor(*rgb))
+        brushes: dict[tuple[int, ...], QColor] = {}
+        for (rect, channel), rgb in zip(self._rects, map(tuple, self.sites.rgb.tolist()), strict=True):
+            colour = brushes.get(rgb)
+            if colour is None:
+                colour = brushes[rgb] = QColor(*rgb)
+            painter.fillRect(rect, colour)
             if channel == self.sites.chosen:
                 chosen = rect
         if chosen is not None:
@@ -198,7 +220,7 @@ class RibbonMark(Mark):
         edges = [tips[0] - 10.0, *((a + b) / 2 for a, b in pairwise(tips)), tips[-1] + 10.0]
         for row, shares in enumerate(ribbon.share.tolist()):
             top = self.end_um - edges[row + 1]
-            height = edges[row + 1] - edges[row]
+            height = (edges[row + 1] - edges[row]) * 1.04  # a little over the next row: no seams in vector figures
             left = 0.0
             for share, colour in zip(shares, colours, strict=True):
                 if share > 0.0:
@@ -363,7 +385,7 @@ class BandMark(Mark):
         """The tie, and which part of it ('depth', 'tip' or 'line'), under a place in the lane."""
         if self.band is None:
             return None
-        transform = self.deviceTransform()
+        transform = self.sceneTransform()
         point = transform.map(at)
         best, part_of_best = GRIP_PX, None
         for tie in sorted(self.band.ties, key=lambda t: not t.held):

@@ -79,7 +79,6 @@ class SectionView(QWidget):
         super().__init__()
         self.setObjectName("leadline-section")
         self.log = Log(theme)
-        self.log.rebuilt = self._wire_band
         self.theme = theme
         self._state: SectionState | None = None
         self._shown_in_hand: InHand | None = None
@@ -104,6 +103,7 @@ class SectionView(QWidget):
         self.readout.setSizePolicy(QSizePolicy.Policy.Ignored, QSizePolicy.Policy.Fixed)
         layout.addWidget(self.readout)
         self._shortcuts()
+        self._wire_band()
         self.whole_asked.connect(self.log.whole)
         self.show_readout(None)
 
@@ -192,6 +192,7 @@ class SectionView(QWidget):
         spin.setDecimals(1)
         spin.setSingleStep(5.0)
         spin.setPrefix(f"{prefix} ")
+        spin.setSpecialValueText(prefix)  # shown at the lowest value: nothing is in hand
         spin.setSuffix(" um")
         spin.setToolTip(tip)
         spin.setAccessibleName(tip)
@@ -221,16 +222,11 @@ class SectionView(QWidget):
     # -- showing ------------------------------------------------------------------------------------------------
 
     def set_theme(self, theme: Theme) -> None:
-        """Change colours; lanes are built anew."""
-        if theme is self.theme:
-            return
-        self.theme = self.log.theme = theme
-        self.log.setBackground(theme.paper)
-        self.log.lay_out(())
-        self.log._names = ("",)
+        """Change colours."""
+        self.theme = theme
+        self.log.set_theme(theme)
         if self._state is not None:
-            state, self._state = self._state, None
-            self.show_state(state)
+            self._show_banner(self._state)
 
     def show_state(self, state: SectionState) -> None:
         """Draw a snapshot."""
@@ -239,15 +235,21 @@ class SectionView(QWidget):
             self._show_shanks(state)
         self.undo_button.setEnabled(state.can_undo)
         self.redo_button.setEnabled(state.can_redo)
-        words = state.message or (state.band.out_of_range if state.band else "")
-        if words != self.banner.text():
-            self.banner.setText(words)
-        warning = bool(state.band and state.band.out_of_range and not state.message)
-        self.banner.setStyleSheet(f"color: {self.theme.warning if warning else self.theme.soft}; padding: 1px 3px;")
-        self.banner.setVisible(bool(words))
+        self._show_banner(state)
         if state.in_hand != self._shown_in_hand or before is None:
             self._show_in_hand(state.in_hand)
-        self.log.show(state)
+        self.log.draw(state)
+
+    def _show_banner(self, state: SectionState) -> None:
+        """What is being done, or a warning."""
+        words = state.message or (state.band.out_of_range if state.band else "")
+        warning = bool(words and not state.message)
+        look = f"color: {self.theme.warning if warning else self.theme.soft}; padding: 1px 3px;"
+        if words != self.banner.text():
+            self.banner.setText(words)
+        if look != self.banner.styleSheet():
+            self.banner.setStyleSheet(look)
+        self.banner.setVisible(bool(words))
 
     def _show_shanks(self, state: SectionState) -> None:
         with QSignalBlocker(self.shank):
@@ -281,6 +283,8 @@ class SectionView(QWidget):
                     spin.setValue(value)
         else:
             self.landmark.setEditText("")
+            for spin in (self.depth, self.tip, self.sd):
+                spin.setValue(spin.minimum())
         del blockers
         if held is not None and held.evidence:
             self.readout.setText(held.evidence)

@@ -132,7 +132,7 @@ class TableView(QWidget):
         self.table.setModel(self.filter)
         self.table.setSortingEnabled(True)
         self.table.sortByColumn(-1, Qt.SortOrder.AscendingOrder)
-        self.table.setAlternatingRowColors(True)
+        self.table.horizontalHeader().setResizeContentsPrecision(8)
         self.table.setSelectionBehavior(QAbstractItemView.SelectionBehavior.SelectRows)
         self.table.verticalHeader().hide()
         self.table.verticalHeader().setDefaultSectionSize(self.fontMetrics().height() + 6)

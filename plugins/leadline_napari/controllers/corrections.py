@@ -1,0 +1,287 @@
+"""Tracks redrawn and registrations corrected by hand: every change saved at once, its effect shown at once."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Protocol
+
+import numpy as np
+
+from leadline.base.atomic import write_text
+from leadline.base.errors import LeadlineError
+from leadline.io.points import pairs_text, read_pairs
+from leadline.model.track import Track
+from leadline.registration.pairs import pair_errors, refined
+from leadline.tracing.fit import from_points
+from leadline.tracing.snap import snapped
+from leadline_napari.session import DrawTrack, ForgetTrack, Pair, SetPairs, TrackEdit
+from leadline_napari.states import CorrectionState
+
+if TYPE_CHECKING:
+    from collections.abc import Callable
+    from pathlib import Path
+
+    from leadline.base.arrays import FloatArray
+    from leadline.model.transform import Registration
+    from leadline.pipeline.bench import Bench
+    from leadline_napari.controllers.desk import Desk, Runner
+    from leadline_napari.results import Results
+    from leadline_napari.session import Session
+
+HANDLES = 8
+REFIT_UM = 40.0
+SNAP_UM = 10.0
+
+
+class View(Protocol):
+    """What the corrections view can be told."""
+
+    def show_state(self, state: CorrectionState) -> None:
+        """Draw."""
+
+
+def handles_of(track: Track, count: int = HANDLES) -> FloatArray:
+    """Points along a track ``(count, 3)`` that a person can move, the entry first and the end last."""
+    return track.stack_at(np.linspace(0.0, track.length_um, count))
+
+
+def ordered(points_um: FloatArray) -> FloatArray:
+    """Points in order along their main direction; the end nearer to the first point given comes first."""
+    points = np.asarray(points_um, float)
+    middle = points.mean(axis=0)
+    place = (points - middle) @ np.linalg.svd(points - middle, full_matrices=False)[2][0]
+    order = np.argsort(place, kind="stable")
+    return points[order if np.argmin(order) < len(order) / 2 else order[::-1]]
+
+
+class CorrectionController:
+    """Wires the corrections dock: the track in hand, and pairs of places in stack and atlas.
+
+    ``retraced(track)`` is called with a refitted track, ``edited(points)`` when other hands moved the points (undo).
+    """
+
+    def __init__(
+        self, desk: Desk, view: View, runner: Runner, tell: Callable[[str], None],
+        retraced: Callable[[Track], None], edited: Callable[[FloatArray], None], paired: Callable[[], None],
+    ) -> None:  # fmt: skip
+        self.desk, self.view, self.runner, self.tell = desk, view, runner, tell
+        self.retraced, self.edited, self.paired = retraced, edited, paired
+        self.bench: Bench | None = None
+        self.results: Results | None = None
+        self.editing: tuple[str, int] | None = None
+        self.draft: tuple[Pair, ...] = ()
+        self.errors = ""
+        desk.listen(self._session_changed)
+
+    def open(self, bench: Bench, results: Results) -> None:
+        """Take the products of a brain and the pairs that were being set."""
+        self.bench, self.results = bench, results
+        self.draft = self._read_draft()
+        self._weigh()
+        self._show()
+
+    # -- tracks -------------------------------------------------------------------------------------------------
+
+    @property
+    def key(self) -> tuple[str, int]:
+        """The shank in hand."""
+        return self.desk.session.selection.penetration, self.desk.session.selection.shank
+
+    def begin(self) -> FloatArray | None:
+        """Begin to edit the track in hand; its points, or None where there is no track."""
+        edit = self.desk.session.edits.track_of(*self.key)
+        track = self.results.tracks.get(self.key) if self.results else None
+        if edit is None and track is None:
+            self.tell("There is no track to correct here: trace the dye first, or draw one with 'points' in brain.toml")
+            return None
+        self.editing = self.key
+        self._show()
+        return np.array(edit.points_um) if edit is not None else handles_of(track)
+
+    def end(self) -> None:
+        """Stop editing."""
+        self.editing = None
+        self._show()
+
+    def draw(self, points_um: FloatArray) -> None:
+        """The hand's points are now these; saved, and refitted off the screen."""
+        if self.editing is None or len(points_um) < 2:
+            return
+        points = ordered(points_um).round(2)
+        edit = TrackEdit(*self.editing, tuple(tuple(float(v) for v in p) for p in points))
+        self._hear(lambda: self.desk.act(DrawTrack(edit)))
+
+    def set_end(self, which: str, at_um: FloatArray) -> None:
+        """Put the entry ('entry') or the tip ('end') of the track being edited at a place."""
+        edit = self.desk.session.edits.track_of(*self.editing) if self.editing else None
+        track = self.results.tracks.get(self.editing) if self.results and self.editing else None
+        if edit is None and track is None:
+            self.tell("Begin to edit a track first")
+            return
+        points = np.array(edit.points_um) if edit is not None else handles_of(track)
+        points[0 if which == "entry" else -1] = at_um
+        self.draw(points)
+        self.edited(np.array(self.desk.session.edits.track_of(*self.editing).points_um))
+
+    def snap(self) -> None:
+        """Draw the hand's points to the centre of the dye."""
+        bench, key = self.bench, self.editing
+        if bench is None or key is None:
+            self.tell("Begin to edit a track first")
+            return
+        if bench.dye is None:
+            self.tell("The brain has no dye channel to snap to")
+            return
+        edit = self.desk.session.edits.track_of(*key)
+        points = np.array(edit.points_um) if edit is not None else handles_of(self.results.tracks[key])
+        self.runner.submit(
+            "snap",
+            lambda: snapped(points, bench.dye.fitting(SNAP_UM)),
+            lambda found: self._snapped(key, found),
+            self.tell,
+        )
+
+    def _snapped(self, key: tuple[str, int], found: object) -> None:
+        if key == self.editing:
+            self.draw(np.asarray(found))
+            self.edited(np.asarray(found))
+
+    def forget(self) -> None:
+        """Return the shank in hand to its traced dye, at the next run."""
+        self._hear(lambda: self.desk.act(ForgetTrack(*self.key)))
+        self.end()
+
+    def _session_changed(self, before: Session, after: Session) -> None:
+        if before.edits.tracks != after.edits.tracks:
+            for edit in after.edits.tracks:
+                if edit not in before.edits.tracks:
+                    self._refit(edit)
+            if self.editing is not None and (edit := after.edits.track_of(*self.editing)) is not None:
+                self.edited(np.array(edit.points_um))
+        if before.edits.pairs != after.edits.pairs:
+            self._weigh()
+        self._show()
+
+    def _refit(self, edit: TrackEdit) -> None:
+        bench, results = self.bench, self.results
+        if bench is None or results is None or results.registration is None:
+            return
+        self.runner.submit("refit", lambda: refit(bench, results.registration, edit), self._refitted, self.tell)
+
+    def _refitted(self, track: object) -> None:
+        assert isinstance(track, Track)
+        self.retraced(track)
+
+    # -- pairs --------------------------------------------------------------------------------------------------
+
+    def add_pair(self, stack_um: FloatArray, atlas_um: FloatArray) -> None:
+        """A place in the stack and the atlas place that it is."""
+        self._draft_is((*self.draft, Pair(_point(stack_um), _point(atlas_um))))
+
+    def move_pair(self, index: int, stack_um: FloatArray | None, atlas_um: FloatArray | None) -> None:
+        """An end of a pair was moved."""
+        old = self.draft[index]
+        new = Pair(
+            old.stack_um if stack_um is None else _point(stack_um),
+            old.atlas_um if atlas_um is None else _point(atlas_um),
+        )
+        self._draft_is((*self.draft[:index], new, *self.draft[index + 1 :]))
+
+    def delete_pair(self, index: int) -> None:
+        """Take a pair away."""
+        self._draft_is((*self.draft[:index], *self.draft[index + 1 :]))
+
+    def accept_pairs(self) -> None:
+        """From the next run on, the registration is refined by the pairs that are set."""
+        self._hear(lambda: self.desk.act(SetPairs(self.draft)))
+
+    def withdraw_pairs(self) -> None:
+        """From the next run on, the registration is used as it was found."""
+        self._hear(lambda: self.desk.act(SetPairs(())))
+
+    def preview(self) -> Registration | None:
+        """The registration as the pairs set so far would refine it."""
+        found = self.results.registration if self.results else None
+        return None if found is None else refined(found, *_arrays(self.draft))
+
+    def _draft_is(self, pairs: tuple[Pair, ...]) -> None:
+        self.draft = pairs
+        write_text(self._draft_file(), pairs_text(*_arrays(pairs)))
+        self._weigh()
+        self._show()
+        self.paired()
+
+    def _draft_file(self) -> Path:
+        return self.desk.brain.cache / "pairs.csv"
+
+    def _read_draft(self) -> tuple[Pair, ...]:
+        file = self._draft_file()
+        if not file.is_file():
+            return self.desk.session.edits.pairs
+        return tuple(Pair(_point(s), _point(a)) for s, a in zip(*read_pairs(file), strict=True))
+
+    def _weigh(self) -> None:
+        """Work out the error at the pairs, before and after."""
+        registration = self.results.registration if self.results else None
+        if registration is None or not self.draft:
+            self.errors = ""
+            return
+        try:
+            found = pair_errors(registration, *_arrays(self.draft))
+        except LeadlineError as error:
+            self.errors = str(error)
+            return
+        words = f"{np.median(found.before_um):.0f} um before, {np.median(found.after_um):.0f} um after"
+        if len(self.draft) > 1:
+            words += f", {np.median(found.left_out_um):.0f} um where a pair is left out"
+        self.errors = f"Median distance at {len(self.draft)} pair{'s' * (len(self.draft) > 1)}: {words}"
+
+    # -- inside -------------------------------------------------------------------------------------------------
+
+    def _hear(self, do: Callable[[], None]) -> None:
+        try:
+            do()
+        except LeadlineError as error:
+            self.tell(str(error))
+
+    def _show(self) -> None:
+        edits = self.desk.session.edits
+        name, shank = self.key
+        self.view.show_state(
+            CorrectionState(
+                title=f"{name}, shank {shank}" if name else "",
+                editing=self.editing is not None and self.editing == self.key,
+                by_hand=edits.track_of(name, shank) is not None,
+                can_edit=self.results is not None and self.key in self.results.tracks,
+                pairs=tuple(_words(p) for p in self.draft),
+                errors=self.errors,
+                in_force=bool(edits.pairs),
+                same=edits.pairs == self.draft,
+                registered=self.results is not None and self.results.registration is not None,
+            )
+        )
+
+
+def refit(bench: Bench, registration: Registration, edit: TrackEdit) -> Track:
+    """The track through the hand's points, as tracing would fit it, on a coarse background; no dye is looked at."""
+    background = bench.reduced(bench.background, REFIT_UM)
+    trace = from_points(np.array(edit.points_um), background)
+    atlas_um = registration.stack_to_atlas(trace.points_um)
+    ends = (trace.entry_sd_um, trace.end_sd_um)
+    return Track(edit.penetration, edit.shank, trace.points_um, atlas_um, trace.radius_um, *ends, "points")
+
+
+def _arrays(pairs: tuple[Pair, ...]) -> tuple[FloatArray, FloatArray]:
+    return (
+        np.array([p.stack_um for p in pairs], float).reshape(-1, 3),
+        np.array([p.atlas_um for p in pairs], float).reshape(-1, 3),
+    )
+
+
+def _point(values: FloatArray) -> tuple[float, float, float]:
+    a, b, c = (round(float(v), 2) for v in values)
+    return a, b, c
+
+
+def _words(pair: Pair) -> str:
+    s, a = pair.stack_um, pair.atlas_um
+    return f"stack {s[0]:.0f}, {s[1]:.0f}, {s[2]:.0f}  →  atlas {a[0]:.0f}, {a[1]:.0f}, {a[2]:.0f}"

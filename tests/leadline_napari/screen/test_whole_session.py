@@ -1,0 +1,120 @@
+# ruff: noqa: E402 - what needs napari is imported only where there is one
+"""A whole session with real events, and the table that it leaves; a stack of 20 GB."""
+
+import os
+import shutil
+import subprocess
+import sys
+import time
+
+import numpy as np
+import psutil
+import pytest
+
+napari = pytest.importorskip("napari")
+pytest.importorskip("pyqtgraph")
+
+from qtpy.QtCore import Qt
+from qtpy.QtTest import QTest
+from tests.good_brain import write_good_brain
+from tests.leadline_napari.screen.hands import anchors, click, double_click, drag, opened, place, settle, tie_end
+
+from leadline.io.brainfile import read_brain
+from leadline.pipeline.run import run
+from leadline_napari.docks import close_workbench, workbench
+
+CONTROL, SHIFT = Qt.KeyboardModifier.ControlModifier, Qt.KeyboardModifier.ShiftModifier
+
+
+@pytest.fixture
+def window():
+    viewer = napari.Viewer(show=True)
+    viewer.window._qt_window.resize(1280, 800)
+    bench = workbench(viewer)
+    bench.told = []
+    bench.failed.connect(bench.told.append)
+    bench.show_docks()
+    yield bench
+    close_workbench(viewer)
+    viewer.close()
+
+
+@pytest.mark.slow
+def test_a_whole_session_leaves_the_table_that_the_command_line_makes_of_its_anchors(window, qtbot, tmp_path):
+    file = write_good_brain(tmp_path / "mine")
+    text = file.read_text()
+    file.write_text(text[: text.index("[[anchor]]")])
+    run(read_brain(file))
+    opened(window, qtbot, file.parent)
+    log = window.section.log
+
+    window.corrections.edit_button.click()
+    layer = window.viewer.layers["Track points"]
+    points = layer.data.copy()
+    points[2] += [0.0, 15.0, -20.0]
+    layer.data = points
+    settle(window, qtbot)
+    window.corrections.edit_button.click()
+    window.docks["section"].raise_()
+
+    border = next(r for r in window.sections.scene.strata.runs if r.acronym == "CCB")
+    double_click(window, "strata", 0.5, border.top_um + 5.0)
+    double_click(window, "lane", 0.5, log.end_um - 300.0)
+    settle(window, qtbot)
+    lower = anchors(window)[1]
+    drag(window, tie_end(window, lower, "depth"), place(window, "band", 0.0, lower.track_depth_um + 60.0))
+    log.setFocus()
+    QTest.keyClick(log, Qt.Key.Key_Z, CONTROL)
+    assert anchors(window)[1] == lower
+    QTest.keyClick(log, Qt.Key.Key_Z, CONTROL | SHIFT)
+    assert anchors(window)[1] != lower
+    suggested = [t for t in window.section._state.band.ties if t.kind == "suggested"]
+    if suggested:  # the tiny recording may suggest nothing
+        click(window, tie_end(window, suggested[0].anchor, "depth"))
+        QTest.keyClick(log, Qt.Key.Key_Return)
+    settle(window, qtbot)
+    kept = anchors(window)
+    with qtbot.waitSignal(window.opened, timeout=300_000):
+        QTest.keyClick(log, Qt.Key.Key_S, CONTROL)
+    settle(window, qtbot)
+    assert window.told == []
+
+    opened(window, qtbot, file.parent)
+    assert anchors(window) == kept
+    assert window.desk.can_undo
+
+    fresh = tmp_path / "theirs"
+    shutil.copytree(file.parent, fresh, ignore=shutil.ignore_patterns("out", ".leadline"))
+    (fresh / "out").mkdir()
+    shutil.copy(file.parent / "out" / "anchors.csv", fresh / "out")
+    command = [sys.executable, "-c", "from leadline.cli.main import main; main()", "run", str(fresh)]
+    subprocess.run(command, check=True, capture_output=True, env=os.environ | {"OMP_NUM_THREADS": "1"})
+    mine, theirs = (f / "out" / "channels.csv" for f in (file.parent, fresh))
+    assert mine.read_bytes() == theirs.read_bytes()
+
+
+@pytest.mark.slow
+def test_a_stack_of_20_gb_is_seen_within_5_s_and_1500_mb(window, qtbot, tmp_path):
+    file = write_good_brain(tmp_path)
+    with (tmp_path / "big.raw").open("wb") as handle:
+        handle.truncate(2000 * 2000 * 2500 * 2)
+    (tmp_path / "big.nhdr").write_text(
+        "NRRD0005\ntype: uint16\ndimension: 3\nsizes: 2500 2000 2000\nspace: right-anterior-superior\n"
+        'space directions: (2.5,0,0) (0,0,-2.5) (0,-3,0)\nspace units: "um" "um" "um"\n'
+        "endian: little\nencoding: raw\ndata file: big.raw\n"
+    )
+    text = file.read_text().replace('background = "auto.ome.tif"', 'background = "big.nhdr"')
+    text = text.replace('dye = "dye.ome.tif"\n', "").replace('orientation = "SAL"\n', "")
+    file.write_text(text)
+    me = psutil.Process()
+    before, cpu, wall = me.memory_info().rss, time.process_time(), time.monotonic()
+    window.open(file.parent)
+    picture = window.viewer.screenshot(canvas_only=True, flash=False)
+    spent = time.process_time() - cpu
+    grown = me.memory_info().rss - before
+    print(f"20 GB: {spent:.1f} s CPU, {time.monotonic() - wall:.1f} s wall, {grown / 2**20:.0f} MiB more")
+    assert picture.shape[2] == 4
+    assert np.prod(window.viewer.layers[0].data.shape) * 2 == 20_000_000_000
+    assert spent < 5.0
+    assert grown < 1.5 * 2**30
+    settle(window, qtbot)
