@@ -242,6 +242,8 @@ def _judged(scene: Scene, item: Candidate) -> Candidate:
     faint = 2.5 / scene.settings.sensitivity
     # silicon is stiff, vessels are not; the shorter a candidate, the less a bend of the tissue may excuse it
     winding = m["wander"] / float(np.interp(m["length"], LENGTHS_UM, WANDER_UM))
+    # a smooth bow, as tissue that was bent makes, may be larger than a bend in a curve that winds as well
+    bend_deg = float(np.interp(m["length"], LENGTHS_UM, BEND_DEG)) * (1.0 + max(0.0, 1.0 - 2.0 * winding))
     checks = (
         (m["length"] < scene.settings.min_length_um, "shorter than a track"),
         (m["coverage"] < 0.5, "dye on less than half of it"),
@@ -249,7 +251,7 @@ def _judged(scene: Scene, item: Candidate) -> Candidate:
         (winding + 0.5 * m["top"] / DEEP_TOP_UM > 1.0, WINDS),
         (m["gain"] < MIN_GAIN, "runs along the surface"),
         (m["contrast"] < faint, "fainter than noise allows"),
-        (m["bend_deg"] > np.interp(m["length"], LENGTHS_UM, BEND_DEG), "bends more than a shank can"),
+        (m["bend_deg"] > bend_deg, "bends more than a shank can"),
     )
     fault = next((text for wrong, text in checks if wrong), "")
     return Candidate(item.curve_um, item.sigma_um, item.run, item.profile, m, fault)
