@@ -26,7 +26,8 @@ if TYPE_CHECKING:
     from leadline.report.findings import Findings, Shank
 
 LARGEST_BYTES = 5_000_000
-PICTURES_BYTES = 3_300_000
+PICTURES_BYTES = 3_100_000
+TABLE_BYTES = 1_300_000
 PICTURE_DPI = (150, 110, 80, 60, 45)
 TABLE_COLUMNS = (
     "penetration",
@@ -47,6 +48,7 @@ TABLE_COLUMNS = (
     "ml_um",
     "basis",
 )
+CHIEF_COLUMNS = ("penetration", "shank", "channel", "tip_distance_um", "track_depth_um", "region", "layer", "p_region")
 NUMBERS = {
     "shank": 0,
     "channel": 0,
@@ -176,21 +178,36 @@ def _penetration(findings: Findings, shank: Shank, picture: str) -> str:
 
 
 def _channels(table: pd.DataFrame, findings: Findings) -> str:
-    columns = [c for c in (*TABLE_COLUMNS, "cortical_depth") if c in table.columns]
+    columns, kept = fitting_rows(table, findings)
     heads = "".join(
         f'<th scope="col"{_number_class(c)}><button type="button">{escape(c)}</button></th>' for c in columns
     )
     options = "".join(f"<option>{escape(str(p))}</option>" for p in dict.fromkeys(table["penetration"]))
-    rows = "\n".join(_rows(table, columns, findings))
+    rows = "\n".join(kept)
+    left_out = (
+        f"The first {len(kept)} of {len(table)} channels; all of them, and all" if len(kept) < len(table) else "All"
+    )
     return (
         '<div class="bar"><label>find <input type="search" id="find" placeholder="region, layer, channel …"></label>'
         f'<label>penetration <select id="which"><option value="">all</option>{options}</select></label>'
         '<span id="count" role="status"></span></div>'
         f'<div class="scroll"><table id="channel-table"><thead><tr>{heads}</tr></thead><tbody>\n{rows}\n'
         "</tbody></table></div>"
-        '<p class="note">All columns stand in channels.csv and channels.parquet. p_region is the probability, given '
-        "all modelled error, that the named region is right.</p>"
+        f'<p class="note">{left_out} columns stand in channels.csv and channels.parquet. p_region is the '
+        "probability, given all modelled error, that the named region is right.</p>"
     )
+
+
+def fitting_rows(table: pd.DataFrame, findings: Findings) -> tuple[list[str], list[str]]:
+    """Columns and rows of the channel table as the page's limit allows: all columns, else the chief ones, and of a
+    table too long even so, the first channels."""
+    for wanted in ((*TABLE_COLUMNS, "cortical_depth"), CHIEF_COLUMNS):
+        columns = [c for c in wanted if c in table.columns]
+        rows = list(_rows(table, columns, findings))
+        size = np.cumsum([len(row.encode("utf-8")) + 1 for row in rows])
+        if not len(rows) or size[-1] <= TABLE_BYTES:
+            return columns, rows
+    return columns, rows[: int(np.searchsorted(size, TABLE_BYTES))]
 
 
 def _rows(table: pd.DataFrame, columns: list[str], findings: Findings) -> Iterator[str]:

@@ -17,7 +17,7 @@ from leadline.pipeline.bench import Bench
 from leadline.pipeline.provenance import CAUTION
 from leadline.report import page as page_module
 from leadline.report.findings import gather
-from leadline.report.page import page, section_pictures
+from leadline.report.page import fitting_rows, page, section_pictures
 from leadline.report.planes import check_planes, grey, sampled
 
 EVIL = "</script><img src=x onerror=alert(1)>&\"'"
@@ -122,6 +122,19 @@ def test_many_shanks_become_pixels_rather_than_a_page_too_large(brain, monkeypat
     pixels = section_pictures(findings, shanks)
     assert all(uri.startswith("data:image/png") for uri in pixels)
     assert sum(map(len, pixels)) <= 120_000
+
+
+def test_a_table_too_long_for_the_page_says_what_it_leaves_out(brain, monkeypatch):
+    findings = gather(Bench(brain))
+    columns, rows = fitting_rows(findings.channels, findings)
+    assert (len(columns), len(rows)) == (len(page_module.TABLE_COLUMNS), 32)
+    monkeypatch.setattr(page_module, "TABLE_BYTES", 9_000)
+    columns, rows = fitting_rows(findings.channels, findings)
+    assert (tuple(columns), len(rows)) == (page_module.CHIEF_COLUMNS, 32)
+    monkeypatch.setattr(page_module, "TABLE_BYTES", 3_000)
+    _, rows = fitting_rows(findings.channels, findings)
+    assert 0 < sum(len(r) + 1 for r in rows) <= 3_000
+    assert f"The first {len(rows)} of 32 channels" in page_module._channels(findings.channels, findings)
 
 
 def test_a_shank_without_a_track_is_told_so(tmp_path):
