@@ -3,7 +3,7 @@ PYTHON ?= $(shell command -v python3.13 || command -v python3.12 || command -v p
 BIN := .venv/bin
 ONE_THREAD := OMP_NUM_THREADS=1 OPENBLAS_NUM_THREADS=1 MKL_NUM_THREADS=1 NUMBA_NUM_THREADS=1
 
-.PHONY: demo test lint study clean
+.PHONY: demo test lint study clean docs
 demo: .venv/.core
 	$(BIN)/leadline demo leadline-demo
 
@@ -18,6 +18,9 @@ lint: .venv/.dev
 
 study: .venv/.dev
 	$(ONE_THREAD) $(BIN)/python -m tests.studies
+
+docs: .venv/.dev
+	$(BIN)/python -m pdoc --docformat numpy -o docs/reference leadline '!leadline.demo'
 
 clean:
 	rm -rf .venv leadline-demo

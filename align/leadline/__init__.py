@@ -16,7 +16,6 @@ if TYPE_CHECKING:
     from leadline.pipeline.opened import OpenBrain
 
 __version__ = "0.1.0"
-__all__ = ["__version__", "open_brain"]
 
 
 def open_brain(path: str | Path) -> OpenBrain:
