@@ -17,7 +17,7 @@ from leadline.anchoring.features import GROUPS
 from leadline.anchoring.knowledge import builtin
 from leadline.anchoring.labels import CELL_UM
 from leadline.anchoring.noise import MODELS, correlation, student_evidence
-from leadline.anchoring.pack import NULL_SHARE, RATE, SHAPE, assemble
+from leadline.anchoring.pack import NULL_SHARE, RATE, SHAPE, assemble, independence
 from leadline.anchoring.sampler import sample
 
 # a law so tight that two numbers tell the whole depth map: brute force is possible
@@ -48,7 +48,7 @@ def _plain(packed, depth, c):
         silent = student_evidence(
             data, np.ones((depth.size, 1)), noise, np.array([[2.5]]), np.zeros((1, len(data))), SHAPE, RATE
         )
-        total += np.logaddexp(np.log(1 - NULL_SHARE) + spoken, np.log(NULL_SHARE) + silent).sum()
+        total += independence(data) * np.logaddexp(np.log(1 - NULL_SHARE) + spoken, np.log(NULL_SHARE) + silent).sum()
     return total
 
 
@@ -60,8 +60,7 @@ def test_the_compiled_evidence_is_that_of_dense_algebra():
     z = prior.draw(rng, 12)
     c = rng.integers(0, 4, (12, 2))
     out = np.empty(12)
-    ones = (np.ones((12, 1, 2, packed.pack.mean.shape[2])), np.ones((12, 1, packed.pack.centre.shape[1])))
-    evaluate(packed.pack, z, c, *ones, out)
+    evaluate(packed.pack, z, c, out)
     rows = prior.weights(0, packed.features[0].tip_distance_um)
     for i in range(12):
         depth = rows @ (prior.mean_um + prior.basis @ z[i])
@@ -77,13 +76,12 @@ def test_the_sampler_finds_the_mean_spread_and_evidence_of_brute_force():
     side = np.linspace(-4.0, 4.0, 121)
     grid = np.array(list(product(side, side)))
     n = len(grid)
-    ones = (np.ones((n, 1, 2, packed.pack.mean.shape[2])), np.ones((n, 1, packed.pack.centre.shape[1])))
     log_prior = prior.log_ratio(prior.offset_mean_um + grid @ prior.offset_basis) - 0.5 * (grid**2).sum(axis=1)
     log_prior -= np.logaddexp.reduce(log_prior)
     parts, out = [], np.empty(n)
     models = list(product(range(4), range(4)))
     for c in models:
-        evaluate(packed.pack, grid, np.tile(c, (n, 1)), *ones, out)
+        evaluate(packed.pack, grid, np.tile(c, (n, 1)), out)
         parts.append(power * out + log_prior - np.log(len(models)))
     joint = np.logaddexp.reduce(parts, axis=0)
     log_z = float(np.logaddexp.reduce(joint))

@@ -15,7 +15,8 @@ class Pack(NamedTuple):
 
     ``centre`` (S, R), ``basis`` (S, R, J) : label depth of the rows, ``centre + basis @ z``. ``whitener`` (S, G, C,
     R, R) : entry [r, t] carries row r into whitened row t. ``white_one`` (S, G, C, R), ``white_data``
-    (S, G, C, F, R). ``log_scale`` (S, G, C, R) : log of the whitener's diagonal. ``mean`` (S, G, F, L).
+    (S, G, C, F, R), ``square`` (S, G, C, F) its sum of squares. ``log_scale`` (S, G, C) : log determinant of the
+    whitener. ``power`` (S, G, F) : what a feature counts beside its correlated fellows. ``mean`` (S, G, F, L).
     ``precision`` (S, L, L), ``log_covariance`` (S,). ``log_null`` (S, G, C, F). ``active``, ``weight``
     (S, G, M, 8) and ``start`` (S,) : cells of the label tables.
     """
@@ -29,7 +30,9 @@ class Pack(NamedTuple):
     whitener: Any
     white_one: Any
     white_data: Any
+    square: Any
     log_scale: Any
+    power: Any
     mean: Any
     precision: Any
     log_covariance: Any
@@ -85,29 +88,26 @@ def _design(p, s, g, c, depth, white):  # type: ignore[no-untyped-def]  # pragma
 
 
 @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
-def _products(p, s, g, c, row_weight, white, gram, cross):  # type: ignore[no-untyped-def]  # pragma: no cover
-    """Weighted products of whitened labels with each other, ``gram`` (L, L), and with the data, ``cross`` (F, L)."""
+def _products(p, s, g, c, white, gram, cross):  # type: ignore[no-untyped-def]  # pragma: no cover
+    """Products of whitened labels with each other, ``gram`` (L, L), and with the data, ``cross`` (F, L)."""
     rows, features = p.n_rows[s], p.n_features[s, g]
-    weighted = np.empty(rows, np.float32)
     for i in range(gram.shape[0]):
-        for t in range(rows):
-            weighted[t] = white[i, t] * np.float32(row_weight[t])
         for j in range(i + 1):
             total = np.float32(0.0)
             for t in range(rows):
-                total += weighted[t] * white[j, t]
+                total += white[i, t] * white[j, t]
             gram[i, j] = total
             gram[j, i] = total
         for f in range(features):
             total = np.float32(0.0)
             for t in range(rows):
-                total += weighted[t] * p.white_data[s, g, c, f, t]
+                total += white[i, t] * p.white_data[s, g, c, f, t]
             cross[f, i] = total
 
 
 @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
 def _explained(mean, gram, cross, factor, b):  # type: ignore[no-untyped-def]  # pragma: no cover
-    """What the labels take off the weighted sum of squares of one feature."""
+    """What the labels take off the sum of squares of one feature."""
     labels, rss = b.size, 0.0
     for i in range(labels):
         total = 0.0
@@ -125,32 +125,26 @@ def _explained(mean, gram, cross, factor, b):  # type: ignore[no-untyped-def]  #
 
 
 @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
-def group_evidence(p, s, g, c, depth, row_weight, white, out):  # type: ignore[no-untyped-def]  # pragma: no cover
+def group_evidence(p, s, g, c, depth, white, out):  # type: ignore[no-untyped-def]  # pragma: no cover
     """Log evidence of each feature of a group, emissions integrated out (Student-t), into ``out`` (F,).
 
-    With y ~ N(A mu, v C), mu ~ N(m, v V), v ~ IG(shape, rate): Bishop 2006, section 2.3.7; rows carry powers
-    ``row_weight``.
+    With y ~ N(A mu, v C), mu ~ N(m, v V), v ~ IG(shape, rate): Bishop 2006, section 2.3.7.
     """
     rows, labels, features = p.n_rows[s], p.n_labels[s], p.n_features[s, g]
     _design(p, s, g, c, depth, white)
     gram, cross = np.empty((labels, labels)), np.empty((features, labels))
-    _products(p, s, g, c, row_weight, white, gram, cross)
+    _products(p, s, g, c, white, gram, cross)
     factor = gram + p.precision[s, :labels, :labels]
     log_det = _cholesky(factor, labels) + p.log_covariance[s]
-    count, scale = 0.0, 0.0
-    for t in range(rows):
-        count += row_weight[t]
-        scale += row_weight[t] * p.log_scale[s, g, c, t]
     b = np.empty(labels)
     for f in range(features):
-        rss = -_explained(p.mean[s, g, f], gram, cross[f], factor, b)
-        for t in range(rows):
-            rss += row_weight[t] * p.white_data[s, g, c, f, t] ** 2
-        out[f] = scale - 0.5 * log_det - (p.shape + 0.5 * count) * np.log(p.rate + 0.5 * max(rss, 0.0))
+        rss = p.square[s, g, c, f] - _explained(p.mean[s, g, f], gram, cross[f], factor, b)
+        fit = (p.shape + 0.5 * rows) * np.log(p.rate + 0.5 * max(rss, 0.0))
+        out[f] = p.log_scale[s, g, c] - 0.5 * log_det - fit
 
 
 @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
-def log_likelihood(p, z, c, feature_weight, row_weight, depth, white, out):  # type: ignore[no-untyped-def]  # pragma: no cover
+def log_likelihood(p, z, c, depth, white, out):  # type: ignore[no-untyped-def]  # pragma: no cover
     """Log evidence of all shanks for one path, each feature mixed with one that says nothing."""
     total = 0.0
     for s in range(p.n_rows.size):
@@ -164,7 +158,7 @@ def log_likelihood(p, z, c, feature_weight, row_weight, depth, white, out):  # t
         for g in range(p.n_features.shape[1]):
             if p.n_features[s, g] == 0:
                 continue
-            group_evidence(p, s, g, c[g], depth, row_weight[s], white, out)
+            group_evidence(p, s, g, c[g], depth, white, out)
             for f in range(p.n_features[s, g]):
                 null = p.log_null[s, g, c[g], f]
                 gain = out[f] - null
@@ -172,7 +166,7 @@ def log_likelihood(p, z, c, feature_weight, row_weight, depth, white, out):  # t
                     mixed = gain + np.log((1 - p.null_share) + p.null_share * np.exp(-gain))
                 else:
                     mixed = np.log(p.null_share + (1 - p.null_share) * np.exp(gain))
-                total += feature_weight[s, g, f] * (mixed + null)
+                total += p.power[s, g, f] * (mixed + null)
     return total
 
 
@@ -189,18 +183,18 @@ def log_offset_ratio(p, z):  # type: ignore[no-untyped-def]  # pragma: no cover
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def evaluate(p, z, c, feature_weight, row_weight, out):  # type: ignore[no-untyped-def]  # pragma: no cover
+def evaluate(p, z, c, out):  # type: ignore[no-untyped-def]  # pragma: no cover
     """Log likelihood of paths ``z`` (N, J) into ``out`` (N,)."""
     width = p.centre.shape[1]
     depth, white = np.empty(width), np.empty((p.mean.shape[3], width), np.float32)
     scratch = np.empty(max(1, p.mean.shape[2]))
     for i in range(z.shape[0]):
-        out[i] = log_likelihood(p, z[i], c[i], feature_weight[i], row_weight[i], depth, white, scratch)
+        out[i] = log_likelihood(p, z[i], c[i], depth, white, scratch)
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
 def slice_move(  # type: ignore[no-untyped-def]  # pragma: no cover
-    p, power, z, ll, c, feature_weight, row_weight, centre, root, a, nu, log_u, angle, evaluations
+    p, power, centre, root, z, ll, c, a, nu, log_u, angle, evaluations
 ):
     """One elliptical slice move of every path under the Gaussian ``centre + root @ a`` (Murray et al. 2010, AISTATS;
     generalised to a fitted Gaussian as in Nishihara et al. 2014, JMLR 15, 2087). Changes ``z``, ``ll``, ``a``."""
@@ -224,7 +218,7 @@ def slice_move(  # type: ignore[no-untyped-def]  # pragma: no cover
                 for k in range(j + 1):
                     total += root[j, k] * new_a[k]
                 new_z[j] = total
-            value = log_likelihood(p, new_z, c[i], feature_weight[i], row_weight[i], depth, white, scratch)
+            value = log_likelihood(p, new_z, c[i], depth, white, scratch)
             evaluations[i] += 1
             here = power * value + log_offset_ratio(p, new_z)
             for j in range(dims):

@@ -22,6 +22,7 @@ BLUR_UM = {"lfp": 45.0, "units": 20.0}
 ACTIVE = 8
 MIN_WEIGHT = 0.01
 INTERCEPT_SD = 1.0
+MIN_SPAN_UM = 500.0
 NOISE_VARIANCE = 0.4
 
 
@@ -50,8 +51,10 @@ def tabulate(
     """Membership tables for depths between ``reach_um[0]`` and ``reach_um[1]``."""
     from scipy.ndimage import gaussian_filter1d
 
-    low = max(reach_um[0], shank.depth_um[0])
-    high = min(reach_um[1], shank.depth_um[-1])
+    ends = shank.depth_um[[0, -1]]
+    low, high = np.clip(reach_um, *ends)
+    if high - low < MIN_SPAN_UM:  # an anchor far off the track: keep the whole of it
+        low, high = ends
     cells = np.arange(low, high + CELL_UM, CELL_UM)
     copies = shank.lateral_label_id[:, np.searchsorted((shank.depth_um[1:] + shank.depth_um[:-1]) / 2, cells)]
     ids = np.unique(copies)

@@ -30,14 +30,12 @@ REACH_UM = 300.0
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Packed:
-    """``pack`` : the kernel's arrays. ``features``, ``tables`` : of each shank. ``power`` (S, G, F) : what a feature
-    counts beside its correlated fellows. ``log_silent`` : log evidence of all features as smooth noise that knows no
-    labels, so weighted."""
+    """``pack`` : the kernel's arrays. ``features``, ``tables`` : of each shank. ``log_silent`` : log evidence of all
+    features as smooth noise that knows no labels, with the same powers."""
 
     pack: Any
     features: tuple[FeatureSet, ...]
     tables: tuple[LabelTable | None, ...]
-    power: FloatArray
     log_silent: float
 
     @property
@@ -63,11 +61,7 @@ def assemble(
         reach = np.array([(mean - REACH_SD * spread * span).min(), (mean + REACH_SD * spread * span).max()])
         tables.append(tabulate(shank, feature, structures, knowledge, reach + np.array([-REACH_UM, REACH_UM])))
     pack = _pack(prior, features, tables)
-    power = np.zeros(pack.log_null[:, :, 0].shape)
-    for s, feature in enumerate(features):
-        for g, group in enumerate(GROUPS):
-            power[s, g, : len(feature.values[group])] = independence(feature.values[group])
-    return Packed(pack, features, tuple(tables), power, _log_silent(features, power))
+    return Packed(pack, features, tuple(tables), _log_silent(features, pack.power))
 
 
 def independence(data: FloatArray) -> float:
@@ -76,10 +70,12 @@ def independence(data: FloatArray) -> float:
     The number is the participation ratio of the correlations of row-to-row differences, over that of usual
     recordings, since the power of the whole likelihood was learned on those.
     """
-    if len(data) < 2:
+    steps = np.diff(data, axis=1)
+    steps = steps[steps.std(axis=1) > 1e-9]
+    if len(steps) < 2:
         return 1.0
-    values = np.linalg.eigvalsh(np.corrcoef(np.diff(data, axis=1)))
-    return float(min(1.0, values.sum() ** 2 / (values**2).sum() / len(data) / USUAL_INDEPENDENCE))
+    values = np.linalg.eigvalsh(np.corrcoef(steps))
+    return float(min(1.0, values.sum() ** 2 / (values**2).sum() / len(steps) / USUAL_INDEPENDENCE))
 
 
 def _pack(prior: DepthPrior, features: Sequence[FeatureSet], tables: Sequence[LabelTable | None]) -> Any:
@@ -103,7 +99,9 @@ def _pack(prior: DepthPrior, features: Sequence[FeatureSet], tables: Sequence[La
         whitener=np.zeros((*shape, rows, rows), np.float32),
         white_one=np.zeros((*shape, rows), np.float32),
         white_data=np.zeros((*shape, wide, rows), np.float32),
-        log_scale=np.zeros((*shape, rows)),
+        square=np.zeros((*shape, wide)),
+        log_scale=np.zeros(shape),
+        power=np.zeros((n, g_count, wide)),
         mean=np.zeros((n, g_count, wide, labels)),
         precision=np.zeros((n, labels, labels)),
         log_covariance=np.zeros(n),
@@ -149,13 +147,15 @@ def _fill_shank(pack: Any, s: int, prior: DepthPrior, feature: FeatureSet, table
         data = feature.values[group]
         k = len(data)
         pack.mean[s, g, :k, :labels] = table.mean[group].T
+        pack.power[s, g, :k] = independence(data)
         for c, model in enumerate(MODELS[group]):
             noise = correlation(feature.tip_distance_um, model)
             white = whitener(noise)
             pack.whitener[s, g, c, :r, :r] = white.T
             pack.white_one[s, g, c, :r] = white.sum(axis=1)
             pack.white_data[s, g, c, :k, :r] = data @ white.T
-            pack.log_scale[s, g, c, :r] = np.log(np.diag(white))
+            pack.square[s, g, c, :k] = ((data @ white.T) ** 2).sum(axis=1)
+            pack.log_scale[s, g, c] = np.log(np.diag(white)).sum()
             pack.log_null[s, g, c, :k] = _flat_evidence(data, noise)
 
 

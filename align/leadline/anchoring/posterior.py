@@ -29,11 +29,11 @@ __all__ = ["infer", "preview"]
 POWER = 0.35
 # how much tempered evidence makes labels as likely as not, and how fast it convinces: learned on invented tracks,
 # because the evidence of a tempered model is no calibrated Bayes factor
-EVEN_AT, CONVINCES = 4.0, 0.7
+EVEN_AT, CONVINCES = 4.5, 0.8
 # a median strays 1.25 times as far as a mean, two runs sqrt(2) times as far as one
 SHIFT_OF_MEDIAN = 1.25 * 2**0.5
 ON_TRACK = -1
-TOLD = 0.6
+TOLD = 0.75
 MIN_STEP_UM = 1e-3
 
 

@@ -31,13 +31,11 @@ MAX_LEVELS = 60
 
 @dataclass
 class Ensemble:
-    """Particles in motion: ``z`` (N, J), log likelihood (N,), noise models ``c`` (N, G), powers of features, rows."""
+    """Particles in motion: ``z`` (N, J), log likelihood (N,), noise models ``c`` (N, G)."""
 
     z: FloatArray
     log_likelihood: FloatArray
     c: IntArray
-    feature_weight: FloatArray
-    row_weight: FloatArray
 
     def take(self, rows: IntArray) -> Ensemble:
         """Copies of the particles ``rows``."""
@@ -45,8 +43,6 @@ class Ensemble:
             self.z[rows].copy(),
             self.log_likelihood[rows].copy(),
             self.c[rows].copy(),
-            self.feature_weight[rows].copy(),
-            self.row_weight[rows].copy(),
         )
 
 
@@ -69,16 +65,21 @@ class Crew:
         self.size = max(1, min(os.cpu_count() or 1, int(os.environ.get("NUMBA_NUM_THREADS", "64")), 8))
         self.pool = ThreadPoolExecutor(self.size) if self.size > 1 else None
 
-    def run(self, kernel: Any, head: tuple[Any, ...], arrays: tuple[Any, ...], tail: tuple[Any, ...] = ()) -> None:
-        """Call ``kernel(*head, *parts of arrays, *tail)`` on parts of the particles."""
+    def __enter__(self) -> Crew:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        if self.pool is not None:
+            self.pool.shutdown()
+
+    def run(self, kernel: Any, head: tuple[Any, ...], arrays: tuple[Any, ...]) -> None:
+        """Call ``kernel(*head, *parts of arrays)`` on parts of the particles."""
         n = len(arrays[0])
         if self.pool is None:
-            kernel(*head, *arrays, *tail)
+            kernel(*head, *arrays)
             return
         cuts = np.linspace(0, n, self.size + 1).astype(int)
-        jobs = [
-            self.pool.submit(kernel, *head, *(a[lo:hi] for a in arrays), *tail) for lo, hi in pairwise(cuts.tolist())
-        ]
+        jobs = [self.pool.submit(kernel, *head, *(a[lo:hi] for a in arrays)) for lo, hi in pairwise(cuts.tolist())]
         for job in jobs:
             job.result()
 
@@ -91,8 +92,14 @@ def sample(
     Adaptive tempering (Del Moral, Doucet & Jasra 2006, J. R. Stat. Soc. B 68, 411) from many prior draws; at each
     level particles are resampled and moved by elliptical slices under the Gaussian fitted to them.
     """
-    crew = Crew()
-    particles = _scouts(packed, prior, rng, SCOUTS)
+    with Crew() as crew:
+        return _tempered(crew, packed, prior, rng, power, progress)
+
+
+def _tempered(
+    crew: Crew, packed: Packed, prior: DepthPrior, rng: np.random.Generator, power: float, progress: Progress
+) -> Drawn:
+    particles = _scouts(prior, rng, SCOUTS)
     _evaluate(crew, packed, particles)
     beta, log_z, levels, spent = 0.0, 0.0, 0, len(particles.z)
     progress.begin("depth posterior", 1.0)
@@ -131,20 +138,10 @@ def move_all(crew: Crew, packed: Packed, particles: Ensemble, power: float, rng:
     centre, root = fit(particles.z)
     a = np.linalg.solve(root, (particles.z - centre).T).T.copy()
     count = np.zeros(n, np.int64)
-    crew_args = (
-        particles.z, particles.log_likelihood, particles.c,
-        particles.feature_weight, particles.row_weight,
-    )  # fmt: skip
+    state = (particles.z, particles.log_likelihood, particles.c)
     random = (a, rng.standard_normal((n, dims)), np.log(rng.random(n)), rng.random((n, MAX_SHRINK)), count)
-    crew.run(_slice_in_order(slice_move), (packed.pack, power, centre, root), crew_args + random)
+    crew.run(slice_move, (packed.pack, power, centre, root), state + random)
     return int(count.sum()) + _switch(crew, packed, particles, power, rng)
-
-
-def _slice_in_order(kernel: Any) -> Any:
-    def call(pack: Any, power: float, centre: Any, root: Any, *rest: Any) -> None:
-        kernel(pack, power, *rest[:5], centre, root, *rest[5:])
-
-    return call
 
 
 def fit(z: FloatArray) -> tuple[FloatArray, FloatArray]:
@@ -172,21 +169,18 @@ def _switch(crew: Crew, packed: Packed, particles: Ensemble, power: float, rng: 
     return n
 
 
-def _scouts(packed: Packed, prior: DepthPrior, rng: np.random.Generator, n: int) -> Ensemble:
-    shanks, rows = packed.pack.centre.shape
+def _scouts(prior: DepthPrior, rng: np.random.Generator, n: int) -> Ensemble:
     return Ensemble(
         prior.draw(rng, n),
         np.empty(n),
         rng.integers(0, len(MODELS["lfp"]), (n, len(GROUPS))),
-        np.repeat(packed.power[None], n, axis=0),
-        np.ones((n, shanks, rows)),
     )
 
 
 def _evaluate(crew: Crew, packed: Packed, p: Ensemble) -> None:
     from leadline.anchoring._kernels import evaluate
 
-    arrays = (p.z, p.c, p.feature_weight, p.row_weight, p.log_likelihood)
+    arrays = (p.z, p.c, p.log_likelihood)
     crew.run(evaluate, (packed.pack,), arrays)
 
 

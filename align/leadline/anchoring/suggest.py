@@ -223,7 +223,7 @@ def path_evidence(packed: Packed, depth_um: FloatArray, noise_model: int = 0) ->
         count = int(pack.n_features[0, g])
         if count:
             padded = np.concatenate([depth_um, np.zeros(rows - depth_um.size)])
-            group_evidence(pack, 0, g, noise_model, padded, np.ones(rows), white, values)
+            group_evidence(pack, 0, g, noise_model, padded, white, values)
         out[group] = values[:count].copy()
     return out
 
