@@ -2,14 +2,18 @@
 
 from __future__ import annotations
 
+import shutil
+import sys
+from pathlib import Path
+from tempfile import TemporaryDirectory
 from typing import TYPE_CHECKING
 
 import numpy as np
-from tests.leadline.io.broken_cases import Broken, both, cut, edit, remove
+from tests.good_brain import write_good_brain
+from tests.leadline.io.broken_cases import BROKEN, Broken, both, cut, edit, remove
 
 if TYPE_CHECKING:
     from collections.abc import Callable
-    from pathlib import Path
 
 
 def append(name: str, text: str) -> Callable[[Path], None]:
@@ -85,3 +89,38 @@ BROKEN_INPUTS = (
     Broken("steps-damaged", write(".leadline/steps.json", "{"), ("steps.json", "Delete it")),
     Broken("knowledge-broken", both(write("k.toml", "x = ["), append("brain.toml", KNOWLEDGE)), ("k.toml",)),
 )  # fmt: skip
+
+SMALL_BYTES = 60_000
+
+
+def differences(case: Broken, good: Path, folder: Path) -> tuple[dict[str, bytes], list[str]]:
+    """Files in which a spoilt copy differs from the good brain, and files that it lacks."""
+    shutil.copytree(good, folder)
+    case.make(folder)
+    before, after = content(good), content(folder)
+    changed = {name: data for name, data in after.items() if before.get(name) != data}
+    return changed, [name for name in before if name not in after]
+
+
+def content(folder: Path) -> dict[str, bytes]:
+    """Every file below a folder."""
+    return {p.relative_to(folder).as_posix(): p.read_bytes() for p in sorted(folder.rglob("*")) if p.is_file()}
+
+
+def main(target: Path) -> None:
+    """Write what makes each small case broken to ``target/NAME``: lay it over the good brain to have it whole."""
+    with TemporaryDirectory() as scratch:
+        good = Path(scratch) / "good"
+        write_good_brain(good)
+        for number, case in enumerate((*BROKEN, *BROKEN_INPUTS)):
+            changed, gone = differences(case, good, Path(scratch) / str(number))
+            if sum(map(len, changed.values())) > SMALL_BYTES:
+                continue
+            for name, data in changed.items():
+                write(f"{case.name}/{name}", data)(target)
+            told = f"leadline run must end with exit code 2 and say: {' … '.join(case.words)}\n"
+            write(f"{case.name}/EXPECTED", told + "".join(f"without {name}\n" for name in gone))(target)
+
+
+if __name__ == "__main__":
+    main(Path(sys.argv[1]))

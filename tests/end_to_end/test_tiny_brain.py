@@ -4,17 +4,21 @@ import json
 import shutil
 import sys
 import time
+from pathlib import Path
 
 import numpy as np
 import pandas as pd
 import pytest
-from tests.end_to_end.broken_inputs import BROKEN_INPUTS
+from tests.end_to_end.broken_inputs import BROKEN_INPUTS, content
+from tests.end_to_end.broken_inputs import main as make_fixtures
 from tests.good_brain import write_good_brain
 from tests.leadline.io.broken_cases import BROKEN
 
 from leadline.cli.main import main
 from leadline.io.atlases import read_atlas
 from leadline.model.channels import BASES, CHANNEL_COLUMNS, STEREO_COLUMNS
+
+FIXTURES = Path(__file__).parents[2] / "fixtures" / "broken"
 
 
 def leadline(capsys, *words):
@@ -206,3 +210,12 @@ def test_a_broken_input_is_exit_2_with_one_message_and_an_untouched_folder(tmp_p
     for word in case.words:
         assert word.casefold() in err.casefold()
     assert state(tmp_path) == before
+
+
+def test_the_broken_fixtures_are_those_that_are_tested(tmp_path):
+    make_fixtures(tmp_path)
+    made, kept = content(tmp_path), content(FIXTURES)
+    assert set(made) == set(kept) - {"README.md"}
+    dated = (".nrrd", ".tif")  # their writers note the time
+    assert [n for n in made if made[n] != kept[n] and not n.endswith(dated)] == []
+    assert len(list(tmp_path.iterdir())) >= 40
