@@ -105,9 +105,7 @@ class Workbench(QObject):
         specs = layers.stack_specs(bench)
         code = bench.background.finest.code
         self.viewer.layers.clear()
-        for spec in specs:
-            self.canvas.put(spec)
-        self.canvas.pose(layers.pose_of(code))
+        self.canvas.put_stack(specs, layers.pose_of(code))
         self.canvas.thick(THICK_UM)
         self.viewer.title = f"Leadline — {brain.name}"
         self._begin(Desk(brain), bench)

@@ -102,13 +102,16 @@ def _lazy(volume: Volume) -> Any:
 
 
 def _limits(volume: Volume, percentiles: tuple[float, float]) -> tuple[float, float]:
-    """Grey values between which contrast is spread, from a few planes of the coarsest level."""
-    step = max(1, max(volume.shape[1:]) // 400)
-    planes = np.linspace(0, volume.shape[0] - 1, SAMPLE_PLANES + 2).astype(int)[1:-1]
-    seen = np.concatenate(
-        [np.asarray(volume.data[int(k) : int(k) + 1, :, :])[0, ::step, ::step].ravel() for k in planes]
-    )
-    low, high = (float(v) for v in np.percentile(seen, percentiles))
+    """Grey values between which contrast is spread, from a few planes of the coarsest level, across the axis along
+    which a plane is cheap to read."""
+    chunk = volume.chunk or (1, *volume.shape[1:])
+    axis = int(np.argmin([c / n for c, n in zip(chunk, volume.shape, strict=True)]))
+    step = max(1, max(n for k, n in enumerate(volume.shape) if k != axis) // 400)
+    looks = []
+    for k in np.linspace(0, volume.shape[axis] - 1, SAMPLE_PLANES + 2).astype(int)[1:-1]:
+        place = tuple(slice(int(k), int(k) + 1) if a == axis else slice(None, None, None) for a in range(3))
+        looks.append(np.asarray(volume.data[place]).squeeze(axis)[::step, ::step])
+    low, high = (float(v) for v in np.percentile(np.concatenate([look.ravel() for look in looks]), percentiles))
     return (low, high) if high > low else (low, low + 1.0)
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -16,6 +17,15 @@ if TYPE_CHECKING:
     from leadline_napari.states import LayerSpec, Pose
 
 MAKERS = {"image": "add_image", "labels": "add_labels", "points": "add_points", "surface": "add_surface"}
+
+
+def _blank(data: Any) -> Any:
+    """Arrays of the same shapes that hold nothing and cost nothing."""
+    import dask.array as da
+
+    if isinstance(data, list):
+        return [_blank(level) for level in data]
+    return da.zeros(data.shape, dtype=data.dtype, chunks=(1, *data.shape[1:]))
 
 
 class Canvas:
@@ -37,6 +47,18 @@ class Canvas:
             self.viewer.layers.move(self.viewer.layers.index(fresh), index)
             return fresh
         return self._add(spec)
+
+    def put_stack(self, specs: Iterable[LayerSpec], pose: Pose) -> None:
+        """Add images that may be large, and turn the canvas.
+
+        napari looks at a new layer along its first axis, before it can be turned; in a flat file whose first axis is
+        the fastest that alone would read all of it. So the layers are added blank and filled once the canvas is posed.
+        """
+        for spec in specs:
+            self.put(replace(spec, data=_blank(spec.data)))
+        self.pose(pose)
+        for spec in specs:
+            self.viewer.layers[spec.name].data = spec.data
 
     def _refresh_points(self, layer: Any, spec: LayerSpec) -> Layer:
         layer.data = spec.data

@@ -5,8 +5,8 @@ from __future__ import annotations
 from dataclasses import replace
 from typing import TYPE_CHECKING
 
-from qtpy.QtCore import QSignalBlocker, Qt, Signal
-from qtpy.QtGui import QKeySequence, QShortcut
+from qtpy.QtCore import QEvent, QKeyCombination, QSignalBlocker, Qt, Signal
+from qtpy.QtGui import QKeySequence
 from qtpy.QtWidgets import (
     QComboBox,
     QDoubleSpinBox,
@@ -21,33 +21,37 @@ from qtpy.QtWidgets import (
 from leadline_napari.views.log import Log
 
 if TYPE_CHECKING:
+    from qtpy.QtCore import QObject
+
     from leadline.model.anchor import Anchor
     from leadline_napari.states import InHand, Readout, SectionState
     from leadline_napari.style import Theme
 
-KEYS = (
-    ("Up", "nudge", ("depth", -5.0)),
-    ("Down", "nudge", ("depth", 5.0)),
-    ("Shift+Up", "nudge", ("depth", -1.0)),
-    ("Shift+Down", "nudge", ("depth", 1.0)),
-    ("Alt+Up", "nudge", ("tip", 5.0)),
-    ("Alt+Down", "nudge", ("tip", -5.0)),
-    ("Alt+Shift+Up", "nudge", ("tip", 1.0)),
-    ("Alt+Shift+Down", "nudge", ("tip", -1.0)),
-    ("PgDown", "stepped", (1,)),
-    ("PgUp", "stepped", (-1,)),
-    ("Delete", "deleted", ()),
-    ("Return", "accepted", ()),
-    ("Escape", "let_go", ()),
-    ("Insert", "insert_asked", ()),
-    ("Ctrl+Z", "undo_asked", ()),
-    ("Ctrl+Shift+Z", "redo_asked", ()),
-    ("Ctrl+S", "update_asked", ()),
-    ("Home", "whole_asked", ()),
-)
+KEYS: dict[str, tuple[str, tuple[object, ...]]] = {
+    "Up": ("nudge", ("depth", -5.0)),
+    "Down": ("nudge", ("depth", 5.0)),
+    "Shift+Up": ("nudge", ("depth", -1.0)),
+    "Shift+Down": ("nudge", ("depth", 1.0)),
+    "Alt+Up": ("nudge", ("tip", 5.0)),
+    "Alt+Down": ("nudge", ("tip", -5.0)),
+    "Alt+Shift+Up": ("nudge", ("tip", 1.0)),
+    "Alt+Shift+Down": ("nudge", ("tip", -1.0)),
+    "PgDown": ("stepped", (1,)),
+    "PgUp": ("stepped", (-1,)),
+    "Del": ("deleted", ()),
+    "Return": ("accepted", ()),
+    "Enter": ("accepted", ()),
+    "Esc": ("let_go", ()),
+    "Ins": ("insert_asked", ()),
+    "Ctrl+Z": ("undo_asked", ()),
+    "Ctrl+Shift+Z": ("redo_asked", ()),
+    "Ctrl+Y": ("redo_asked", ()),
+    "Ctrl+S": ("update_asked", ()),
+    "Home": ("whole_asked", ()),
+}
 HINT = (
     "Double-click in a lane adds an anchor; drag either end; arrow keys nudge by 5 um (Shift: 1 um, Alt: the contact's "
-    "end); Page Up/Down goes from anchor to anchor."
+    "end); Page Up/Down goes from anchor to anchor, Insert adds one at the chosen contact."
 )
 
 
@@ -102,7 +106,7 @@ class SectionView(QWidget):
         self.readout.setMaximumHeight(self.fontMetrics().lineSpacing() * 4)
         self.readout.setSizePolicy(QSizePolicy.Policy.Ignored, QSizePolicy.Policy.Fixed)
         layout.addWidget(self.readout)
-        self._shortcuts()
+        self._watch_keys()
         self._wire_band()
         self.whole_asked.connect(self.log.whole)
         self.show_readout(None)
@@ -202,11 +206,24 @@ class SectionView(QWidget):
         spin.editingFinished.connect(self._edited)
         return spin
 
-    def _shortcuts(self) -> None:
-        for keys, name, values in KEYS:
-            shortcut = QShortcut(QKeySequence(keys), self.log)
-            shortcut.setContext(Qt.ShortcutContext.WidgetWithChildrenShortcut)
-            shortcut.activated.connect(lambda name=name, values=values: getattr(self, name).emit(*values))
+    def eventFilter(self, watched: QObject, event: QEvent) -> bool:
+        """Keys over the log: they are taken before the window's own shortcuts, some of which are the same."""
+        kind = event.type()
+        if watched is self.log and kind in (QEvent.Type.ShortcutOverride, QEvent.Type.KeyPress):
+            modifiers = event.modifiers() & ~Qt.KeyboardModifier.KeypadModifier
+            keys = QKeySequence(QKeyCombination(modifiers, Qt.Key(event.key()))).toString(
+                QKeySequence.SequenceFormat.PortableText
+            )
+            if keys in KEYS:
+                event.accept()
+                if kind == QEvent.Type.KeyPress:
+                    name, values = KEYS[keys]
+                    getattr(self, name).emit(*values)
+                return True
+        return super().eventFilter(watched, event)
+
+    def _watch_keys(self) -> None:
+        self.log.installEventFilter(self)
         self.log.setFocusPolicy(Qt.FocusPolicy.StrongFocus)
         self.log.setAccessibleName("Section of the track")
 

@@ -16,6 +16,7 @@ if TYPE_CHECKING:
     from collections.abc import Callable
 
 SHOW_EVERY_S = 0.05
+BAR_STEPS = 1000  # the activity dock counts in whole numbers
 
 
 class QtRunner(QObject):
@@ -127,11 +128,13 @@ class QtProgress(QObject):
         from napari.utils import cancelable_progress
 
         self.finish()
-        self._bar = cancelable_progress(total=max(round(total), 0), desc=label, cancel_callback=self.cancel)
+        self._bar = cancelable_progress(total=BAR_STEPS if total > 0 else 0, desc=label, cancel_callback=self.cancel)
 
     def _show_moved(self, done: float) -> None:
-        if self._bar is not None and self._bar.total:
-            self._bar.update(min(done, self._bar.total) - self._bar.n)
+        if self._bar is not None and self.total > 0:
+            at = round(BAR_STEPS * min(done / self.total, 1.0))
+            if at > self._bar.n:
+                self._bar.update(int(at - self._bar.n))
 
     def finish(self) -> None:
         """Take the bar away."""

@@ -2,6 +2,8 @@
 
 # ruff: noqa: E402 - what needs napari is imported only where there is one
 
+from dataclasses import replace
+
 import numpy as np
 import pandas as pd
 import pytest
@@ -17,6 +19,7 @@ from tests.leadline_napari.screen.hands import anchors, click, double_click, dra
 
 from leadline.io.tables import read_anchors
 from leadline_napari.docks import close_workbench, workbench
+from leadline_napari.session import AddAnchor
 from leadline_napari.style import DARK, LIGHT
 
 
@@ -196,7 +199,8 @@ def test_surfaces_and_the_plane_along_the_track_are_shown_in_3d(bench, qtbot, fi
     assert shown[-2:] == ["Tracks", "Contacts"]
     assert all({str(u) for u in layer.units} == {"micrometer"} for layer in bench.viewer.layers)
     bench.brain.plane_button.click()
-    image = bench.viewer.layers["Stack background"]
+    settle(bench, qtbot)
+    image = bench.viewer.layers["Plane along track"]
     track = bench.sections.scene.shank.track
     normal = np.array(image.plane.normal) / np.array(image.scale)
     way = track.stack_um[-1] - track.stack_um[0]
@@ -249,8 +253,7 @@ def test_errors_are_told_in_words_and_the_window_goes_on(bench, qtbot, finished)
     opened(bench, qtbot, finished)
     double_click(bench, "strata", 0.5, 700.0)
     (anchor,) = anchors(bench)
-    bench.sections.change(anchor, anchor.__class__("A", 0, anchor.tip_distance_um, anchor.track_depth_um, 40.0, "x"))
-    bench.sections.add_at("tip", anchor.tip_distance_um)
+    bench.sections._act(AddAnchor(replace(anchor, tip_distance_um=anchor.tip_distance_um + 100.0)))
     settle(bench, qtbot)
     assert any("anchors cross" in words for words in bench.told)
     assert len(anchors(bench)) == 1
