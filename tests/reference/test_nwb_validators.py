@@ -51,6 +51,23 @@ def test_an_annotated_probe_file_is_one_to_probeinterface(brain, tmp_path):
     }
 
 
+def test_contacts_without_a_place_have_none_in_any_format(tmp_path):
+    import pandas as pd
+
+    brain = write_finished_brain(tmp_path)
+    table = pd.read_parquet(brain.out / "channels.parquet")
+    lost = table["channel"] < 4
+    table.loc[lost, "region"] = "not located"
+    table.loc[lost, ["ap_um", "dv_um", "ml_um", "p_region"]] = None
+    table.to_parquet(brain.out / "channels.parquet")
+    (path,) = export_probeinterface(brain, tmp_path / "p")
+    notes = json.loads(path.read_text())["probes"][0]["contact_annotations"]
+    assert notes["brain_area"][:5] == ["", "", "", "", "CA1p"]
+    assert notes["ap_um"][:4] == [None] * 4
+    tsv = pd.read_csv(export_bids(brain, tmp_path / "b")[0], sep="\t", keep_default_na=False)
+    assert tsv.loc[lost, ["x", "location", "probability"]].to_numpy().tolist() == [["n/a"] * 3] * 4
+
+
 def test_an_annotated_probe_file_fits_the_published_schema(brain, tmp_path):
     """The JSON schema that probeinterface ships."""
     from importlib.resources import files

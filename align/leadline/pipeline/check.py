@@ -61,7 +61,11 @@ class _Look:
             self.notes += _size_notes(sorted(atlas.labels.extent_um), sorted(stack.finest.extent_um))
 
     def penetration(self, penetration: Penetration) -> None:
-        about = f"penetration {penetration.name}"
+        from leadline.io.units import read_unit_table
+
+        about, unit_table = f"penetration {penetration.name}", penetration.unit_table
+        if unit_table is not None:
+            self.hear(lambda: read_unit_table(unit_table), about)
         probe = self.hear(lambda: self.bench.probe(penetration), about)
         if probe is None:
             return

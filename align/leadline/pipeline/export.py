@@ -183,7 +183,7 @@ def export_probeinterface(brain: Brain, folder: Path, *, dry_run: bool = False) 
     written = []
     for penetration in brain.penetrations:
         path = folder / f"{penetration.name}.json"
-        mine = table[table["penetration"] == penetration.name]
+        mine = table[(table["penetration"] == penetration.name) & (table["region"] != NOT_LOCATED)]
         content = annotated(penetration.probe, penetration.probe_index, mine, _provenance(brain, atlas))
         if not dry_run:
             write_probe_file(content, path)
@@ -198,7 +198,9 @@ def export_bids(brain: Brain, folder: Path, *, dry_run: bool = False) -> list[Pa
     from leadline.pipeline.atlas_import import load_atlas
 
     atlas = load_atlas(brain.atlas)
-    files = bids_files(brain.name, located_channels(brain), atlas, _provenance(brain, atlas))
+    channels = located_channels(brain)
+    channels = channels.assign(region=channels["region"].where(channels["region"] != NOT_LOCATED, ""))
+    files = bids_files(brain.name, channels, atlas, _provenance(brain, atlas))
     for name, text in files.items():
         if not dry_run:
             write_text(folder / name, text)

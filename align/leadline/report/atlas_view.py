@@ -61,7 +61,7 @@ def shades(values: pd.Series, period: float | None = None) -> Shades:
             low, high = np.percentile(numbers, [2, 98])
             scale = ScalarMappable(Normalize(low, high if high > low else low + 1), mpl.colormaps[style.SEQUENTIAL])
         return Shades(np.asarray(scale.to_rgba(numbers), float), scale=scale)
-    words = values.astype(str)
+    words = values.astype(str).replace("", "none")
     counts = words.value_counts()
     ranked = sorted(counts.index, key=lambda word: (-counts[word], word))
     colour = dict(zip(ranked[:MOST_CATEGORIES], style.CATEGORIES, strict=False))

@@ -163,7 +163,8 @@ def _anchor(shank: Shank) -> str:
 def _penetration(findings: Findings, shank: Shank, picture: str) -> str:
     head = f'<section class="penetration" id="{_anchor(shank)}"><h2>Penetration {escape(shank.title)}</h2>'
     if not shank.located:
-        why = next((m for m in findings.missing if shank.penetration in m), "no track was found for it")
+        names = (f"'{shank.penetration}'", f"penetration {shank.penetration}:")
+        why = next((m for m in findings.missing if any(n in m for n in names)), "no track was found for it")
         return f'{head}<p class="note">Not located: {escape(why)}</p></section>'
     alt = f"section of {shank.title}: tissue, strata, ties, physiology and odds of regions by depth"
     return (

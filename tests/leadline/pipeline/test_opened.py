@@ -40,8 +40,10 @@ def test_check_tells_all_that_is_wrong(tmp_path):
     brain = write_finished_brain(tmp_path)
     (tmp_path / "a_lfp.bin").write_bytes(b"")
     (tmp_path / "a_spikes.csv").write_text("time_s\n1\n")
-    with pytest.raises(LeadlineError, match="is empty"):
+    (tmp_path / "a_units.csv").write_text("unit,tag\n1,a\n")
+    with pytest.raises(LeadlineError, match="is empty") as told:
         leadline.open_brain(brain.file).check()
+    assert "column 'unit_id' is missing" in str(told.value)
 
 
 def test_importing_leadline_is_light():

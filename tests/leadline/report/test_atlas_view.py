@@ -55,6 +55,7 @@ def test_a_name_is_put_where_there_is_most_room():
 
 
 def test_words_take_seven_colours_and_the_rest_are_grey():
+    assert shades(pd.Series(["", "5"])).entries[1][0] == "none (1)"
     values = pd.Series([f"k{min(i, 9)}" for i in range(40)])
     found = shades(values)
     assert len(found.entries) == 8
