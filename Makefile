@@ -3,7 +3,7 @@ PYTHON ?= $(shell command -v python3.13 || command -v python3.12 || command -v p
 BIN := .venv/bin
 ONE_THREAD := OMP_NUM_THREADS=1 OPENBLAS_NUM_THREADS=1 MKL_NUM_THREADS=1 NUMBA_NUM_THREADS=1
 
-.PHONY: demo test lint study clean docs
+.PHONY: demo test lint study clean docs screenshots
 demo: .venv/.core
 	$(BIN)/leadline demo leadline-demo
 
@@ -21,6 +21,9 @@ study: .venv/.dev
 
 docs: .venv/.dev
 	$(BIN)/python -m pdoc --docformat numpy -o docs/reference leadline '!leadline.demo'
+
+screenshots: demo .venv/.dev
+	$(BIN)/python -m tests.pictures leadline-demo docs/pictures
 
 clean:
 	rm -rf .venv leadline-demo
