@@ -76,6 +76,7 @@ def _stack(
         levels if len(levels) > 1 else levels[0],
         {
             "multiscale": len(levels) > 1,
+            "projection_mode": "none",  # the margins that make contacts visible are no slab of the stack
             "scale": finest.voxel_um,
             "translate": finest.origin_um,
             "colormap": colormap,
