@@ -3,13 +3,13 @@
 from __future__ import annotations
 
 from contextlib import contextmanager
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from leadline.base.arrays import Float32Array, FloatArray, IntArray
+from leadline.base.arrays import AnyArray, Float32Array, FloatArray, IntArray
 from leadline.base.errors import LeadlineError
 from leadline.io.nwb_electrodes import NONE, Electrodes, groups_of, match, need_pynwb, read_electrodes
 from leadline.model.recording import Events, Spikes
@@ -22,6 +22,7 @@ if TYPE_CHECKING:
 SUFFIX = ".nwb"
 MIN_SECONDS = 1.0
 JITTER = 0.01
+KEPT_BYTES = 128 * 2**20
 PEAK_COLUMNS = ("peak_channel_id", "peak_electrode", "max_electrode", "max_channel", "peak_channel")
 NOT_EVENTS = ("epochs", "invalid_times")
 KIND_COLUMNS = ("kind", "stimulus_name", "stimulus_type", "condition")
@@ -37,7 +38,7 @@ class NwbTraces:
     """An ``ElectricalSeries``, read lazily; trace *c* is the electrode that contact of channel *c* is.
 
     ``dataset`` : its path inside ``file``. ``column`` : (n_channels,) column of the data, -1 where a trace is absent.
-    ``uv_per_bit``, ``offset_uv`` : of each column.
+    ``uv_per_bit``, ``offset_uv`` : of each column. ``kept`` : rows of chunks that were unpacked last.
     """
 
     file: Path
@@ -47,6 +48,7 @@ class NwbTraces:
     column: IntArray
     uv_per_bit: FloatArray
     offset_uv: float
+    kept: dict[int, AnyArray] = field(default_factory=dict, repr=False)
 
     @property
     def n_channels(self) -> int:
@@ -62,8 +64,6 @@ class NwbTraces:
 
         Raises LeadlineError where a trace is absent or a sample is not a finite number.
         """
-        import h5py
-
         from leadline.io._samples_kernel import as_microvolts
 
         column = self.column[np.asarray(channels, np.int64)]
@@ -71,11 +71,9 @@ class NwbTraces:
             raise LeadlineError(
                 f"holds no trace of channel {int(np.asarray(channels)[column == NONE][0])}", where=str(self.file)
             )
-        with h5py.File(self.file, "r") as handle:
-            data = handle[self.dataset]
-            low, high = (int(column.min()), int(column.max()) + 1) if column.size else (0, 0)
-            rows = data[max(0, start) : min(stop, self.n_samples)] if data.ndim == 1 else None
-            raw = data[max(0, start) : min(stop, self.n_samples), low:high] if rows is None else rows[:, None]
+        start, stop = max(0, start), min(stop, self.n_samples)
+        low, high = (int(column.min()), int(column.max()) + 1) if column.size else (0, 0)
+        raw = self._samples(start, max(start, stop))[:, low:high]
         samples: Float32Array
         if np.ptp(self.uv_per_bit) == 0:
             samples = as_microvolts(raw, column - low, float(self.uv_per_bit[0]))
@@ -91,6 +89,31 @@ class NwbTraces:
                 mend="List spoilt times in 'exclude'",
             )
         return samples
+
+    def _samples(self, start: int, stop: int) -> AnyArray:
+        """Samples ``(stop - start, columns)`` as they are stored.
+
+        Long compressed chunks are unpacked once and kept until the reading has gone past them: reads are short and
+        follow each other, and unpacking a minute of recording for every second of it would take all day.
+        """
+        import h5py
+
+        with h5py.File(self.file, "r") as handle:
+            data = handle[self.dataset]
+            length = data.chunks[0] if data.chunks else 0
+            row_bytes = length * int(np.prod(data.shape[1:], dtype=np.int64)) * data.dtype.itemsize
+            if length <= stop - start or row_bytes > KEPT_BYTES:
+                found = data[start:stop]
+            else:
+                first, last = start // length, max(start, stop - 1) // length
+                for k in [k for k in self.kept if not first <= k <= last]:
+                    del self.kept[k]
+                for k in range(first, last + 1):
+                    if k not in self.kept:
+                        self.kept[k] = data[k * length : (k + 1) * length]
+                whole = np.concatenate([self.kept[k] for k in range(first, last + 1)])
+                found = whole[start - first * length : stop - first * length]
+        return np.asarray(found if found.ndim == 2 else found[:, None])
 
 
 def open_nwb(path: Path, probe: Probe, group: str) -> NwbTraces:

@@ -66,6 +66,21 @@ def test_names_serve_where_there_are_no_places(tmp_path, flat):
     assert np.array_equal(found.read_uv(0, 900, everything), flat.read_uv(0, 900, everything))
 
 
+def test_long_chunks_are_unpacked_once_and_give_the_same_samples(tmp_path, flat, monkeypatch):
+    write_good_brain(tmp_path)
+    found = open_nwb(write_nwb(tmp_path, compress=True), read_probe(tmp_path / "probe_a.json"), "A")
+    unpacked = []
+    plain = h5py.Dataset.__getitem__
+    monkeypatch.setattr(h5py.Dataset, "__getitem__", lambda d, key: (unpacked.append(key), plain(d, key))[1])
+    channels = np.arange(N_CONTACTS)
+    for start in range(0, 15000, 700):  # chunks of 5000 samples
+        assert np.array_equal(found.read_uv(start, start + 600, channels), flat.read_uv(start, start + 600, channels))
+    assert len(unpacked) == 3
+    assert len(found.kept) <= 2
+    assert found.read_uv(14990, 15100, channels).shape == (10, N_CONTACTS)
+    assert found.read_uv(15100, 15200, channels).shape == (0, N_CONTACTS)
+
+
 def test_contacts_without_an_electrode_count_as_not_recorded(tmp_path, flat):
     write_good_brain(tmp_path)
     path = write_nwb(tmp_path, order=ORDER[ORDER % 4 != 1])
