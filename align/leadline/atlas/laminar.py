@@ -130,21 +130,35 @@ def solve(
     of the right hemisphere; faces across it between two voxels of ``medial`` (cortex, where not given) are pia. NaN
     outside cortex and in pieces of it that do not meet both surfaces.
     """
-    from scipy.sparse import coo_matrix
+    from scipy.sparse import diags
     from scipy.sparse.linalg import cg
 
     pial = _medial_faces(cortex if medial is None else medial & cortex, midline)
     cortex = cortex & _between_both(cortex, outside, white, pial)
-    n = int(cortex.sum())
     values = np.full(cortex.shape, np.nan, np.float32)
+    n = int(cortex.sum())
     if not n:
         return values
     number = np.full(cortex.shape, -1, np.int64)
     number[cortex] = np.arange(n)
+    matrix, right = _equations(number, outside, white, pial, voxel_um)
+    jacobi = diags(1.0 / matrix.diagonal())
+    solution, failed = cg(matrix, right, x0=np.full(n, 0.5), rtol=TOLERANCE, M=jacobi, maxiter=5000)
+    if failed:
+        raise LeadlineError("the cortical depth did not converge", where="atlas", mend="Report this fault")
+    values[cortex] = np.clip(solution, 0.0, 1.0)
+    return values
+
+
+def _equations(
+    number: IntArray, outside: BoolArray, white: BoolArray, pial: BoolArray, voxel_um: FloatArray
+) -> tuple[Any, FloatArray]:
+    """Matrix and right side: all that flows over a voxel's faces is nothing. ``number`` : -1 outside cortex."""
+    from scipy.sparse import coo_matrix
+
+    n = int(number.max()) + 1
     diagonal, right = np.zeros(n), np.zeros(n)
-    rows: list[IntArray] = []
-    columns: list[IntArray] = []
-    weights: list[FloatArray] = []
+    rows, columns, weights = [np.arange(n)], [np.arange(n)], [diagonal]
     for axis in range(3):
         conductance = float(voxel_um.min() / voxel_um[axis]) ** 2
         low, high = _faces(number, axis), _faces(number, axis, upper=True)
@@ -160,25 +174,12 @@ def solve(
             columns.append(two)
             weights.append(np.full(len(one), -conductance))
         for inner, across in ((low, True), (high, False)):
-            for surface, level in ((outside, 0.0), (white, 1.0)):
+            for surface, level in ((outside, 0.0), (white, 1.0)):  # half a voxel away: twice the conductance
                 face = (inner >= 0) & _faces(surface, axis, upper=across)
                 np.add.at(diagonal, inner[face], 2 * conductance)
                 np.add.at(right, inner[face], 2 * conductance * level)
-    everyone = np.arange(n)
-    entries = np.concatenate([diagonal, *weights])
-    where = np.concatenate([everyone, *rows]), np.concatenate([everyone, *columns])
-    matrix = coo_matrix((entries, where)).tocsr()
-    solution, failed = cg(matrix, right, x0=np.full(n, 0.5), rtol=TOLERANCE, M=_jacobi(diagonal), maxiter=5000)
-    if failed:
-        raise LeadlineError("the cortical depth did not converge", where="atlas", mend="Report this fault")
-    values[cortex] = np.clip(solution, 0.0, 1.0)
-    return values
-
-
-def _jacobi(diagonal: FloatArray) -> Any:
-    from scipy.sparse import diags
-
-    return diags(1.0 / diagonal)
+    entries = np.concatenate(weights)
+    return coo_matrix((entries, (np.concatenate(rows), np.concatenate(columns)))).tocsr(), right
 
 
 def _faces(array: AnyArray, axis: int, *, upper: bool = False) -> AnyArray:
