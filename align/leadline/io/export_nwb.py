@@ -198,6 +198,7 @@ def write_in_place(path: Path, rows: IntArray, columns: Mapping[str, Column]) ->
     The change is made on a copy, which then takes the file's name in one step, so that a kill at any moment leaves
     either the old file or the new one, whole.
     """
+    path = path.resolve()  # of a link, the file itself is changed and the link stays one
     require_safe(path)
     backup = path.with_name(path.name + BACKUP)
     if backup.exists():

@@ -132,6 +132,15 @@ def test_in_place_leaves_no_backup_behind(brain, source):
     assert [p.name for p in source.parent.iterdir()] == ["in.nwb"]
 
 
+def test_in_place_through_a_link_changes_the_file_and_keeps_the_link(brain, source, tmp_path):
+    (tmp_path / "there").mkdir()
+    link = tmp_path / "there" / "link.nwb"
+    link.symlink_to(source)
+    export_nwb(brain, link, None, groups={}, in_place=True)
+    assert link.is_symlink()
+    require_table(source, brain)
+
+
 def test_in_place_puts_the_old_file_back_when_the_new_one_is_wrong(brain, source, monkeypatch):
     before = source.read_bytes()
     calls = []
