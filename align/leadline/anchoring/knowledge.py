@@ -43,7 +43,7 @@ class DepthLaw:
     scale_sd: float = 0.065
     slope_sd: float = 0.09
     slope_length_um: float = 700.0
-    border_sd_um: float = 24.0
+    border_sd_um: float = 30.0
     border_length_um: float = 250.0
 
 

@@ -69,7 +69,7 @@ def test_draws_follow_the_two_part_law_of_the_offset():
     z = prior.draw(np.random.default_rng(0), 20000)
     offset = prior.offset_mean_um + z @ prior.offset_basis
     variance = (1 - law.stray_share) * law.offset_sd_um**2 + law.stray_share * law.stray_offset_sd_um**2
-    assert offset.std() == pytest.approx(np.sqrt(variance), rel=0.03)
+    assert offset.std() == pytest.approx(np.sqrt(variance), rel=0.06)
     # within one core sd: the share of each part's normal distribution, from tables of erf
     inside = (1 - law.stray_share) * 0.6827 + law.stray_share * 0.2897
     assert (np.abs(offset) < law.offset_sd_um).mean() == pytest.approx(inside, abs=0.015)
