@@ -90,3 +90,12 @@ def test_the_notebook_runs(desk):
 def test_links_between_pages_lead_somewhere(page):
     for target in re.findall(r"\]\(([^)#\s]+)", page.read_text()):
         assert (page.parent / target).exists(), target
+
+
+def test_every_message_of_the_troubleshooting_page_is_one_that_leadline_says():
+    source = "\n".join(p.read_text() for p in (DOCS.parent / "align" / "leadline").rglob("*.py"))
+    source = re.sub(r'"\s*\n\s*f?"', "", source)  # messages that are written over several lines
+    rows = re.findall(r"^\| (`.*?`.*?) \|", (DOCS / "troubleshooting.md").read_text(), re.MULTILINE)
+    pieces = [piece.strip(" :`") for row in rows for word in re.findall(r"`([^`]+)`", row) for piece in word.split("…")]
+    assert len(rows) > 8
+    assert [piece for piece in pieces if piece and piece not in source] == []
