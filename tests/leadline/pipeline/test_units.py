@@ -120,6 +120,19 @@ def test_a_unit_table_of_other_units_is_refused(tmp_path):
         unit_table(brain)
 
 
+def test_the_same_id_in_two_recordings_is_two_units(tmp_path):
+    brain = write_finished_brain(tmp_path)
+    (tmp_path / "later.csv").write_text("time_s,unit_id,channel\n1,u0,4\n2,u0,4\n3,u99,9\n")
+    (tmp_path / "a_units.csv").write_text("unit_id,recording,tag\nu0,1,early\nu0,2,late\n")
+    text = brain.file.read_text()
+    more = '[[penetration.recording]]\n  spikes = "later.csv"\n\n[[anchor]]'
+    brain.file.write_text(text.replace("[[anchor]]", more))
+    table = unit_table(read_brain(brain.file)).set_index(["recording", "unit_id"])
+    assert len(table) == 14
+    assert table.loc[(1, "u0"), ["tag", "n_spikes", "channel"]].tolist() == ["early", 29, 0]
+    assert table.loc[(2, "u0"), ["tag", "n_spikes", "channel"]].tolist() == ["late", 2, 4]
+
+
 def test_a_brain_without_spikes_says_so(tmp_path):
     brain = write_finished_brain(tmp_path)
     text = brain.file.read_text().replace('spikes = "a_spikes.csv"', "")
