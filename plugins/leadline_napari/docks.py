@@ -350,15 +350,22 @@ class Workbench(QObject):
         self._show_in_3d(True)
 
     def _show_in_3d(self, on: bool) -> None:
+        """Turn to 3-D or back. Slices are put away before and brought back after: as volumes they would cost much."""
         flat = {layers.NAMES["background"], layers.NAMES["dye"], layers.NAMES["outlines"]}
+        slices = [layer for layer in self.viewer.layers if layer.name in flat]
+        solid = [
+            layer
+            for layer in self.viewer.layers
+            if layer.name == layers.NAMES["hull"] or layer.name.endswith(" surface")
+        ]
         for layer in self.viewer.layers:
-            if layer.name in flat:
-                layer.visible = not on
-            elif layer.name == layers.NAMES["plane"]:
+            if layer.name == layers.NAMES["plane"]:
                 layer.visible = False
-            elif layer.name == layers.NAMES["hull"] or layer.name.endswith(" surface"):
-                layer.visible = on
+        for layer in slices if on else solid:
+            layer.visible = False
         self.viewer.dims.ndisplay = 3 if on else 2
+        for layer in solid if on else slices:
+            layer.visible = True
         self.viewer.reset_view()
         if on:
             self.canvas.look_down()

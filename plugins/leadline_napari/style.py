@@ -13,7 +13,6 @@ from leadline.base.arrays import AnyArray, FloatArray
 
 ORANGE = "#e69f00"
 SKY = "#56b4e9"
-GREEN = "#009e73"
 BLUE = "#0072b2"
 VERMILION = "#d55e00"
 PINK = "#cc79a7"
@@ -24,8 +23,8 @@ OUTSIDE_RGB = (116, 122, 131)
 TIES = {
     "held": ("#ffffff", "#000000"),
     "user": (SKY, BLUE),
-    "auto": ("#35c9a0", GREEN),
-    "fixed": ("#b9bec7", "#5b626d"),
+    "auto": ("#f28e5c", VERMILION),
+    "fixed": ("#8a8f98", "#5b626d"),
     "suggested": (ORANGE, "#a66f00"),
     "second": (PINK, "#b0487f"),
 }

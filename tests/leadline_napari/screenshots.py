@@ -82,6 +82,13 @@ def draw(brain: Path, folder: Path, scale: int) -> None:
         show()
         settle()
         take(name)
+    for name, dialog in dialogs(bench).items():
+        for theme in THEMES:
+            viewer.theme = theme
+            dialog.show()
+            settle()
+            dialog.grab().save(str(folder / f"{name}-{theme}-{scale}00.png"))
+        dialog.close()
     close_workbench(viewer)
     viewer.close()
 
@@ -122,7 +129,22 @@ def scenes(bench: object) -> dict[str, object]:
         "channels": lambda: bench.docks["table"].raise_(),
         "corrections": corrections,
         "surfaces": surfaces,
-        "lanes": lambda: (bench.show_surfaces(), bench.docks["section"].raise_(), bench._choose_lanes()),
+        "plane": bench.lay_plane,
+    }
+
+
+def dialogs(bench: object) -> dict[str, object]:
+    """Dialogs, as pictures of their own."""
+    import dataclasses
+
+    from leadline.model.settings import Settings
+    from leadline_napari.views.lanes import LaneDialog
+    from leadline_napari.views.settings import SettingsDialog
+
+    values = dataclasses.asdict(Settings())
+    return {
+        "lanes": LaneDialog(bench.section, bench.sections.scene.lanes, bench.sections.lane_names, {}),
+        "settings": SettingsDialog(bench.brain, values, values),
     }
 
 

@@ -269,6 +269,8 @@ def _surface(
     from scipy.ndimage import gaussian_filter
     from skimage.measure import marching_cubes
 
+    # The hull is drawn first and must not hide what lies inside it; regions hide each other as solids do.
+    blending = "translucent_no_depth" if name == NAMES["hull"] else "translucent"
     field = gaussian_filter(np.pad(inside.astype(np.float32), 2), 1.0)
     vertices, faces, _, _ = marching_cubes(field, min(0.5, float(field.max()) * 0.6))
     points = registration.atlas_to_stack((vertices - 2) * grain_um)
@@ -281,7 +283,7 @@ def _surface(
         (points, faces, np.ones(len(points))),
         {
             "vertex_colors": np.tile([*rgb, 1.0], (len(points), 1)), "opacity": opacity, "shading": "smooth",
-            "blending": "translucent", "axis_labels": axis_names(code),
+            "blending": blending, "axis_labels": axis_names(code),
         },
     )  # fmt: skip
 

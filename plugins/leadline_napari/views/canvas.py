@@ -130,6 +130,7 @@ class Canvas:
         """Look at the brain a little from above and from one side."""
         first, second, third = self.viewer.scene.camera.angles
         self.viewer.scene.camera.angles = (first + 20.0, second + 35.0, third + 10.0)
+        self.viewer.scene.camera.zoom *= 0.8
 
     def on_pick(self, name: str, chosen: Callable[[int], None]) -> None:
         """Call ``chosen`` with the row of a point that is clicked."""

@@ -212,7 +212,7 @@ class Log(pg.GraphicsLayoutWidget):
         axis = AXIS_PX if column.kind in ("tissue", "odds") else 0
         width = WIDTHS[column.kind]
         layout = self.ci.layout
-        layout.setColumnMinimumWidth(column.at, width * 0.5 + axis if shown else 0)
+        layout.setColumnMinimumWidth(column.at, width * 0.42 + axis if shown else 0)
         layout.setColumnPreferredWidth(column.at, width + axis if shown else 0)
         layout.setColumnStretchFactor(column.at, width if shown else 0)
         layout.setColumnMaximumWidth(column.at, 10_000 if shown else 0)

@@ -364,7 +364,7 @@ class BandMark(Mark):
     def _label(self, painter: QPainter, tie: Tie, ends: QLineF, taken: list[QRectF]) -> None:
         measures = self.font_of(painter, bold=tie.held)
         room = abs(ends.dx()) - 6 * HANDLE_PX
-        text = measures.elidedText(tie.label, Qt.TextElideMode.ElideMiddle, room)
+        text = measures.elidedText(tie.label, Qt.TextElideMode.ElideRight, room)
         middle = ends.pointAt(0.5)
         box = QRectF(0, 0, measures.horizontalAdvance(text) + 8, measures.height() + 2)
         box.moveCenter(middle - QPointF(0, measures.height() * 0.85))

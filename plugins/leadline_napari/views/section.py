@@ -119,7 +119,7 @@ class SectionView(QWidget):
         self.shank = QComboBox()
         self.shank.setToolTip("Which shank is shown")
         self.shank.setAccessibleName("Shank")
-        self.shank.setMinimumContentsLength(8)
+        self.shank.setMinimumContentsLength(5)
         self.shank.activated.connect(lambda i: self.shank_chosen.emit(*self.shank.itemData(i)))
         bar.addWidget(self.shank, 1)
         self.tissue = QComboBox()
@@ -135,7 +135,7 @@ class SectionView(QWidget):
             ("lanes", "Lanes…", "Choose and order the physiology lanes, set their ranges", self.lanes_asked),
             ("second", "Compare…", "Show a second reader's anchors beside yours", self.second_asked),
             ("save", "Save…", "Save this section as PNG, SVG or PDF", self.save_asked),
-            ("update", "Update tables", "Write channels.csv and all other tables anew with these anchors and tracks "
+            ("update", "Update", "Write channels.csv and all other tables anew with these anchors and tracks "
              "(Ctrl+S); anchors themselves are saved at once", self.update_asked),
         ):  # fmt: skip
             button = QToolButton()
