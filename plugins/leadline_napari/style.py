@@ -26,7 +26,7 @@ TIES = {
     "auto": ("#f28e5c", VERMILION),
     "fixed": ("#8a8f98", "#5b626d"),
     "suggested": (ORANGE, "#a66f00"),
-    "second": (PINK, "#b0487f"),
+    "second": ("#a78bfa", "#5e3c99"),
 }
 STAGE_MARKS = {"done": "●", "changed": "◐", "missing": "○", "running": "◌"}
 

@@ -109,22 +109,26 @@ class Canvas:
         self.viewer.dims.margin_right = margins
 
     def lay_plane(self, name: str, point_um: Any, way: Any) -> None:
-        """In 3-D, cut an image along the plane that holds a line of direction ``way``, and look straight at it."""
+        """In 3-D, cut an image along the plane that holds a line of direction ``way``, and look straight at it.
+
+        napari counts a plane's place and the camera's directions along the axes in the order in which they are shown.
+        """
         layer = self.viewer.layers[name]
         self.viewer.dims.ndisplay = 3
+        order = list(self.viewer.dims.order)
         way = np.asarray(way, float)
-        across = np.eye(3)[self.viewer.dims.order[0]]
+        across = np.eye(3)[order[0]]
         normal = across - (across @ way) * way
         normal /= np.linalg.norm(normal)
-        layer.depiction = "plane"
-        layer.plane.position = tuple(np.asarray(layer.world_to_data(np.asarray(point_um, float)), float))
         in_voxels = normal * np.asarray(layer.scale, float)
-        layer.plane.normal = tuple(in_voxels / np.linalg.norm(in_voxels))
+        layer.depiction = "plane"
+        layer.plane.position = tuple(np.asarray(layer.world_to_data(np.asarray(point_um, float)), float)[order])
+        layer.plane.normal = tuple((in_voxels / np.linalg.norm(in_voxels))[order])
         layer.plane.thickness = 1
         layer.visible = True
         camera = self.viewer.scene.camera
-        camera.center = tuple(float(v) for v in point_um)
-        camera.set_view_direction(tuple(normal), tuple(-way))
+        camera.center = tuple(float(v) for v in np.asarray(point_um, float)[order])
+        camera.set_view_direction(tuple(normal[order]), tuple(-way[order]))
 
     def look_down(self) -> None:
         """Look at the brain a little from above and from one side."""

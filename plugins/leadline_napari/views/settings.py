@@ -136,6 +136,7 @@ def _box(value: object) -> QWidget:
         return whole
     number = QDoubleSpinBox()
     number.setRange(-1e5, 1e5)
-    number.setDecimals(3)
+    number.setDecimals(2)
+    number.setMinimumWidth(number.fontMetrics().horizontalAdvance("00000.00") + 60)
     number.setValue(float(value))
     return number

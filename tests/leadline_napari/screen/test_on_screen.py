@@ -202,7 +202,10 @@ def test_surfaces_and_the_plane_along_the_track_are_shown_in_3d(bench, qtbot, fi
     settle(bench, qtbot)
     image = bench.viewer.layers["Plane along track"]
     track = bench.sections.scene.shank.track
-    normal = np.array(image.plane.normal) / np.array(image.scale)
+    order = list(bench.viewer.dims.order)
+    normal = np.empty(3)
+    normal[order] = np.array(image.plane.normal)
+    normal /= np.array(image.scale)
     way = track.stack_um[-1] - track.stack_um[0]
     assert abs(normal @ way) < 1e-3 * np.linalg.norm(normal) * np.linalg.norm(way)
 
