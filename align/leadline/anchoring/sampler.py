@@ -19,12 +19,12 @@ if TYPE_CHECKING:
     from leadline.anchoring.depth_prior import DepthPrior
     from leadline.anchoring.pack import Packed
 
-PARTICLES = 256
+PARTICLES = 320
 SCOUTS = 2048
 KEEP_ESS = 0.5
 MOVES = 2
-LAST_MOVES = 6
-SNAPSHOTS = 4
+LAST_MOVES = 8
+SNAPSHOTS = 6
 MAX_SHRINK = 24
 MAX_LEVELS = 60
 
