@@ -1,5 +1,5 @@
 # Two commands do everything on a fresh machine: make demo, make test.
-PYTHON ?= $(shell command -v python3.13 || command -v python3.12 || command -v python3.11 || command -v python3)
+PYTHON ?= $(shell for p in python3 python3.13 python3.12 python3.11; do $$p -c "import sys; sys.exit(sys.version_info < (3, 11))" 2>/dev/null && echo $$p && break; done)
 BIN := .venv/bin
 ONE_THREAD := OMP_NUM_THREADS=1 OPENBLAS_NUM_THREADS=1 MKL_NUM_THREADS=1 NUMBA_NUM_THREADS=1
 
