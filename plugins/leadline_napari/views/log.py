@@ -23,6 +23,7 @@ AXIS_PX = 44
 WIDTHS = {"tissue": 96, "strata": 70, "band": 150, "sites": 46, "odds": 76, "lane": 84}
 LEFT = ("tissue", "strata")
 ODDS_COLUMN = 60
+MIN_PX = 34
 
 
 class Title(pg.GraphicsWidget):
@@ -212,7 +213,7 @@ class Log(pg.GraphicsLayoutWidget):
         axis = AXIS_PX if column.kind in ("tissue", "odds") else 0
         width = WIDTHS[column.kind]
         layout = self.ci.layout
-        layout.setColumnMinimumWidth(column.at, width * 0.42 + axis if shown else 0)
+        layout.setColumnMinimumWidth(column.at, max(width * 0.42, MIN_PX) + axis if shown else 0)
         layout.setColumnPreferredWidth(column.at, width + axis if shown else 0)
         layout.setColumnStretchFactor(column.at, width if shown else 0)
         layout.setColumnMaximumWidth(column.at, 10_000 if shown else 0)
@@ -299,7 +300,7 @@ class Log(pg.GraphicsLayoutWidget):
         heads = {
             "tissue": (state.tissue.title if state.tissue else "Tissue", "± 400 um"),
             "strata": ("Strata", "atlas"),
-            "band": ("Anchors", "depth ↔ from tip"),
+            "band": ("Anchors", "depth ↔ tip"),
             "sites": ("Sites", ""),
             "odds": ("Odds", exact),
         }

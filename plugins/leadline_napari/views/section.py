@@ -117,7 +117,7 @@ class SectionView(QWidget):
         bar = QHBoxLayout()
         bar.setSpacing(4)
         self.shank = QComboBox()
-        self.shank.setToolTip("Which shank is shown")
+        self.shank.setToolTip("Which penetration is shown, and which of its shanks")
         self.shank.setAccessibleName("Shank")
         self.shank.setMinimumContentsLength(5)
         self.shank.activated.connect(lambda i: self.shank_chosen.emit(*self.shank.itemData(i)))
@@ -271,8 +271,9 @@ class SectionView(QWidget):
     def _show_shanks(self, state: SectionState) -> None:
         with QSignalBlocker(self.shank):
             self.shank.clear()
+            names = [name for name, _ in state.shanks]
             for name, shank in state.shanks:
-                self.shank.addItem(f"{name} · shank {shank}", (name, shank))
+                self.shank.addItem(name if names.count(name) == 1 else f"{name} · {shank}", (name, shank))
             if state.shank in state.shanks:
                 self.shank.setCurrentIndex(state.shanks.index(state.shank))
 
