@@ -54,7 +54,7 @@ class Store:
     @property
     def pairs(self) -> Path:
         """Places named in stack and atlas."""
-        return self.brain.folder / "registration_pairs.csv"
+        return self.brain.registration_pairs
 
     @property
     def journal(self) -> Path:

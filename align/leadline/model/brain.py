@@ -84,3 +84,8 @@ class Brain:
     def track_edits(self) -> Path:
         """Tracks drawn or corrected on the screen; they stand above the dye and above ``points``."""
         return self.folder / "track_edits.csv"
+
+    @property
+    def registration_pairs(self) -> Path:
+        """Places named in stack and atlas by a person, who accepted that they refine the registration."""
+        return self.folder / "registration_pairs.csv"

@@ -69,12 +69,13 @@ def anchors_in_force(brain: Brain, record: Record) -> tuple[Anchor, ...]:
 def _register(brain: Brain) -> Step:
     paths = products.RegistrationFiles(brain)
     stack = brain.stack
+    pairs = brain.registration_pairs if brain.registration_pairs.is_file() else None
     return Step(
         "register",
         "register",
         (),
         key=(brain.settings.register, stack.voxel_um, stack.code, stack.background_channel, stack.dye_channel),
-        reads=_present(brain.atlas, stack.background, stack.dye),
+        reads=_present(brain.atlas, stack.background, stack.dye, pairs),
         gives=paths.all,
         run=lambda bench: work.register(bench, paths),
     )

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -50,9 +51,29 @@ def register(bench: Bench, files: products.RegistrationFiles) -> tuple[str, ...]
         progress=bench.progress,
         threads=bench.threads,
     )
+    registration = _refined_by_pairs(bench.brain, registration)
     files.write(registration)
     draw_qc(files.picture, background, atlas, files.read())
     return registration.warnings
+
+
+def _refined_by_pairs(brain: Brain, registration: Registration) -> Registration:
+    """The registration bent to the places that a person named in stack and atlas, where there are any."""
+    from leadline.io.points import read_pairs
+    from leadline.registration.pairs import pair_errors, refined
+
+    stack_um, atlas_um = read_pairs(brain.registration_pairs)
+    if not len(stack_um):
+        return registration
+    errors = pair_errors(registration, stack_um, atlas_um)
+    told = {
+        "pairs": float(len(stack_um)),
+        "pairs_before_um": round(float(np.median(errors.before_um)), 2),
+        "pairs_after_um": round(float(np.median(errors.after_um)), 2),
+        "pairs_left_out_um": round(float(np.median(errors.left_out_um)), 2),
+    }
+    bent = refined(registration, stack_um, atlas_um)
+    return replace(bent, quality=bent.quality | told)
 
 
 def trace(bench: Bench) -> tuple[str, ...]:
