@@ -5,31 +5,36 @@ from __future__ import annotations
 from importlib.util import find_spec
 from typing import TYPE_CHECKING, Any
 
+from leadline.base.errors import LeadlineError
+
 if TYPE_CHECKING:
     import napari
     from qtpy.QtWidgets import QWidget
 
+    from leadline_napari.docks import Workbench
+
+NO_LAYER = (None,)  # napari's sign that a reader has nothing for it to add
 INSTALL = "The Leadline docks need pyqtgraph. Install it with:  pip install 'leadline[napari]'"
 
 
-def brain_dock(viewer: napari.Viewer) -> QWidget:
+def brain_dock() -> QWidget:
     """The Brain dock."""
-    return _dock(viewer, "brain")
+    return _dock("brain")
 
 
-def section_dock(viewer: napari.Viewer) -> QWidget:
+def section_dock() -> QWidget:
     """The Section dock."""
-    return _dock(viewer, "section")
+    return _dock("section")
 
 
-def table_dock(viewer: napari.Viewer) -> QWidget:
+def table_dock() -> QWidget:
     """The Channels dock."""
-    return _dock(viewer, "table")
+    return _dock("table")
 
 
-def track_dock(viewer: napari.Viewer) -> QWidget:
+def track_dock() -> QWidget:
     """The Corrections dock."""
-    return _dock(viewer, "corrections")
+    return _dock("corrections")
 
 
 def undo(viewer: napari.Viewer) -> None:
@@ -42,41 +47,42 @@ def redo(viewer: napari.Viewer) -> None:
     _section(viewer, "redo")
 
 
-def demo_layers() -> list[tuple[Any, dict[str, Any], str]]:
-    """Write the invented demo brain to a folder of its own and open it with every dock."""
-    from pathlib import Path
-    from tempfile import mkdtemp
-
-    from leadline.demo.write import write_demo
-
-    folder = Path(mkdtemp(prefix="leadline-demo-"))
-    write_demo(folder)
-    return open_brain(folder)
+def demo_layers() -> list[Any]:
+    """Write the invented demo brain to a folder of its own, off the screen, and open it; 'Run all stages' does the
+    rest."""
+    bench = _workbench()
+    bench.show_docks()
+    bench.open_demo()
+    return [NO_LAYER]
 
 
-def open_brain(path: Any) -> list[tuple[Any, dict[str, Any], str]]:
+def open_brain(path: Any) -> list[Any]:
     """Open a brain in the viewer at hand; the layers are added there, so napari gets none to add itself."""
-    import napari
-
-    from leadline_napari.docks import workbench
-
-    viewer = napari.current_viewer() or napari.Viewer()
-    bench = workbench(viewer)
+    bench = _workbench()
     bench.open(path)
     bench.show_docks()
-    return [(None,)]  # type: ignore[list-item]
+    return [NO_LAYER]
 
 
-def _dock(viewer: napari.Viewer, name: str) -> QWidget:
+def _dock(name: str) -> QWidget:
     if find_spec("pyqtgraph") is None:
         from qtpy.QtWidgets import QLabel
 
         label = QLabel(INSTALL)
         label.setWordWrap(True)
         return label
+    return _workbench().view(name)
+
+
+def _workbench() -> Workbench:
+    """The workbench of the viewer at hand."""
+    import napari
+
+    if find_spec("pyqtgraph") is None:
+        raise LeadlineError("pyqtgraph is not installed", where="Leadline", mend=INSTALL)
     from leadline_napari.docks import workbench
 
-    return workbench(viewer).view(name)
+    return workbench(napari.current_viewer() or napari.Viewer())
 
 
 def _section(viewer: napari.Viewer, name: str) -> None:

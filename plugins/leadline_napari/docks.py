@@ -110,6 +110,26 @@ class Workbench(QObject):
         self.viewer.title = f"Leadline — {brain.name}"
         self._begin(Desk(brain), bench)
 
+    def open_demo(self) -> None:
+        """Write the invented brain to a folder of its own and open it."""
+        from tempfile import mkdtemp
+
+        from leadline.demo.recipe import Recipe
+        from leadline.demo.write import write_brain
+
+        folder = Path(mkdtemp(prefix="leadline-demo-"))
+        progress = QtProgress(self)
+
+        def done(_: object) -> None:
+            progress.finish()
+            self.open(folder)
+
+        def failed(words: str) -> None:
+            progress.finish()
+            self.tell(words or "The demo brain was not written to its end")
+
+        self.runner.submit("demo", lambda: write_brain(folder, Recipe(), progress), done, failed)
+
     def _begin(self, desk: Desk, bench: Bench) -> None:
         self.desk, self.bench, self.results = desk, bench, None
         self.sections = SectionController(desk, _SectionDoor(self.section), self.runner, self.tell)

@@ -121,14 +121,15 @@ class QtProgress(QObject):
         self._stop.set()
 
     def _check(self) -> None:
-        if self._stop.is_set():
+        bar = self._bar
+        if self._stop.is_set() or (bar is not None and bar.is_canceled):
             raise Cancelled
 
     def _show_begin(self, label: str, total: float) -> None:
         from napari.utils import cancelable_progress
 
         self.finish()
-        self._bar = cancelable_progress(total=BAR_STEPS if total > 0 else 0, desc=label, cancel_callback=self.cancel)
+        self._bar = cancelable_progress(total=BAR_STEPS if total > 0 else 0, desc=label)
 
     def _show_moved(self, done: float) -> None:
         if self._bar is not None and self.total > 0:

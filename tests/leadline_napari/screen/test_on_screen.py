@@ -2,6 +2,7 @@
 
 # ruff: noqa: E402 - what needs napari is imported only where there is one
 
+import time
 from dataclasses import replace
 
 import numpy as np
@@ -15,12 +16,14 @@ from qtpy.QtCore import QPoint, Qt
 from qtpy.QtGui import QImage
 from qtpy.QtTest import QTest
 from qtpy.QtWidgets import QAbstractButton, QAbstractItemView, QApplication, QComboBox, QDoubleSpinBox, QLineEdit
+from tests.good_brain import write_good_brain
 from tests.leadline_napari.screen.hands import anchors, click, double_click, drag, opened, place, settle, tie_end
 
 from leadline.io.tables import read_anchors
 from leadline_napari.docks import close_workbench, workbench
 from leadline_napari.session import AddAnchor
 from leadline_napari.style import DARK, LIGHT
+from leadline_napari.views.work import QtProgress
 
 
 @pytest.fixture(scope="module")
@@ -261,3 +264,51 @@ def test_errors_are_told_in_words_and_the_window_goes_on(bench, qtbot, finished)
     assert any("anchors cross" in words for words in bench.told)
     assert len(anchors(bench)) == 1
     assert bench.brain.messages.count() >= 1
+
+
+def test_napari_itself_opens_a_brain_folder_and_offers_the_docks(bench, qtbot, finished):
+    with qtbot.waitSignal(bench.opened, timeout=120_000):
+        bench.viewer.open(str(finished), plugin="leadline")
+    settle(bench, qtbot)
+    assert bench.desk.brain.folder == finished
+    assert "Contacts" in bench.viewer.layers
+    _, widget = bench.viewer.window.add_plugin_dock_widget("leadline", "Section")
+    assert widget is bench.section
+    assert bench.told == []
+
+
+def test_long_work_is_shown_in_the_activity_dock_and_cancelled_from_there(bench, qtbot, finished):
+    from napari.utils.progress import progress
+
+    opened(bench, qtbot, finished)
+    seen = []
+
+    def work():
+        bench.progress.begin("a long piece of work", 100)
+        for _ in range(2000):
+            bench.progress.step(0.05)
+            time.sleep(0.005)
+        return "never"
+
+    bench.progress = QtProgress(bench)
+    bench.runner.submit("run", work, seen.append, seen.append)
+    qtbot.waitUntil(lambda: any(p.desc.startswith("a long") for p in progress._all_instances), timeout=10_000)
+    (bar,) = [p for p in progress._all_instances if p.desc.startswith("a long")]
+    qtbot.waitUntil(lambda: bar.n > 0, timeout=10_000)
+    bar.cancel()
+    qtbot.waitUntil(lambda: bool(seen), timeout=10_000)
+    assert seen == [""]
+    bench.progress.finish()
+    bench.progress = None
+    assert not [p for p in progress._all_instances if p.desc.startswith("a long")]
+
+
+def test_the_demo_brain_is_written_off_the_screen_and_opened(bench, qtbot, monkeypatch):
+    monkeypatch.setattr("leadline.demo.write.write_brain", lambda folder, *_: write_good_brain(folder))
+    with qtbot.waitSignal(bench.opened, timeout=120_000):
+        bench.viewer.open_sample("leadline", "demo")
+    settle(bench, qtbot)
+    assert bench.desk.brain.name == "tiny-01"
+    assert [layer.name for layer in bench.viewer.layers] == ["Stack background", "Stack dye"]
+    assert "run 'Trace'" in bench.section.banner.text()
+    assert bench.told == []
