@@ -44,7 +44,8 @@ def read_results(brain: Brain) -> Results:
     Raises LeadlineError when a file is there but damaged.
     """
     registration = products.RegistrationFiles(brain)
-    tracks, missing = ((), ())
+    tracks: tuple[Track, ...] = ()
+    missing: tuple[str, ...] = ()
     if (brain.out / "tracks.csv").is_file() and (brain.cache / "tracks.json").is_file():
         tracks, missing = products.read_tracks(brain)
     posteriors = products.read_posteriors(brain) if (brain.cache / "posterior.npz").is_file() else ()

@@ -203,10 +203,9 @@ def contact_spec(
     """Every located contact, coloured by region, with its whole row of the channel table."""
     table = channels[channels["track_depth_um"].notna()].reset_index(drop=True)
     points = np.zeros((len(table), 3))
-    for (penetration, shank), rows in table.groupby(["penetration", "shank"], sort=False).groups.items():
-        track = tracks.get((str(penetration), int(shank)))
-        if track is not None:
-            points[rows] = track.stack_at(table.loc[rows, "track_depth_um"].to_numpy(float))
+    for (penetration, shank), track in tracks.items():
+        rows = np.flatnonzero((table["penetration"] == penetration) & (table["shank"] == shank))
+        points[rows] = track.stack_at(table["track_depth_um"].to_numpy(float)[rows])
     colours = contact_colours(table["region_id"].to_numpy(), structures)
     return LayerSpec(
         NAMES["contacts"],

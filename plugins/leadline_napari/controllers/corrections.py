@@ -88,14 +88,13 @@ class CorrectionController:
 
     def begin(self) -> FloatArray | None:
         """Begin to edit the track in hand; its points, or None where there is no track."""
-        edit = self.desk.session.edits.track_of(*self.key)
-        track = self.results.tracks.get(self.key) if self.results else None
-        if edit is None and track is None:
+        points = self._points(self.key)
+        if points is None:
             self.tell("There is no track to correct here: trace the dye first, or draw one with 'points' in brain.toml")
             return None
         self.editing = self.key
         self._show()
-        return np.array(edit.points_um) if edit is not None else handles_of(track)
+        return points
 
     def end(self) -> None:
         """Stop editing."""
@@ -106,39 +105,40 @@ class CorrectionController:
         """The hand's points are now these; saved, and refitted off the screen."""
         if self.editing is None or len(points_um) < 2:
             return
-        points = ordered(points_um).round(2)
-        edit = TrackEdit(*self.editing, tuple(tuple(float(v) for v in p) for p in points))
+        edit = TrackEdit(*self.editing, tuple(_point(p) for p in ordered(points_um)))
         self._hear(lambda: self.desk.act(DrawTrack(edit)))
 
     def set_end(self, which: str, at_um: FloatArray) -> None:
         """Put the entry ('entry') or the tip ('end') of the track being edited at a place."""
-        edit = self.desk.session.edits.track_of(*self.editing) if self.editing else None
-        track = self.results.tracks.get(self.editing) if self.results and self.editing else None
-        if edit is None and track is None:
+        points = self._points(self.editing)
+        if points is None:
             self.tell("Begin to edit a track first")
             return
-        points = np.array(edit.points_um) if edit is not None else handles_of(track)
         points[0 if which == "entry" else -1] = at_um
         self.draw(points)
-        self.edited(np.array(self.desk.session.edits.track_of(*self.editing).points_um))
+        self.edited(ordered(points).round(2))
 
     def snap(self) -> None:
         """Draw the hand's points to the centre of the dye."""
-        bench, key = self.bench, self.editing
-        if bench is None or key is None:
+        bench, key, points = self.bench, self.editing, self._points(self.editing)
+        if bench is None or key is None or points is None:
             self.tell("Begin to edit a track first")
             return
         if bench.dye is None:
             self.tell("The brain has no dye channel to snap to")
             return
+        dye = bench.dye.fitting(SNAP_UM)
+        self.runner.submit("snap", lambda: snapped(points, dye), lambda found: self._snapped(key, found), self.tell)
+
+    def _points(self, key: tuple[str, int] | None) -> FloatArray | None:
+        """Points of a track: the hand's, else some along the traced dye."""
+        if key is None:
+            return None
         edit = self.desk.session.edits.track_of(*key)
-        points = np.array(edit.points_um) if edit is not None else handles_of(self.results.tracks[key])
-        self.runner.submit(
-            "snap",
-            lambda: snapped(points, bench.dye.fitting(SNAP_UM)),
-            lambda found: self._snapped(key, found),
-            self.tell,
-        )
+        if edit is not None:
+            return np.array(edit.points_um)
+        track = self.results.tracks.get(key) if self.results else None
+        return None if track is None else handles_of(track)
 
     def _snapped(self, key: tuple[str, int], found: object) -> None:
         if key == self.editing:
@@ -155,17 +155,18 @@ class CorrectionController:
             for edit in after.edits.tracks:
                 if edit not in before.edits.tracks:
                     self._refit(edit)
-            if self.editing is not None and (edit := after.edits.track_of(*self.editing)) is not None:
-                self.edited(np.array(edit.points_um))
+            drawn = after.edits.track_of(*self.editing) if self.editing is not None else None
+            if drawn is not None:
+                self.edited(np.array(drawn.points_um))
         if before.edits.pairs != after.edits.pairs:
             self._weigh()
         self._show()
 
     def _refit(self, edit: TrackEdit) -> None:
-        bench, results = self.bench, self.results
-        if bench is None or results is None or results.registration is None:
+        bench, registration = self.bench, self.results.registration if self.results else None
+        if bench is None or registration is None:
             return
-        self.runner.submit("refit", lambda: refit(bench, results.registration, edit), self._refitted, self.tell)
+        self.runner.submit("refit", lambda: refit(bench, registration, edit), self._refitted, self.tell)
 
     def _refitted(self, track: object) -> None:
         assert isinstance(track, Track)

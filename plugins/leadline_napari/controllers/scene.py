@@ -18,7 +18,7 @@ if TYPE_CHECKING:
     from leadline.base.arrays import AnyArray, Float32Array, FloatArray
     from leadline.model.atlas import Atlas, Structure
     from leadline.model.track import Track
-    from leadline.model.volume import Stack
+    from leadline.model.volume import Stack, Volume
     from leadline.pipeline.bench import Bench
     from leadline_napari.results import Results
     from leadline_napari.states import Lane
@@ -131,8 +131,8 @@ def _stretched(values: Float32Array, low: float, high: float) -> FloatArray:
     if not there.size:
         return np.zeros(values.shape)
     bottom, top = np.percentile(there, [low, high])
-    return np.nan_to_num(np.clip((values - bottom) / max(float(top - bottom), 1e-9), 0, 1))
+    return np.asarray(np.nan_to_num(np.clip((values - bottom) / max(float(top - bottom), 1e-9), 0, 1)), np.float64)
 
 
-def _level(stack: Stack) -> object:
+def _level(stack: Stack) -> Volume:
     return stack.fitting(GRAIN_UM)
