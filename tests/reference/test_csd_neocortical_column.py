@@ -1,7 +1,8 @@
 """Current sources of a simulated neocortical column with known layers.
 
-Outside judge: hnn-core's column (Neymotin et al. 2020, eLife 9, e51214), its potentials and its own second difference. Feed-forward (proximal) input ends on basal and oblique dendrites, near the cell bodies; feed-back (distal)
-input ends on the apical tufts. Skipped where hnn-core is not installed: it brings a simulator with it.
+Outside judge: hnn-core's column (Neymotin et al. 2020, eLife 9, e51214), its potentials and its own second difference.
+Feed-forward (proximal) input ends on basal and oblique dendrites, near the cell bodies; feed-back (distal) input ends on
+the apical tufts. Skipped where hnn-core is not installed: it brings a simulator, and a compiler, with it.
 """
 
 import numpy as np
@@ -40,7 +41,7 @@ def line():
 
 
 def first_sink_um(potential, times, operator):
-    window = (times > 15.0) & (times < 20.0)
+    window = (times > 15.0) & (times < 18.0)
     density = operator @ (potential - potential[:, times < 14.0].mean(axis=1, keepdims=True))
     return Z_UM[1:-1][density[1:-1, window].min(axis=1).argmin()]
 
