@@ -53,7 +53,8 @@ def demo_layers() -> list[Any]:
     bench = _workbench()
     bench.show_docks()
     bench.open_demo()
-    return [NO_LAYER]
+    # A sample must give a layer; this one stands in until the brain is there and takes its place.
+    return [([[0.0, 0.0, 0.0]], {"name": "The demo brain is being written", "units": "um", "visible": False}, "points")]
 
 
 def open_brain(path: Any) -> list[Any]:
