@@ -1,7 +1,7 @@
 """Current sources of a simulated neocortical column with known layers.
 
 Outside judge: hnn-core's column (Neymotin et al. 2020, eLife 9, e51214), its potentials and its own second difference.
-Feed-forward (proximal) input ends on basal and oblique dendrites, near the cell bodies; feed-back (distal) input ends on
+Feed-forward (proximal) input ends on basal and oblique dendrites, near the cell bodies; feed-back (distal) input on
 the apical tufts. Skipped where hnn-core is not installed: it brings a simulator, and a compiler, with it.
 """
 
