@@ -304,8 +304,7 @@ class SectionView(QWidget):
             for spin in (self.depth, self.tip, self.sd):
                 spin.setValue(spin.minimum())
         del blockers
-        if held is not None and held.evidence:
-            self.readout.setText(held.evidence)
+        self.readout.setText(held.evidence if held is not None and held.evidence else HINT)
 
     def _edited(self) -> None:
         """A box of the strip was changed; boxes that still show what they showed keep the exact value."""
