@@ -20,6 +20,9 @@ from tests.good_brain import write_good_brain
 from tests.leadline_napari.screen.hands import anchors, click, double_click, drag, opened, place, settle, tie_end
 
 from leadline.io.brainfile import read_brain
+from leadline.io.tables import suggestions_text
+from leadline.model.anchor import Anchor, Suggestion
+from leadline.pipeline.products import read_posteriors
 from leadline.pipeline.run import run
 from leadline_napari.docks import close_workbench, workbench
 
@@ -39,12 +42,21 @@ def window():
     viewer.close()
 
 
+def suggest_at(brain, tip_um):
+    """Leave one open suggestion where the run put that contact, whatever the tiny recording suggests by itself."""
+    (posterior,) = read_posteriors(brain)
+    depth = float(np.interp(tip_um, posterior.tip_distance_um, posterior.median_um))
+    anchor = Anchor("A", 0, tip_um, round(depth, 1), 40.0, "an invented landmark")
+    (brain.out / "suggestions.csv").write_text(suggestions_text([Suggestion(anchor, "invented", "")]))
+
+
 @pytest.mark.slow
 def test_a_whole_session_leaves_the_table_that_the_command_line_makes_of_its_anchors(window, qtbot, tmp_path):
     file = write_good_brain(tmp_path / "mine")
     text = file.read_text()
     file.write_text(text[: text.index("[[anchor]]")])
     run(read_brain(file))
+    suggest_at(read_brain(file), 800.0)
     opened(window, qtbot, file.parent)
     log = window.section.log
 
@@ -68,12 +80,12 @@ def test_a_whole_session_leaves_the_table_that_the_command_line_makes_of_its_anc
     assert anchors(window)[1] == lower
     QTest.keyClick(log, Qt.Key.Key_Z, CONTROL | SHIFT)
     assert anchors(window)[1] != lower
-    suggested = [t for t in window.section._state.band.ties if t.kind == "suggested"]
-    if suggested:  # the tiny recording may suggest nothing
-        click(window, tie_end(window, suggested[0].anchor, "depth"))
-        QTest.keyClick(log, Qt.Key.Key_Return)
+    (suggested,) = [t for t in window.section._state.band.ties if t.kind == "suggested"]
+    click(window, tie_end(window, suggested.anchor, "depth"))
+    QTest.keyClick(log, Qt.Key.Key_Return)
     settle(window, qtbot)
     kept = anchors(window)
+    assert sorted(a.source for a in kept) == ["auto", "user", "user"]
     with qtbot.waitSignal(window.opened, timeout=300_000):
         QTest.keyClick(log, Qt.Key.Key_S, CONTROL)
     settle(window, qtbot)
