@@ -11,8 +11,8 @@ test: .venv/.dev
 	$(ONE_THREAD) $(BIN)/python -m pytest -n 2 --dist worksteal --doctest-modules align tests
 
 lint: .venv/.dev
-	$(BIN)/ruff check align tests
-	$(BIN)/ruff format --check align tests
+	$(BIN)/ruff check align plugins tests
+	$(BIN)/ruff format --check align plugins tests
 	$(BIN)/mypy
 	$(BIN)/lint-imports
 
@@ -24,6 +24,7 @@ docs: .venv/.dev
 
 screenshots: demo .venv/.dev
 	$(BIN)/python -m tests.pictures leadline-demo docs/pictures
+	xvfb-run -a -s "-screen 0 2600x1700x24" $(BIN)/python -m tests.leadline_napari.screenshots docs/pictures --brain leadline-demo
 
 clean:
 	rm -rf .venv leadline-demo
