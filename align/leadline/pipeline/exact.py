@@ -9,7 +9,8 @@ import numpy as np
 
 from leadline.base.progress import SILENT, Progress
 from leadline.locating.preview import LabelTable
-from leadline.pipeline.work import labels_along
+from leadline.pipeline.evidence import drawn, settled, shank_evidence
+from leadline.pipeline.products import RegistrationFiles
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -47,37 +48,16 @@ def ground(bench: Bench, tracks: Sequence[Track]) -> tuple[ShankGround, ...]:
 
     Raises LeadlineError when a profile that should be there is missing or damaged.
     """
-    from leadline.anchoring.evidence import ShankEvidence
-    from leadline.io.profiles import read_profile
-    from leadline.pipeline.products import ProfileFiles, RegistrationFiles
-
-    error_um = RegistrationFiles(bench.brain).read().error_um
     by_name = {p.name: p for p in bench.brain.penetrations}
-    probes = {name: bench.probe(by_name[name]) for name in {t.penetration for t in tracks}}
+    track_of = {(t.penetration, t.shank): t for t in tracks}
+    error_um = RegistrationFiles(bench.brain).read().error_um
     found = []
-    for track in tracks:
-        penetration, probe = by_name[track.penetration], probes[track.penetration]
-        contacts = probe.take(np.flatnonzero(probe.shank == track.shank))
-        if not contacts.contact_id:
-            continue
-        file = ProfileFiles(bench.brain, penetration.name).table
-        profile = read_profile(file).of_shank(track.shank) if penetration.recordings and file.is_file() else None
-        depth, label, lateral = labels_along(track, bench.atlas, error_um)
-        evidence = ShankEvidence(
-            penetration=track.penetration,
-            shank=track.shank,
-            tip_distance_um=np.unique(contacts.tip_distance_um),
-            profile=profile,
-            depth_um=depth,
-            label_id=label,
-            lateral_label_id=lateral,
-            end_depth_um=track.length_um,
-            entry_sd_um=track.entry_sd_um,
-            end_sd_um=track.end_sd_um,
-            registration_error_um=error_um,
-            inserted_um=penetration.inserted_um,
-        )
-        found.append(ShankGround(track, contacts, evidence, LabelTable(depth, label, lateral), error_um))
+    for evidence in shank_evidence(bench, tracks, ()):
+        probe = bench.probe(by_name[evidence.penetration])
+        contacts = probe.take(np.flatnonzero(probe.shank == evidence.shank))
+        table = LabelTable(evidence.depth_um, evidence.label_id, evidence.lateral_label_id)
+        track = track_of[evidence.penetration, evidence.shank]
+        found.append(ShankGround(track, contacts, evidence, table, error_um))
     return tuple(found)
 
 
@@ -88,26 +68,12 @@ def answer(
 
     Raises LeadlineError when two anchors cross.
     """
-    from leadline.anchoring.manual import manual_map, recentred
-    from leadline.anchoring.posterior import infer
-
-    settings = bench.brain.settings.anchor
     evidence = [replace(s.evidence, anchors=_of(anchors, s)) for s in shanks]
-    posteriors = infer(
-        evidence,
-        bench.atlas.structures,
-        bench.knowledge,
-        draws=settings.draws,
-        seed=settings.seed,
-        physiology=settings.physiology,
-        progress=progress,
+    posteriors = settled(bench, drawn(bench, evidence, progress), evidence)
+    return tuple(
+        ShankAnswer(posterior, located(bench, shank, posterior, e.anchors))
+        for shank, e, posterior in zip(shanks, evidence, posteriors, strict=True)
     )
-    answers = []
-    for shank, e, posterior in zip(shanks, evidence, posteriors, strict=True):
-        if not settings.physiology or e.profile is None:
-            posterior = recentred(posterior, manual_map(e.anchors, e.end_depth_um))
-        answers.append(ShankAnswer(posterior, located(bench, shank, posterior, e.anchors)))
-    return tuple(answers)
 
 
 def located(bench: Bench, shank: ShankGround, posterior: DepthPosterior, anchors: Sequence[Anchor]) -> Located:

@@ -14,22 +14,16 @@ from leadline.pipeline import products
 if TYPE_CHECKING:
     from collections.abc import Mapping, Sequence
 
-    from leadline.base.arrays import FloatArray, IntArray
     from leadline.model.anchor import Anchor
     from leadline.model.atlas import Atlas
     from leadline.model.brain import Brain, Penetration
     from leadline.model.posterior import DepthPosterior
     from leadline.model.probe import Probe
-    from leadline.model.profile import Profile
     from leadline.model.track import Trace
     from leadline.model.transform import PointTransform, Registration
     from leadline.model.volume import Volume
     from leadline.pipeline.bench import Bench
     from leadline.tracing.assign import Wanted
-
-LABEL_STEP_UM = 5.0
-BEYOND_UM = 1500.0
-LATERAL_COPIES = 16
 
 
 def register(bench: Bench, files: products.RegistrationFiles) -> tuple[str, ...]:
@@ -178,96 +172,25 @@ def profile(bench: Bench, penetration: Penetration, files: products.ProfileFiles
 
 def anchor(bench: Bench, anchors: tuple[Anchor, ...]) -> tuple[str, ...]:
     """The posterior over depth maps of every shank, and the anchors that it suggests."""
-    from leadline.anchoring.manual import manual_map, recentred
-    from leadline.anchoring.posterior import infer
     from leadline.anchoring.suggest import suggest
     from leadline.io.tables import anchors_text, suggestions_text
     from leadline.model.anchor import in_order
+    from leadline.pipeline.evidence import drawn, settled, shank_evidence
 
     brain = bench.brain
     for p, s in {(a.penetration, a.shank) for a in anchors}:
         in_order(a for a in anchors if (a.penetration, a.shank) == (p, s))
-    evidence = shank_evidence(bench, anchors)
-    settings = brain.settings.anchor
-    posteriors = infer(
-        evidence,
-        bench.atlas.structures,
-        bench.knowledge,
-        draws=settings.draws,
-        seed=settings.seed,
-        physiology=settings.physiology,
-        progress=bench.progress,
-    )
-    suggestions = suggest(posteriors, evidence, bench.atlas.structures, bench.knowledge, at_most=settings.suggestions)
-    posteriors = tuple(
-        p if settings.physiology and e.profile is not None else recentred(p, manual_map(e.anchors, e.end_depth_um))
-        for p, e in zip(posteriors, evidence, strict=True)
-    )
+    evidence = shank_evidence(bench, products.read_tracks(brain)[0], anchors)
+    draws = drawn(bench, evidence)
+    at_most = brain.settings.anchor.suggestions
+    suggestions = suggest(draws, evidence, bench.atlas.structures, bench.knowledge, at_most=at_most)
+    posteriors = settled(bench, draws, evidence)
     products.write_posteriors(brain, posteriors)
     taken = {(a.penetration, a.shank, a.landmark) for a in anchors if a.landmark}
     open_ones = [s for s in suggestions if (s.anchor.penetration, s.anchor.shank, s.anchor.landmark) not in taken]
     write_text(brain.out / "anchors.csv", anchors_text(anchors))
     write_text(brain.out / "suggestions.csv", suggestions_text(open_ones))
     return tuple(f"penetration {p.penetration}, shank {p.shank}: {w}" for p in posteriors for w in p.warnings)
-
-
-def shank_evidence(bench: Bench, anchors: Sequence[Anchor]) -> tuple[Any, ...]:
-    """All that is known of every located shank's depth map."""
-    from leadline.anchoring.evidence import ShankEvidence
-    from leadline.io.profiles import read_profile
-
-    brain = bench.brain
-    error_um = products.RegistrationFiles(brain).read().error_um
-    tracks, _ = products.read_tracks(brain)
-    by_name = {p.name: p for p in brain.penetrations}
-    probes = {name: bench.probe(by_name[name]) for name in {t.penetration for t in tracks}}
-    evidence = []
-    for track in tracks:
-        penetration = by_name[track.penetration]
-        probe = probes[track.penetration]
-        here = probe.tip_distance_um[probe.shank == track.shank]
-        if not here.size:
-            continue
-        profile: Profile | None = None
-        if penetration.recordings:
-            profile = read_profile(products.ProfileFiles(brain, penetration.name).table).of_shank(track.shank)
-        depth, label, lateral = labels_along(track, bench.atlas, error_um)
-        evidence.append(
-            ShankEvidence(
-                penetration=track.penetration,
-                shank=track.shank,
-                tip_distance_um=np.unique(here),
-                profile=profile,
-                depth_um=depth,
-                label_id=label,
-                lateral_label_id=lateral,
-                end_depth_um=track.length_um,
-                entry_sd_um=track.entry_sd_um,
-                end_sd_um=track.end_sd_um,
-                registration_error_um=error_um,
-                inserted_um=penetration.inserted_um,
-                anchors=tuple(a for a in anchors if (a.penetration, a.shank) == (track.penetration, track.shank)),
-            )
-        )
-    return tuple(evidence)
-
-
-def labels_along(track: Track, atlas: Atlas, error_um: float) -> tuple[FloatArray, IntArray, IntArray]:
-    """Structure ids every 5 um from 1500 um above the entry to 1500 um beyond the end: along the track ``(M,)``, and
-    along copies of it moved sideways by the registration error ``(K, M)``."""
-    depth = np.arange(-BEYOND_UM, track.length_um + BEYOND_UM, LABEL_STEP_UM)
-    points = track.atlas_at(depth)
-    tangent = points[-1] - points[0]
-    tangent /= np.linalg.norm(tangent)
-    side = np.cross(tangent, np.eye(3)[np.argmin(np.abs(tangent))])
-    side /= np.linalg.norm(side)
-    other = np.cross(tangent, side)
-    # Sixteen points of a sunflower whose radii follow the Rayleigh law: a fixed sample of a 2-D normal.
-    k = np.arange(LATERAL_COPIES) + 0.5
-    radius = error_um * np.sqrt(-2.0 * np.log(1.0 - k / LATERAL_COPIES))
-    angle = k * np.pi * (3.0 - np.sqrt(5.0))
-    shift = radius[:, None] * (np.cos(angle)[:, None] * side + np.sin(angle)[:, None] * other)
-    return depth, atlas.label_at(points), atlas.label_at(points[None] + shift[:, None])
 
 
 def locate(bench: Bench) -> tuple[str, ...]:
