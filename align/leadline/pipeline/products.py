@@ -77,8 +77,8 @@ class RegistrationFiles:
         write_point_transform(self.stack_to_atlas, registration.stack_to_atlas)
         write_point_transform(self.atlas_to_stack, registration.atlas_to_stack)
         content = {
-            "error_um": round(registration.error_um, 2),
-            **registration.quality,
+            "error_um": round(float(registration.error_um), 2),
+            **{name: _short(value) for name, value in registration.quality.items()},
             "warnings": list(registration.warnings),
         }
         write_text(self.quality, json.dumps(content, indent=2, ensure_ascii=False) + "\n")
@@ -97,6 +97,11 @@ class RegistrationFiles:
             quality,
             warnings,
         )
+
+
+def _short(value: float | str | list[float]) -> float | str | list[float]:
+    """Numbers to the digits that mean something."""
+    return round(float(value), 4) if isinstance(value, float | int) else value
 
 
 @dataclass(frozen=True)
