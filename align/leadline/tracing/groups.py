@@ -103,12 +103,16 @@ def _group(paths: Sequence[FloatArray], rows: Sequence[int], x: FloatArray, towa
         return None
     best = [_placed(flat @ (sign * line), x, sign * line) for sign in (1.0, -1.0)]
     best.sort(key=lambda item: item[0])
+    if not np.isfinite(best[0][0]):
+        return None  # no spacing of the probe fits these traces, either way round
     decided = best[1][0] - best[0][0] > DECIDED
     if toward is not None:
         best.sort(key=lambda item: -float(item[2] @ direction(toward)))
     elif not decided:
         best.sort(key=lambda item: toward_letter(item[2]) not in "PRI")
     cost, slots, way = best[0]
+    if not np.isfinite(cost):
+        return None  # they fit the probe only the other way round
     numbers: list[int | None] = [None] * len(x)
     for k, row in zip(slots, rows, strict=True):
         numbers[k] = row

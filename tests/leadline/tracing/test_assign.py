@@ -153,3 +153,17 @@ def test_neither_the_order_of_tracks_nor_of_penetrations_matters(order, asked, s
     plans = entry + rng.normal(0, 150, (5, 3))
     got = assign(tracks, [Wanted(f"p{i}", entry_near_um=tuple(plans[i])) for i in asked])
     assert {name: order[t] for (name, _), t in got.matches.items()} == {f"p{i}": i for i in range(5)}
+
+
+@given(st.integers(0, 2**32 - 1))
+def test_no_set_of_tracks_is_too_odd_to_be_looked_at(seed):
+    rng = np.random.default_rng(seed)
+    depth = np.linspace(0, 1, 5)[:, None]
+    tracks = []
+    for _ in range(rng.integers(2, 7)):
+        entry = rng.uniform(0, 400, 3) * [1, 0, 1]
+        tracks.append(TracedPath(entry + depth * (rng.normal(0, 150, 3) * [1, 0, 1] + [0, 3000, 0])))
+    x_um = tuple(np.cumsum(rng.choice([20.0, 150.0, 250.0, 900.0], rng.integers(2, 5))))
+    toward = rng.choice(["P", "A", "R", "L", None])
+    found = assign(tracks, [Wanted("A", x_um, shank_toward=toward)])
+    assert len(set(found.matches.values())) == len(found.matches)
