@@ -29,7 +29,6 @@ class Bench:
 
     brain: Brain
     progress: Progress = SILENT
-    threads: int = 2
 
     @cached_property
     def atlas(self) -> Atlas:

@@ -12,7 +12,7 @@ if TYPE_CHECKING:
     from leadline.model.brain import Brain
 
 
-def located(brain: Brain, progress: Progress = SILENT, threads: int = 2) -> Brain:
+def located(brain: Brain, progress: Progress = SILENT) -> Brain:
     """The brain as its channel table was made, after running whatever is missing or out of date.
 
     A table made with ``--no-physiology`` is kept as it is while its inputs are unchanged; nothing is then run.
@@ -20,7 +20,7 @@ def located(brain: Brain, progress: Progress = SILENT, threads: int = 2) -> Brai
     for asked in (brain, without_physiology(brain)):
         if is_current(asked):
             return asked
-    run(brain, progress=progress, threads=threads)
+    run(brain, progress=progress)
     return brain
 
 

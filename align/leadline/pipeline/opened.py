@@ -65,7 +65,7 @@ class OpenBrain:
             raise found.faults[0] if len(found.faults) == 1 else Faults(found.faults)
         return found.notes
 
-    def run(self, *, physiology: bool = True, progress: Progress = SILENT, threads: int = 2) -> Results:
+    def run(self, *, physiology: bool = True, progress: Progress = SILENT) -> Results:
         """Run every stage that is not up to date and return the results.
 
         ``physiology`` : False leaves out what the recordings say of depth, as ``--no-physiology`` does.
@@ -73,7 +73,7 @@ class OpenBrain:
         from leadline.pipeline.run import run, without_physiology
 
         brain = self.brain if physiology else without_physiology(self.brain)
-        summary = run(brain, progress=progress, threads=threads)
+        summary = run(brain, progress=progress)
         return self._results(summary.warnings)
 
     def units(self, progress: Progress = SILENT) -> pd.DataFrame:

@@ -30,13 +30,13 @@ class Summary:
     warnings: tuple[tuple[str, str], ...]
 
 
-def run(brain: Brain, *, until: str = "locate", progress: Progress = SILENT, threads: int = 2) -> Summary:
+def run(brain: Brain, *, until: str = "locate", progress: Progress = SILENT) -> Summary:
     """Run every step up to the stage ``until`` and what it needs.
 
     Raises LeadlineError when an input is wrong; steps finished before it are kept.
     """
     with sole_worker(brain.file):
-        return _run(Bench(brain, progress, threads), until)
+        return _run(Bench(brain, progress), until)
 
 
 def _run(bench: Bench, until: str) -> Summary:

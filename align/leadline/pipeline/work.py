@@ -43,7 +43,6 @@ def register(bench: Bench, files: products.RegistrationFiles) -> tuple[str, ...]
         settings=settings,
         dye=dye,
         progress=bench.progress,
-        threads=bench.threads,
     )
     registration = _refined_by_pairs(bench.brain, registration)
     files.write(registration)

@@ -38,7 +38,6 @@ def register(
     settings: RegisterSettings,
     dye: Volume | None = None,
     progress: Progress = SILENT,
-    threads: int = 2,
 ) -> Registration:
     """Tie a stack to the atlas.
 
@@ -47,11 +46,9 @@ def register(
     background : the autofluorescence channel, reduced to voxels of 25 to 50 um, with its orientation code.
     template, labels : PIR volumes on one grid; label 0 is outside the brain.
     dye : the dye channel on the background's grid; what it stains is not believed.
-    threads : taken for the stage table's sake; the work is done in one thread, and the same whatever it says.
 
     Raises LeadlineError when a volume shows no tissue or holds values that are not finite.
     """
-    del threads
     fine_um = settings.resolution_um / 2
     coarse, first = (max(WORK, round(np.log2(um / fine_um))) for um in (COARSE_UM, SEARCH_UM))
     progress.begin("register", 6 + _field_steps(coarse) if settings.deformable else 6)
