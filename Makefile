@@ -3,12 +3,15 @@ PYTHON ?= $(shell for p in python3 python3.13 python3.12 python3.11; do $$p -c "
 BIN := .venv/bin
 ONE_THREAD := OMP_NUM_THREADS=1 OPENBLAS_NUM_THREADS=1 MKL_NUM_THREADS=1 NUMBA_NUM_THREADS=1
 
-.PHONY: demo test lint study clean docs screenshots
+.PHONY: demo test bench lint study clean docs screenshots
 demo: .venv/.core
 	$(BIN)/leadline demo leadline-demo
 
 test: .venv/.dev
 	$(ONE_THREAD) $(BIN)/python -m pytest -n 2 --dist worksteal --doctest-modules align tests
+
+bench: .venv/.dev
+	$(ONE_THREAD) $(BIN)/python -m tests.benchmarks $(BENCH)
 
 lint: .venv/.dev
 	$(BIN)/ruff check align plugins tests
