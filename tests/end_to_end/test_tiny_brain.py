@@ -17,6 +17,7 @@ from tests.leadline.io.broken_cases import BROKEN
 from leadline.cli.main import main
 from leadline.io.atlases import read_atlas
 from leadline.model.channels import BASES, CHANNEL_COLUMNS, STEREO_COLUMNS
+from leadline.pipeline.laminar import COLUMNS as LAMINAR_COLUMNS
 
 FIXTURES = Path(__file__).parents[2] / "fixtures" / "broken"
 
@@ -83,7 +84,7 @@ def test_every_promised_file_is_there(done):
 
 def test_the_channel_table_keeps_the_contract(done):
     table, atlas = channels(done), read_atlas(done / "atlas")
-    assert tuple(table.columns) == (*CHANNEL_COLUMNS, *STEREO_COLUMNS)
+    assert tuple(table.columns) == (*CHANNEL_COLUMNS, *STEREO_COLUMNS, *LAMINAR_COLUMNS)
     assert len(table) == 32
     assert set(table["basis"]) <= set(BASES)
     assert table["p_region"].between(0, 1).all()

@@ -176,7 +176,7 @@ def _number(value: object, where: str) -> float:
 def _known(table: Mapping[str, object], names: tuple[str, ...], where: str) -> None:
     for key in table:
         if key not in names:
-            raise LeadlineError(f"'{key}' is no known key", where=where, mend=nearest(key, names).capitalize())
+            raise LeadlineError(f"'{key}' is no known key", where=where, mend=nearest(key, names))
 
 
 def _has(own: str, acronym: str, layer: str, word: str) -> bool:

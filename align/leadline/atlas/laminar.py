@@ -19,7 +19,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from leadline.base.arrays import AnyArray, BoolArray, Float32Array, FloatArray, IntArray, frozen, frozen_vector
-from leadline.base.errors import LeadlineError
+from leadline.base.errors import LeadlineError, nearest
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -30,11 +30,16 @@ GRID_UM = 50.0
 TOLERANCE = 1e-6
 _CORTICAL_LAYER = re.compile(r"[1-6]")
 _CORTEX = re.compile(r"\b(isocortex|neocortex|cerebral cortex|cortical plate)\b", re.IGNORECASE)
-# Mean layer borders of mouse visual cortex below the pia: 115.11, 333.47, 453.62, 687.65, 883.13 and 922.59 um (white
-# matter), as found in three public collections of reconstructed cells; taken over as fractions of their sum.
+# Published mean layer borders as fractions of the depth from pia to white matter: (layer, its lower border).
+# Mouse visual cortex: 115.11, 333.47, 453.62, 687.65, 883.13 and 922.59 um, the constants
+# DEFAULT_MOUSE_ME_MET_REFERENCE_LAYER_DEPTHS of the library neuron-morphology 1.2.2 (read there, and compared).
+# Mouse barrel cortex (C2): 128, 269, 418, 588, 708, 890 and 1154 um, Lefort et al. (2009), Neuron 61, 301; from memory.
 LAYER_SETS: dict[str, tuple[tuple[str, float], ...]] = {
     "mouse visual cortex": (
         ("1", 0.1248), ("2/3", 0.3614), ("4", 0.4917), ("5", 0.7454), ("6a", 0.9572), ("6b", 1.0),
+    ),
+    "mouse barrel cortex": (
+        ("1", 0.1109), ("2", 0.2331), ("3", 0.3622), ("4", 0.5095), ("5a", 0.6135), ("5b", 0.7712), ("6", 1.0),
     ),
 }  # fmt: skip
 FROM_ATLAS, NO_LAYER, OUTERMOST = "atlas", "", "1"
@@ -145,7 +150,7 @@ def solve(
     jacobi = diags(1.0 / matrix.diagonal())
     solution, failed = cg(matrix, right, x0=np.full(n, 0.5), rtol=TOLERANCE, M=jacobi, maxiter=5000)
     if failed:
-        raise LeadlineError("the cortical depth did not converge", where="atlas", mend="Report this fault")
+        raise RuntimeError("Laplace's equation in the atlas' cortex did not converge")
     values[cortex] = np.clip(solution, 0.0, 1.0)
     return values
 
@@ -232,14 +237,14 @@ def depth_columns(
     layer: Sequence[str],
     depth: CorticalDepth,
     structures: Structures,
-    fractions: Sequence[tuple[str, float]] | None = None,
-    fractions_name: str = "",
+    chosen: Sequence[tuple[str, str]] = (),
 ) -> tuple[FloatArray, tuple[str, ...], tuple[str, ...]]:
     """What channels and units get appended: ``cortical_depth`` (n,), ``layer`` and ``layer_source`` (n,) texts.
 
     ``points_um`` : (n, 3) atlas um, NaN where not located. ``region_id``, ``layer`` : (n,) by the atlas. Depth is NaN
     outside cortex. Layers stay the atlas' (``layer_source`` 'atlas'); where it has none in cortex, they are those of
-    ``fractions`` if these were chosen (``layer_source`` 'fractions: NAME'), and none otherwise.
+    the set of :data:`LAYER_SETS` that was ``chosen``, in pairs (acronym, name of the set), for the structure or the
+    nearest that holds it (``layer_source`` 'fractions: NAME'), and none otherwise.
     """
     ids = np.array(cortex_ids(structures))
     located = np.isfinite(points_um).all(axis=1) & np.isin(region_id, ids)
@@ -247,12 +252,27 @@ def depth_columns(
     if located.any():
         found[located] = depth.at(points_um[located])
     layers, sources = list(layer), [FROM_ATLAS if name else NO_LAYER for name in layer]
-    if fractions is not None:
-        for row in np.flatnonzero(np.isfinite(found)):
-            if not layers[row]:
-                layers[row] = layer_at(float(found[row]), fractions)
-                sources[row] = f"fractions: {fractions_name}"
+    set_of = dict(chosen)
+    for row in np.flatnonzero(np.isfinite(found)) if set_of else ():
+        above = (set_of.get(step.acronym) for step in structures.ancestry(int(region_id[row])))
+        name = next(filter(None, above), None)
+        if name is not None and not layers[row]:
+            layers[row] = layer_at(float(found[row]), LAYER_SETS[name])
+            sources[row] = f"fractions: {name}"
     return found, tuple(layers), tuple(sources)
+
+
+def require_chosen(chosen: Sequence[tuple[str, str]], structures: Structures) -> None:
+    """Raises LeadlineError, naming the nearest, for a structure or a set that there is not."""
+    acronyms = [row.acronym for row in structures.rows]
+    for acronym, name in chosen:
+        for what, word, known in (("structure", acronym, acronyms), ("set of layer fractions", name, list(LAYER_SETS))):
+            if word not in known:
+                raise LeadlineError(
+                    f"there is no {what} '{word}'",
+                    where="brain.toml, [settings], [locate], layer_fractions",
+                    mend=nearest(word, known),
+                )
 
 
 def layer_at(depth: float, fractions: Sequence[tuple[str, float]]) -> str:

@@ -39,15 +39,15 @@ class Faults(LeadlineError):
 
 
 def nearest(word: str, known: Iterable[str]) -> str:
-    """Name the known word that is nearest to ``word``, as an end of a sentence.
+    """Name the known word that is nearest to ``word``, as a sentence.
 
     Examples
     --------
     >>> nearest("orientaton", ["orientation", "voxel_um"])
-    "did you mean 'orientation'?"
+    "Did you mean 'orientation'?"
     >>> nearest("zebra", ["b", "a"])
-    "known are 'a', 'b'"
+    "Known are 'a', 'b'"
     """
     known = sorted(known)
     close = get_close_matches(word, known, n=1)
-    return f"did you mean '{close[0]}'?" if close else "known are " + ", ".join(f"'{k}'" for k in known)
+    return f"Did you mean '{close[0]}'?" if close else "Known are " + ", ".join(f"'{k}'" for k in known)

@@ -69,7 +69,7 @@ def _read_toml(folder: Path) -> dict[str, Any]:
     except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
         raise LeadlineError(f"is no valid TOML ({error})", where=str(file), mend="Correct that line") from error
     faults = [
-        LeadlineError(f"unknown key {key!r}", where=str(file), mend=nearest(key, _KEYS).capitalize())
+        LeadlineError(f"unknown key {key!r}", where=str(file), mend=nearest(key, _KEYS))
         for key in stated.keys() - set(_KEYS)
     ]
     faults += [

@@ -115,7 +115,7 @@ class _Table:
         """Fault every key that nobody asked for."""
         for key in self.values:
             if key not in self.asked:
-                self.fault(f"unknown key '{key}'", nearest(key, self.asked).capitalize())
+                self.fault(f"unknown key '{key}'", nearest(key, self.asked))
 
 
 def _brain(top: _Table, file: Path) -> Brain:
@@ -243,14 +243,22 @@ def _like(default: object) -> Callable[[Any], Any]:
         return _whole
     if isinstance(default, float):
         return _not_negative
+    if default == ():
+        return _word_pairs
     if isinstance(default, tuple):
         return _increasing_pair
     return _text
 
 
 def _like_words(kind: object) -> str:
-    words = {bool: "true or false", int: "a whole number", float: "a number that is not negative", str: '"a text"'}
-    return words.get(kind, "two increasing numbers, such as [4.0, 12.0]")  # type: ignore[call-overload,no-any-return]
+    words: dict[object, str] = {
+        bool: "true or false",
+        int: "a whole number",
+        float: "a number that is not negative",
+        str: '"a text"',
+        tuple[tuple[str, str], ...]: 'a table of words, such as { ACRONYM = "name" }',
+    }
+    return words.get(kind, "two increasing numbers, such as [4.0, 12.0]")
 
 
 def _unique(names: Iterable[str], table: _Table, what: str) -> None:
@@ -264,7 +272,7 @@ def _unique(names: Iterable[str], table: _Table, what: str) -> None:
 def _neighbours(path: Path) -> str:
     if not path.parent.is_dir():
         return f"There is no folder {path.parent} either; paths are relative to brain.toml"
-    return f"Paths are relative to brain.toml; {nearest(path.name, [p.name for p in path.parent.iterdir()])}"
+    return f"Paths are relative to brain.toml. {nearest(path.name, [p.name for p in path.parent.iterdir()])}"
 
 
 def _text(value: object) -> str:
@@ -356,6 +364,12 @@ def _increasing_pair(value: object) -> tuple[float, float]:
     if low >= high:
         raise ValueError
     return low, high
+
+
+def _word_pairs(value: object) -> tuple[tuple[str, str], ...]:
+    if not isinstance(value, dict):
+        raise TypeError
+    return tuple((str(key), _text(word)) for key, word in value.items())
 
 
 def _toward(value: object) -> str:

@@ -123,7 +123,7 @@ def _missing(path: Path, column: str, table: pd.DataFrame, what: str) -> Leadlin
     return LeadlineError(
         f"column '{column}' is missing",
         where=str(path),
-        mend=f"{nearest(column, map(str, table.columns)).capitalize()} ({what} may hold {', '.join(KNOWN)})",
+        mend=f"{nearest(column, map(str, table.columns))} ({what} may hold {', '.join(KNOWN)})",
     )
 
 

@@ -53,7 +53,7 @@ def read_csv(path: Path, needed: Sequence[str], *, what: str) -> pd.DataFrame:
             raise LeadlineError(
                 f"column '{column}' is missing",
                 where=str(path),
-                mend=f"{nearest(column, map(str, table.columns)).capitalize()}; {what} need {', '.join(needed)}",
+                mend=f"{nearest(column, map(str, table.columns))}; {what} need {', '.join(needed)}",
             )
     return table
 

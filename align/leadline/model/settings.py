@@ -49,9 +49,10 @@ class AnchorSettings:
 
 @dataclass(frozen=True, slots=True)
 class LocateSettings:
-    """``[settings.locate]``."""
+    """``[settings.locate]``. ``layer_fractions`` : (acronym of a structure without layers, name of a published set)."""
 
     seed: int = 1
+    layer_fractions: tuple[tuple[str, str], ...] = ()
 
 
 @dataclass(frozen=True, slots=True)

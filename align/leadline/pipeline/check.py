@@ -54,9 +54,13 @@ class _Look:
         return None
 
     def images(self) -> None:
+        from leadline.atlas.laminar import require_chosen
+
         atlas = self.hear(lambda: self.bench.atlas)
         stack = self.hear(lambda: self.bench.background)
         self.hear(lambda: self.bench.dye)
+        if atlas is not None:
+            self.hear(lambda: require_chosen(self.brain.settings.locate.layer_fractions, atlas.structures))
         if atlas is not None and stack is not None:
             self.notes += _size_notes(sorted(atlas.labels.extent_um), sorted(stack.finest.extent_um))
 

@@ -45,15 +45,26 @@ def with_cortical_depth(table: pd.DataFrame, bench: Bench) -> pd.DataFrame:
     """Channels or units with ``cortical_depth`` and ``layer_source`` appended, where the atlas has cortex."""
     import pandas as pd
 
-    depth = cortical_depth(bench)
+    depth, structures = cortical_depth(bench), bench.atlas.structures
+    chosen = bench.brain.settings.locate.layer_fractions
+    laminar.require_chosen(chosen, structures)
     if depth is None:
         return table
     points = table[["ap_um", "dv_um", "ml_um"]].apply(pd.to_numeric).to_numpy(float)
     region = pd.to_numeric(table["region_id"]).fillna(-1).to_numpy(np.int64)
-    found, _, sources = laminar.depth_columns(
-        points, region, [str(v) for v in table["layer"]], depth, bench.atlas.structures
+    by_atlas = [str(v) for v in table["layer"]]
+    found, layers, sources = laminar.depth_columns(points, region, by_atlas, depth, structures, chosen)
+    return table.assign(layer=list(layers), cortical_depth=found.round(4), layer_source=list(sources))
+
+
+def without_depth(table: pd.DataFrame, bench: Bench) -> tuple[str, ...]:
+    """A sentence where a table has no cortical depth though its atlas has cortex, or though layers were asked for."""
+    asked = bench.brain.settings.locate.layer_fractions
+    if COLUMNS[0] in table.columns or not (asked or laminar.cortex_ids(bench.atlas.structures)):
+        return ()
+    return (
+        "no cortical_depth and no layers from it: the atlas' cortex does not lie between the outside and white matter",
     )
-    return table.assign(cortical_depth=found.round(4), layer_source=list(sources))
 
 
 def _read(file: Path, mark: str) -> laminar.CorticalDepth | None:

@@ -260,7 +260,7 @@ def require_value(table: pd.DataFrame, column: str, period: float | None = None)
 
     names = [str(name) for name in table.columns]
     if column not in names:
-        mend = f"{nearest(column, names).capitalize()}; your own columns come from unit_table"
+        mend = f"{nearest(column, names)}; your own columns come from unit_table"
         raise LeadlineError(f"units have no column '{column}'", where="--value", mend=mend)
     if not (table[column].notna() & table["ap_um"].notna()).any():
         raise LeadlineError(f"no located unit has a '{column}'", where="--value", mend="Fill it in the unit table")

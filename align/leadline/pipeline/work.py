@@ -198,6 +198,7 @@ def locate(bench: Bench) -> tuple[str, ...]:
 
     from leadline.io.tables import read_anchors, write_table
     from leadline.locating.table import unlocated_rows
+    from leadline.pipeline.laminar import with_cortical_depth, without_depth
 
     brain = bench.brain
     registration = products.RegistrationFiles(brain).read()
@@ -219,7 +220,7 @@ def locate(bench: Bench) -> tuple[str, ...]:
             else:
                 rows = unlocated_rows(brain.name, penetration.name, contacts, bench.atlas)
             channels.append(rows.iloc[np.argsort(contacts.channel, kind="stable")])
-    table = pd.concat(channels, ignore_index=True)
+    table = with_cortical_depth(pd.concat(channels, ignore_index=True), bench)
     write_table(table, brain.out / "channels.csv")
     write_table(table, brain.out / "channels.parquet")
     if not shares:
@@ -227,7 +228,7 @@ def locate(bench: Bench) -> tuple[str, ...]:
 
         shares = [pd.DataFrame(columns=list(POSTERIOR_COLUMNS))]
     write_table(pd.concat(shares, ignore_index=True), brain.out / "posterior.parquet")
-    return ()
+    return without_depth(table, bench)
 
 
 def _locate_shank(

@@ -10,6 +10,7 @@ from leadline.atlas.laminar import (
     cortical_depth,
     depth_columns,
     layer_at,
+    require_chosen,
     solve,
 )
 from leadline.base.errors import LeadlineError
@@ -118,10 +119,26 @@ def test_layers_are_made_up_only_when_asked_and_say_so():
     depth = cortical_depth(atlas)
     points, region = np.array([[250.0, 680.0, 500.0], [250.0, 1600.0, 500.0]]), np.array([1, 4])
     assert depth_columns(points, region, ["", ""], depth, atlas.structures)[1:] == (("", ""), ("", ""))
-    chosen = LAYER_SETS["mouse visual cortex"]
-    _, layer, source = depth_columns(points, region, ["", ""], depth, atlas.structures, chosen, "mouse visual cortex")
+    chosen = [("CTX", "mouse visual cortex")]
+    _, layer, source = depth_columns(points, region, ["", ""], depth, atlas.structures, chosen)
     assert layer == ("4", "")
     assert source == ("fractions: mouse visual cortex", "")
+    nearer = [*chosen, ("V1", "mouse barrel cortex")]
+    assert depth_columns(points, region, ["", ""], depth, atlas.structures, nearer)[2][0].endswith("barrel cortex")
+    elsewhere = [("V5", "mouse visual cortex")]
+    assert depth_columns(points, region, ["", ""], depth, atlas.structures, elsewhere)[1] == ("", "")
+    of_its_own = depth_columns(points, region, ["x", ""], depth, atlas.structures, chosen)
+    assert of_its_own[1:] == (("x", ""), ("atlas", ""))
+
+
+def test_layers_for_a_structure_or_from_a_set_that_is_none_are_refused():
+    structures = made_atlas().structures
+    with pytest.raises(LeadlineError, match=r"no structure 'CTC'. Did you mean 'CTX'"):
+        require_chosen([("CTC", "mouse visual cortex")], structures)
+    with pytest.raises(
+        LeadlineError, match=r"no set of layer fractions 'mouse visual'. Did you mean 'mouse visual cortex'"
+    ):
+        require_chosen([("CTX", "mouse visual")], structures)
 
 
 def test_published_fractions_are_ascending_and_end_at_the_white_matter():

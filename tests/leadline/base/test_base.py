@@ -10,7 +10,7 @@ import numpy as np
 import pytest
 
 from leadline.base.arrays import frozen_points
-from leadline.base.atomic import sweep, whole_file, whole_folder, write_text
+from leadline.base.atomic import whole_file, whole_folder, write_text
 from leadline.base.errors import Faults, LeadlineError, nearest
 from leadline.base.fingerprint import WHOLE_BELOW_BYTES, fingerprint_path, fingerprint_value
 
@@ -26,7 +26,7 @@ def test_faults_tells_every_fault():
 
 
 def test_nearest_names_the_word_that_was_meant():
-    assert nearest("shank_towards", ["shank_toward", "points"]) == "did you mean 'shank_toward'?"
+    assert nearest("shank_towards", ["shank_toward", "points"]) == "Did you mean 'shank_toward'?"
 
 
 def test_points_name_the_row_that_is_not_finite():
@@ -119,11 +119,3 @@ def test_a_folder_fingerprint_sees_a_new_name(tmp_path):
 def test_value_fingerprints_tell_nested_values_apart():
     values = [[1, [2]], [[1], 2], {"a": 1}, {"a": "1"}, np.arange(3), np.arange(3.0), None, "None"]
     assert len({fingerprint_value(v) for v in values}) == len(values)
-
-
-def test_what_a_killed_writer_left_is_swept_away_and_nothing_else(tmp_path):
-    for name, age in ((".part-old-a.csv", 3600), (".part-new-a.csv", 0), ("a.csv", 3600)):
-        (tmp_path / name).write_text("x")
-        os.utime(tmp_path / name, (time.time() - age,) * 2)
-    sweep(tmp_path)
-    assert sorted(p.name for p in tmp_path.iterdir()) == [".part-new-a.csv", "a.csv"]

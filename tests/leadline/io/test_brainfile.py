@@ -77,7 +77,7 @@ def test_everything_that_was_written_is_read(folder):
         ('dtype = "int16"', 'dtype = "int24"', "dtype = 'int24' is not"),
         ("  uv_per_bit = 4.69\n", "", "'uv_per_bit' is missing"),
         ("  sampling_hz = 2500.0\n", "", "'sampling_hz' is missing"),
-        ('"a.bin"', '"b.bin"', "b.bin does not exist. Paths are relative to brain.toml; did you mean 'a.bin'"),
+        ('"a.bin"', '"b.bin"', "b.bin does not exist. Paths are relative to brain.toml. Did you mean 'a.bin'"),
         ('penetration = "A"\ntip', 'penetration = "B"\ntip', "there is no penetration 'B'"),
         ("track_depth_um = 1420", "track_depth_um = nan", "track_depth_um = nan is not a number of um"),
         ("ripple_hz = [100.0, 250.0]", "ripple_hz = [250.0, 100.0]", "two increasing numbers"),

@@ -88,7 +88,7 @@ def test_a_table_of_other_columns_is_refused(tmp_path):
     with pytest.raises(LeadlineError, match="column 'flag' is missing"):
         read_profile(path)
     pd.DataFrame({"shank": [0], "tip_distance_um": [1.0], "theta_powr_db": [1.0], "flag": [""]}).to_parquet(path)
-    with pytest.raises(LeadlineError, match=r"'theta_powr_db' is no feature. did you mean 'theta_power_db'"):
+    with pytest.raises(LeadlineError, match=r"'theta_powr_db' is no feature. Did you mean 'theta_power_db'"):
         read_profile(path)
 
 

@@ -58,7 +58,7 @@ def test_memory_does_not_grow_with_the_file(source):
         ({"n_channels": None}, "'n_channels' is missing"),
         ({"dtype": None}, "'dtype' is missing"),
         ({"uv_per_bit": None}, "'uv_per_bit' is missing"),
-        ({"dtype": "int61"}, r"dtype 'int61' cannot be read. did you mean 'int16'"),
+        ({"dtype": "int61"}, r"dtype 'int61' cannot be read. Did you mean 'int16'"),
         ({"sampling_hz": -1.0}, "'sampling_hz' must be positive, is -1"),
         ({"uv_per_bit": float("nan")}, "'uv_per_bit' must be positive"),
         ({"n_channels": 0}, "'n_channels' must be positive, is 0"),
