@@ -17,7 +17,8 @@ from leadline.base.atomic import write_text
 from leadline.base.errors import LeadlineError
 from leadline.io.points import pairs_text, read_pairs, read_track_edits, track_edits_text
 from leadline.io.tables import anchors_text
-from leadline.pipeline.record import Record, sole_worker
+from leadline.pipeline.lock import sole_worker
+from leadline.pipeline.record import Record
 from leadline.pipeline.stages import anchors_in_force
 from leadline_napari.history import History, line_of, replay
 from leadline_napari.session import Edits, Pair, TrackEdit
@@ -99,7 +100,6 @@ class Store:
                     where=str(self.brain.folder),
                     mend="They were read again; your last edit was not made",
                 )
-            self._sweep()
             write_text(self.anchors, anchors_text(edits.anchors))
             tracks = {(t.penetration, t.shank): np.array(t.points_um) for t in edits.tracks}
             _write_or_drop(self.tracks, bool(tracks), track_edits_text(tracks))
@@ -118,12 +118,6 @@ class Store:
             raise LeadlineError(
                 f"is damaged ({error!r})", where=str(self.journal), mend="Delete it: only undo is lost, no anchor"
             ) from error
-
-    def _sweep(self) -> None:
-        """Take away half-written files that a killed process left; the brain is held, so nobody is writing them."""
-        for path in (self.anchors, self.tracks, self.pairs):
-            for part in path.parent.glob(f".part-*-{path.name}"):
-                part.unlink(missing_ok=True)
 
 
 def _write_or_drop(path: Path, wanted: bool, text: str) -> None:

@@ -15,7 +15,7 @@ from leadline.base.errors import LeadlineError
 from leadline.io.brainfile import read_brain
 from leadline.io.tables import read_anchors
 from leadline.model.anchor import Anchor
-from leadline.pipeline.record import sole_worker
+from leadline.pipeline.lock import sole_worker
 from leadline_napari.controllers.desk import Desk
 from leadline_napari.session import AddAnchor, ChangeAnchor, DeleteAnchor, DrawTrack, Pair, SetPairs, TrackEdit
 from leadline_napari.store import ChangedOutside

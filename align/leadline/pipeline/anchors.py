@@ -8,7 +8,8 @@ from typing import TYPE_CHECKING
 from leadline.base.atomic import write_text
 from leadline.base.errors import LeadlineError
 from leadline.model.anchor import Anchor, in_order
-from leadline.pipeline.record import Record, sole_worker
+from leadline.pipeline.lock import sole_worker
+from leadline.pipeline.record import Record
 from leadline.pipeline.stages import anchors_in_force
 
 if TYPE_CHECKING:
@@ -32,7 +33,8 @@ def accept(brain: Brain, choices: Sequence[str]) -> tuple[Anchor, ...]:
     chosen = dict.fromkeys(s for choice in choices for s in _named(suggestions, choice))
     new = tuple(replace(s.anchor, source="auto") for s in chosen)
     with sole_worker(brain.file):
-        in_force = (*anchors_in_force(brain, Record(brain.folder, brain.cache)), *new)
+        before = anchors_in_force(brain, Record(brain.folder, brain.cache))
+        in_force = (*before, *(a for a in new if a not in before))  # again after a crash: it is there already
         for p, shank in sorted({(a.penetration, a.shank) for a in new}):
             in_order(a for a in in_force if (a.penetration, a.shank) == (p, shank))
         write_text(brain.out / "anchors.csv", anchors_text(in_force))

@@ -2,11 +2,8 @@
 
 from __future__ import annotations
 
-import fcntl
 import json
-from contextlib import contextmanager
 from dataclasses import dataclass, field
-from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from leadline.base.atomic import write_text
@@ -14,7 +11,8 @@ from leadline.base.errors import LeadlineError
 from leadline.base.fingerprint import fingerprint_path, fingerprint_value
 
 if TYPE_CHECKING:
-    from collections.abc import Iterator, Mapping
+    from collections.abc import Mapping
+    from pathlib import Path
 
 RECORD_FORMAT = 1
 
@@ -77,21 +75,3 @@ class Record:
             for name, d in self.steps.items()
         }
         write_text(self.file, json.dumps({"format": RECORD_FORMAT, "steps": steps}, indent=1) + "\n")
-
-
-@contextmanager
-def sole_worker(brain_file: Path) -> Iterator[None]:
-    """Hold the brain for this process; a second one is told so instead of writing over the first.
-
-    Raises LeadlineError when another process holds it.
-    """
-    with brain_file.open("rb") as handle:
-        try:
-            fcntl.flock(handle, fcntl.LOCK_EX | fcntl.LOCK_NB)
-        except BlockingIOError as error:
-            raise LeadlineError(
-                "another Leadline process is working on this brain",
-                where=str(brain_file),
-                mend="Wait until it has ended, then start again",
-            ) from error
-        yield

@@ -10,8 +10,9 @@ from leadline.base.errors import LeadlineError
 from leadline.base.fingerprint import fingerprint_path, fingerprint_value
 from leadline.base.progress import SILENT, Progress
 from leadline.pipeline.bench import Bench
+from leadline.pipeline.lock import sole_worker
 from leadline.pipeline.provenance import write_provenance
-from leadline.pipeline.record import Done, Record, sole_worker
+from leadline.pipeline.record import Done, Record
 from leadline.pipeline.stages import STAGES, Step, plan
 
 if TYPE_CHECKING:
@@ -59,8 +60,12 @@ def _run(bench: Bench, until: str) -> Summary:
             sweep(brain.cache)
             checked = True
         bench.progress.begin(step.name, 0)
-        warnings = step.run(bench)
-        _require_unchanged(step, marks)
+        try:
+            warnings = step.run(bench)
+        except Exception:
+            _require_unchanged(step, marks, record, brain)  # what went wrong is then the change
+            raise
+        _require_unchanged(step, marks, record, brain)
         outputs = {str(p.relative_to(brain.folder)): fingerprint_path(p) for p in step.gives}
         record.keep(step.name, Done(key, outputs, tuple(warnings), inputs, step.extra))
         done.append(step.name)
@@ -98,17 +103,29 @@ def _check(bench: Bench) -> None:
         raise found.faults[0] if len(found.faults) == 1 else Faults(found.faults)
 
 
-def _require_unchanged(step: Step, marks: dict[Path, str]) -> None:
+def _require_unchanged(step: Step, marks: dict[Path, str], record: Record, brain: Brain) -> None:
     """A file that changed while it was read makes a result of two halves."""
     for path in step.reads:
         if not path.exists() or _mark(path) != marks[path]:
+            what = "changed" if path.exists() else "vanished"
+            mend = "Let it be and run again" if path.exists() else "Put it back and run again"
+            raise LeadlineError(f"{what} while '{step.name}' was reading it", where=str(path), mend=mend)
+    for name in step.needs:
+        if not record.steps[name].intact(brain.folder):
             raise LeadlineError(
-                f"changed while '{step.name}' was reading it", where=str(path), mend="Let it be and run again"
+                f"what '{name}' wrote changed while '{step.name}' was reading it",
+                where=str(brain.folder),
+                mend="Let it be and run again",
             )
 
 
 def _mark(path: Path) -> str:
-    return fingerprint_path(path)
+    try:
+        return fingerprint_path(path)
+    except OSError as error:
+        raise LeadlineError(
+            f"cannot be read ({error.strerror})", where=str(path), mend="Put it back, or get the right to read it"
+        ) from error
 
 
 def _short(path: Path, brain: Brain) -> Path:

@@ -132,7 +132,7 @@ def _anchor(brain: Brain, record: Record, profiles: tuple[str, ...]) -> Step:
         key=(brain.settings.anchor, anchors, [p.inserted_um for p in brain.penetrations]),
         reads=_present(brain.atlas, brain.knowledge, *(p.probe for p in brain.penetrations)),
         gives=(brain.out / "anchors.csv", brain.out / "suggestions.csv", brain.cache / "posterior.npz"),
-        run=lambda bench: work.anchor(bench, anchors),
+        run=lambda bench: work.anchor(bench, anchors, lambda: anchors_in_force(brain, record)),
         extra={"from_brain_toml": [dataclasses.asdict(a) for a in brain.anchors]},
     )
 
