@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import dataclasses
+import os
 import re
 import tomllib
 from math import isfinite
@@ -51,9 +52,23 @@ def read_brain(path: Path) -> Brain:
         raise LeadlineError(f"is not valid TOML: {error}", where=str(file), mend="Mend that line") from error
     faults: list[LeadlineError] = []
     brain = _brain(_Table(content, file.name, file.parent, faults), file)
+    faults += _leading_out(brain)
     if faults:
         raise faults[0] if len(faults) == 1 else Faults(faults)
     return brain
+
+
+def _leading_out(brain: Brain) -> list[LeadlineError]:
+    """A fault for every folder of results that is a link out of the brain's folder: nothing is written elsewhere."""
+    home, found = brain.folder.resolve(), []
+    for top in (brain.out, brain.cache):
+        for folder in (top, *(p for p in top.glob("*") if p.is_symlink())):
+            leads = Path(os.path.realpath(folder))
+            if not leads.is_relative_to(home):
+                what = f"is a link that leads out of the brain's folder, to {leads}"
+                mend = "Remove the link; to keep results on another disk, move the whole folder there"
+                found.append(LeadlineError(what, where=str(folder), mend=mend))
+    return found
 
 
 class _Table:
@@ -109,6 +124,8 @@ class _Table:
             raise LeadlineError(f"{path} does not exist", mend=_neighbours(path))
         if path.is_dir() and not folder_ok:
             raise LeadlineError(f"{path} is a folder", mend="Name a file")
+        if not (path.is_dir() or path.is_file()):
+            raise LeadlineError(f"{path} is neither a file nor a folder", mend="Name a file")
         return path
 
     def finish(self) -> None:
@@ -185,11 +202,15 @@ def _recording(table: _Table) -> RecordingSource:
         events=table.path("events", None, folder_ok=False),
         exclude=table.path("exclude", None, folder_ok=False),
         skip_channels=table.get("skip_channels", _whole_list, "a list of trace numbers, such as [384]", ()),
+        lfp_series=table.get("lfp_series", _text, '"the name of an electrical series of the NWB file"', None),
     )
     table.finish()
     if source.lfp is None and source.spikes is None:
         table.fault("names neither lfp nor spikes", 'Write lfp = "…" or spikes = "…"')
-    if source.lfp is not None and source.lfp.suffix != ".nwb":
+    in_nwb = source.lfp is not None and source.lfp.suffix.lower() == ".nwb"
+    if source.lfp_series is not None and not in_nwb:
+        table.fault("'lfp_series' names a series inside an NWB file, and lfp is none", "Leave it out")
+    if source.lfp is not None and not in_nwb:
         flat = {"sampling_hz": source.sampling_hz, "n_channels": source.n_channels, "dtype": source.dtype}
         for key in (k for k, value in flat.items() if value is None and k not in table.values):
             table.fault(f"'{key}' is missing", f"A flat recording needs {', '.join(flat)} and uv_per_bit")

@@ -8,11 +8,12 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from leadline.base.atomic import write_text
+from leadline.base.errors import LeadlineError
 from leadline.model.track import Track
 from leadline.pipeline import products
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping, Sequence
+    from collections.abc import Callable, Mapping, Sequence
 
     from leadline.model.anchor import Anchor
     from leadline.model.atlas import Atlas
@@ -169,8 +170,11 @@ def profile(bench: Bench, penetration: Penetration, files: products.ProfileFiles
     return found.warnings
 
 
-def anchor(bench: Bench, anchors: tuple[Anchor, ...]) -> tuple[str, ...]:
-    """The posterior over depth maps of every shank, and the anchors that it suggests."""
+def anchor(bench: Bench, anchors: tuple[Anchor, ...], in_force: Callable[[], tuple[Anchor, ...]]) -> tuple[str, ...]:
+    """The posterior over depth maps of every shank, and the anchors that it suggests.
+
+    ``in_force`` : the anchors as they stand when it is called; an edit made meanwhile is not written over.
+    """
     from leadline.anchoring.suggest import suggest
     from leadline.io.tables import anchors_text, suggestions_text
     from leadline.model.anchor import in_order
@@ -187,6 +191,11 @@ def anchor(bench: Bench, anchors: tuple[Anchor, ...]) -> tuple[str, ...]:
     products.write_posteriors(brain, posteriors)
     taken = {(a.penetration, a.shank, a.landmark) for a in anchors if a.landmark}
     open_ones = [s for s in suggestions if (s.anchor.penetration, s.anchor.shank, s.anchor.landmark) not in taken]
+    if in_force() != anchors:
+        raise LeadlineError(
+            "changed while 'anchor' was at work; the edit is kept", where=str(brain.out / "anchors.csv"),
+            mend="Run again: it goes on from what the file says now",
+        )  # fmt: skip
     write_text(brain.out / "anchors.csv", anchors_text(anchors))
     write_text(brain.out / "suggestions.csv", suggestions_text(open_ones))
     return tuple(f"penetration {p.penetration}, shank {p.shank}: {w}" for p in posteriors for w in p.warnings)
