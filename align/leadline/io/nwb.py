@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from leadline.base.arrays import AnyArray, Float32Array, FloatArray, IntArray
-from leadline.base.errors import LeadlineError
+from leadline.base.errors import LeadlineError, nearest
 from leadline.io.nwb_electrodes import NONE, Electrodes, groups_of, match, need_pynwb, read_electrodes
 from leadline.model.recording import Events, Spikes
 
@@ -116,17 +116,18 @@ class NwbTraces:
         return np.asarray(found if found.ndim == 2 else found[:, None])
 
 
-def open_nwb(path: Path, probe: Probe, group: str) -> NwbTraces:
+def open_nwb(path: Path, probe: Probe, group: str, series_name: str | None = None) -> NwbTraces:
     """Open the LFP of a penetration; reads nothing but the electrode table.
 
     ``probe`` : as its file says, wired or not (then contact *i* is channel *i*). ``group`` : the penetration's name,
-    which its electrode group bears where the file has several.
+    which its electrode group bears where the file has several. ``series_name`` : of the series, where one group has
+    several.
 
     Raises LeadlineError when the file has no such series or more than one, is unevenly sampled or too short, or its
     electrodes are not the probe's.
     """
     with opened(path) as nwb:
-        series = _series(nwb, group, path)
+        series = _series(nwb, group, series_name, path)
         rows = np.asarray(series.electrodes.data[:], np.int64)
         electrodes = _electrodes(nwb, path)
         data = series.data
@@ -198,23 +199,42 @@ def _electrodes(nwb: Any, path: Path) -> Electrodes:
     return read_electrodes(nwb.electrodes)
 
 
-def _series(nwb: Any, group: str, path: Path) -> Any:
-    """The LFP series of the penetration: inside an LFP container where there is one, else raw data."""
-    from pynwb.ecephys import LFP, ElectricalSeries
+def _series(nwb: Any, group: str, name: str | None, path: Path) -> Any:
+    """The one series that :func:`_fitting` finds."""
+    mine = _fitting(nwb, group, name)
+    if len(mine) == 1:
+        return mine[0]
+    held = sorted({s.name for s in _all_series(nwb)})
+    names = ", ".join(f"'{n}'" for n in held) or "none"
+    if name is not None and name not in held:
+        what, mend = f"has no electrical series '{name}'", nearest(name, held) if held else "Name another file"
+    elif not mine:
+        what = f"has no electrical series that fits '{group}'"
+        mend = 'Name the electrode group as the penetration, or name the series: lfp_series = "…"'
+    else:
+        what = f"{len(mine)} of its electrical series fit '{group}'"
+        mend = f'Say which with lfp_series = "…": {", ".join(s.name for s in mine)}'
+    raise LeadlineError(f"{what}; it holds {names}", where=str(path), mend=mend)
 
-    inside = [o for o in nwb.objects.values() if isinstance(o, ElectricalSeries)]
-    lfp = [s for s in inside if isinstance(s.parent, LFP)]
-    candidates = lfp or [s for s in inside if s.name in nwb.acquisition]
-    mine = [s for s in candidates if group in _series_groups(s)] if len(candidates) > 1 else candidates
-    if len(mine) != 1:
-        names = ", ".join(f"'{s.name}'" for s in candidates) or "none"
-        what = "has no electrical series" if not candidates else f"{len(mine)} of its electrical series fit '{group}'"
-        raise LeadlineError(
-            f"{what}; it holds {names}",
-            where=str(path),
-            mend="Keep one LFP series for each electrode group, the group named as the penetration",
-        )
-    return mine[0]
+
+def _fitting(nwb: Any, group: str, name: str | None) -> list[Any]:
+    """The series that may be the penetration's LFP: those of the name that was asked for, else those inside an LFP
+    container, else raw data; of several, those on electrodes of ``group``."""
+    from pynwb.ecephys import LFP
+
+    series = _all_series(nwb)
+    if name is not None:
+        candidates = [s for s in series if s.name == name]
+    else:
+        inside = [s for s in series if isinstance(s.parent, LFP)]
+        candidates = inside or [s for s in series if s.name in nwb.acquisition]
+    return [s for s in candidates if group in _series_groups(s)] if len(candidates) > 1 else candidates
+
+
+def _all_series(nwb: Any) -> list[Any]:
+    from pynwb.ecephys import ElectricalSeries
+
+    return [o for o in nwb.objects.values() if isinstance(o, ElectricalSeries)]
 
 
 def _series_groups(series: Any) -> set[str]:
@@ -234,18 +254,17 @@ def _sampling_hz(series: Any, path: Path) -> float:
     return float(f"{1.0 / step.mean():.9g}")
 
 
-def _start_s(nwb: Any) -> float:
-    """When sample 0 of the LFP was taken, in the session's time; 0 without an LFP."""
-    from pynwb.ecephys import LFP
+def _span_s(nwb: Any, group: str, name: str | None, path: Path) -> tuple[float, float]:
+    """When the LFP began and ended, in the session's time; from 0 without end where the file holds none that fits."""
+    mine = _fitting(nwb, group, name)
+    if len(mine) != 1:
+        return 0.0, np.inf
+    (series,) = mine
+    start = float(series.timestamps[0]) if series.rate is None else float(series.starting_time or 0.0)
+    return start, start + series.data.shape[0] / _sampling_hz(series, path)
 
-    for container in nwb.objects.values():
-        if isinstance(container, LFP):
-            series = next(iter(container.electrical_series.values()))
-            return float(series.timestamps[0]) if series.rate is None else float(series.starting_time or 0.0)
-    return 0.0
 
-
-def read_nwb_spikes(path: Path, probe: Probe, group: str) -> Spikes:
+def read_nwb_spikes(path: Path, probe: Probe, group: str, series_name: str | None = None) -> Spikes:
     """Sorted units of a penetration: every unit sits at the contact where it is largest.
 
     That contact is named by a column such as ``peak_channel_id`` (ids of electrodes), else it is the electrode where
@@ -267,7 +286,7 @@ def read_nwb_spikes(path: Path, probe: Probe, group: str) -> Spikes:
                 where=str(path),
                 mend="Check the groups",
             )
-        start = _start_s(nwb)
+        start, stop = _span_s(nwb, group, series_name, path)
         times = [np.asarray(units["spike_times"][k], float) for k in mine]
         amplitude = _amplitudes_uv(units)
         names = [str(i) for i in np.asarray(units.id[:])[mine]]
@@ -275,7 +294,7 @@ def read_nwb_spikes(path: Path, probe: Probe, group: str) -> Spikes:
     contact = np.repeat([contact_of[home[k]] for k in mine], count).astype(np.int64)
     time_s = np.concatenate(times) - start
     order = np.argsort(time_s, kind="stable")
-    order = order[time_s[order] >= 0]  # before the LFP began there is nothing to set them against
+    order = order[(time_s[order] >= 0) & (time_s[order] < stop - start)]  # there is nothing else to set them against
     return Spikes(
         time_s[order],
         np.repeat(np.arange(len(mine)), count)[order],
@@ -326,7 +345,7 @@ def _amplitudes_uv(units: Any) -> FloatArray | None:
     return np.array([float(np.ptp(w, axis=0).max()) * 1e6 for w in waves])
 
 
-def read_nwb_events(path: Path) -> Events:
+def read_nwb_events(path: Path, group: str, series_name: str | None = None) -> Events:
     """Events from the tables of intervals: their starts, from the first sample of the LFP on.
 
     ``kind`` is the column of that name (or ``stimulus_name`` …) where there is one, else the table's name. Epochs and
@@ -335,7 +354,7 @@ def read_nwb_events(path: Path) -> Events:
     Raises LeadlineError when there is no such table.
     """
     with opened(path) as nwb:
-        start = _start_s(nwb)
+        start, _ = _span_s(nwb, group, series_name, path)
         tables = [t for name, t in (nwb.intervals or {}).items() if name not in NOT_EVENTS]
         tables += [nwb.trials] if nwb.trials is not None and nwb.trials not in tables else []
         if not tables:
@@ -351,10 +370,10 @@ def _kinds(table: Any) -> list[str]:
     return [str(table.name)] * len(table) if column is None else [str(v) for v in table[column].data[:]]
 
 
-def read_nwb_excluded(path: Path) -> FloatArray:
+def read_nwb_excluded(path: Path, group: str, series_name: str | None = None) -> FloatArray:
     """``invalid_times`` of the session as intervals ``(k, 2)`` from the first sample of the LFP on."""
     with opened(path) as nwb:
-        table, start = nwb.invalid_times, _start_s(nwb)
+        table, (start, _) = nwb.invalid_times, _span_s(nwb, group, series_name, path)
         if table is None:
             return np.zeros((0, 2))
         spans = [np.asarray(table[name].data[:], float) for name in ("start_time", "stop_time")]

@@ -68,7 +68,7 @@ class BinaryTraces:
 
 
 def open_traces(source: RecordingSource) -> Traces:
-    """Open the samples of a recording; reads nothing but the file's length and a few samples.
+    """Open the samples of a flat recording; reads nothing but the file's length and a few samples.
 
     Raises LeadlineError when the file is missing, empty, truncated or shorter than a second, when a key that a flat
     file needs is missing, or when the samples looked at are not finite.
@@ -77,12 +77,6 @@ def open_traces(source: RecordingSource) -> Traces:
         raise LeadlineError("names no 'lfp' file", where="recording", mend='Add lfp = "FILE", or leave traces out')
     if not source.lfp.is_file():
         raise LeadlineError("there is no such file", where=str(source.lfp), mend="Correct the key 'lfp'")
-    if source.lfp.suffix.lower() == ".nwb":
-        raise LeadlineError(
-            "samples inside NWB files cannot be read by this version",
-            where=str(source.lfp),
-            mend="Write them as a flat file of int16 or float32 samples, time-major",
-        )
     return _open_binary(source.lfp, source)
 
 

@@ -23,7 +23,7 @@ def open_source(source: RecordingSource, probe: Probe, group: str) -> Traces:
         from leadline.io.nwb import open_nwb
 
         assert source.lfp is not None
-        return open_nwb(source.lfp, probe, group)
+        return open_nwb(source.lfp, probe, group, source.lfp_series)
     from leadline.io.recordings import open_traces
 
     return open_traces(source)
@@ -58,16 +58,18 @@ def open_recording(source: RecordingSource, probe: Probe, group: str, name: str)
     from leadline.io import nwb, spikes
 
     sorted_spikes = events = None
-    excluded = np.zeros((0, 2))
+    excluded, lfp = np.zeros((0, 2)), (group, source.lfp_series)
     if source.spikes is not None:
         in_nwb = is_nwb(source.spikes)
         sorted_spikes = (
-            nwb.read_nwb_spikes(source.spikes, probe, group) if in_nwb else spikes.read_spikes(source.spikes, probe)
+            nwb.read_nwb_spikes(source.spikes, probe, *lfp) if in_nwb else spikes.read_spikes(source.spikes, probe)
         )
     if source.events is not None:
-        events = (nwb.read_nwb_events if is_nwb(source.events) else spikes.read_events)(source.events)
+        in_nwb = is_nwb(source.events)
+        events = nwb.read_nwb_events(source.events, *lfp) if in_nwb else spikes.read_events(source.events)
     if source.exclude is not None:
-        excluded = (nwb.read_nwb_excluded if is_nwb(source.exclude) else spikes.read_excluded)(source.exclude)
+        in_nwb = is_nwb(source.exclude)
+        excluded = nwb.read_nwb_excluded(source.exclude, *lfp) if in_nwb else spikes.read_excluded(source.exclude)
     return Recording(
         traces=open_source(source, probe, group) if source.lfp is not None else None,
         spikes=sorted_spikes,

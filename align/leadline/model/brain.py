@@ -23,7 +23,10 @@ class StackSource:
 
 @dataclass(frozen=True, slots=True)
 class RecordingSource:
-    """Where one recording's files are; a key is None where the user gave none."""
+    """Where one recording's files are; a key is None where the user gave none.
+
+    ``lfp_series`` : which electrical series of an NWB file that holds several of one electrode group.
+    """
 
     lfp: Path | None = None
     sampling_hz: float | None = None
@@ -34,6 +37,7 @@ class RecordingSource:
     events: Path | None = None
     exclude: Path | None = None
     skip_channels: tuple[int, ...] = ()
+    lfp_series: str | None = None
 
 
 @dataclass(frozen=True, slots=True)

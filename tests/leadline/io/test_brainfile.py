@@ -81,6 +81,7 @@ def test_everything_that_was_written_is_read(folder):
         ('penetration = "A"\ntip', 'penetration = "B"\ntip', "there is no penetration 'B'"),
         ("track_depth_um = 1420", "track_depth_um = nan", "track_depth_um = nan is not a number of um"),
         ("ripple_hz = [100.0, 250.0]", "ripple_hz = [250.0, 100.0]", "two increasing numbers"),
+        ('dtype = "int16"', 'dtype = "int16"\nlfp_series = "x"', "'lfp_series' names a series inside an NWB file"),
         ("ripple_hz", "riple_hz", "Did you mean 'ripple_hz'"),
         ("format = 1", "format = 2", "format = 2 is not known"),
         ("[brain]", "[brian]", "unknown key 'brian'. Did you mean 'brain'"),

@@ -120,10 +120,10 @@ def test_spikes_events_and_exclusions_equal_the_tables(folder, probe):
     assert [int(n) for n in spikes.unit_names] == list(range(12))
     homes = np.array([home_contact(int(spikes.unit_names[u])) for u in spikes.unit_id])
     assert np.array_equal(spikes.tip_distance_um, 100.0 + 50.0 * homes)
-    events, listed = read_nwb_events(folder / "session.nwb"), read_events(folder / "a_events.csv")
+    events, listed = read_nwb_events(folder / "session.nwb", "A"), read_events(folder / "a_events.csv")
     assert np.allclose(events.time_s, listed.time_s)
     assert events.kind == listed.kind
-    assert np.allclose(read_nwb_excluded(folder / "session.nwb"), read_excluded(folder / "a_exclude.csv"))
+    assert np.allclose(read_nwb_excluded(folder / "session.nwb", "A"), read_excluded(folder / "a_exclude.csv"))
 
 
 def test_times_count_from_the_first_sample_of_the_lfp(tmp_path, folder, probe):
@@ -132,8 +132,8 @@ def test_times_count_from_the_first_sample_of_the_lfp(tmp_path, folder, probe):
     wired = wired_to(RecordingSource(lfp=late), probe, "A")
     early = read_nwb_spikes(folder / "session.nwb", wired, "A")
     assert np.allclose(read_nwb_spikes(late, wired, "A").time_s, early.time_s)
-    assert np.allclose(read_nwb_events(late).time_s, read_nwb_events(folder / "session.nwb").time_s)
-    assert np.allclose(read_nwb_excluded(late), [[2.1, 2.4]])
+    assert np.allclose(read_nwb_events(late, "A").time_s, read_nwb_events(folder / "session.nwb", "A").time_s)
+    assert np.allclose(read_nwb_excluded(late, "A"), [[2.1, 2.4]])
 
 
 def test_a_unit_sits_where_its_mean_waveform_is_largest(tmp_path, probe):
@@ -171,6 +171,56 @@ def test_a_brain_with_everything_in_one_nwb_file_opens_as_with_flat_files(tmp_pa
     assert len(recording.spikes.time_s) == 400
     assert len(recording.events.time_s) == 11
     assert left_out(penetration.recordings[0], probe, "A") == ""
+
+
+@pytest.fixture(scope="module")
+def two_series(tmp_path_factory):
+    """A file with a morning and an evening series on one group, the evening's an hour later and half as large."""
+    from pynwb import NWBHDF5IO
+    from pynwb.ecephys import ElectricalSeries
+
+    folder = tmp_path_factory.mktemp("two")
+    write_good_brain(folder)
+    path = write_nwb(folder, start_s=10.0)
+    with NWBHDF5IO(str(path), "r+") as io:
+        nwb = io.read()
+        lfp = nwb.processing["ecephys"]["LFP"]
+        first = lfp.electrical_series["lfp"]
+        lfp.add_electrical_series(
+            ElectricalSeries(
+                name="evening", data=first.data[:5000], electrodes=first.electrodes, rate=first.rate,
+                starting_time=3600.0, conversion=first.conversion / 2,
+            )
+        )  # fmt: skip
+        io.write(nwb)
+    with h5py.File(path, "r+") as handle:
+        handle["units/spike_times"][-1] = 3600.5
+    return path
+
+
+def test_of_several_series_of_a_group_one_is_named(two_series, probe, flat):
+    with pytest.raises(
+        LeadlineError, match=r"2 of its electrical series fit 'A'.*Say which with lfp_series = .*evening"
+    ):
+        open_nwb(two_series, probe, "A")
+    with pytest.raises(LeadlineError, match=r"no electrical series 'evning'; it holds 'evening', 'lfp'. Did you mean"):
+        open_nwb(two_series, probe, "A", "evning")
+    channels = np.arange(N_CONTACTS)
+    evening, morning = (open_nwb(two_series, probe, "A", name) for name in ("evening", "lfp"))
+    assert (evening.n_samples, morning.n_samples) == (5000, 15000)
+    assert np.array_equal(morning.read_uv(0, 99, channels), flat.read_uv(0, 99, channels))
+    assert np.array_equal(evening.read_uv(0, 99, channels), flat.read_uv(0, 99, channels) / 2)
+
+
+def test_times_count_from_the_named_series_and_end_with_it(two_series, probe):
+    wired = wired_to(RecordingSource(lfp=two_series, lfp_series="lfp"), probe, "A")
+    morning, evening = (read_nwb_spikes(two_series, wired, "A", name) for name in ("lfp", "evening"))
+    assert evening.time_s.tolist() == pytest.approx([0.5])
+    assert evening.unit_names[evening.unit_id[0]] == "11"
+    assert len(morning.time_s) == 399
+    assert np.allclose(
+        read_nwb_events(two_series, "A", "evening").time_s + 3590, read_nwb_events(two_series, "A", "lfp").time_s
+    )
 
 
 @pytest.mark.parametrize(

@@ -103,9 +103,3 @@ def test_int16_read_as_float32_is_noticed(tmp_path):
     np.random.default_rng(1).integers(-3000, 3000, (6000, 4)).astype("<i2").tofile(path)
     with pytest.raises(LeadlineError, match=r"no electrode gives|not a finite number"):
         open_traces(RecordingSource(path, sampling_hz=500.0, n_channels=2, dtype="float32"))
-
-
-def test_nwb_is_not_read_as_a_flat_file(source):
-    nwb = source.lfp.rename(source.lfp.with_suffix(".nwb"))
-    with pytest.raises(LeadlineError, match="NWB"):
-        open_traces(replace(source, lfp=nwb))
