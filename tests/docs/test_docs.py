@@ -25,7 +25,7 @@ RESULTS = {
     "tell-tracks-apart.md": ["cells_in_atlas.csv"],
     "units.md": ["kestrel-07/out/units_cell_type.png", "pooled/units_latency_ms.svg"],
     "report.md": ["kestrel-07.html", "figures/section_A.pdf"],
-    "export.md": ["located.nwb", "kestrel-07/out/probeinterface/A.json", "bids/sub-kestrel07_electrodes.tsv"],
+    "export.md": ["located.nwb", "kestrel-07/out/probeinterface/A.json", "bids/sub-kestrel07/ecephys/sub-kestrel07_space-Other_electrodes.tsv"],
     "compare.md": ["comparison/comparison.png"],
 }
 

@@ -83,19 +83,33 @@ def test_an_annotated_probe_file_fits_the_published_schema(brain, tmp_path):
     assert schemas
 
 
-def test_bids_tables_have_their_sidecars(brain, tmp_path):
+def test_bids_tables_are_those_of_the_proposal(brain, tmp_path):
+    """What the models of nwb2bids 0.13 (electrodes, probes, coordinate system) ask for; atlas coordinates need the
+    entity ``space``, without which x, y, z would be places on the probe."""
     import pandas as pd
 
-    files = {p.name: p for p in export_bids(brain, tmp_path)}
+    files = {str(p.relative_to(tmp_path / "sub-tiny01" / "ecephys")): p for p in export_bids(brain, tmp_path)}
+    space = "sub-tiny01_space-Other"
     assert set(files) == {
-        f"sub-tiny01_{n}" for n in ("electrodes.tsv", "electrodes.json", "probes.tsv", "coordsystem.json")
+        *(f"{space}_{n}" for n in ("electrodes.tsv", "electrodes.json", "coordsystem.json")),
+        *(f"sub-tiny01_probes.{n}" for n in ("tsv", "json")),
     }
-    table = pd.read_csv(files["sub-tiny01_electrodes.tsv"], sep="\t", keep_default_na=False)
-    sidecar = json.loads(files["sub-tiny01_electrodes.json"].read_text())
-    assert list(table.columns[:5]) == ["name", "probe_name", "x", "y", "z"]
-    assert set(table.columns) <= set(sidecar)
+    table, probes = (
+        pd.read_csv(files[f"{n}.tsv"], sep="\t", keep_default_na=False)
+        for n in (f"{space}_electrodes", "sub-tiny01_probes")
+    )
+    assert list(table.columns[:7]) == ["name", "probe_name", "x", "y", "z", "impedance", "shank_id"]
+    assert list(probes.columns[:2]) == ["probe_name", "type"]
+    for name, columns in ((f"{space}_electrodes", table), ("sub-tiny01_probes", probes)):
+        sidecar = json.loads(files[f"{name}.json"].read_text())
+        assert all(sidecar[column]["Description"] for column in columns)
+        assert (columns != "").all(axis=None)
     assert table["name"].is_unique
+    assert set(table["probe_name"]) == set(probes["probe_name"])
     channels = pd.read_csv(brain.out / "channels.csv")
     assert table["x"].tolist() == channels["ap_um"].tolist()
     assert (table["layer"] == "n/a").sum() == channels["layer"].isna().sum()
-    assert json.loads(files["sub-tiny01_coordsystem.json"].read_text())["MicroephysCoordinateUnits"] == "um"
+    system = json.loads(files[f"{space}_coordsystem.json"].read_text())
+    assert system["MicroephysCoordinateUnits"] in ("m", "mm", "cm", "um", "n/a")
+    assert system["MicroephysCoordinateSystem"] == "Other"
+    assert system["MicroephysCoordinateSystemDescription"]

@@ -1,4 +1,5 @@
-"""BIDS tables of located electrodes, after the proposal for microelectrode recordings (BEP032)."""
+"""BIDS tables of located electrodes, after the proposal for microelectrode recordings (BEP032), which BIDS 1.11 has
+not yet taken up. Names, columns and keys are those of the models in nwb2bids 0.13."""
 
 from __future__ import annotations
 
@@ -16,54 +17,70 @@ if TYPE_CHECKING:
     from leadline.model.atlas import Atlas
 
 MISSING = "n/a"
-COLUMNS: dict[str, tuple[str, dict[str, str]]] = {
+SPACE = "Other"
+ELECTRODES: dict[str, tuple[str, dict[str, str]]] = {
     "name": ("", {"Description": "penetration and contact"}),
-    "probe_name": ("penetration", {"Description": "penetration"}),
+    "probe_name": ("penetration", {"Description": "penetration, as in the table of probes"}),
     "x": ("ap_um", {"Description": "grows posterior, atlas frame", "Units": "um"}),
     "y": ("dv_um", {"Description": "grows inferior, atlas frame", "Units": "um"}),
     "z": ("ml_um", {"Description": "grows right, atlas frame", "Units": "um"}),
-    "shank_id": ("shank", {"Description": "shank of the probe"}),
-    "channel": ("channel", {"Description": "trace of the recording that the contact is wired to"}),
+    "impedance": ("", {"Description": "impedance, which Leadline does not know", "Units": "kOhm"}),
+    "shank_id": ("shank", {"Description": "shank of the probe, from 0"}),
     "location": ("region", {"Description": "structure of the atlas, acronym"}),
     "anatomical_location_id": ("region_id", {"Description": "id of the structure in the atlas"}),
     "layer": ("layer", {"Description": "cortical or hippocampal layer"}),
+    "channel": ("channel", {"Description": "trace of the recording that the contact is wired to"}),
     "probability": ("p_region", {"Description": "probability, given all modelled error, that location is right"}),
     "track_depth_sd": ("track_depth_sd_um", {"Description": "sd of the place along the track", "Units": "um"}),
     "basis": ("basis", {"Description": "what placed the contact: histology, physiology, between or beyond anchors"}),
 }
+PROBES = {
+    "probe_name": {"Description": "penetration"},
+    "type": {"Description": "type of the probe, which Leadline does not know"},
+    "electrode_count": {"Description": "contacts that were recorded"},
+    "shank_count": {"Description": "shanks with such contacts"},
+    "reference_atlas": {"Description": "atlas in which the contacts were located"},
+}
 
 
 def bids_files(brain: str, channels: pd.DataFrame, atlas: Atlas, provenance: Mapping[str, str]) -> dict[str, str]:
-    """File name -> content: electrodes and probes as tables with sidecars, and the coordinate system.
+    """Path below the data set -> content: electrodes and probes as tables with sidecars, and the coordinate system.
 
     Names bear the brain's name without what BIDS labels cannot hold.
     """
-    stem = f"sub-{re.sub(r'[^A-Za-z0-9]', '', brain) or 'brain'}"
-    electrodes = _electrodes(channels)
-    sidecar: dict[str, Any] = {name: about for name, (_, about) in COLUMNS.items()}
-    sidecar["LocalizationMethod"] = f"{provenance['method']}; {provenance['caution']}"
-    probes = [["probe_name", "shank_count", "contact_count"]]
-    for name, part in channels.groupby("penetration", sort=False):
-        probes.append([str(name), str(part["shank"].nunique()), str(len(part))])
+    subject = f"sub-{re.sub(r'[^A-Za-z0-9]', '', brain) or 'brain'}"
+    stem = f"{subject}/ecephys/{subject}"
+    how = f"{provenance['method']}; {provenance['caution']}"
+    sidecar: dict[str, Any] = {name: about for name, (_, about) in ELECTRODES.items()}
     system = {
-        "MicroephysCoordinateSystem": "Other",
+        "MicroephysCoordinateSystem": SPACE,
         "MicroephysCoordinateUnits": "um",
         "MicroephysCoordinateSystemDescription": f"Atlas '{atlas.name}': {provenance['frame']}",
-        "MicroephysCoordinateProcessingDescription": f"{provenance['method']}; {provenance['caution']}",
-        "AtlasCitation": atlas.citation or MISSING,
+        "MicroephysCoordinateProcessingDescription": how,
+        "MicroephysCoordinateProcessingReference": atlas.citation or MISSING,
     }
     return {
-        f"{stem}_electrodes.tsv": _tsv(electrodes),
-        f"{stem}_electrodes.json": _json(sidecar),
-        f"{stem}_probes.tsv": _tsv(probes),
-        f"{stem}_coordsystem.json": _json(system),
+        f"{stem}_space-{SPACE}_electrodes.tsv": _tsv(_electrodes(channels)),
+        f"{stem}_space-{SPACE}_electrodes.json": _json(sidecar | {"LocalizationMethod": how}),
+        f"{stem}_space-{SPACE}_coordsystem.json": _json(system),
+        f"{stem}_probes.tsv": _tsv(_probes(channels, atlas.name)),
+        f"{stem}_probes.json": _json(PROBES),
     }
 
 
 def _electrodes(channels: pd.DataFrame) -> list[list[str]]:
-    names = [f"{p}_{c}" for p, c in zip(channels["penetration"], channels["contact_id"], strict=True)]
-    columns = [names if not source else [_cell(v) for v in channels[source]] for source, _ in COLUMNS.values()]
-    return [list(COLUMNS), *(list(row) for row in zip(*columns, strict=True))]
+    columns = {name: [_cell(v) for v in channels[source]] for name, (source, _) in ELECTRODES.items() if source}
+    pairs = zip(channels["penetration"], channels["contact_id"], strict=True)
+    columns |= {"name": [_cell(f"{p}_{c}") for p, c in pairs], "impedance": [MISSING] * len(channels)}
+    return [list(ELECTRODES), *(list(row) for row in zip(*(columns[name] for name in ELECTRODES), strict=True))]
+
+
+def _probes(channels: pd.DataFrame, atlas: str) -> list[list[str]]:
+    rows = [
+        [_cell(name), MISSING, str(len(part)), str(part["shank"].nunique()), _cell(atlas)]
+        for name, part in channels.groupby("penetration", sort=False)
+    ]
+    return [list(PROBES), *rows]
 
 
 def _cell(value: Any) -> str:
