@@ -34,7 +34,7 @@ def carry(
     """Carry points between stack and atlas and name their regions."""
     from leadline.base.errors import LeadlineError
     from leadline.io.brainfile import read_brain
-    from leadline.io.tables import write_table
+    from leadline.io.tables import table_text, write_table
     from leadline.pipeline.mapping import map_points
     from leadline.pipeline.run import run
 
@@ -45,6 +45,6 @@ def carry(
         run(described, until="register", progress=progress)
     table = map_points(described, points, to.value)
     if output is None:
-        out(table.to_csv(index=False, lineterminator="\n").rstrip("\n"))
+        out(table_text(table).rstrip("\n"))
     else:
         write_table(table, output)

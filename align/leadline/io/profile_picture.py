@@ -159,7 +159,7 @@ def _draw_spectra(axes: AnyArray, profile: Profile, spectra: Spectra, shanks: An
 
 
 def _draw_sources(axes: AnyArray, profile: Profile, spectra: Spectra, shanks: AnyArray) -> None:
-    axes[0].set_title(f"after {spectra.event_kind or 'events'}", fontsize=9)
+    axes[0].set_title(f"after {spectra.event_kind or 'events'}", fontsize=9, parse_math=False)
     axes[-1].set_xlabel("time (ms)", fontsize=8)
     density = spectra.csd_ua_per_mm3.astype(float)
     if not np.isfinite(density).any():
@@ -217,4 +217,5 @@ def _finish(line: AnyArray, profile: Profile, rows: AnyArray, boundaries: list[t
     for _, border_um, name in sorted(boundaries, key=lambda b: -b[1]):
         if tip_um[0] <= border_um <= min(tip_um[-1] + 2 * half, lowest_um - room_um):
             lowest_um = border_um
-            line[-1].text(1.02, border_um, name, transform=line[-1].get_yaxis_transform(), fontsize=6.5, va="top")
+            place = line[-1].get_yaxis_transform()
+            line[-1].text(1.02, border_um, name, transform=place, fontsize=6.5, va="top", parse_math=False)

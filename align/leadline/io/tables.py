@@ -26,11 +26,16 @@ def write_table(table: pd.DataFrame, path: Path) -> None:
         with whole_file(path) as part:
             table.to_parquet(part, index=False)
         return
+    write_text(path, table_text(table))
+
+
+def table_text(table: pd.DataFrame) -> str:
+    """A table as CSV in which no name and no cell is run by a spreadsheet."""
     import pandas as pd
 
-    words = [name for name in table.columns if pd.api.types.is_string_dtype(table[name])]
-    text = table.assign(**{name: table[name].map(_harmless) for name in words}).to_csv(index=False, lineterminator="\n")
-    write_text(path, text)
+    words = [name for name in table.columns if not pd.api.types.is_numeric_dtype(table[name])]
+    safe = table.assign(**{name: table[name].map(_harmless) for name in words}).rename(columns=_harmless)
+    return str(safe.to_csv(index=False, lineterminator="\n"))
 
 
 def read_csv(path: Path, needed: Sequence[str], *, what: str) -> pd.DataFrame:
@@ -63,7 +68,11 @@ def numbers(table: pd.DataFrame, columns: Sequence[str], path: Path) -> Any:
     import numpy as np
     import pandas as pd
 
-    values = table[list(columns)].apply(pd.to_numeric, errors="coerce").to_numpy(float)
+    try:
+        values = table[list(columns)].apply(pd.to_numeric, errors="coerce").to_numpy(float)
+    except OverflowError:  # integers beyond all floats
+        values = table[list(columns)].map(lambda cell: pd.to_numeric(str(cell)[:40], errors="coerce")).to_numpy(float)
+        values[np.abs(values) > 1e30] = np.inf
     bad = np.argwhere(~np.isfinite(values))
     if bad.size:
         row, column = bad[0]
@@ -159,10 +168,20 @@ def csv_text(columns: Sequence[str], rows: Iterable[Sequence[object]]) -> str:
 
 
 def _harmless(cell: object) -> object:
-    """A text that a spreadsheet would run as a formula gets an apostrophe before it."""
-    return f"'{cell}" if isinstance(cell, str) and cell.startswith(SPREADSHEET_STARTS) else cell
+    """A text that a spreadsheet would run as a formula gets an apostrophe before it; so does one that has its own."""
+    return f"'{cell}" if isinstance(cell, str) and _is_formula(cell) else cell
+
+
+def _is_formula(cell: str) -> bool:
+    if len(cell) < 2 or not cell.lstrip("'").startswith(SPREADSHEET_STARTS):
+        return False
+    try:
+        float(cell)
+    except ValueError:
+        return True
+    return False
 
 
 def _unharmed(cell: str | None) -> str:
     text = cell or ""
-    return text[1:] if text[:1] == "'" and text[1:].startswith(SPREADSHEET_STARTS) else text
+    return text[1:] if text[:1] == "'" and text.lstrip("'").startswith(SPREADSHEET_STARTS) else text

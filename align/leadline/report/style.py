@@ -24,6 +24,7 @@ FIGURE_SUFFIXES = (".png", ".svg", ".pdf")
 _RC = {
     "font.family": "sans-serif",
     "font.sans-serif": ["DejaVu Sans", "Arial", "Helvetica", "sans-serif"],
+    "text.parse_math": False,  # names come from files; "$" is a letter in them
     "font.size": 8.0,
     "axes.titlesize": 8.5,
     "axes.titleweight": "bold",

@@ -34,7 +34,7 @@ def spectra(profile):
         np.linspace(-0.1, 0.3, 30),
         rng.normal(size=(40, 30)),
         rng.normal(size=(40, 30)),
-        "flash",
+        r"$\frac{flash",  # no formula
     )
 
 
@@ -105,7 +105,7 @@ def test_the_picture_shows_every_shank_and_border(tmp_path, profile, spectra):
     path = tmp_path / "A.png"
     draw_profiles(path, profile, spectra)
     plain = imread(path)
-    draw_profiles(path, profile, spectra, [(0, 200.0, "above"), (2, 1200.0, "below")])
+    draw_profiles(path, profile, spectra, [(0, 200.0, "above"), (2, 1200.0, "$_{below")])
     with_borders = imread(path)
     assert plain.shape[0] > 900  # two shanks, one above the other
     assert plain[..., :3].std() > 10

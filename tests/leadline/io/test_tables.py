@@ -14,6 +14,7 @@ from leadline.io.tables import (
     read_csv,
     read_suggestions,
     suggestions_text,
+    table_text,
     write_table,
 )
 from leadline.model.anchor import Anchor, Suggestion
@@ -66,6 +67,19 @@ def test_a_broken_anchor_line_is_named(tmp_path, line, words):
 def test_a_formula_in_a_name_is_not_run_by_a_spreadsheet(tmp_path):
     write_table(pd.DataFrame({"region": ["=1+1", "VA"], "n": [1, -2]}), tmp_path / "t.csv")
     assert (tmp_path / "t.csv").read_text() == "region,n\n'=1+1,1\nVA,-2\n"
+
+
+def test_nor_is_one_in_the_name_of_a_column_or_among_numbers():
+    mixed = pd.DataFrame({"@sum(A1)": ["-", "-5", "+cmd|x", 3.5, None]})
+    assert table_text(mixed).split("\n") == ["'@sum(A1)", "-", "-5", "'+cmd|x", "3.5", '""', ""]
+
+
+@given(st.text(st.sampled_from("'=+-@5a"), max_size=5))
+def test_a_guarded_note_is_read_back_as_it_was(tmp_path_factory, note):
+    path = tmp_path_factory.mktemp("a") / "anchors.csv"
+    anchor = Anchor("A", 0, 1.0, 2.0, 3.0, "", "user", note)
+    path.write_text(anchors_text([anchor]))
+    assert read_anchors(path) == (anchor,)
 
 
 def test_a_missing_column_names_the_nearest(tmp_path):

@@ -101,3 +101,11 @@ def test_text_on_a_colour_has_contrast(colour):
 
     pair = sorted([luminance(colour), luminance(style.readable_on(colour))])
     assert (pair[1] + 0.05) / (pair[0] + 0.05) >= 3.0  # WCAG 2.2, 1.4.3, for large or bold text
+
+
+def test_a_dollar_in_a_name_is_a_letter(atlas, tmp_path):
+    units = pd.DataFrame(
+        {"brain": "a$b", "ap_um": [3000.0, 3100.0], "dv_um": 1000.0, "ml_um": 1500.0, r"$\frac{": ["$x$", "$_{"]}
+    )
+    style.save(draw_value(units, r"$\frac{", atlas), tmp_path / "a.svg")
+    assert r"$\frac{" in (tmp_path / "a.svg").read_text()
