@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated, Any
+from typing import TYPE_CHECKING, Annotated
 
 import typer
 
@@ -15,6 +15,9 @@ if TYPE_CHECKING:
     from leadline.pipeline.run import Summary
 
 BrainArg = Annotated[Path, typer.Argument(help="A brain.toml or its folder.", metavar="BRAIN")]
+BrainsArg = Annotated[
+    list[str], typer.Argument(help="One or several: a brain.toml, its folder, or a quoted pattern.", metavar="BRAIN...")
+]
 Json = Annotated[bool, typer.Option("--json", help="Print a machine-readable summary.")]
 Quiet = Annotated[bool, typer.Option("--quiet", "-q", help="Print errors only.")]
 Verbose = Annotated[bool, typer.Option("--verbose", "-v", help="Print each step, also those that were skipped.")]
@@ -53,11 +56,28 @@ def check(brain: BrainArg, json: Json = False, quiet: Quiet = False) -> None:
 
 
 def run(
-    brain: BrainArg, no_physiology: NoPhysiology = False, json: Json = False, quiet: Quiet = False,
-    verbose: Verbose = False,
+    brains: BrainsArg,
+    workers: Annotated[
+        int | None, typer.Option(min=1, help="Brains at once; by default as processors and memory allow.", metavar="N")
+    ] = None,
+    scheduler: Annotated[
+        str | None, typer.Option(help="Run on a dask.distributed cluster: its address or scheduler file.")
+    ] = None,
+    no_physiology: NoPhysiology = False, json: Json = False, quiet: Quiet = False, verbose: Verbose = False,
 ) -> None:  # fmt: skip
-    """Run every stage in order; what has not changed is not run again."""
-    _run(brain, "locate", no_physiology, json, quiet, verbose)
+    """Run every stage in order; what has not changed is not run again. Several brains run side by side."""
+    from leadline.pipeline.many import is_pattern
+
+    if len(brains) == 1 and scheduler is None and not is_pattern(brains[0]):
+        _run(Path(brains[0]), "locate", no_physiology, json, quiet, verbose)
+        return
+    from leadline.cli.many import run_brains
+
+    code = run_brains(
+        brains, workers=workers, scheduler=scheduler, physiology=not no_physiology, json=json, quiet=quiet,
+        verbose=verbose,
+    )  # fmt: skip
+    raise typer.Exit(code)
 
 
 def register(brain: BrainArg, json: Json = False, quiet: Quiet = False, verbose: Verbose = False) -> None:
@@ -109,6 +129,7 @@ def _run(path: Path, until: str, no_physiology: bool, json: bool, quiet: bool, v
     from leadline.io.brainfile import read_brain
     from leadline.pipeline.run import run as run_brain
     from leadline.pipeline.run import without_physiology
+    from leadline.pipeline.summary import summary_json
 
     brain = read_brain(path)
     if no_physiology:
@@ -120,7 +141,7 @@ def _run(path: Path, until: str, no_physiology: bool, json: bool, quiet: bool, v
             err("leadline: stopped; finished stages are kept, run again to go on")
             raise typer.Exit(1) from None
     if json:
-        out_json(_as_json(brain, summary, until))
+        out_json(summary_json(brain, summary, until))
         return
     for step, warning in summary.warnings:
         err(f"warning ({step}): {warning}")
@@ -128,49 +149,18 @@ def _run(path: Path, until: str, no_physiology: bool, json: bool, quiet: bool, v
         _tell(brain, summary, until, verbose)
 
 
-def _as_json(brain: Brain, summary: Summary, until: str) -> dict[str, Any]:
-    return {
-        "brain": summary.brain,
-        "out": str(brain.out),
-        "done": list(summary.done),
-        "skipped": list(summary.skipped),
-        "warnings": [{"step": s, "warning": w} for s, w in summary.warnings],
-        "penetrations": _penetrations(brain) if until == "locate" else [],
-    }
-
-
 def _tell(brain: Brain, summary: Summary, until: str, verbose: bool) -> None:
+    from leadline.pipeline.summary import penetration_rows
+
     if verbose:
         out(f"done: {', '.join(summary.done) or 'nothing'}")
         out(f"unchanged: {', '.join(summary.skipped) or 'nothing'}")
     elif not summary.done:
         out("nothing has changed since the last run")
     if until == "locate" and (summary.done or verbose):
-        for row in _penetrations(brain):
+        for row in penetration_rows(brain):
             out(
                 f"{row['penetration']}: {row['in_brain']} of {row['channels']} channels in the brain, "
                 f"depth sd {row['depth_sd_um']} um, p_region {row['p_region']}; {' > '.join(row['regions'])}"
             )
         out(f"written: {brain.out / 'channels.csv'}")
-
-
-def _penetrations(brain: Brain) -> list[dict[str, Any]]:
-    import pandas as pd
-
-    table = pd.read_csv(brain.out / "channels.csv", dtype={"penetration": str}, keep_default_na=False)
-    rows = []
-    for name, part in table.groupby("penetration", sort=False):
-        inside = part[part["in_brain"].astype(str) == "True"].sort_values("tip_distance_um", ascending=False)
-        sd = pd.to_numeric(part["track_depth_sd_um"]).median()
-        sure = pd.to_numeric(part["p_region"]).median()
-        rows.append(
-            {
-                "penetration": str(name),
-                "channels": len(part),
-                "in_brain": len(inside),
-                "depth_sd_um": None if pd.isna(sd) else round(float(sd), 1),
-                "p_region": None if pd.isna(sure) else round(float(sure), 2),
-                "regions": list(dict.fromkeys(inside["coarse_region"])),
-            }
-        )
-    return rows
