@@ -14,7 +14,7 @@ from math import isfinite
 from types import MappingProxyType
 from typing import TYPE_CHECKING, Any
 
-from leadline.base.errors import LeadlineError, nearest
+from leadline.base.errors import MALFORMED, LeadlineError, nearest
 from leadline.model.profile import FEATURE_BY_NAME
 
 if TYPE_CHECKING:
@@ -115,7 +115,7 @@ def parse(text: str, where: str, *, base: Knowledge | None = None) -> Knowledge:
     """
     try:
         table = tomllib.loads(text)
-    except tomllib.TOMLDecodeError as error:
+    except MALFORMED as error:
         raise LeadlineError(f"is no TOML: {error}", where=where, mend="Correct the line it names") from error
     under = builtin() if base is None else base
     _known(table, ("format", "depth", "type", "learned"), where)

@@ -160,7 +160,7 @@ def whole_number(value: Any, where: str) -> int:
     Raises LeadlineError for anything else, for negative numbers and above 2^32 - 1.
     """
     text = str(value).strip()
-    match = re.fullmatch(r"(\d+)(?:\.0*)?", text)
+    match = re.fullmatch(r"(\d{1,20})(?:\.0*)?", text)
     if not match or not 0 <= int(match.group(1)) <= LARGEST_ID:
         raise LeadlineError(f"the id is {text!r}", where=where, mend=f"Ids are whole numbers from 1 to {LARGEST_ID}")
     return int(match.group(1))

@@ -9,6 +9,11 @@ if TYPE_CHECKING:
     from collections.abc import Iterable
 
 
+MALFORMED = (ValueError, RecursionError)
+"""What readers of text raise on what is no such text: wrong bytes, wrong syntax, numbers of 5000 digits, endless
+nesting."""
+
+
 class LeadlineError(ValueError):
     """The user's input is wrong; the message says what, where and how to mend it.
 

@@ -9,7 +9,7 @@ import numpy as np
 
 from leadline.base.arrays import AnyArray, FloatArray
 from leadline.base.atomic import whole_folder
-from leadline.base.errors import Faults, LeadlineError, nearest
+from leadline.base.errors import MALFORMED, Faults, LeadlineError, nearest
 from leadline.io.images import IN_ATLAS, SAME_WITHIN, UserSays, settle, volume_of
 from leadline.io.stacks import open_image
 from leadline.io.structure_tables import LARGEST_ID, read_structures, write_structures
@@ -26,6 +26,7 @@ _WRITTEN = (ATLAS_FILE, "labels.nrrd", "template.nrrd", "structures.csv")
 _REQUIRED = ("name", "labels", "template", "structures")
 _KEYS = (*_REQUIRED, "citation", "licence", "orientation", "voxel_um", "bregma_um")
 _SLAB_VOXELS = 2**24
+_FARTHEST_UM = 1e9
 
 
 def read_atlas(folder: Path) -> Atlas:
@@ -66,7 +67,7 @@ def _read_toml(folder: Path) -> dict[str, Any]:
         )
     try:
         stated = tomllib.loads(file.read_text("utf-8"))
-    except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
+    except MALFORMED as error:
         raise LeadlineError(f"is no valid TOML ({error})", where=str(file), mend="Correct that line") from error
     faults = [
         LeadlineError(f"unknown key {key!r}", where=str(file), mend=nearest(key, _KEYS))
@@ -92,7 +93,7 @@ def _three_numbers(value: Any) -> bool:
     return (
         isinstance(value, list)
         and len(value) == 3
-        and all(isinstance(x, int | float) and not isinstance(x, bool) and np.isfinite(x) for x in value)
+        and all(isinstance(x, int | float) and not isinstance(x, bool) and abs(x) < _FARTHEST_UM for x in value)
     )
 
 

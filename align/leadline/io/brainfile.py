@@ -10,7 +10,7 @@ from math import isfinite
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, TypeVar, get_type_hints
 
-from leadline.base.errors import Faults, LeadlineError, nearest
+from leadline.base.errors import MALFORMED, Faults, LeadlineError, nearest
 from leadline.model.anchor import Anchor
 from leadline.model.brain import Brain, Penetration, RecordingSource, StackSource
 from leadline.model.frames import orientation
@@ -48,7 +48,7 @@ def read_brain(path: Path) -> Brain:
         content = tomllib.loads(file.read_text(encoding="utf-8"))
     except UnicodeDecodeError as error:
         raise LeadlineError(f"is not UTF-8 text ({error.reason})", where=str(file), mend="Save it as UTF-8") from error
-    except tomllib.TOMLDecodeError as error:
+    except MALFORMED as error:
         raise LeadlineError(f"is not valid TOML: {error}", where=str(file), mend="Mend that line") from error
     faults: list[LeadlineError] = []
     brain = _brain(_Table(content, file.name, file.parent, faults), file)
@@ -96,7 +96,7 @@ class _Table:
             return check(self.values[key])
         except LeadlineError as error:
             self.fault(error.what, error.mend, key)
-        except (ValueError, TypeError):
+        except (ValueError, TypeError, OverflowError):
             self.fault(f"{key} = {self.values[key]!r} is not {want}", f"Write {want}", key)
         return None if default is _MISSING else default
 

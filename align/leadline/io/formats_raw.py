@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
+import bz2
 import gzip
-import shutil
 import tempfile
 from pathlib import Path
 from typing import Any
@@ -33,10 +33,10 @@ _SPACES = {"r": (0, 1), "l": (0, -1), "a": (1, 1), "p": (1, -1), "s": (2, 1), "i
 class Block:
     """Voxels of one file in Fortran order, mapped on reading.
 
-    ``offset`` : bytes before the first voxel. ``packed_at`` : where in the file a gzip stream begins, of which
-    ``offset`` then counts; None where nothing is compressed. Compressed voxels are inflated into an unnamed temporary
-    file, once, so that memory stays bounded. ``slope``, ``shift`` : stored value to voxel value; with them the voxels
-    are float32.
+    ``offset`` : bytes before the first voxel. ``packed_at`` : where in the file a packed stream begins that ``opener``
+    unpacks and of which ``offset`` then counts; None where nothing is packed. Packed voxels are unpacked into an
+    unnamed temporary file, once and no further than the header promises, so that memory and disk stay bounded.
+    ``slope``, ``shift`` : stored value to voxel value; with them the voxels are float32.
     """
 
     def __init__(
@@ -47,11 +47,12 @@ class Block:
         offset: int,
         *,
         packed_at: int | None = None,
+        opener: Any = gzip.open,
         slope: float = 1.0,
         shift: float = 0.0,
     ) -> None:
         self.path, self.shape, self._stored, self._offset = path, shape, np.dtype(dtype), offset
-        self._packed_at, self._slope, self._shift = packed_at, slope, shift
+        self._packed_at, self._opener, self._slope, self._shift = packed_at, opener, slope, shift
         self._scaled = (slope, shift) != (1.0, 0.0)
         self.dtype = np.dtype(np.float32) if self._scaled else self._stored
         self._end = offset + int(np.prod(shape, dtype=np.int64)) * self._stored.itemsize
@@ -72,8 +73,12 @@ class Block:
         file = tempfile.TemporaryFile()  # noqa: SIM115 - lives as long as this object
         with self.path.open("rb") as packed:
             packed.seek(packed_at)
-            with gzip.open(packed) as stream:
-                shutil.copyfileobj(stream, file, 2**20)
+            with self._opener(packed) as stream:
+                left = self._end
+                while left and (piece := stream.read(min(left, 2**20))):
+                    file.write(piece)
+                    left -= len(piece)
+                stream.read(1)  # the checksum is looked at when the end is reached
         file.flush()
         self._require(file.tell())
         return file
@@ -87,7 +92,7 @@ class Block:
         with self.path.open("rb") as packed:
             packed.seek(max(0, size - 4))
             length = int.from_bytes(packed.read(4), "little")
-        if length != self._end % 2**32:
+        if self._opener is not gzip.open or length != self._end % 2**32:
             try:  # several gzip members, or cut short: only inflating tells
                 self._mapped()
             except LeadlineError:
@@ -137,7 +142,7 @@ def open_nifti(path: Path, channel: int) -> Image:
         raise LeadlineError("its affine is not a proper one", where=str(path), mend="Write a qform or sform")
     letters, notes = _nifti_letters(image, path)
     a, b, c = (float(f"{s:.6g}") for s in sizes)  # the header holds float32
-    unit = {"mm": 1e3, "micron": 1.0, "meter": 1e6}.get(header.get_xyzt_units()[0])
+    unit = {1: 1e6, 2: 1e3, 3: 1.0}.get(int(header["xyzt_units"]) & 7)  # metres, mm, um of the NIfTI standard
     return Image(
         path,
         (_level(data),),
@@ -235,7 +240,10 @@ def _nrrd_block(path: Path, header: Any, shape: tuple[int, ...], offset: int) ->
         raise LeadlineError(f"its voxels are to be in {name!r}, which is no file", where=str(path),
                             mend="Keep header and data file together; lists of data files are not read")  # fmt: skip
     plain = not header.get("byte skip") and not header.get("line skip")
-    if encoding in ("raw", "gzip", "gz") and plain:
+    opener = {"gzip": gzip.open, "gz": gzip.open, "bzip2": bz2.open, "bz2": bz2.open}.get(encoding)
+    if opener is not None and not plain:
+        raise LeadlineError("skips bytes or lines before packed voxels", where=str(path), mend="Write it without skips")
+    if (encoding == "raw" or opener is not None) and plain:
         if str(header["type"]) not in _NRRD_TYPES:
             raise LeadlineError(
                 f"voxels are of type {header['type']!r}", where=str(path), mend="Export one grey channel"
@@ -243,7 +251,9 @@ def _nrrd_block(path: Path, header: Any, shape: tuple[int, ...], offset: int) ->
         order = ">" if str(header.get("endian", "little")) == "big" else "<"
         dtype = np.dtype(order + _NRRD_TYPES[str(header["type"])])
         start = offset if name is None else 0
-        return Block(file, dtype, shape, start) if encoding == "raw" else Block(file, dtype, shape, 0, packed_at=start)
+        if opener is None:
+            return Block(file, dtype, shape, start)
+        return Block(file, dtype, shape, 0, packed_at=start, opener=opener)
     try:
         return nrrd.read(str(path), index_order="F")[0]
     except (nrrd.NRRDError, *READ_FAULTS) as error:

@@ -49,7 +49,7 @@ def open_zarr(path: Path, channel: int) -> Image:
         return _image(path, node, channel)
     except LeadlineError:
         raise
-    except (KeyError, TypeError, IndexError, AttributeError, ValueError) as error:
+    except (AttributeError, *READ_FAULTS) as error:
         raise LeadlineError(
             f"its OME-Zarr metadata are not as 0.4 or 0.5 wants them ({type(error).__name__}: {error})",
             where=str(path),

@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from leadline.base.arrays import FloatArray, IntArray
-from leadline.base.errors import LeadlineError
+from leadline.base.errors import MALFORMED, LeadlineError
 from leadline.model.probe import NOT_RECORDED, Probe
 
 if TYPE_CHECKING:
@@ -162,7 +162,7 @@ def _content(path: Path) -> Any:
         raise LeadlineError("the probe file is not there", where=str(path), mend="Correct the path")
     try:
         content = json.loads(path.read_text("utf-8"))
-    except (json.JSONDecodeError, UnicodeDecodeError) as error:
+    except MALFORMED as error:
         raise LeadlineError(f"is no valid JSON ({error})", where=str(path), mend="Export the probe again") from error
     if not isinstance(content, dict) or content.get("specification") != "probeinterface":
         said = content.get("specification") if isinstance(content, dict) else type(content).__name__
@@ -204,7 +204,7 @@ def _plane_um(probe: Any, where: str) -> tuple[FloatArray, FloatArray]:
         raise LeadlineError(f"si_units is {probe['si_units']!r}", where=where, mend="It is 'um' or 'mm'")
     try:
         positions = np.asarray(probe["contact_positions"], np.float64)
-    except (KeyError, TypeError, ValueError) as error:
+    except (KeyError, TypeError, ValueError, OverflowError) as error:
         raise LeadlineError("contact_positions are not rows of numbers", where=where, mend="Export it again") from error
     if positions.ndim != 2 or positions.shape[1] not in (2, 3) or not len(positions):
         raise LeadlineError(
@@ -234,7 +234,7 @@ def _flatten(probe: Any, positions: FloatArray, where: str) -> FloatArray:
         axes = np.asarray(probe["contact_plane_axes"], np.float64)
         if axes.shape != (len(positions), 2, 3):
             raise ValueError(axes.shape)
-    except (KeyError, TypeError, ValueError) as error:
+    except (KeyError, TypeError, ValueError, OverflowError) as error:
         raise LeadlineError(
             "three-dimensional contacts need contact_plane_axes, two vectors for each contact",
             where=where,

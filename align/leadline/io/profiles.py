@@ -9,6 +9,7 @@ import numpy as np
 
 from leadline.base.atomic import whole_file
 from leadline.base.errors import LeadlineError, nearest
+from leadline.io.images import READ_FAULTS
 from leadline.model.profile import FEATURE_BY_NAME, FEATURES, Profile
 from leadline.model.spectra import SPECTRA_FIELDS, Spectra
 
@@ -48,7 +49,8 @@ def read_profile(path: Path) -> Profile:
         raise LeadlineError("there is no such profile", where=str(path), mend="Run 'leadline profile' first")
     try:
         table = pq.read_table(path)
-    except (pa.ArrowException, OSError) as error:
+        notes = {key.decode(): text.decode() for key, text in (table.schema.metadata or {}).items()}
+    except (pa.ArrowException, OSError, ValueError) as error:
         raise LeadlineError("is no Parquet file", where=str(path), mend="Delete it and profile again") from error
     fixed = ("shank", "tip_distance_um", "flag")
     for column in fixed:
@@ -58,7 +60,6 @@ def read_profile(path: Path) -> Profile:
     for name in values:
         if name not in FEATURE_BY_NAME:
             raise LeadlineError(f"column '{name}' is no feature", where=str(path), mend=nearest(name, FEATURE_BY_NAME))
-    notes = {key.decode(): text.decode() for key, text in (table.schema.metadata or {}).items()}
     return Profile(
         notes.get("leadline.penetration", path.stem),
         table["shank"].to_numpy(),
@@ -88,6 +89,6 @@ def read_spectra(path: Path) -> Spectra:
         with np.load(path, allow_pickle=False) as arrays:
             found = {name: arrays[name] for name in SPECTRA_FIELDS}
             penetration, kind = (str(word) for word in arrays["words"])
-    except (BadZipFile, KeyError, ValueError, OSError, EOFError) as error:
+    except (BadZipFile, *READ_FAULTS) as error:
         raise LeadlineError("holds no spectra", where=str(path), mend="Delete it and profile again") from error
     return Spectra(penetration, **found, event_kind=kind)

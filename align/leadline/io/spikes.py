@@ -108,8 +108,8 @@ def _read_parquet(path: Path, needed: Sequence[str], what: str) -> pd.DataFrame:
 
     try:
         table = pd.read_parquet(path)
-    except (ArrowException, OSError) as error:
-        first = str(error).splitlines()[0]
+    except (ArrowException, OSError, ValueError) as error:
+        first = (str(error).splitlines() or [type(error).__name__])[0]
         raise LeadlineError(
             f"cannot be read as a Parquet table of {what} ({first})", where=str(path), mend="Write it again"
         ) from error

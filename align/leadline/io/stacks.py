@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 from leadline.base.errors import LeadlineError
 from leadline.base.progress import SILENT, Progress
 from leadline.io.images import Image, settle, volume_of
+from leadline.io.plausible import require_chain, require_plausible
 from leadline.model.volume import Stack
 
 if TYPE_CHECKING:
@@ -30,7 +31,7 @@ def open_image(path: Path, channel: int = 0) -> Image:
         raise LeadlineError("is not there", where=str(path), mend="Correct the path; it is relative to its toml file")
     if path.is_dir():
         zarr = is_zarr(path) or name.endswith(".zarr")
-        return open_zarr(path, channel) if zarr else open_planes(path, channel)
+        return _plausible(open_zarr(path, channel) if zarr else open_planes(path, channel))
     if path.stat().st_size == 0:
         raise LeadlineError("is an empty file", where=str(path), mend="Copy or export it again")
     for suffixes, reader in (
@@ -39,9 +40,16 @@ def open_image(path: Path, channel: int = 0) -> Image:
         (NRRD_SUFFIXES, open_nrrd),
     ):
         if name.endswith(suffixes):
-            return reader(path, channel)
+            if reader is open_tiff:
+                require_chain(path)
+            return _plausible(reader(path, channel))
     raise LeadlineError(f"is of no format that is read here ({path.suffix or 'no suffix'})", where=str(path),
                         mend=f"Give one of {FORMATS}")  # fmt: skip
+
+
+def _plausible(image: Image) -> Image:
+    require_plausible(image)
+    return image
 
 
 def open_stack(

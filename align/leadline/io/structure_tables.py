@@ -7,7 +7,7 @@ import json
 import re
 from typing import TYPE_CHECKING, Any
 
-from leadline.base.errors import Faults, LeadlineError
+from leadline.base.errors import MALFORMED, Faults, LeadlineError
 from leadline.model.atlas import TISSUES, Structure, Structures
 
 if TYPE_CHECKING:
@@ -75,7 +75,7 @@ def _structure(line: Mapping[str, str | None], where: str) -> Structure:
 
 def structure_id(text: str, column: str, where: str) -> int:
     """A whole number from 1 to 2^32 - 1, exact."""
-    if not re.fullmatch(r"\d+", text) or not 1 <= int(text) <= LARGEST_ID:
+    if not re.fullmatch(r"\d{1,20}", text) or not 1 <= int(text) <= LARGEST_ID:
         empty = "; leave it empty at the root" if column == "parent_id" else ""
         raise LeadlineError(
             f"{column} is {text!r}", where=where, mend=f"Write a whole number from 1 to {LARGEST_ID}{empty}"
@@ -135,7 +135,7 @@ def read_foreign_table(path: Path) -> Any:
         head = text.partition("\n")[0]
         delimiter = max(",;\t", key=head.count)
         return list(csv.DictReader(text.splitlines(), delimiter=delimiter, skipinitialspace=True))
-    except (UnicodeDecodeError, json.JSONDecodeError, csv.Error) as error:
+    except (*MALFORMED, csv.Error) as error:
         raise LeadlineError(
             f"is neither JSON nor a CSV table in UTF-8 ({error})", where=str(path), mend="Save it again"
         ) from error

@@ -105,7 +105,11 @@ class Bench:
 
         if self.brain.knowledge is None:
             return knowledge.builtin()
-        text = self.brain.knowledge.read_text(encoding="utf-8")
+        try:
+            text = self.brain.knowledge.read_text(encoding="utf-8")
+        except UnicodeDecodeError as error:
+            where = str(self.brain.knowledge)
+            raise LeadlineError(f"is not UTF-8 text ({error.reason})", where=where, mend="Save it as UTF-8") from error
         return knowledge.parse(text, str(self.brain.knowledge))
 
     @cached_property

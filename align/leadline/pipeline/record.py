@@ -7,7 +7,7 @@ from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Any
 
 from leadline.base.atomic import write_text
-from leadline.base.errors import LeadlineError
+from leadline.base.errors import MALFORMED, LeadlineError
 from leadline.base.fingerprint import fingerprint_path, fingerprint_value
 
 if TYPE_CHECKING:
@@ -30,7 +30,8 @@ class Done:
     def intact(self, folder: Path) -> bool:
         """Whether every output is there as it was left."""
         return all(
-            (folder / name).exists() and fingerprint_path(folder / name) == mark for name, mark in self.outputs.items()
+            _inside(folder / name, folder) and fingerprint_path(folder / name) == mark
+            for name, mark in self.outputs.items()
         )
 
     @property
@@ -53,10 +54,12 @@ class Record:
             content = json.loads(self.file.read_text(encoding="utf-8"))
             if content["format"] == RECORD_FORMAT:
                 self.steps = {
-                    name: Done(s["key"], s["outputs"], tuple(s["warnings"]), s["inputs"], s["extra"])
+                    name: Done(
+                        str(s["key"]), dict(s["outputs"]), tuple(s["warnings"]), dict(s["inputs"]), dict(s["extra"])
+                    )
                     for name, s in content["steps"].items()
                 }
-        except (ValueError, KeyError, TypeError, AttributeError) as error:
+        except (*MALFORMED, KeyError, TypeError, AttributeError) as error:
             raise LeadlineError(
                 f"is damaged ({error!r})", where=str(self.file), mend="Delete it; the stages will run again"
             ) from error
@@ -75,3 +78,8 @@ class Record:
             for name, d in self.steps.items()
         }
         write_text(self.file, json.dumps({"format": RECORD_FORMAT, "steps": steps}, indent=1) + "\n")
+
+
+def _inside(path: Path, folder: Path) -> bool:
+    """Whether ``path`` is a file there is, inside ``folder``."""
+    return path.is_file() and path.resolve().is_relative_to(folder.resolve())
