@@ -14,7 +14,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from leadline.base.atomic import write_text
-from leadline.base.errors import LeadlineError
+from leadline.base.errors import MALFORMED, LeadlineError
 from leadline.io.points import pairs_text, read_pairs, read_track_edits, track_edits_text
 from leadline.io.tables import anchors_text
 from leadline.pipeline.lock import sole_worker
@@ -114,7 +114,7 @@ class Store:
             return None
         try:
             return replay(self.journal.read_text(encoding="utf-8", errors="replace").splitlines())
-        except (ValueError, KeyError, TypeError) as error:
+        except (*MALFORMED, KeyError, TypeError, AttributeError, OverflowError) as error:
             raise LeadlineError(
                 f"is damaged ({error!r})", where=str(self.journal), mend="Delete it: only undo is lost, no anchor"
             ) from error
