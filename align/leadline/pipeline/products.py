@@ -3,23 +3,28 @@
 from __future__ import annotations
 
 import json
+from contextlib import contextmanager
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
+from zipfile import BadZipFile
 
 import numpy as np
 
 from leadline.base.atomic import whole_file, write_text
+from leadline.base.errors import LeadlineError
+from leadline.io.images import READ_FAULTS
 from leadline.model.channels import TRACK_COLUMNS
 from leadline.model.posterior import DepthPosterior
 from leadline.model.track import Track
 from leadline.model.transform import Registration
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping, Sequence
+    from collections.abc import Iterator, Mapping, Sequence
     from pathlib import Path
 
     from leadline.model.brain import Brain
 
+TRANSFORMS = ("stack_to_atlas", "atlas_to_stack")
 FRAME_NOTE = """\
 stack_to_atlas.h5 and atlas_to_stack.h5 are ITK transforms on points, in micrometres.
 
@@ -32,6 +37,19 @@ first voxel of the atlas volume laid out as PIR. atlas_to_stack.h5 goes the othe
 
 Estimates with error, for research only: see error_um in qc.json.
 """
+
+
+@contextmanager
+def _undamaged(path: Path, stage: str) -> Iterator[None]:
+    """Say that a file of ours is damaged, and which stage makes it anew, where reading it fails."""
+    try:
+        yield
+    except LeadlineError:
+        raise
+    except (BadZipFile, AttributeError, *READ_FAULTS) as error:
+        raise LeadlineError(
+            f"is damaged ({type(error).__name__})", where=str(path), mend=f"Run `leadline {stage}` again"
+        ) from error
 
 
 @dataclass(frozen=True)
@@ -66,14 +84,23 @@ class RegistrationFiles:
         return self.folder / "qc.png"
 
     @property
+    def arrays(self) -> Path:
+        """Both transforms, as they are read back."""
+        return self.brain.cache / "registration.npz"
+
+    @property
     def all(self) -> tuple[Path, ...]:
         """Every file of the stage."""
-        return self.stack_to_atlas, self.atlas_to_stack, self.quality, self.picture, self.folder / "README"
+        readme = self.folder / "README"
+        return self.stack_to_atlas, self.atlas_to_stack, self.quality, self.picture, readme, self.arrays
 
     def write(self, registration: Registration) -> None:
         """Write transforms, numbers and the note on frames."""
+        from leadline.io.transforms import write_transforms
         from leadline.registration._sitk import write_point_transform
 
+        both = {name: getattr(registration, name) for name in TRANSFORMS}
+        write_transforms(self.arrays, both)
         write_point_transform(self.stack_to_atlas, registration.stack_to_atlas)
         write_point_transform(self.atlas_to_stack, registration.atlas_to_stack)
         content = {
@@ -85,18 +112,14 @@ class RegistrationFiles:
         write_text(self.folder / "README", FRAME_NOTE)
 
     def read(self) -> Registration:
-        """The registration as written."""
-        from leadline.registration._sitk import read_point_transform
+        """The registration as written; raises LeadlineError when a file is missing or damaged."""
+        from leadline.io.transforms import read_transforms
 
-        quality = json.loads(self.quality.read_text(encoding="utf-8"))
-        error_um, warnings = quality.pop("error_um"), tuple(quality.pop("warnings"))
-        return Registration(
-            read_point_transform(self.stack_to_atlas),
-            read_point_transform(self.atlas_to_stack),
-            float(error_um),
-            quality,
-            warnings,
-        )
+        stack_to_atlas, atlas_to_stack = read_transforms(self.arrays, TRANSFORMS)
+        with _undamaged(self.quality, "register"):
+            quality = json.loads(self.quality.read_text(encoding="utf-8"))
+            error_um, warnings = float(quality.pop("error_um")), tuple(quality.pop("warnings"))
+        return Registration(stack_to_atlas, atlas_to_stack, error_um, quality, warnings)
 
 
 def _short(value: float | str | list[float]) -> float | str | list[float]:
@@ -172,9 +195,11 @@ def read_tracks(brain: Brain) -> tuple[tuple[Track, ...], tuple[str, ...]]:
     """Tracks as written, and a message for every penetration that lacks one."""
     import pandas as pd
 
-    table = pd.read_csv(brain.out / "tracks.csv", dtype={"penetration": str})
-    content = json.loads((brain.cache / "tracks.json").read_text(encoding="utf-8"))
-    return tuple(_track(table, ends) for ends in content["tracks"]), tuple(content["missing"])
+    with _undamaged(brain.out / "tracks.csv", "trace"):
+        table = pd.read_csv(brain.out / "tracks.csv", dtype={"penetration": str})
+    with _undamaged(brain.cache / "tracks.json", "trace"):
+        content = json.loads((brain.cache / "tracks.json").read_text(encoding="utf-8"))
+        return tuple(_track(table, ends) for ends in content["tracks"]), tuple(content["missing"])
 
 
 def _track(table: Any, ends: dict[str, Any]) -> Track:
@@ -217,7 +242,8 @@ def write_posteriors(brain: Brain, posteriors: Sequence[DepthPosterior]) -> None
 
 def read_posteriors(brain: Brain) -> tuple[DepthPosterior, ...]:
     """Draws as kept."""
-    with np.load(brain.cache / "posterior.npz", allow_pickle=False) as arrays:
+    path = brain.cache / "posterior.npz"
+    with _undamaged(path, "anchor"), np.load(path, allow_pickle=False) as arrays:
         heads = json.loads(str(arrays["heads"]))
         return tuple(_posterior(arrays, i, head) for i, head in enumerate(heads))
 

@@ -8,9 +8,8 @@ import numpy as np
 import pytest
 import SimpleITK as sitk
 
-from leadline.base.errors import LeadlineError
 from leadline.model.transform import Affine, Field, PointTransform
-from leadline.registration._sitk import read_point_transform, write_point_transform
+from leadline.registration._sitk import write_point_transform
 
 
 def some_transform(seed: int = 1) -> PointTransform:
@@ -34,30 +33,3 @@ def test_itk_carries_points_as_we_do(tmp_path: Path, with_field: bool) -> None:
     points = np.random.default_rng(2).uniform(-800, 2200, (500, 3))
     want = np.array([itk.TransformPoint(p.tolist()) for p in points])
     assert np.abs(transform(points) - want).max() < 1e-3
-
-
-def test_what_is_written_is_read_back(tmp_path: Path) -> None:
-    transform = some_transform(3)
-    write_point_transform(tmp_path / "t.h5", transform)
-    back = read_point_transform(tmp_path / "t.h5")
-    points = np.random.default_rng(4).uniform(-800, 2200, (500, 3))
-    assert np.abs(back(points) - transform(points)).max() < 1e-6
-    assert back.field is not None
-    assert np.array_equal(back.field.displacement_um, transform.field.displacement_um)  # type: ignore[union-attr]
-
-
-def test_a_missing_file_is_said(tmp_path: Path) -> None:
-    with pytest.raises(LeadlineError, match="no such file"):
-        read_point_transform(tmp_path / "none.h5")
-
-
-def test_a_file_of_another_kind_is_said(tmp_path: Path) -> None:
-    (tmp_path / "t.h5").write_text("not a transform")
-    with pytest.raises(LeadlineError, match="is no ITK transform"):
-        read_point_transform(tmp_path / "t.h5")
-
-
-def test_a_transform_of_another_kind_is_said(tmp_path: Path) -> None:
-    sitk.WriteTransform(sitk.Euler3DTransform(), str(tmp_path / "t.tfm"))
-    with pytest.raises(LeadlineError, match="affine, a displacement field"):
-        read_point_transform(tmp_path / "t.tfm")
