@@ -72,7 +72,7 @@ def numbers(table: pd.DataFrame, columns: Sequence[str], path: Path) -> Any:
         values = table[list(columns)].apply(pd.to_numeric, errors="coerce").to_numpy(float)
     except OverflowError:  # integers beyond all floats
         values = table[list(columns)].map(lambda cell: pd.to_numeric(str(cell)[:40], errors="coerce")).to_numpy(float)
-        values[np.abs(values) > 1e30] = np.inf
+        values = np.where(np.abs(values) > 1e30, np.inf, values)
     bad = np.argwhere(~np.isfinite(values))
     if bad.size:
         row, column = bad[0]
