@@ -15,7 +15,7 @@ if TYPE_CHECKING:
 
     import pandas as pd
 
-    from leadline.base.arrays import Float32Array, FloatArray, IntArray
+    from leadline.base.arrays import AnyArray, Float32Array, FloatArray, IntArray
     from leadline.model.atlas import Atlas
     from leadline.model.volume import Stack
     from leadline.pipeline.bench import Bench
@@ -31,6 +31,7 @@ STRETCH_WINDOW_UM = 200.0
 MOST_CURVES = 5
 SMALL_SHARE = 0.02
 LEAST_FOR_NAME = 0.017
+GAP_STEPS = 5.0
 # In order of what tells most about where a contact is; the first five that were measured are drawn.
 CURVES = (
     "ripple_power_db",
@@ -165,18 +166,31 @@ def _spectrum(axis: Any, height: FloatArray, frequency_hz: FloatArray, power: Fl
     known = np.isfinite(decibel).any(axis=0)
     relative = decibel[:, known] - np.nanmedian(decibel[:, known], axis=0)
     limit = float(np.nanpercentile(np.abs(relative), 98)) or 1.0
+    height, relative = with_gaps(height, relative)
     mesh = axis.pcolormesh(frequency_hz[known], height, relative, cmap="cividis", vmin=-limit, vmax=limit,
                            shading="nearest", rasterized=True)  # fmt: skip
     mesh.set_edgecolor("none")
     axis.set(title="LFP power", xscale="log", xlabel=f"Hz, ±{limit:.0f} dB")
+    axis.xaxis.set_major_formatter("{x:g}")  # 100, not ten to the second: names are never taken for mathematics
 
 
 def _sinks(axis: Any, height: FloatArray, time_s: FloatArray, csd: Float32Array, kind: str) -> None:
     limit = float(np.nanpercentile(np.abs(csd), 99)) or 1.0
+    height, csd = with_gaps(height, csd)
     axis.pcolormesh(time_s * 1000, height, csd, cmap="RdBu", vmin=-limit, vmax=limit, shading="nearest",
                     rasterized=True)  # fmt: skip
     axis.axvline(0, color=style.INK, lw=0.6)
     axis.set(title="current sinks (red)", xlabel=f"ms after {kind or 'event'}")
+
+
+def with_gaps(height: FloatArray, values: AnyArray) -> tuple[FloatArray, AnyArray]:
+    """Rows (n,) and their values (n, ...), with NaN where neighbours are far apart: nothing was measured there."""
+    step = np.diff(height)
+    usual = np.median(np.abs(step)) if step.size else 0.0
+    wide = np.flatnonzero(np.abs(step) > GAP_STEPS * usual)
+    edges = np.stack([height[wide] + np.sign(step[wide]) * usual, height[wide + 1] - np.sign(step[wide]) * usual], 1)
+    at = np.repeat(wide + 1, 2)
+    return np.insert(height, at, edges.ravel()), np.insert(np.asarray(values, float), at, np.nan, axis=0)
 
 
 def curves(shank: Shank, scale: Scale) -> list[Callable[[Any], None]]:
@@ -195,7 +209,8 @@ def curves(shank: Shank, scale: Scale) -> list[Callable[[Any], None]]:
 def _curve(axis: Any, name: str, height: FloatArray, values: FloatArray) -> None:
     feature = FEATURE_BY_NAME[name]
     known = np.isfinite(values)
-    axis.plot(values[known], height[known], color=style.ACCENT if feature.group == "lfp" else "#b35900", lw=1.1)
+    height, values = with_gaps(height[known], values[known])
+    axis.plot(values, height, color=style.ACCENT if feature.group == "lfp" else "#b35900", lw=1.1)
     axis.margins(x=0.08)
     unit = name.rsplit("_", 1)[-1] if name.endswith(("_db", "_hz", "_uv", "_s")) else ""
     unit = "per 100 um" if name.endswith("per_100um") else {"db": "dB", "hz": "Hz", "uv": "uV"}.get(unit, unit)
@@ -208,6 +223,7 @@ def _curve(axis: Any, name: str, height: FloatArray, values: FloatArray) -> None
 def odds(axis: Any, shank: Shank, scale: Scale, atlas: Atlas) -> None:
     """The probability of each region at every contact, as stacked ribbons, most likely depth first."""
     heights, ids, share = shares(shank.odds, shank.channels)
+    heights, share = with_gaps(heights, share)
     y = scale.of_tip(heights)
     edges = _edges(y)
     left = np.zeros(len(y))
@@ -217,7 +233,7 @@ def odds(axis: Any, shank: Shank, scale: Scale, atlas: Atlas) -> None:
         right = left + share[:, k]
         axis.fill_betweenx(np.repeat(edges, 2)[1:-1], np.repeat(left, 2), np.repeat(right, 2), color=colour, lw=0.25,
                            edgecolor="white")  # fmt: skip
-        likely = np.flatnonzero(share[:, k] > max(0.35, 0.9 * float(share[:, k].max())))
+        likely = np.flatnonzero(share[:, k] > max(0.35, 0.9 * float(np.nanmax(share[:, k]))))
         room = abs(edges[likely.max() + 1] - edges[likely.min()]) if likely.size else 0.0
         if structure is not None and room > LEAST_FOR_NAME * (scale.bottom_um - scale.top_um):
             best = int(likely[len(likely) // 2])

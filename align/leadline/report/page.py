@@ -202,7 +202,9 @@ def _channels(table: pd.DataFrame, findings: Findings) -> str:
 def fitting_rows(table: pd.DataFrame, findings: Findings) -> tuple[list[str], list[str]]:
     """Columns and rows of the channel table as the page's limit allows: all columns, else the chief ones, and of a
     table too long even so, the first channels."""
-    for wanted in ((*TABLE_COLUMNS, "cortical_depth"), CHIEF_COLUMNS):
+    by_fractions = any(str(source).startswith("fractions") for source in table.get("layer_source", ()))
+    more = ("cortical_depth", "layer_source") if by_fractions else ("cortical_depth",)
+    for wanted in ((*TABLE_COLUMNS, *more), CHIEF_COLUMNS):
         columns = [c for c in wanted if c in table.columns]
         rows = list(_rows(table, columns, findings))
         size = np.cumsum([len(row.encode("utf-8")) + 1 for row in rows])

@@ -10,7 +10,7 @@ from tests.finished_brain import TIP_DISTANCE_UM, track, write_finished_brain
 from leadline.pipeline.bench import Bench
 from leadline.report.figures import draw_section, scale_of, write_sections
 from leadline.report.findings import gather
-from leadline.report.lanes import local_stretch, shares
+from leadline.report.lanes import local_stretch, shares, with_gaps
 
 
 @pytest.fixture(scope="module")
@@ -47,6 +47,7 @@ def test_a_section_has_every_lane_that_was_measured(findings):
 def test_figures_for_papers_hold_text_that_can_be_edited(findings, tmp_path):
     svg, pdf = write_sections(findings, tmp_path)
     assert re.search(r"<text[^>]*>odds of regions</text>", svg.read_text())
+    assert "mathdefault" not in svg.read_text()
     first = svg.read_bytes()
     write_sections(findings, tmp_path)
     assert svg.read_bytes() == first
@@ -69,3 +70,12 @@ def test_odds_of_a_row_sum_to_one_and_contacts_of_a_row_are_averaged():
     assert heights.tolist() == [0.0, 20.0]
     assert ids.tolist() == [7, 8, -1]
     assert np.allclose(share, [[0.75, 0.25, 0.0], [0.0, 0.995, 0.005]])
+
+
+def test_nothing_is_drawn_where_nothing_was_measured():
+    height = np.array([500.0, 480.0, 460.0, 100.0, 80.0])
+    wide, values = with_gaps(height, np.arange(10.0).reshape(5, 2))
+    assert wide.tolist() == [500, 480, 460, 440, 120, 100, 80]
+    assert np.isnan(values[3:5]).all()
+    assert values[[0, 1, 2, 5, 6]].tolist() == np.arange(10.0).reshape(5, 2).tolist()
+    assert with_gaps(height[:1], np.ones((1, 3)))[0].tolist() == [500.0]

@@ -33,11 +33,10 @@ def brain(tmp_path_factory):
     names.write_text(names.read_text().replace("Dentate gyrus", EVIL.replace('"', '""')))
     suggestions = brain.out / "suggestions.csv"
     suggestions.write_text(suggestions.read_text().replace("no spikes within 50 um", "<i>none</i>"))
-    for suffix in ("csv", "parquet"):
-        path = brain.out / f"channels.{suffix}"
-        table = pd.read_csv(brain.out / "channels.csv", keep_default_na=False)
-        table.loc[table["region"] == "DGY", "region_name"] = EVIL
-        table.to_parquet(path) if suffix == "parquet" else table.to_csv(path, index=False)
+    table = pd.read_parquet(brain.out / "channels.parquet")
+    table.loc[table["region"] == "DGY", "region_name"] = EVIL
+    table.to_parquet(brain.out / "channels.parquet")
+    table.to_csv(brain.out / "channels.csv", index=False)
     return brain
 
 
@@ -127,7 +126,7 @@ def test_many_shanks_become_pixels_rather_than_a_page_too_large(brain, monkeypat
 def test_a_table_too_long_for_the_page_says_what_it_leaves_out(brain, monkeypatch):
     findings = gather(Bench(brain))
     columns, rows = fitting_rows(findings.channels, findings)
-    assert (len(columns), len(rows)) == (len(page_module.TABLE_COLUMNS), 32)
+    assert (len(columns), len(rows)) == (len(page_module.TABLE_COLUMNS) + 1, 32)
     monkeypatch.setattr(page_module, "TABLE_BYTES", 9_000)
     columns, rows = fitting_rows(findings.channels, findings)
     assert (tuple(columns), len(rows)) == (page_module.CHIEF_COLUMNS, 32)
@@ -135,6 +134,15 @@ def test_a_table_too_long_for_the_page_says_what_it_leaves_out(brain, monkeypatc
     _, rows = fitting_rows(findings.channels, findings)
     assert 0 < sum(len(r) + 1 for r in rows) <= 3_000
     assert f"The first {len(rows)} of 32 channels" in page_module._channels(findings.channels, findings)
+
+
+def test_layers_that_are_not_the_atlas_own_say_whence(brain):
+    findings = gather(Bench(brain))
+    table = findings.channels.assign(layer_source="fractions: mouse visual cortex")
+    assert "layer_source" not in fitting_rows(findings.channels, findings)[0]
+    columns, rows = fitting_rows(table, findings)
+    assert columns[-1] == "layer_source"
+    assert "fractions: mouse visual cortex" in rows[0]
 
 
 def test_a_shank_without_a_track_is_told_so(tmp_path):
@@ -196,7 +204,9 @@ window.addEventListener("load", () => {
 @pytest.mark.skipif(CHROMIUM is None, reason="no Chromium here: the page is not opened in a browser")
 def test_the_page_is_alive_in_a_browser(text, tmp_path):
     (tmp_path / "page.html").write_text(text.replace("</body>", SCRIPT))
-    flags = ["--headless=new", "--no-sandbox", "--disable-gpu", f"--user-data-dir={tmp_path / 'profile'}"]
+    quiet = ["--disable-quic", "--no-first-run", "--disable-background-networking", "--disable-component-update"]
+    flags = ["--headless=new", "--no-sandbox", "--disable-gpu", "--disable-sync", *quiet]
+    flags.append(f"--user-data-dir={tmp_path / 'profile'}")
     command = [CHROMIUM, *flags, "--virtual-time-budget=4000", "--dump-dom", (tmp_path / "page.html").as_uri()]
     done = subprocess.run(command, capture_output=True, text=True, timeout=120, check=True)
     found = re.search(r'<pre id="said">(.*?)</pre>', done.stdout, re.S)
