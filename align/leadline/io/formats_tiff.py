@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import logging
+import os
 import re
+import sys
 from contextlib import contextmanager
 from itertools import pairwise
 from typing import TYPE_CHECKING, Any
@@ -20,7 +22,10 @@ if TYPE_CHECKING:
     from pathlib import Path
 
 TIFF_SUFFIXES = (".tif", ".tiff", ".btf", ".tf8", ".tf2")
+PIECE_BYTES = 2**20
+"""Read at once of planes that lie unpacked: what fits into a processor's cache beside the sums."""
 _PHOTOMETRIC_RGB = 2
+_NATIVE = "<" if sys.byteorder == "little" else ">"
 
 
 def open_tiff(path: Path, channel: int) -> Image:
@@ -186,10 +191,15 @@ def _imagej_sizes(file: Any) -> tuple[float | None, float | None, float | None]:
 
 
 class Planes:
-    """A folder of TIFF planes as one array ``(planes, channels, rows, columns)``; reads the planes asked for."""
+    """A folder of TIFF planes as one array ``(planes, channels, rows, columns)``; reads the planes asked for.
 
-    def __init__(self, files: list[Path], channels: int, shape: tuple[int, int], dtype: Any) -> None:
-        self._files = files
+    ``offsets`` : where the voxels of each file begin, when all of them lie there in one piece, unpacked; else None.
+    """
+
+    def __init__(
+        self, files: list[Path], channels: int, shape: tuple[int, int], dtype: Any, offsets: list[int] | None = None
+    ) -> None:
+        self._files, self._offsets = files, offsets
         self.shape = (len(files), channels, *shape)
         self.dtype = np.dtype(dtype)
 
@@ -198,8 +208,42 @@ class Planes:
         if not isinstance(planes, slice):
             return _read_plane(self._files[planes], channel)[rows, columns]
         numbers = range(*planes.indices(len(self._files)))
-        parts = [_read_plane(self._files[k], channel)[rows, columns] for k in numbers]
-        return np.stack(parts) if parts else np.empty((0, *self.shape[2:]), self.dtype)[:, rows, columns]
+        rows, columns = (slice(*s.indices(n)) for s, n in zip((rows, columns), self.shape[2:], strict=True))
+        lines, places = (len(range(s.start, s.stop, s.step)) for s in (rows, columns))
+        out = np.empty((len(numbers), lines, places), self.dtype)
+        for k, number in enumerate(numbers):
+            out[k] = _read_plane(self._files[number], channel)[rows, columns]
+        return out
+
+    def pieces(self, key: Any) -> Any:
+        """Whole rows of a run of planes, about 1 MiB at a time into one buffer; of None: whether this can be done."""
+        if key is None:
+            return self._offsets is not None
+        return self._rows(key[0], key[2])
+
+    def _rows(self, planes: slice, rows: slice) -> Iterator[Any]:
+        assert self._offsets is not None
+        columns, size = self.shape[3], self.shape[3] * self.dtype.itemsize
+        at_once = max(1, min(rows.stop - rows.start, PIECE_BYTES // size))
+        buffer = np.empty((at_once, columns), self.dtype)
+        for number in range(planes.start, planes.stop):
+            file = self._files[number]
+            with file.open("rb", buffering=0) as handle:
+                _fetch_ahead(self._files[number + 1 : number + 2])
+                handle.seek(self._offsets[number] + rows.start * size)
+                for row in range(rows.start, rows.stop, at_once):
+                    piece = buffer[: min(at_once, rows.stop - row)]
+                    if handle.readinto(piece.data.cast("B")) != piece.nbytes:
+                        raise unreadable(file, EOFError("the plane is cut short"))
+                    yield (number, 0, row, 0), piece[None, None]
+
+
+def _fetch_ahead(files: list[Path]) -> None:
+    """Ask the system to read files into memory while we are busy with another, where it can be asked."""
+    if hasattr(os, "posix_fadvise"):
+        for file in files:
+            with file.open("rb", buffering=0) as handle:
+                os.posix_fadvise(handle.fileno(), 0, 0, os.POSIX_FADV_WILLNEED)
 
 
 def _read_plane(file: Path, channel: int) -> Any:
@@ -226,16 +270,19 @@ def open_planes(folder: Path, channel: int) -> Image:
         [f for f in folder.iterdir() if f.suffix.lower() in TIFF_SUFFIXES and not f.name.startswith(".")], folder
     )
     first = _header(files[0])
+    offsets = [first[5]]
     for file in files[1:]:
         here = _header(file)
+        offsets.append(here[5])
         if here[:4] != first[:4]:
             raise LeadlineError(
                 f"is {_words(here)}, the plane {files[0].name} is {_words(first)}",
                 where=str(file),
                 mend="Give planes of one shape and type",
             )
-    channels, rows, columns, dtype, (x, y, z) = first
-    data = pick(Planes(files, channels, (rows, columns), dtype), "zcyx", channel, folder)
+    channels, rows, columns, dtype, (x, y, z), _ = first
+    planes = Planes(files, channels, (rows, columns), dtype, None if None in offsets else offsets)
+    data = pick(planes, "zcyx", channel, folder)
     return Image(folder, (whole_level(data, (1, rows, columns)),), (z, y, x))
 
 
@@ -257,7 +304,9 @@ def _header(file: Path) -> Any:
         if end > tiff.filehandle.size:
             raise EOFError("the plane is cut short")
         dtype = np.dtype(page.dtype if page.dtype is not None else "V1").newbyteorder("=")
-        return max(pages, samples), int(page.imagelength), int(page.imagewidth), dtype, _sizes(tiff)
+        plain = pages == samples == 1 and page.is_contiguous and tiff.byteorder == _NATIVE
+        offset = int(page.dataoffsets[0]) if plain else None
+        return max(pages, samples), int(page.imagelength), int(page.imagewidth), dtype, _sizes(tiff), offset
 
 
 def in_order(files: list[Path], folder: Path) -> list[Path]:

@@ -61,6 +61,20 @@ class Picked:
             raise unreadable(self._where, error) from error
         return block.astype(self.dtype, copy=False)
 
+    def pieces(self, block: tuple[slice, slice, slice] | None) -> Any:
+        """The voxels of a block in pieces (first index, voxels) that are overwritten by the next; None where the
+        source has no cheaper way than to read the block whole. Asked of None: whether it has."""
+        offered = getattr(self._source, "pieces", None)
+        if offered is None or not offered(None):
+            return None
+        return True if block is None else self._pieces(offered, iter(block))
+
+    def _pieces(self, offered: Any, keys: Any) -> Any:
+        for start, piece in offered(tuple(next(keys) if at is None else at for at in self._fixed)):
+            place = tuple(a for a, at in zip(start, self._fixed, strict=True) if at is None)
+            voxels = piece.reshape([n for n, at in zip(piece.shape, self._fixed, strict=True) if at is None])
+            yield place, voxels.astype(self.dtype, copy=False)
+
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Mapped:
