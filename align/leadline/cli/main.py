@@ -9,7 +9,7 @@ import typer
 
 from leadline.base.errors import Faults, LeadlineError
 from leadline.base.progress import Cancelled
-from leadline.cli import atlas, brains, compare, demo, export, learn, points, report, units, view
+from leadline.cli import atlas, brains, compare, demo, export, ingest, learn, points, report, units, view
 from leadline.cli.terminal import err
 
 app = typer.Typer(
@@ -24,6 +24,7 @@ app = typer.Typer(
 demo.add_to(app)
 app.add_typer(atlas.app, name="atlas", help="Build or check an atlas folder.")
 brains.add_to(app)
+ingest.add_to(app)
 points.add_to(app)
 learn.add_to(app)
 units.add_to(app)

@@ -7,7 +7,6 @@ OME-NGFF specification 0.5 (multiscales, axes, coordinateTransformations); RFC-4
 
 from __future__ import annotations
 
-import errno
 import json
 import os
 import shutil
@@ -16,7 +15,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from leadline.base.atomic import OLD
+from leadline.base.atomic import PART, in_words
 from leadline.base.errors import LeadlineError
 from leadline.base.progress import SILENT, Progress
 from leadline.io.reduce import Grid, course, reduce_to
@@ -117,20 +116,14 @@ def write_pyramid(
         _remove(unfinished)
     _require_room(levels, unfinished)
     _remove(folder)
-    unfinished.mkdir(parents=True, exist_ok=True)
-    try:
+    with in_words(folder):
+        unfinished.mkdir(parents=True, exist_ok=True)
         order = course(volume)
         piles = [
             Pile(_array(unfinished, level), level.grid, order, ledger, level.name, full=level.full) for level in levels
         ]
         stream(volume, piles, ledger, progress, label)
         _describe(unfinished, volume, levels + _nest(volume, levels, unfinished, targets_um), key)
-    except OSError as error:
-        if error.errno not in (errno.ENOSPC, errno.EDQUOT):
-            raise
-        raise LeadlineError(
-            "the disk is full", where=str(folder.parent), mend="Free space and run again; what is done is kept"
-        ) from error
     os.replace(unfinished, folder)
     (folder / "state.json").unlink(missing_ok=True)
 
@@ -252,7 +245,8 @@ def _describe(folder: Path, volume: Volume, levels: Sequence[Level], key: str) -
 
 def _require_room(levels: Sequence[Level], unfinished: Path) -> None:
     place = unfinished.parent
-    place.mkdir(parents=True, exist_ok=True)
+    with in_words(place):
+        place.mkdir(parents=True, exist_ok=True)
     there = sum(f.stat().st_size for f in unfinished.rglob("*") if f.is_file())
     needed = int(1.2 * sum(level.nbytes for level in levels)) + SLACK_BYTES - there
     free = shutil.disk_usage(place).free
@@ -267,7 +261,7 @@ def _require_room(levels: Sequence[Level], unfinished: Path) -> None:
 def _remove(folder: Path) -> None:
     """Take a folder away; it is never seen half removed under its name."""
     if folder.exists():
-        old = folder.with_name(OLD + folder.name)
+        old = folder.with_name(PART + folder.name)
         shutil.rmtree(old, ignore_errors=True)
         os.replace(folder, old)
         shutil.rmtree(old)

@@ -179,11 +179,10 @@ class Adder:
         if rows is not None:
             self._shapes[:, 0] = rows
         ends = np.cumsum(self._shapes.prod(axis=1))
-        self._flat = np.zeros(int(ends[-1]) if len(ends) else 0, np.float32)
+        self._flat = np.zeros(int(self._shapes.prod(axis=1).sum()), np.float32)
         self._sums: AnyArray = np.zeros((0, 0))
-        self.totals = [
-            part.reshape(shape) for part, shape in zip(np.split(self._flat, ends[:-1]), self._shapes, strict=True)
-        ]
+        parts = np.split(self._flat, ends)[:-1]
+        self.totals = [part.reshape(shape) for part, shape in zip(parts, self._shapes, strict=True)]
 
     def add(self, start: tuple[int, int, int], piece: AnyArray, first_rows: Sequence[int] | None = None) -> None:
         """Add the piece whose first voxel is ``start``, stored axes.

@@ -155,13 +155,14 @@ def stream(volume: Volume, piles: Sequence[Pile], ledger: Ledger, progress: Prog
         for start, piece in pieces:
             for pile in full:
                 pile.copy(start, piece)
-            adder.add(start, piece, [pile.row for pile in means])
+            if means:
+                adder.add(start, piece, [pile.row for pile in means])
         if slab is not None:
             wrote = [pile.settle(slab[0][slow].stop) for pile in piles]
             if any(wrote):
                 ledger.keep()
         progress.step()
-    if ledger.low == ledger.high:
+    if means and ledger.low == ledger.high:
         raise LeadlineError(
             f"the stack is empty: every voxel is {ledger.low or 0:g}", mend="Choose another channel or file"
         )

@@ -39,37 +39,47 @@ class Bench:
 
     @cached_property
     def background(self) -> Stack:
-        """The autofluorescence channel, opened."""
-        from leadline.io.stacks import open_stack
+        """The autofluorescence channel, opened, with the resolutions of its working copy."""
+        from leadline.pipeline.ingest import channels, opened
 
-        source = self.brain.stack
-        return open_stack(
-            source.background, channel=source.background_channel, voxel_um=source.voxel_um, code=source.code
-        )
+        return opened(self.brain, channels(self.brain)[0])
 
     @cached_property
     def dye(self) -> Stack | None:
-        """The dye channel, opened; None where the brain has none."""
-        from leadline.io.stacks import open_stack
+        """The dye channel, opened like the background; None where the brain has none."""
+        from leadline.pipeline.ingest import channels, opened
 
-        source = self.brain.stack
-        if source.dye is None:
+        _, *others = channels(self.brain)
+        if not others:
             return None
-        dye = open_stack(source.dye, channel=source.dye_channel, voxel_um=source.voxel_um, code=source.code)
+        dye = opened(self.brain, others[0])
         ours, theirs = dye.finest, self.background.finest
         if ours.shape != theirs.shape or ours.code != theirs.code or not np.allclose(ours.voxel_um, theirs.voxel_um):
             raise LeadlineError(
                 f"dye ({ours.shape} voxels, {ours.voxel_um.tolist()} um, {ours.code}) and background ({theirs.shape}, "
                 f"{theirs.voxel_um.tolist()} um, {theirs.code}) are not on one grid",
-                where=str(source.dye),
+                where=str(others[0].path),
                 mend="Both channels must be of one imaging of one brain",
             )
         return dye
 
-    def reduced(self, stack: Stack, target_um: float) -> Volume:
-        """``stack`` in memory at about ``target_um``, coarser only where the whole brain would not fit."""
-        from leadline.io.reduce import reduce_to
+    def reopen(self) -> None:
+        """Look at the channels anew, now that a working copy of them has been made."""
+        for name in ("background", "dye"):
+            self.__dict__.pop(name, None)
 
+    def reduced(self, stack: Stack, target_um: float) -> Volume:
+        """``stack`` at about ``target_um``: in memory, or read as it is sliced where it would be large there.
+
+        Without a fitting level, it is coarser where the whole brain would not fit into memory.
+        """
+        from leadline.io.reduce import reduce_to
+        from leadline.pipeline.ingest import SMALL_VOXELS, at_hand
+
+        level = stack.fitting(target_um)
+        needed = float(np.prod(level.extent_um / np.maximum(level.voxel_um, target_um)))
+        if needed > SMALL_VOXELS and at_hand(stack, target_um):
+            return level
         extent = float(np.prod(stack.finest.extent_um))
         target = max(target_um, (extent / WORK_VOXELS_MAX) ** (1 / 3))
         return reduce_to(stack.fitting(target), target, progress=self.progress)

@@ -10,6 +10,7 @@ from leadline.base.errors import LeadlineError
 from leadline.base.fingerprint import fingerprint_path, fingerprint_value
 from leadline.base.progress import SILENT, Progress
 from leadline.pipeline.bench import Bench
+from leadline.pipeline.ingest import ingest
 from leadline.pipeline.lock import sole_worker
 from leadline.pipeline.provenance import write_provenance
 from leadline.pipeline.record import Done, Record
@@ -19,6 +20,8 @@ if TYPE_CHECKING:
     from pathlib import Path
 
     from leadline.model.brain import Brain
+
+READ_THE_STACK = ("register", "trace")
 
 
 @dataclass(frozen=True, slots=True)
@@ -61,6 +64,8 @@ def _run(bench: Bench, until: str) -> Summary:
             checked = True
         bench.progress.begin(step.name, 0)
         try:
+            if step.stage in READ_THE_STACK:
+                ingest(bench)
             warnings = step.run(bench)
         except Exception:
             _require_unchanged(step, marks, record, brain)  # what went wrong is then the change
