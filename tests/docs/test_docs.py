@@ -4,17 +4,10 @@ import contextlib
 import io
 import json
 import re
-import shlex
-import shutil
 import tomllib
 from pathlib import Path
 
 import pytest
-from tests.finished_brain import truth_text, write_finished_brain
-from tests.made_nwb import write_nwb
-from typer.testing import CliRunner
-
-from leadline.cli.main import app
 
 DOCS = Path(__file__).parents[2] / "docs"
 PAGES = sorted(DOCS.glob("*.md"))
@@ -25,42 +18,17 @@ RESULTS = {
     "tell-tracks-apart.md": ["cells_in_atlas.csv"],
     "units.md": ["kestrel-07/out/units_cell_type.png", "pooled/units_latency_ms.svg"],
     "report.md": ["kestrel-07.html", "figures/section_A.pdf"],
-    "export.md": ["located.nwb", "kestrel-07/out/probeinterface/A.json", "bids/sub-kestrel07/ecephys/sub-kestrel07_space-Other_electrodes.tsv"],
+    "export.md": [
+        "located.nwb",
+        "kestrel-07/out/probeinterface/A.json",
+        "bids/sub-kestrel07/ecephys/sub-kestrel07_space-Other_electrodes.tsv",
+    ],
     "compare.md": ["comparison/comparison.png"],
 }
 
 
-@pytest.fixture(scope="session")
-def shelf(tmp_path_factory):
-    """A desk with two brains, a second reading of the first, and loose files."""
-    folder = tmp_path_factory.mktemp("desk")
-    first = write_finished_brain(folder / "kestrel-07", name="kestrel-07")
-    write_finished_brain(folder / "kestrel-08", name="kestrel-08")
-    write_finished_brain(folder / "kestrel-07-bob", name="kestrel-07", shift_um=60.0)
-    write_nwb(folder / "kestrel-07")
-    (folder / "truth.csv").write_text(truth_text(first))
-    (folder / "cells.csv").write_text("cell,s0_um,s1_um,s2_um\n1,2000,2500,1500\n2,2500,3000,1800\n")
-    for name in ("labels.nrrd", "template.nrrd", "structures.csv"):
-        shutil.copy(folder / "kestrel-07" / "atlas" / name, folder / name)
-    return folder
-
-
-@pytest.fixture
-def desk(shelf, tmp_path, monkeypatch):
-    shutil.copytree(shelf, tmp_path / "desk")
-    monkeypatch.chdir(tmp_path / "desk")
-    return tmp_path / "desk"
-
-
-def run_line(line):
-    words = shlex.split(line)
-    assert words[0] == "leadline", line
-    result = CliRunner().invoke(app, words[1:], catch_exceptions=False)
-    assert result.exit_code == 0, f"{line}\n{result.output}"
-
-
 @pytest.mark.parametrize("page", PAGES, ids=lambda p: p.name)
-def test_a_page_does_what_it_says(page, desk):
+def test_a_page_does_what_it_says(page, desk, run_line):
     names = {"__name__": "page"}
     for kind, text in BLOCK.findall(page.read_text()):
         if kind == "console":
