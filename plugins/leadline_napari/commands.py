@@ -11,7 +11,7 @@ if TYPE_CHECKING:
     import napari
     from qtpy.QtWidgets import QWidget
 
-    from leadline_napari.docks import Workbench
+    from leadline_napari.workbench import Workbench
 
 NO_LAYER = (None,)  # napari's sign that a reader has nothing for it to add
 INSTALL = "The Leadline docks need pyqtgraph. Install it with:  pip install 'leadline[napari]'"
@@ -72,7 +72,7 @@ def _dock(name: str) -> QWidget:
         label = QLabel(INSTALL)
         label.setWordWrap(True)
         return label
-    return _workbench().view(name)
+    return getattr(_workbench(), name).view
 
 
 def _workbench() -> Workbench:
@@ -81,24 +81,22 @@ def _workbench() -> Workbench:
 
     if find_spec("pyqtgraph") is None:
         raise LeadlineError("pyqtgraph is not installed", where="Leadline", mend=INSTALL)
-    from leadline_napari.docks import workbench
+    from leadline_napari.workbench import workbench
 
     return workbench(napari.current_viewer() or napari.Viewer())
 
 
 def _section(viewer: napari.Viewer, name: str) -> None:
-    from leadline_napari.docks import workbench
+    from leadline_napari.workbench import workbench
 
-    sections = workbench(viewer).sections
-    if sections is not None:
-        getattr(sections, name)()
+    workbench(viewer).section.do(name)
 
 
 def show(path: Any) -> None:
     """Open a window on a brain and stay until it is closed (``leadline view``)."""
     import napari
 
-    from leadline_napari.docks import workbench
+    from leadline_napari.workbench import workbench
 
     viewer = napari.Viewer()
     bench = workbench(viewer)

@@ -67,7 +67,12 @@ def _edits(content: dict[str, Any]) -> Edits:
     return Edits(
         anchors=tuple(Anchor(**row) for row in content["anchors"]),
         tracks=tuple(
-            TrackEdit(row["penetration"], row["shank"], tuple(_point(p) for p in row["points_um"]))
+            TrackEdit(
+                row["penetration"],
+                row["shank"],
+                tuple(_point(p) for p in row["points_um"]),
+                bool(row.get("entry_set", False)),
+            )
             for row in content["tracks"]
         ),
         refused=tuple((p, int(s), landmark) for p, s, landmark in content["refused"]),

@@ -14,11 +14,13 @@ SuggestionKey: TypeAlias = tuple[str, int, str]
 
 @dataclass(frozen=True, slots=True)
 class TrackEdit:
-    """A track drawn by hand: points in stack um from the entry to the tip, in place of the traced dye."""
+    """A track drawn by hand: points in stack um from the entry to the tip, in place of the traced dye. ``entry_set`` :
+    the first point is the entry by the hand's word; else the brain surface says where the track begins."""
 
     penetration: str
     shank: int
     points_um: tuple[Point, ...]
+    entry_set: bool = False
 
     def __post_init__(self) -> None:
         if len(self.points_um) < 2:

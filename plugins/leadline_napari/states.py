@@ -222,24 +222,40 @@ class LayerSpec:
 
 @dataclass(frozen=True, slots=True)
 class Pose:
-    """How the canvas is turned: axes from the one that is scrolled to the one that runs across, and their senses."""
+    """How the canvas is turned. ``order`` : axes from the one that is scrolled to the one that runs across, in 2-D;
+    in 3-D they stay in the order in which they are stored. ``flat``, ``solid`` : where the three axes then lead (depth,
+    vertical, horizontal). ``view``, ``up`` : directions along the stored axes from which the brain is looked at in 3-D.
+    """
 
     order: tuple[int, int, int]
-    vertical: str
-    horizontal: str
+    flat: tuple[str, str, str]
+    solid: tuple[str, str, str]
+    view: tuple[float, float, float]
+    up: tuple[float, float, float]
 
 
 @dataclass(frozen=True, slots=True)
 class CorrectionState:
-    """What the corrections dock shows. ``by_hand`` : the track in hand was drawn. ``pairs`` : in words. ``in_force`` :
+    """What the corrections dock shows. ``by_hand`` : the track in hand was drawn, ``entry_set`` : and its
+    entry too. ``pairs`` : in words. ``in_force`` :
     pairs refine the registration from the next run on; ``same`` : they are the ones shown."""
 
     title: str = ""
     editing: bool = False
     by_hand: bool = False
+    entry_set: bool = False
     can_edit: bool = False
     pairs: tuple[str, ...] = ()
     errors: str = ""
     in_force: bool = False
     same: bool = True
     registered: bool = False
+
+
+@dataclass(frozen=True, slots=True)
+class Legend:
+    """What colours mean: (name, colour) of every class, or of the two ends of a range."""
+
+    column: str
+    entries: tuple[tuple[str, str], ...]
+    is_range: bool = False

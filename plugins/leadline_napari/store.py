@@ -17,6 +17,7 @@ from leadline.base.atomic import write_text
 from leadline.base.errors import MALFORMED, LeadlineError
 from leadline.io.points import pairs_text, read_pairs, read_track_edits, track_edits_text
 from leadline.io.tables import anchors_text
+from leadline.model.track import HandTrack
 from leadline.pipeline.lock import sole_worker
 from leadline.pipeline.record import Record
 from leadline.pipeline.stages import anchors_in_force
@@ -82,7 +83,7 @@ class Store:
         stack_um, atlas_um = read_pairs(self.pairs)
         return Edits(
             anchors_in_force(self.brain, record),
-            tuple(TrackEdit(*key, tuple(_point(p) for p in points)) for key, points in tracks),
+            tuple(TrackEdit(*key, tuple(_point(p) for p in t.points_um), t.entry_set) for key, t in tracks),
             last.refused,
             tuple(Pair(_point(s), _point(a)) for s, a in zip(stack_um, atlas_um, strict=True)),
         )
@@ -101,7 +102,7 @@ class Store:
                     mend="They were read again; your last edit was not made",
                 )
             write_text(self.anchors, anchors_text(edits.anchors))
-            tracks = {(t.penetration, t.shank): np.array(t.points_um) for t in edits.tracks}
+            tracks = {(t.penetration, t.shank): HandTrack(np.array(t.points_um), t.entry_set) for t in edits.tracks}
             _write_or_drop(self.tracks, bool(tracks), track_edits_text(tracks))
             stack_um = np.array([p.stack_um for p in edits.pairs])
             atlas_um = np.array([p.atlas_um for p in edits.pairs])

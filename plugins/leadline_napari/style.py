@@ -17,6 +17,8 @@ BLUE = "#0072b2"
 VERMILION = "#d55e00"
 PINK = "#cc79a7"
 OUTSIDE_RGB = (116, 122, 131)
+CATEGORIES = (ORANGE, SKY, "#009e73", "#f0e442", BLUE, VERMILION, PINK)
+NO_VALUE = "#8a8f98"
 
 # Role -> (dark, light). The anchor in hand, a user's anchor, an accepted suggestion, one of brain.toml, an open
 # suggestion, a second reader's.

@@ -9,16 +9,26 @@ from __future__ import annotations
 
 import argparse
 import os
+import shutil
 import subprocess
 import sys
 import tempfile
 import time
 from pathlib import Path
+from typing import TYPE_CHECKING
+
+if TYPE_CHECKING:
+    from collections.abc import Callable
+
+    from qtpy.QtWidgets import QDialog
+
+    from leadline_napari.workbench import Workbench
 
 SCALES = (1, 2)
 THEMES = ("dark", "light")
 SIZE = (1280, 800)
 LIMIT_S = 600.0
+LARGE_BYTES = 5_000_000
 
 
 def main() -> None:
@@ -32,12 +42,23 @@ def main() -> None:
     if given.scale is not None:
         draw(given.brain, given.folder, given.scale)
         return
-    with tempfile.TemporaryDirectory() as scratch:
-        brain = given.brain or tiny(Path(scratch) / "brain")
+    beside = given.brain.resolve().parent if given.brain else None
+    with tempfile.TemporaryDirectory(dir=beside) as scratch:
+        brain = copied(given.brain, Path(scratch) / "brain") if given.brain else tiny(Path(scratch) / "brain")
         for scale in SCALES:
             command = [sys.executable, "-m", "tests.leadline_napari.screenshots", str(given.folder)]
             command += ["--brain", str(brain), "--scale", str(scale)]
             subprocess.run(command, check=True, env=os.environ | {"QT_SCALE_FACTOR": str(scale)})
+
+
+def copied(brain: Path, folder: Path) -> Path:
+    """The brain in a folder of its own, so that nothing is changed in the user's; what is large is linked."""
+
+    def link_or_copy(source: str, target: str) -> None:
+        (os.link if os.path.getsize(source) > LARGE_BYTES else shutil.copy2)(source, target)
+
+    shutil.copytree(brain, folder, copy_function=link_or_copy)
+    return folder
 
 
 def tiny(folder: Path) -> Path:
@@ -52,7 +73,7 @@ def draw(brain: Path, folder: Path, scale: int) -> None:
     import napari
     from qtpy.QtWidgets import QApplication
 
-    from leadline_napari.docks import close_workbench, workbench
+    from leadline_napari.workbench import close_workbench, workbench
 
     viewer = napari.Viewer(show=False)
     window = viewer.window._qt_window
@@ -61,7 +82,7 @@ def draw(brain: Path, folder: Path, scale: int) -> None:
     def settle() -> None:
         end = time.monotonic() + LIMIT_S
         QApplication.processEvents()
-        while time.monotonic() < end and (bench.runner.busy or bench._canvas_timer.isActive()):
+        while time.monotonic() < end and bench.busy:
             time.sleep(0.02)
             QApplication.processEvents()
         QApplication.processEvents()
@@ -93,59 +114,59 @@ def draw(brain: Path, folder: Path, scale: int) -> None:
     viewer.close()
 
 
-def scenes(bench: object) -> dict[str, object]:
+def scenes(bench: Workbench) -> dict[str, Callable[[], None]]:
     """What is done before each picture."""
+    section, brain, corrections = bench.section.controller, bench.brain.view, bench.corrections
 
-    def section() -> None:
-        bench.docks["section"].raise_()
-        ties = [t for t in bench.sections._ties() if t.kind == "suggested"]
-        for tie in ties[:2]:
-            bench.sections.choose(tie.anchor)
-            bench.sections.accept()
-        bench.sections.step(1)
-        tips = bench.sections.scene.shank.contacts.tip_distance_um
-        bench.sections.pick(float(sorted(tips)[len(tips) // 2]))
-        bench.sections.hover("tip", float(sorted(tips)[len(tips) // 2]))
+    def work() -> None:
+        """Two suggestions accepted, the next one in hand, the cursor on a contact."""
+        bench.bring("section")
+        for tie in [t for t in section._ties() if t.kind == "suggested"][:2]:
+            section.choose(tie.anchor)
+            section.accept()
+        section.step(1)
+        tips = sorted(section.scene.shank.contacts.tip_distance_um)
+        section.pick(float(tips[len(tips) // 2]))
+        section.hover("tip", float(tips[len(tips) // 2]))
 
     def suggestion() -> None:
-        ties = [t for t in bench.sections._ties() if t.kind == "suggested"]
+        section.hover("tip", None)
+        ties = [t for t in section._ties() if t.kind == "suggested"]
         if ties:
-            bench.sections.choose(ties[-1].anchor)
-        bench.sections.hover("tip", None)
+            section.choose(ties[-1].anchor)
 
-    def corrections() -> None:
-        bench.docks["corrections"].raise_()
-        bench.corrections.edit_button.setChecked(True)
+    def edit() -> None:
+        bench.bring("corrections")
+        corrections.view.edit_button.setChecked(True)
+        for share in (0.4, 0.6):
+            corrections._set("pair", section.scene.shank.track.stack_at(section.scene.end_um * share))
+
+    def units() -> None:
+        corrections.view.edit_button.setChecked(False)
+        for _ in range(2):
+            corrections._delete_pair(0)
+        bench.bring("brain")
+        brain.units_button.click()
 
     def surfaces() -> None:
-        bench.corrections.edit_button.setChecked(False)
-        bench.docks["brain"].raise_()
-        bench.show_surfaces()
+        brain.units_button.click()
+        bench.layers.show_surfaces()
 
     return {
-        "section": section,
+        "section": work,
         "suggestion": suggestion,
-        "brain": lambda: bench.docks["brain"].raise_(),
-        "channels": lambda: bench.docks["table"].raise_(),
-        "corrections": corrections,
+        "brain": lambda: bench.bring("brain"),
+        "channels": lambda: bench.bring("table"),
+        "corrections": edit,
+        "units": units,
         "surfaces": surfaces,
-        "plane": bench.lay_plane,
+        "plane": bench.layers.lay_plane,
     }
 
 
-def dialogs(bench: object) -> dict[str, object]:
+def dialogs(bench: Workbench) -> dict[str, QDialog]:
     """Dialogs, as pictures of their own."""
-    import dataclasses
-
-    from leadline.model.settings import Settings
-    from leadline_napari.views.lanes import LaneDialog
-    from leadline_napari.views.settings import SettingsDialog
-
-    values = dataclasses.asdict(Settings())
-    return {
-        "lanes": LaneDialog(bench.section, bench.sections.scene.lanes, bench.sections.lane_names, {}),
-        "settings": SettingsDialog(bench.brain, values, values),
-    }
+    return {"lanes": bench.section.choose_lanes(), "settings": bench.brain.choose_settings()}
 
 
 if __name__ == "__main__":

@@ -1,12 +1,15 @@
 """Canvas, runs, table and corrections without a screen."""
 
+from dataclasses import replace
+
 import numpy as np
 import pandas as pd
 import pytest
 
 from leadline.base.errors import LeadlineError
 from leadline.io.brainfile import read_brain
-from leadline.model.frames import ALL_CODES
+from leadline.io.points import read_track_edits
+from leadline.model.frames import ALL_CODES, direction
 from leadline.model.settings import Settings
 from leadline.pipeline.bench import Bench
 from leadline.pipeline.standing import Standing
@@ -28,8 +31,37 @@ def test_every_orientation_is_turned_to_coronal_sections_with_dorsal_up():
     for code in ALL_CODES:
         pose = canvas.pose_of(code)
         assert code[pose.order[0]] in "AP"
-        assert (code[pose.order[1]], pose.vertical) in (("S", "up"), ("I", "down"))
-        assert (code[pose.order[2]], pose.horizontal) in (("R", "right"), ("L", "left"))
+        assert (code[pose.order[1]], pose.flat[1]) in (("S", "up"), ("I", "down"))
+        assert (code[pose.order[2]], pose.flat[2]) in (("R", "right"), ("L", "left"))
+
+
+SCREEN = {"away": (0, 1), "towards": (0, -1), "up": (1, 1), "down": (1, -1), "right": (2, 1), "left": (2, -1)}
+
+
+def test_no_orientation_is_shown_as_its_mirror_image():
+    """Stored axes laid out on the screen as (away, up, right) must have the handedness of (A, S, R): both triples are
+    seen from behind the animal."""
+    for code in ALL_CODES:
+        anatomy = np.linalg.det([direction(letter) for letter in code]) / np.linalg.det(
+            [direction(letter) for letter in "ASR"]
+        )
+        pose = canvas.pose_of(code)
+        for order, way in ((pose.order, pose.flat), ((0, 1, 2), pose.solid)):
+            laid = np.zeros((3, 3))
+            for axis, word in zip(order, way, strict=True):
+                row, sign = SCREEN[word]
+                laid[axis, row] = sign
+            assert np.linalg.det(laid) == pytest.approx(anatomy), (code, order)
+
+
+def test_in_3d_the_brain_is_looked_at_from_behind_with_dorsal_up():
+    for code in ALL_CODES:
+        pose = canvas.pose_of(code)
+        to_atlas = np.array([direction(letter) for letter in code]).T
+        ap, dv, ml = to_atlas @ np.array(pose.view)
+        assert ap < 0 < dv  # towards the front and downwards
+        assert ml > 0
+        np.testing.assert_allclose(to_atlas @ np.array(pose.up), direction("S"))
 
 
 def test_regions_in_stack_space_are_those_that_the_registration_says(brain):
@@ -163,6 +195,44 @@ def test_a_track_drawn_by_hand_is_saved_refitted_and_forgotten(brain, at_once):
     assert redrawn[-1].length_um == pytest.approx(handles_length(points), rel=0.15)
     controller.forget()
     assert not brain.track_edits.exists()
+    assert told == []
+
+
+def test_an_entry_set_by_hand_is_where_the_track_begins_until_its_point_is_taken_away(brain, at_once):
+    controller, told, redrawn, _ = corrections(brain, at_once)
+    points = controller.begin()
+    inside = points[0] + 0.22 * (points[-1] - points[0])
+    controller.set_end("entry", inside)
+    (edit,) = controller.desk.session.edits.tracks
+    assert edit.entry_set
+    assert len(edit.points_um) == 7  # the point above it is left out
+    np.testing.assert_allclose(redrawn[-1].stack_um[0], inside, atol=5.0)
+    assert read_track_edits(brain.track_edits)["A", 0].entry_set
+    moved = np.array(edit.points_um)
+    moved[3] += [0.0, 30.0, 0.0]
+    controller.draw(moved)
+    assert controller.desk.session.edits.tracks[0].entry_set
+    assert Desk(brain).session.edits.tracks[0].entry_set  # after a restart
+    controller.draw(moved[1:])
+    assert not controller.desk.session.edits.tracks[0].entry_set
+    assert np.linalg.norm(redrawn[-1].stack_um[0] - inside) > 200.0  # at the brain's surface again
+    assert told == []
+
+
+def test_a_track_that_the_dye_does_not_show_can_be_drawn_from_nothing(brain, at_once):
+    found = read_results(brain)
+    told, redrawn = [], []
+    controller = CorrectionController(
+        Desk(brain), Kept(), at_once, told.append, redrawn.append, lambda p: None, lambda: None
+    )
+    controller.open(Bench(brain), replace(found, tracks={}))
+    controller.desk.act(SelectShank("A", 0))
+    assert controller.begin().shape == (0, 3)
+    line = found.tracks["A", 0].stack_um
+    controller.draw(line[:1])
+    assert redrawn == []
+    controller.draw(line[[0, -1]])
+    assert redrawn[-1].length_um == pytest.approx(found.tracks["A", 0].length_um, abs=200.0)
     assert told == []
 
 

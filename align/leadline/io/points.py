@@ -9,6 +9,7 @@ import numpy as np
 from leadline.base.errors import LeadlineError
 from leadline.io.tables import csv_rows, csv_text, numbers, read_csv
 from leadline.model.frames import ATLAS_COLUMNS, STACK_COLUMNS
+from leadline.model.track import HandTrack
 
 if TYPE_CHECKING:
     from collections.abc import Mapping
@@ -19,6 +20,7 @@ if TYPE_CHECKING:
     from leadline.base.arrays import FloatArray
 
 TRACK_EDIT_COLUMNS = ("penetration", "shank", *STACK_COLUMNS, "order")
+ENTRY = "entry"
 PAIR_COLUMNS = (*STACK_COLUMNS, *ATLAS_COLUMNS)
 
 
@@ -49,42 +51,46 @@ def read_points(path: Path, columns: tuple[str, ...]) -> tuple[pd.DataFrame, Flo
     return table, numbers(table, columns, path)
 
 
-def track_edits_text(edits: Mapping[tuple[str, int], FloatArray]) -> str:
-    """The content of ``track_edits.csv``: tracks drawn by hand, (penetration, shank) -> ``(n, 3)`` stack um."""
+def track_edits_text(edits: Mapping[tuple[str, int], HandTrack]) -> str:
+    """The content of ``track_edits.csv``: tracks drawn by hand, by (penetration, shank). The first point of a track
+    whose entry was set by hand bears the mark 'entry'."""
     rows = [
-        (penetration, shank, *(float(c) for c in point), order)
-        for (penetration, shank), points in edits.items()
-        for order, point in enumerate(points)
+        (penetration, shank, *(float(c) for c in point), order, ENTRY if drawn.entry_set and not order else "")
+        for (penetration, shank), drawn in edits.items()
+        for order, point in enumerate(drawn.points_um)
     ]
-    return csv_text(TRACK_EDIT_COLUMNS, rows)
+    return csv_text((*TRACK_EDIT_COLUMNS, "mark"), rows)
 
 
-def read_track_edits(path: Path) -> dict[tuple[str, int], FloatArray]:
-    """Tracks drawn by hand, from entry to tip; none where there is no such file.
+def read_track_edits(path: Path) -> dict[tuple[str, int], HandTrack]:
+    """Tracks drawn by hand, from entry to tip; none where there is no such file. The column ``mark`` may be missing.
 
-    Raises LeadlineError when a column is missing, a cell is no number, or a track has fewer than two points.
+    Raises LeadlineError when another column is missing, a cell is no number, or a track has fewer than two points.
     """
     if not path.is_file():
         return {}
-    found: dict[tuple[str, int], list[tuple[int, list[float]]]] = {}
+    found: dict[tuple[str, int], list[tuple[int, list[float], str]]] = {}
     for number, row in enumerate(csv_rows(path, TRACK_EDIT_COLUMNS, what="hand-drawn tracks"), 2):
         try:
             point = [float(row[c]) for c in STACK_COLUMNS]
             key = (row["penetration"], int(row["shank"]))
-            found.setdefault(key, []).append((int(row["order"]), point))
+            found.setdefault(key, []).append((int(row["order"]), point, row.get("mark") or ""))
         except (ValueError, TypeError) as error:
             raise LeadlineError(
                 f"is no point of a track ({error})", where=f"{path}, line {number}", mend="Correct or remove that line"
             ) from error
-    tracks = {key: np.array([point for _, point in sorted(rows)]) for key, rows in found.items()}
-    for (penetration, shank), points in tracks.items():
-        if len(points) < 2 or not np.isfinite(points).all():
+    for (penetration, shank), rows in found.items():
+        if len(rows) < 2 or not np.isfinite([point for _, point, _ in rows]).all():
             raise LeadlineError(
                 f"the track of {penetration}, shank {shank} needs at least two finite points",
                 where=str(path),
                 mend="Add points or remove the track",
             )
-    return tracks
+    return {key: _drawn(sorted(rows)) for key, rows in found.items()}
+
+
+def _drawn(rows: list[tuple[int, list[float], str]]) -> HandTrack:
+    return HandTrack(np.array([point for _, point, _ in rows]), rows[0][2] == ENTRY)
 
 
 def pairs_text(stack_um: FloatArray, atlas_um: FloatArray) -> str:

@@ -1,4 +1,4 @@
-"""What an anchor in the hand would do, quickly: draws shifted to it, regions looked up. The exact answer follows."""
+"""What an anchor in the hand would do, quickly: draws bound to it, regions looked up. The exact answer follows."""
 
 from __future__ import annotations
 
@@ -12,13 +12,13 @@ from leadline.base.arrays import Float32Array, FloatArray, IntArray, frozen, fro
 from leadline.base.errors import LeadlineError
 
 if TYPE_CHECKING:
-    from collections.abc import Sequence
+    from collections.abc import Iterable
 
     from leadline.model.anchor import Anchor
-    from leadline.model.depth_map import DepthMap
     from leadline.model.posterior import DepthPosterior
 
 MIN_STEP_UM = 1e-3
+CEILING = 0.95  # a release never takes more than this share of the precision for the anchor's doing
 
 
 @dataclass(frozen=True, eq=False)
@@ -72,6 +72,27 @@ class Odds:
     p_region: Float32Array
 
 
+def believed(posterior: DepthPosterior, table: LabelTable) -> LabelTable:
+    """The track as each draw sees it: copy s of the result holds the structures that draw s believes in.
+
+    Where draw s has a row, it says which structure lies at that depth, displaced borders and all; that is kept, so
+    that rows moved along it meet the borders where the draw has them. Above and below its rows copy s mod K of
+    ``table`` goes on. Without labels in ``posterior`` the table itself is returned.
+    """
+    if posterior.label_id is None:
+        return table
+    draws, rows = posterior.depth_um.shape
+    grid, copies = table.depth_um, table.lateral_label_id
+    seen = np.asarray(copies)[np.arange(draws) % len(copies)]
+    rising, labels = posterior.depth_um[:, ::-1], posterior.label_id[:, ::-1]
+    middle = (rising[:, 1:] + rising[:, :-1]) / 2
+    reach = np.diff(rising[:, [0, -1]], axis=1)[:, 0] / max(rows - 1, 1) / 2
+    for s in range(draws):
+        low, high = np.searchsorted(grid, [rising[s, 0] - reach[s], rising[s, -1] + reach[s]])
+        seen[s, low:high] = labels[s, np.searchsorted(middle[s], grid[low:high])]
+    return LabelTable(grid, table.label_id, seen)
+
+
 def preview_odds(median_um: FloatArray, draws_um: FloatArray, table: LabelTable) -> Odds:
     """Odds of rows whose depth is ``median_um`` (R,), with draws ``(S, R)``; draw s is looked up on copy s mod K."""
     draws, rows = draws_um.shape
@@ -94,40 +115,44 @@ def odds_of(region_id: IntArray, region_draws: IntArray) -> Odds:
     return Odds(ids, share, region_id, np.asarray((region_draws == region_id).mean(axis=0), np.float32))
 
 
-def shifted(
-    posterior: DepthPosterior,
-    before: Sequence[Anchor],
-    after: Sequence[Anchor],
-    by_hand: DepthMap | None = None,
-    *,
-    median_um: FloatArray | None = None,
-) -> DepthPosterior:
-    """The draws of ``posterior``, in which the anchors ``before`` counted, moved so that their median meets ``after``.
+def updated(posterior: DepthPosterior, before: Iterable[Anchor], after: Iterable[Anchor]) -> DepthPosterior:
+    """The draws of ``posterior``, in which the anchors ``before`` counted, as they would be under ``after``.
 
-    Anchors that stay hold their place; at one that was placed or moved the median goes through it; between them the
-    shift is linear in tip distance and beyond the outermost it is constant (slope 1, as for anchors by hand). Taking
-    one away moves nothing: only the exact posterior knows where the recording pulls then. With ``by_hand`` the median
-    becomes that map instead. The spread stays as it was. ``median_um`` : the posterior's own, where it is known.
+    Every anchor that is gone releases the draws and every one that is new binds them, one after the other, by the
+    deterministic ensemble update (Whitaker & Hamill 2002, Mon. Weather Rev. 130, 1913); an anchor is released by the
+    same formula with a negative variance. Exact where the draws are Gaussian; what the recording would say where it
+    is pulled far from where it was is left to the exact answer.
     """
-    tip = posterior.tip_distance_um
-    median = posterior.median_um if median_um is None else median_um
-    if by_hand is not None:
-        return _moved(posterior, by_hand(tip) - median)
-    if not after or set(after) <= set(before):
+    old, new = set(before), set(after)
+    if old == new:
         return posterior
-    held = sorted(after, key=lambda a: a.tip_distance_um)
-    at = np.array([a.tip_distance_um for a in held])
-    kept = set(before)
-    there = np.interp(at, tip, median)
-    push = np.array([0.0 if a in kept else a.track_depth_um for a in held])
-    shift = np.where([a in kept for a in held], 0.0, push - there)
-    return _moved(posterior, np.interp(tip, at, shift))
+    draws = np.array(posterior.depth_um)
+    for anchor in sorted(old - new):
+        _weigh(draws, posterior.tip_distance_um, anchor, -(anchor.sd_um**2))
+    for anchor in sorted(new - old):
+        _weigh(draws, posterior.tip_distance_um, anchor, anchor.sd_um**2)
+    if (draws[:, 1:] >= draws[:, :-1]).any():
+        draws = -np.sort(-draws, axis=1) - MIN_STEP_UM * np.arange(draws.shape[1])
+    return replace(posterior, depth_um=draws, label_id=None)
 
 
-def _moved(posterior: DepthPosterior, shift_um: FloatArray) -> DepthPosterior:
-    """Draws shifted row by row; where a hard pull would fold one, its rows are spread apart just enough."""
-    depth = posterior.depth_um + shift_um
-    if (np.diff(depth, axis=1) >= 0).any():
-        step = MIN_STEP_UM * np.arange(depth.shape[1])
-        depth = np.minimum.accumulate(depth + step, axis=1) - step
-    return replace(posterior, depth_um=depth)
+def _weigh(draws: FloatArray, tip_um: FloatArray, anchor: Anchor, variance: float) -> None:
+    """Take one anchor into ``draws`` (S, R), in place (``variance`` > 0), or let go of it (< 0)."""
+    here = _at(draws, tip_um, anchor.tip_distance_um)
+    centre = float(here.mean())
+    away = here - centre
+    own = float(away @ away) / len(draws)
+    if variance < 0:
+        own = min(own, CEILING * -variance)
+    gain = (away @ draws) / len(draws) / (own + variance)
+    damp = 1.0 / (1.0 + np.sqrt(variance / (own + variance)))
+    draws += ((anchor.track_depth_um - centre) - damp * away)[:, None] * gain
+
+
+def _at(draws: FloatArray, tip_um: FloatArray, at_um: float) -> FloatArray:
+    """Depth of each draw at one tip distance; 1 to 1 beyond the rows."""
+    inside = float(np.clip(at_um, tip_um[0], tip_um[-1]))
+    right = int(np.clip(np.searchsorted(tip_um, inside), 1, tip_um.size - 1)) if tip_um.size > 1 else 0
+    left = max(right - 1, 0)
+    share = (inside - tip_um[left]) / (tip_um[right] - tip_um[left]) if right else 0.0
+    return np.asarray((1 - share) * draws[:, left] + share * draws[:, right] - (at_um - inside), np.float64)

@@ -43,6 +43,18 @@ class Trace:
 
 
 @dataclass(frozen=True, slots=True, eq=False)
+class HandTrack:
+    """A track as a person drew it: points ``(n >= 2, 3)`` in stack um. ``entry_set`` : the first point is where the
+    shank entered, by the person's word, and not by where the brain surface is found."""
+
+    points_um: FloatArray
+    entry_set: bool = False
+
+    def __post_init__(self) -> None:
+        object.__setattr__(self, "points_um", frozen_points(self.points_um, "HandTrack.points_um", min_rows=2))
+
+
+@dataclass(frozen=True, slots=True, eq=False)
 class Track:
     """One shank's path, from entry to tip, in stack and in atlas um.
 

@@ -9,7 +9,7 @@ import numpy as np
 
 from leadline.base.atomic import write_text
 from leadline.base.errors import LeadlineError
-from leadline.model.track import Track
+from leadline.model.track import HandTrack, Track
 from leadline.pipeline import products
 
 if TYPE_CHECKING:
@@ -93,17 +93,19 @@ def _hand_tracks(
     from leadline.io.points import read_hand_points, read_track_edits
     from leadline.tracing.fit import from_points
 
-    points = {
-        (p.name, shank): rows
+    drawn = {
+        (p.name, shank): HandTrack(rows)
         for p in brain.penetrations
         if p.points is not None
         for shank, rows in read_hand_points(p.points).items()
     }
     names = {p.name for p in brain.penetrations}
-    points |= {key: rows for key, rows in read_track_edits(brain.track_edits).items() if key[0] in names}
+    drawn |= {key: hand for key, hand in read_track_edits(brain.track_edits).items() if key[0] in names}
     return {
-        (name, shank): _track(name, shank, from_points(rows, background, dye), transform, "points")
-        for (name, shank), rows in points.items()
+        (name, shank): _track(
+            name, shank, from_points(hand.points_um, background, dye, entry_set=hand.entry_set), transform, "points"
+        )
+        for (name, shank), hand in drawn.items()
     }
 
 

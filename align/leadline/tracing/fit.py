@@ -20,7 +20,9 @@ BEFORE_UM = 1500.0
 MERGE_UM = 1.0
 
 
-def from_points(points_um: FloatArray, background: Volume, dye: Volume | None = None) -> Trace:
+def from_points(
+    points_um: FloatArray, background: Volume, dye: Volume | None = None, *, entry_set: bool = False
+) -> Trace:
     """Make a track of points that a person has traced, instead of tracing the dye.
 
     The points are put in order along their main direction (a shank is nearly straight), turned so that the one nearer
@@ -32,6 +34,8 @@ def from_points(points_um: FloatArray, background: Volume, dye: Volume | None = 
     points_um : (n >= 2, 3) stack um, any order.
     background : autofluorescence.
     dye : where given, the width and the contrast of the dye along the curve are measured; the curve stays.
+    entry_set : the first point is the entry, by the person's word: the order of the two ends is theirs, and the curve
+        begins there, wherever the surface is found.
 
     Returns
     -------
@@ -44,6 +48,11 @@ def from_points(points_um: FloatArray, background: Volume, dye: Volume | None = 
     """
     points = _ordered(frozen_points(points_um, "points", min_rows=2))
     _check_inside(points, background)
+    if entry_set:
+        first = np.asarray(points_um, float)[0]
+        if np.linalg.norm(points[-1] - first) < np.linalg.norm(points[0] - first):
+            points = points[::-1]
+        return _traced(_joined(points), HAND_SD_UM, dye)
     tissue = find_tissue(background)
     depth = tissue.depth_at(points)
     if depth[0] > depth[-1]:
@@ -63,8 +72,12 @@ def from_points(points_um: FloatArray, background: Volume, dye: Volume | None = 
     stop = float(s[-1])
     at = np.append(np.arange(min(enter.at_um, stop - 2 * STEP_UM), stop - STEP_UM / 2, STEP_UM), stop)
     line = np.column_stack([np.interp(at, s[order], nodes[order, k]) for k in range(3)])
+    return _traced(line, enter.sd_um, dye)
+
+
+def _traced(line: FloatArray, entry_sd_um: float, dye: Volume | None) -> Trace:
     radius, contrast, coverage = _dye_along(line, dye) if dye is not None else (np.nan, np.nan, 1.0)
-    return Trace(line, np.full(len(line), radius), enter.sd_um, HAND_SD_UM, contrast, coverage)
+    return Trace(line, np.full(len(line), radius), entry_sd_um, HAND_SD_UM, contrast, coverage)
 
 
 def _ordered(points: FloatArray) -> FloatArray:

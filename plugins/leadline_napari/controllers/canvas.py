@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from leadline.base.errors import LeadlineError
-from leadline.model.frames import axes_matrix
+from leadline.model.frames import axes_matrix, direction
 from leadline_napari.states import LayerSpec, Pose
 from leadline_napari.style import ORANGE, PINK, SKY, VERMILION
 
@@ -32,6 +32,7 @@ NAMES = {
     "contacts": "Contacts",
     "hull": "Brain hull",
     "plane": "Plane along track",
+    "units": "Units",
 }
 OUTLINE_GRAIN_UM = 25.0
 TRACK_STEP_UM = 25.0
@@ -47,14 +48,27 @@ CONTACT_COLUMNS = (
 
 
 def pose_of(code: str) -> Pose:
-    """Coronal sections, dorsal up and the animal's right to the right, whatever the stored order."""
+    """Coronal sections, dorsal up and the animal's right to the right, whatever the stored order: looked at from
+    behind. In 3-D it is looked at from behind, from the left and from above, and never as a mirror image."""
     place = {letter: axis for axis, letter in enumerate(code)}
     ap = place.get("A", place.get("P"))
     dv = place.get("S", place.get("I"))
     ml = place.get("R", place.get("L"))
     if ap is None or dv is None or ml is None:
         raise LeadlineError(f"orientation {code!r} lacks an axis", where="stack")
-    return Pose((ap, dv, ml), "up" if code[dv] == "S" else "down", "right" if code[ml] == "R" else "left")
+    flat = ("away" if code[ap] == "A" else "towards", "up" if code[dv] == "S" else "down")
+    to_stored = axes_matrix(code).T
+    mirrored = (
+        np.linalg.det(to_stored) < 0
+    )  # in the order in which the canvas lays axes out, from the last to the first
+    view = to_stored @ (0.75 * direction("A") + 0.5 * direction("R") + 0.45 * direction("I"))
+    return Pose(
+        (ap, dv, ml),
+        (*flat, "right" if code[ml] == "R" else "left"),
+        ("away" if mirrored else "towards", "down", "right"),
+        tuple(view.tolist()),
+        tuple((to_stored @ direction("S")).tolist()),
+    )
 
 
 def stack_specs(bench: Bench) -> list[LayerSpec]:

@@ -53,6 +53,16 @@ def ordered(points_um: FloatArray) -> FloatArray:
     return points[order if np.argmin(order) < len(order) / 2 else order[::-1]]
 
 
+def ended(points_um: FloatArray, which: str, at_um: FloatArray) -> FloatArray:
+    """A track whose entry ('entry') or tip ('end') is at a place: the outermost point goes there, and others that lie
+    beyond it along the track are left out."""
+    points = np.array(points_um if which == "entry" else points_um[::-1])
+    way = points[-1] - points[0]
+    within = (points[1:-1] - at_um) @ way > 0
+    points = np.vstack([at_um, points[1:-1][within], points[-1]])
+    return points if which == "entry" else points[::-1]
+
+
 class CorrectionController:
     """Wires the corrections dock: the track in hand, and pairs of places in stack and atlas.
 
@@ -87,35 +97,42 @@ class CorrectionController:
         return self.desk.session.selection.penetration, self.desk.session.selection.shank
 
     def begin(self) -> FloatArray | None:
-        """Begin to edit the track in hand; its points, or None where there is no track."""
-        points = self._points(self.key)
-        if points is None:
-            self.tell("There is no track to correct here: trace the dye first, or draw one with 'points' in brain.toml")
+        """Begin to edit the track in hand; its points, none yet where the dye was not found, None with no brain."""
+        if self.results is None or self.results.registration is None or not self.key[0]:
+            self.tell("Tracks can be drawn once the brain is registered: run 'Register' in the Brain dock")
             return None
         self.editing = self.key
         self._show()
-        return points
+        points = self._points(self.key)
+        return np.zeros((0, 3)) if points is None else points
 
     def end(self) -> None:
         """Stop editing."""
         self.editing = None
         self._show()
 
-    def draw(self, points_um: FloatArray) -> None:
-        """The hand's points are now these; saved, and refitted off the screen."""
+    def draw(self, points_um: FloatArray, *, entry_set: bool = False) -> None:
+        """The hand's points are now these; saved, and refitted off the screen. An entry that was set by hand stays so
+        until its point is taken away or another comes before it."""
         if self.editing is None or len(points_um) < 2:
             return
-        edit = TrackEdit(*self.editing, tuple(_point(p) for p in ordered(points_um)))
+        points = tuple(_point(p) for p in ordered(points_um))
+        old = self.desk.session.edits.track_of(*self.editing)
+        kept = (
+            old is not None and old.entry_set and (len(points) == len(old.points_um) or points[0] == old.points_um[0])
+        )
+        edit = TrackEdit(*self.editing, points, entry_set or kept)
         self._hear(lambda: self.desk.act(DrawTrack(edit)))
 
     def set_end(self, which: str, at_um: FloatArray) -> None:
-        """Put the entry ('entry') or the tip ('end') of the track being edited at a place."""
+        """Put the entry ('entry') or the tip ('end') of the track being edited at a place, and leave out points that
+        would lie beyond it."""
         points = self._points(self.editing)
         if points is None:
             self.tell("Begin to edit a track first")
             return
-        points[0 if which == "entry" else -1] = at_um
-        self.draw(points)
+        points = ended(points, which, np.asarray(at_um, float))
+        self.draw(points, entry_set=which == "entry")
         self.edited(ordered(points).round(2))
 
     def snap(self) -> None:
@@ -247,12 +264,14 @@ class CorrectionController:
     def _show(self) -> None:
         edits = self.desk.session.edits
         name, shank = self.key
+        drawn = edits.track_of(name, shank)
         self.view.show_state(
             CorrectionState(
                 title=f"{name}, shank {shank}" if name else "",
                 editing=self.editing is not None and self.editing == self.key,
-                by_hand=edits.track_of(name, shank) is not None,
-                can_edit=self.results is not None and self.key in self.results.tracks,
+                by_hand=drawn is not None,
+                entry_set=drawn is not None and drawn.entry_set,
+                can_edit=bool(name) and self.results is not None and self.results.registration is not None,
                 pairs=tuple(_words(p) for p in self.draft),
                 errors=self.errors,
                 in_force=bool(edits.pairs),
@@ -265,7 +284,7 @@ class CorrectionController:
 def refit(bench: Bench, registration: Registration, edit: TrackEdit) -> Track:
     """The track through the hand's points, as tracing would fit it, on a coarse background; no dye is looked at."""
     background = bench.reduced(bench.background, REFIT_UM)
-    trace = from_points(np.array(edit.points_um), background)
+    trace = from_points(np.array(edit.points_um), background, entry_set=edit.entry_set)
     atlas_um = registration.stack_to_atlas(trace.points_um)
     ends = (trace.entry_sd_um, trace.end_sd_um)
     return Track(edit.penetration, edit.shank, trace.points_um, atlas_um, trace.radius_um, *ends, "points")

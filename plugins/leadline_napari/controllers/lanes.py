@@ -19,7 +19,7 @@ if TYPE_CHECKING:
     from leadline.model.spectra import Spectra
 
 UNITS = (
-    ("_ua_per_mm3", "uA/mm³"), ("_per_100um", "per 100 um"), ("_uv2_per_hz", "uV²/Hz"), ("_db", "dB"), ("_hz", "Hz"),
+    ("_ua_per_mm3", "uA/mm³"), ("_per_100um", "/100 um"), ("_uv2_per_hz", "uV²/Hz"), ("_db", "dB"), ("_hz", "Hz"),
     ("_uv", "uV"), ("_rad", "rad"), ("_s", "s"),
 )  # fmt: skip
 TITLES = {

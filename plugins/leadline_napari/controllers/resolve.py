@@ -2,13 +2,11 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from itertools import pairwise
 from typing import TYPE_CHECKING
 
 import numpy as np
 
-from leadline.locating.preview import Odds, odds_of, preview_odds
 from leadline_napari.controllers.scene import colour_of
 from leadline_napari.session import key_of
 from leadline_napari.states import Band, InHand, Readout, Ribbon, Sites, Tie
@@ -19,59 +17,15 @@ if TYPE_CHECKING:
     from leadline.base.arrays import AnyArray, FloatArray, IntArray
     from leadline.model.anchor import Anchor, Suggestion
     from leadline.model.atlas import Structures
-    from leadline.model.posterior import DepthPosterior
-    from leadline.pipeline.exact import ShankAnswer, ShankGround
+    from leadline.pipeline.exact import ShankGround
+    from leadline_napari.controllers.live import Live
     from leadline_napari.controllers.scene import Scene
     from leadline_napari.session import Session
-    from leadline_napari.states import Lane
+    from leadline_napari.states import Lane, Stratum
 
 SEGMENT_UM = 100.0
 STRETCH_LOW, STRETCH_HIGH = 0.8, 1.25
 NEAR_UM = 300.0
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class Live:
-    """The answer on the screen. ``anchors`` : those counted in it; ``contact_region`` : (n,) structure of every
-    contact; ``odds`` by row of the posterior; ``exact`` : not a preview."""
-
-    posterior: DepthPosterior
-    median_um: FloatArray
-    sd_um: FloatArray
-    odds: Odds
-    contact_region: IntArray
-    anchors: tuple[Anchor, ...]
-    exact: bool
-
-    def depth_at(self, tip_um: float) -> float:
-        """Track depth of a tip distance; slope 1 beyond the rows."""
-        tip = self.posterior.tip_distance_um
-        inside = min(max(tip_um, float(tip[0])), float(tip[-1]))
-        return float(np.interp(inside, tip, self.median_um)) - (tip_um - inside)
-
-    def tip_at(self, depth_um: float) -> float:
-        """Tip distance of a track depth; slope 1 beyond the rows."""
-        tip, median = self.posterior.tip_distance_um, self.median_um
-        inside = min(max(depth_um, float(median[-1])), float(median[0]))
-        return float(np.interp(inside, median[::-1], tip[::-1])) - (depth_um - inside)
-
-
-def live_of(answer: ShankAnswer, shank: ShankGround, anchors: tuple[Anchor, ...]) -> Live:
-    """The exact answer, for the screen."""
-    located, posterior = answer.located, answer.posterior
-    _, first = np.unique(shank.contacts.tip_distance_um, return_index=True)
-    odds = odds_of(located.region_id[first], located.region_draws[:, first])
-    return Live(
-        posterior, posterior.median_um, posterior.sd_um, odds, located.region_id, anchors, exact=True
-    )  # fmt: skip
-
-
-def live_preview(posterior: DepthPosterior, shank: ShankGround, anchors: tuple[Anchor, ...], sd_um: FloatArray) -> Live:
-    """A quick answer from shifted draws."""
-    median = posterior.median_um
-    odds = preview_odds(median, posterior.depth_um, shank.table)
-    rows = np.searchsorted(posterior.tip_distance_um, shank.contacts.tip_distance_um)
-    return Live(posterior, median, sd_um, odds, odds.region_id[rows], anchors, exact=False)
 
 
 def band_of(live: Live, ties: tuple[Tie, ...]) -> Band:
@@ -81,7 +35,8 @@ def band_of(live: Live, ties: tuple[Tie, ...]) -> Band:
     at = np.linspace(float(tip[0]), float(tip[-1]), count)
     depth = np.interp(at, tip, live.median_um)
     stretch = -np.diff(depth) / np.diff(at)
-    return Band(at, depth, np.interp(at, tip, live.sd_um), stretch, ties, stretch_words(at, stretch))
+    words = stretch_words(at, stretch) or asked_words(live.anchors)
+    return Band(at, depth, np.interp(at, tip, live.sd_um), stretch, ties, words)
 
 
 def stretch_words(tip_um: FloatArray, stretch: FloatArray) -> str:
@@ -91,9 +46,23 @@ def stretch_words(tip_um: FloatArray, stretch: FloatArray) -> str:
         return ""
     worst = int(np.argmax(np.where(odd, np.abs(np.log(np.maximum(stretch, 1e-3))), -1)))
     return (
-        f"Stretch {stretch[worst]:.2f} at {tip_um[worst]:.0f}-{tip_um[worst + 1]:.0f} um from the tip: "
-        f"tissue seldom stretches beyond {STRETCH_LOW:g}-{STRETCH_HIGH:g}"
+        f"Stretch {stretch[worst]:.2f} at {tip_um[worst]:.0f}-{tip_um[worst + 1]:.0f} um from the tip; "
+        f"tissue seldom goes beyond {STRETCH_LOW:g}-{STRETCH_HIGH:g}"
     )
+
+
+def asked_words(anchors: Sequence[Anchor]) -> str:
+    """A warning where two neighbouring anchors ask for more stretch than tissue shows, their own doubt allowed for."""
+    ordered = sorted(anchors, key=lambda a: a.tip_distance_um)
+    for low, high in pairwise(ordered):
+        along, apart = high.tip_distance_um - low.tip_distance_um, low.track_depth_um - high.track_depth_um
+        beyond = max(STRETCH_LOW * along - apart, apart - STRETCH_HIGH * along)
+        if beyond > np.hypot(low.sd_um, high.sd_um):
+            return (
+                f"Anchors at {low.tip_distance_um:.0f} and {high.tip_distance_um:.0f} um ask for a stretch of "
+                f"{apart / along:.2f}; tissue seldom goes beyond {STRETCH_LOW:g}-{STRETCH_HIGH:g}"
+            )
+    return ""
 
 
 def ties_of(
@@ -101,20 +70,21 @@ def ties_of(
     suggestions: Iterable[Suggestion],
     second: Iterable[Anchor],
     dragged: tuple[Anchor, Anchor] | None = None,
+    runs: Sequence[Stratum] = (),
 ) -> tuple[Tie, ...]:
     """Anchors of the shank in hand, open suggestions and a second reader's, each as a tie. ``dragged`` : an anchor of
-    the session and what stands in its place while it is dragged."""
+    the session and what stands in its place while it is dragged. ``runs`` : strata that give labels their acronyms."""
     selection = session.selection
     here = (selection.penetration, selection.shank)
     ties = []
     for anchor in session.edits.anchors_of(*here):
         kind = "fixed" if anchor in session.fixed else anchor.source
         shown = dragged[1] if dragged and anchor == dragged[0] else anchor
-        ties.append(Tie(shown, kind, tie_label(shown), held=anchor == selection.anchor or shown is not anchor))
+        ties.append(Tie(shown, kind, tie_label(shown, runs), held=anchor == selection.anchor or shown is not anchor))
     for suggestion in open_suggestions(session, suggestions):
         a = suggestion.anchor
-        ties.append(Tie(a, "suggested", tie_label(a), held=a == selection.anchor, evidence=words_for(suggestion)))
-    ties += [Tie(a, "second", tie_label(a)) for a in second if (a.penetration, a.shank) == here]
+        ties.append(Tie(a, "suggested", tie_label(a, runs), held=a == selection.anchor, evidence=words_for(suggestion)))
+    ties += [Tie(a, "second", tie_label(a, runs)) for a in second if (a.penetration, a.shank) == here]
     return tuple(ties)
 
 
@@ -133,9 +103,14 @@ def words_for(suggestion: Suggestion) -> str:
     return f"For: {suggestion.support or 'nothing was written down'}{against}"
 
 
-def tie_label(anchor: Anchor) -> str:
-    """What is written at a tie."""
-    return anchor.landmark or anchor.note or f"{anchor.track_depth_um:.0f} um"
+def tie_label(anchor: Anchor, runs: Sequence[Stratum] = ()) -> str:
+    """What is written at a tie: its landmark, a structure's name in it as its acronym."""
+    words = anchor.landmark or anchor.note or f"{anchor.track_depth_um:.0f} um"
+    named = [run for run in runs if run.name and words.startswith(run.name)]
+    if not named:
+        return words
+    run = max(named, key=lambda r: len(r.name))
+    return f"{run.acronym}{words[len(run.name) :]}"
 
 
 def in_hand_of(session: Session, ties: Sequence[Tie], scene: Scene, suggestions: Iterable[Suggestion]) -> InHand | None:

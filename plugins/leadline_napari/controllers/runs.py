@@ -88,6 +88,8 @@ class RunController:
     def _seen(self, stages: object) -> None:
         assert isinstance(stages, tuple)
         self.stages = stages
+        if not self.messages:  # a brain that was run before: what its stages had to say
+            self.messages = tuple(f"{step.step}: {words}" for step in self.stages for words in step.warnings)
         self._show()
 
     def _show(self) -> None:

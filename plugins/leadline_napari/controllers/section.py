@@ -3,28 +3,22 @@
 from __future__ import annotations
 
 from dataclasses import replace
-from itertools import pairwise
 from typing import TYPE_CHECKING, Protocol
 
-from leadline.anchoring.manual import manual_map
 from leadline.base.errors import LeadlineError
-from leadline.locating.preview import shifted
 from leadline.model.anchor import DEFAULT_SD_UM, Anchor
-from leadline.pipeline.exact import ShankAnswer, answer
+from leadline_napari.controllers.answers import Answers
 from leadline_napari.controllers.lanes import SHOWN_FIRST, chosen, with_range
+from leadline_napari.controllers.placing import moved, nearest_row, onto_border
 from leadline_napari.controllers.resolve import (
-    Live,
     band_of,
     in_hand_of,
-    live_of,
-    live_preview,
     open_suggestions,
     readout_of,
     ribbon_of,
     sites_of,
     ties_of,
 )
-from leadline_napari.controllers.scene import Scene, make_scene
 from leadline_napari.session import (
     AcceptSuggestion,
     AddAnchor,
@@ -44,12 +38,11 @@ if TYPE_CHECKING:
 
     from leadline.pipeline.bench import Bench
     from leadline_napari.controllers.desk import Desk, Runner
+    from leadline_napari.controllers.live import Live
+    from leadline_napari.controllers.scene import Scene
     from leadline_napari.results import Results
     from leadline_napari.session import Action, Session
     from leadline_napari.states import Lane, Readout, Ribbon, Tie
-
-GAP_UM = 1.0
-SNAP_UM = 25.0
 
 
 class View(Protocol):
@@ -67,22 +60,31 @@ class SectionController:
     ``tell`` gets the words."""
 
     def __init__(self, desk: Desk, view: View, runner: Runner, tell: Callable[[str], None]) -> None:
-        self.desk, self.view, self.runner, self.tell = desk, view, runner, tell
+        self.desk, self.view, self.tell = desk, view, tell
+        self.answers = Answers(runner, tell)
+        self.answers.changed = self._show
+        self.answers.busy = lambda: self.drag is not None
         self.bench: Bench | None = None
         self.results: Results | None = None
-        self.scene: Scene | None = None
-        self.live: Live | None = None
-        self.base: Live | None = None
         self.second: tuple[Anchor, ...] = ()
-        self.drag: tuple[Anchor, Anchor, str] | None = None
+        self.drag: tuple[Anchor, Anchor] | None = None
         self.lane_names: tuple[str, ...] = SHOWN_FIRST
         self.ranges: dict[str, tuple[float, float]] = {}
         self.tissue = 0
-        self.answered: Callable[[], None] = lambda: None
         self._lanes_of: tuple[object, tuple[Lane, ...]] | None = None
         self._ribbon: tuple[Live, Ribbon] | None = None
         self.state = SectionState()
         desk.listen(self._session_changed)
+
+    @property
+    def scene(self) -> Scene | None:
+        """The shank in hand, laid out."""
+        return self.answers.scene
+
+    @property
+    def live(self) -> Live | None:
+        """The answer on the screen."""
+        return self.answers.live
 
     # -- what is laid out ---------------------------------------------------------------------------------------
 
@@ -91,7 +93,7 @@ class SectionController:
         self.bench, self.results = bench, results
         selection = self.desk.session.selection
         keys = sorted(results.tracks)
-        if keys and (selection.penetration, selection.shank) not in keys:
+        if keys and not selection.penetration:
             self.desk.act(SelectShank(*keys[0]))
         else:
             self._lay_out()
@@ -101,68 +103,11 @@ class SectionController:
         self._act(SelectShank(penetration, shank))
 
     def _lay_out(self) -> None:
-        selection = self.desk.session.selection
-        bench, results = self.bench, self.results
-        self.scene = self.live = self.base = self.drag = None
+        self.drag = None
+        self.answers.clear()
         self._show()
-        if bench is None or results is None or not selection.penetration:
-            return
-        self.runner.submit(
-            "scene",
-            lambda: make_scene(bench, results, selection.penetration, selection.shank),
-            self._scene_ready,
-            self.tell,
-        )
-
-    def _scene_ready(self, scene: object) -> None:
-        assert scene is None or isinstance(scene, Scene)
-        self.scene = scene
-        if scene is None:
-            self._show()
-            return
-        results = self.results
-        key = (scene.shank.track.penetration, scene.shank.track.shank)
-        kept = results.posteriors.get(key) if results else None
-        rows = scene.shank.evidence.tip_distance_um
-        if kept is not None and kept.tip_distance_um.shape == rows.shape and (kept.tip_distance_um == rows).all():
-            self.live = self.base = live_preview(kept, scene.shank, self._anchors(), kept.sd_um)
-        self._show()
-        self._ask_exactly()
-
-    # -- the answer ---------------------------------------------------------------------------------------------
-
-    def _ask_exactly(self) -> None:
-        bench, scene = self.bench, self.scene
-        if bench is None or scene is None:
-            return
-        anchors = self.desk.session.edits.anchors
-        self.runner.submit(
-            "answer",
-            lambda: answer(bench, scene.shanks, anchors),
-            lambda found: self._answered(scene, anchors, found),
-            self.tell,
-        )
-
-    def _answered(self, scene: Scene, anchors: tuple[Anchor, ...], found: object) -> None:
-        if scene is not self.scene:
-            return
-        assert isinstance(found, tuple)
-        mine: ShankAnswer = found[scene.index]
-        self.base = live_of(mine, scene.shank, self._of_shank(anchors))
-        if self.drag is None:
-            self.live = self.base
-            self._show()
-        self.answered()
-
-    def _preview(self, anchors: tuple[Anchor, ...]) -> None:
-        base, scene = self.base, self.scene
-        if base is None or scene is None or self.bench is None:
-            return
-        by_hand = None
-        if not self.bench.brain.settings.anchor.physiology or scene.shank.evidence.profile is None:
-            by_hand = manual_map(anchors, scene.end_um)
-        posterior = shifted(base.posterior, base.anchors, anchors, by_hand, median_um=base.median_um)
-        self.live = live_preview(posterior, scene.shank, anchors, base.sd_um)
+        if self.bench is not None and self.results is not None and self._key()[0]:
+            self.answers.lay_out(self.bench, self.results, self._key(), lambda: self.desk.session.edits.anchors)
 
     def _session_changed(self, before: Session, after: Session) -> None:
         old, new = before.selection, after.selection
@@ -170,8 +115,8 @@ class SectionController:
             self._lay_out()
             return
         if before.edits.anchors != after.edits.anchors and self.scene is not None:
-            self._preview(self._anchors())
-            self._ask_exactly()
+            self.answers.preview(self._anchors())
+            self.answers.ask(after.edits.anchors)
         self._show()
 
     # -- anchors ------------------------------------------------------------------------------------------------
@@ -182,10 +127,10 @@ class SectionController:
             return
         name, shank = self._key()
         if side == "depth":
-            depth, landmark = self._snapped(um)
+            depth, landmark = onto_border(self.scene.strata, um)
             tip = self.live.tip_at(depth)
         else:
-            tip = self._nearest_row(um)
+            tip = nearest_row(self.scene.shank.evidence.tip_distance_um, um)
             depth, landmark = self.live.depth_at(tip), ""
         self._act(AddAnchor(Anchor(name, shank, round(tip, 1), round(depth, 1), DEFAULT_SD_UM, landmark)))
 
@@ -206,20 +151,22 @@ class SectionController:
         origin = self.drag[0] if self.drag else anchor
         if self.scene is None or origin in self.desk.session.fixed or origin not in self.desk.session.edits.anchors:
             return
-        moved = self._moved(origin, end, um)
-        self.drag = (origin, moved, end)
-        self._preview(self._with(origin, moved))
+        at = nearest_row(self.scene.shank.evidence.tip_distance_um, um) if end == "tip" else um
+        shown = moved(origin, end, at, self._anchors())
+        self.drag = (origin, shown)
+        self.answers.preview(tuple(shown if a == origin else a for a in self._anchors()))
         self._show()
 
     def drop(self) -> None:
         """The mouse was released: the dragged anchor stays where it is."""
         if self.drag is None:
             return
-        origin, moved, _ = self.drag
+        origin, shown = self.drag
         self.drag = None
-        if moved != origin:
-            self._act(ChangeAnchor(origin, moved))
+        if shown != origin:
+            self._act(ChangeAnchor(origin, shown))
         else:
+            self.answers.preview(self._anchors())
             self._show()
 
     def nudge(self, end: str, by_um: float) -> None:
@@ -228,7 +175,7 @@ class SectionController:
         if anchor is None or anchor not in self.desk.session.edits.anchors:
             return
         at = anchor.track_depth_um if end == "depth" else anchor.tip_distance_um
-        self._act(ChangeAnchor(anchor, self._moved(anchor, end, at + by_um, free=True)))
+        self._act(ChangeAnchor(anchor, moved(anchor, end, at + by_um, self._anchors())))
 
     def change(self, anchor: Anchor, new: Anchor) -> None:
         """The anchor in hand was relabelled or given another sd."""
@@ -317,40 +264,11 @@ class SectionController:
     def _anchors(self) -> tuple[Anchor, ...]:
         return self._of_shank(self.desk.session.edits.anchors)
 
-    def _with(self, old: Anchor, new: Anchor) -> tuple[Anchor, ...]:
-        return tuple(new if a == old else a for a in self._anchors())
-
     def _ties(self) -> tuple[Tie, ...]:
         suggestions = self.results.suggestions if self.results else ()
-        return ties_of(self.desk.session, suggestions, self.second, self.drag[:2] if self.drag else None)
-
-    def _moved(self, anchor: Anchor, end: str, um: float, *, free: bool = False) -> Anchor:
-        """The anchor with one end elsewhere, kept from crossing its neighbours."""
-        others = [a for a in self._anchors() if a != anchor]
-        if end == "depth":
-            above = max((a.track_depth_um for a in others if a.tip_distance_um > anchor.tip_distance_um), default=None)
-            below = min((a.track_depth_um for a in others if a.tip_distance_um < anchor.tip_distance_um), default=None)
-            return replace(anchor, track_depth_um=round(_between(um, above, below), 1))
-        lower = max((a.tip_distance_um for a in others if a.track_depth_um > anchor.track_depth_um), default=None)
-        upper = min((a.tip_distance_um for a in others if a.track_depth_um < anchor.track_depth_um), default=None)
-        at = um if free else self._nearest_row(um)
-        return replace(anchor, tip_distance_um=round(_between(at, lower, upper), 1))
-
-    def _nearest_row(self, tip_um: float) -> float:
-        assert self.scene is not None
-        rows = self.scene.shank.evidence.tip_distance_um
-        return float(rows[int(abs(rows - tip_um).argmin())])
-
-    def _snapped(self, depth_um: float) -> tuple[float, str]:
-        """The nearest border of the strata where one is close, and its name."""
-        assert self.scene is not None
-        runs = self.scene.strata.runs
-        near = [
-            (abs(lower.top_um - depth_um), lower.top_um, f"{upper.acronym} / {lower.acronym}")
-            for upper, lower in pairwise(runs)
-        ]
-        away, at, name = min(near, default=(SNAP_UM, depth_um, ""))
-        return (at, name) if away < SNAP_UM else (depth_um, "")
+        return ties_of(
+            self.desk.session, suggestions, self.second, self.drag, self.scene.strata.runs if self.scene else ()
+        )
 
     def _act(self, action: Action) -> None:
         self._hear(lambda: self.desk.act(action))
@@ -421,6 +339,8 @@ class SectionController:
             return "Opening the brain …"
         if not self.results.tracks:
             return "No track yet: run 'Trace' in the Brain dock"
+        if self._key() not in self.results.tracks:
+            return "This shank has no track: draw it in the Corrections dock ('Edit this track')"
         if self.scene is None:
             return "Laying out the shank …"
         return "" if self.live is not None else "Working out the depth map …"
@@ -428,10 +348,3 @@ class SectionController:
 
 def _title(penetration: str, shank: int) -> str:
     return f"{penetration}, shank {shank}" if penetration else ""
-
-
-def _between(um: float, low: float | None, high: float | None) -> float:
-    """``um``, kept a little away from either neighbour."""
-    if low is not None:
-        um = max(um, low + GAP_UM)
-    return um if high is None else min(um, high - GAP_UM)

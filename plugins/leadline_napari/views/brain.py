@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+from html import escape
 from typing import TYPE_CHECKING
 
-from qtpy.QtCore import Qt, Signal
+from qtpy.QtCore import QSignalBlocker, Qt, Signal
 from qtpy.QtWidgets import (
     QAbstractItemView,
+    QComboBox,
     QGridLayout,
     QHBoxLayout,
     QHeaderView,
@@ -25,11 +27,12 @@ from qtpy.QtWidgets import (
 from leadline_napari.style import STAGE_MARKS
 
 if TYPE_CHECKING:
-    from leadline_napari.states import BrainState
+    from leadline_napari.states import BrainState, Legend
     from leadline_napari.style import Theme
 
 WORDS = {"done": "done", "changed": "out of date", "missing": "to do", "running": "running"}
 STAGE_ORDER = ("register", "trace", "profile", "anchor", "locate")
+LEGEND_MOST = 9
 COLUMNS = ("Penetration", "Tracks", "Recording", "Anchors", "Suggested")
 
 
@@ -43,6 +46,9 @@ class BrainView(QWidget):
     penetration_chosen = Signal(str)
     view_3d_asked = Signal()
     plane_asked = Signal()
+    units_asked = Signal()
+    unit_column_chosen = Signal(str)
+    save_asked = Signal()
 
     def __init__(self, theme: Theme) -> None:
         super().__init__()
@@ -60,6 +66,7 @@ class BrainView(QWidget):
         layout.addWidget(self.title)
         layout.addWidget(self.folder)
         layout.addLayout(self._doors())
+        layout.addWidget(self._unit_row())
         layout.addWidget(self._heading("Penetrations"))
         layout.addWidget(self._table(), 2)
         layout.addWidget(self._heading("Stages"))
@@ -78,20 +85,56 @@ class BrainView(QWidget):
         label.setStyleSheet("font-weight: bold;")
         return label
 
-    def _doors(self) -> QHBoxLayout:
-        row = QHBoxLayout()
-        for name, text, tip, signal in (
+    def _doors(self) -> QGridLayout:
+        grid = QGridLayout()
+        for place, (name, text, tip, signal) in enumerate((
             ("open", "Open brain…", "Open a brain.toml or its folder", self.open_asked),
             ("settings", "Settings…", "Bands, sensitivity, resolution; kept in brain.toml", self.settings_asked),
-            ("surfaces", "3-D", "Brain, regions that the tracks cross, and tracks in 3-D", self.view_3d_asked),
+            ("save", "Save canvas…", "Save the canvas as PNG, SVG or PDF, at print resolution", self.save_asked),
+            ("surfaces", "3-D", "Brain, regions that the tracks cross, and tracks in 3-D; again: back to sections",
+             self.view_3d_asked),
             ("plane", "Plane along track", "Lay the slice plane along the selected track, in 3-D", self.plane_asked),
-        ):  # fmt: skip
+            ("units", "Units", "Show every unit where it sat, coloured by a column of the unit table; again: hide them",
+             self.units_asked),
+        )):  # fmt: skip
             button = QPushButton(text)
             button.setToolTip(tip)
             button.clicked.connect(signal.emit)
             setattr(self, f"{name}_button", button)
-            row.addWidget(button)
-        return row
+            grid.addWidget(button, place // 3, place % 3)
+        return grid
+
+    def _unit_row(self) -> QWidget:
+        """What units are coloured by, and what the colours mean; hidden while no units are shown."""
+        self.unit_row = QWidget()
+        row = QHBoxLayout(self.unit_row)
+        row.setContentsMargins(0, 0, 0, 0)
+        self.unit_column = QComboBox()
+        self.unit_column.setToolTip("The column of the unit table that colours the units on the canvas")
+        self.unit_column.setAccessibleName("Units coloured by")
+        self.unit_column.textActivated.connect(self.unit_column_chosen.emit)
+        self.legend = QLabel()
+        self.legend.setWordWrap(True)
+        self.legend.setTextFormat(Qt.TextFormat.RichText)
+        row.addWidget(QLabel("Units by"))
+        row.addWidget(self.unit_column)
+        row.addWidget(self.legend, 1)
+        self.unit_row.hide()
+        return self.unit_row
+
+    def show_units(self, columns: tuple[str, ...], legend: Legend | None) -> None:
+        """Offer columns and say what the colours of the chosen one mean; None: no units are shown."""
+        self.unit_row.setVisible(legend is not None)
+        if legend is None:
+            return
+        with QSignalBlocker(self.unit_column):
+            self.unit_column.clear()
+            self.unit_column.addItems(list(columns))
+            self.unit_column.setCurrentText(legend.column)
+        swatch = "<span style='color:{1}'>●</span>&nbsp;{0}"
+        shown = [swatch.format(escape(name), colour) for name, colour in legend.entries[:LEGEND_MOST]]
+        more = f" and {len(legend.entries) - LEGEND_MOST} more" if len(legend.entries) > LEGEND_MOST else ""
+        self.legend.setText((" … " if legend.is_range else "&ensp; ").join(shown) + more)
 
     def _table(self) -> QTableWidget:
         self.table = QTableWidget(0, len(COLUMNS))

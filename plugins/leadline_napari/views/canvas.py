@@ -33,6 +33,8 @@ class Canvas:
 
     def __init__(self, viewer: napari.Viewer) -> None:
         self.viewer = viewer
+        self._pose: Pose | None = None
+        viewer.dims.events.ndisplay.connect(self.turn)
 
     def put(self, spec: LayerSpec) -> Layer:
         """Add a layer, or give the layer of that name its new data."""
@@ -88,14 +90,23 @@ class Canvas:
                 self.viewer.layers.remove(name)
 
     def pose(self, pose: Pose) -> None:
-        """Turn the canvas to coronal sections with dorsal up, show names of axes and a scale bar."""
-        self.viewer.dims.order = pose.order
-        away = self.viewer.scene.camera.orientation[0]
-        self.viewer.scene.camera.orientation = (away, pose.vertical, pose.horizontal)
+        """Turn the canvas as posed, now and whenever it changes between 2-D and 3-D; show a scale bar."""
+        self._pose = pose
         bar = self.viewer.canvas.overlays["scale_bar"]
         bar.visible = True
         bar.box = True
+        self.turn()
         self.viewer.reset_view()
+
+    def turn(self, _event: object = None) -> None:
+        """Lay the axes out for 2-D or 3-D. In 3-D they keep their stored order: napari 0.9 draws surfaces in that order
+        whatever ``dims.order`` says, and points and images as it says."""
+        pose = self._pose
+        if pose is None:
+            return
+        solid = self.viewer.dims.ndisplay == 3
+        self.viewer.dims.order = (0, 1, 2) if solid else pose.order
+        self.viewer.scene.camera.orientation = pose.solid if solid else pose.flat
 
     def go_to(self, point_um: Any) -> None:
         """Scroll to the plane that holds a point."""
@@ -109,15 +120,17 @@ class Canvas:
         self.viewer.dims.margin_right = margins
 
     def lay_plane(self, name: str, point_um: Any, way: Any) -> None:
-        """In 3-D, cut an image along the plane that holds a line of direction ``way``, and look straight at it.
+        """In 3-D, cut an image along the plane that holds a line of direction ``way`` and is nearest to a coronal one,
+        and look straight at it.
 
         napari counts a plane's place and the camera's directions along the axes in the order in which they are shown.
         """
         layer = self.viewer.layers[name]
         self.viewer.dims.ndisplay = 3
         order = list(self.viewer.dims.order)
-        way = np.asarray(way, float)
-        across = np.eye(3)[order[0]]
+        way = np.asarray(way, float) / np.linalg.norm(way)
+        flat = self._pose.order if self._pose is not None else (0, 1, 2)
+        across = np.eye(3)[next(axis for axis in flat if abs(way[axis]) < 0.9)]
         normal = across - (across @ way) * way
         normal /= np.linalg.norm(normal)
         in_voxels = normal * np.asarray(layer.scale, float)
@@ -130,11 +143,26 @@ class Canvas:
         camera.center = tuple(float(v) for v in np.asarray(point_um, float)[order])
         camera.set_view_direction(tuple(normal[order]), tuple(-way[order]))
 
-    def look_down(self) -> None:
-        """Look at the brain a little from above and from one side."""
-        first, second, third = self.viewer.scene.camera.angles
-        self.viewer.scene.camera.angles = (first + 20.0, second + 35.0, third + 10.0)
-        self.viewer.scene.camera.zoom *= 0.8
+    def look_in(self) -> None:
+        """In 3-D, look at the brain from behind, from the left and from above."""
+        self.viewer.reset_view()
+        if self._pose is not None:
+            self.viewer.scene.camera.set_view_direction(self._pose.view, self._pose.up)
+
+    @property
+    def size(self) -> tuple[int, int]:
+        """Height and width in pixels of the screen."""
+        height, width = self.viewer.canvas.size
+        return int(height), int(width)
+
+    def picture(self, times: float) -> Any:
+        """What the canvas shows, ``(h, w, 4)`` uint8, ``times`` as fine as the screen; without napari's scale bar."""
+        bar = self.viewer.canvas.overlays["scale_bar"]
+        bar.visible = False
+        try:
+            return self.viewer.screenshot(scale=times, canvas_only=True, flash=False)
+        finally:
+            bar.visible = True
 
     def on_pick(self, name: str, chosen: Callable[[int], None]) -> None:
         """Call ``chosen`` with the row of a point that is clicked."""

@@ -23,8 +23,8 @@ TIPS = {
     "edit": "Show its points on the canvas, to be moved",
     "snap": "Draw every point to the centre of the dye near it",
     "forget": "Forget the points drawn by hand; the dye is traced again at the next run",
-    "entry": "Put the first point in the middle of the view; over the canvas, Alt+E puts it at the cursor",
-    "end": "Put the last point in the middle of the view; over the canvas, Alt+T puts it at the cursor",
+    "entry": "The shank entered in the middle of the view, wherever the surface is found; Alt+E: at the cursor",
+    "end": "The track ends in the middle of the view; over the canvas, Alt+T: at the cursor",
     "pair": "Name one place in stack and atlas: the middle of the view, or with Alt+P the cursor over the canvas",
     "delete": "Take the chosen pair away",
     "preview": "Draw the atlas as these pairs would refine it",
@@ -120,7 +120,7 @@ class CorrectionView(QWidget):
 
     def show_state(self, state: CorrectionState) -> None:
         """Draw a snapshot."""
-        how = " · drawn by hand" if state.by_hand else ""
+        how = (" · drawn by hand" if state.by_hand else "") + (" · entry set by hand" if state.entry_set else "")
         self.title.setText(f"{state.title}{how}" if state.title else "Choose a shank in the Section dock")
         for button, enabled in (
             (self.edit_button, state.can_edit or state.by_hand), (self.snap_button, state.editing),

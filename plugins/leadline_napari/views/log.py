@@ -9,13 +9,16 @@ import pyqtgraph as pg
 from qtpy.QtCore import QRectF, Qt, Signal
 from qtpy.QtGui import QColor, QFontMetricsF
 
-from leadline_napari.views.marks import BandMark, LaneMark, Mark, RibbonMark, SitesMark, StrataMark, TissueMark
+from leadline_napari.views.marks.anatomy import StrataMark, TissueMark
+from leadline_napari.views.marks.band import BandMark
+from leadline_napari.views.marks.probe import LaneMark, RibbonMark, SitesMark
 
 if TYPE_CHECKING:
     from qtpy.QtCore import QPointF
 
-    from leadline_napari.states import Readout, SectionState
+    from leadline_napari.states import Lane, Readout, SectionState
     from leadline_napari.style import Theme
+    from leadline_napari.views.marks.mark import Mark
 
 HEAD_PX = 42
 FOOT_PX = 18
@@ -24,6 +27,23 @@ WIDTHS = {"tissue": 96, "strata": 70, "band": 150, "sites": 46, "odds": 76, "lan
 LEFT = ("tissue", "strata")
 ODDS_COLUMN = 60
 MIN_PX = 34
+NARROW = 75  # per cent of the usual width of letters, where there is little room
+
+
+TIPS = {
+    "tissue": "The stack, or the atlas template, straightened along the track; track depth in um on the left",
+    "strata": "Regions of the atlas along the track; pale: how far a border may lie from where it is drawn",
+    "band": "Anchors tie contacts to places; blue tint: tissue drawn out, orange: pressed together",
+    "sites": "Contacts of this shank, coloured by region",
+    "odds": "Probability of each region at every row of contacts, side by side; distance from the tip on the right",
+}
+
+
+def _tip_of(lane: Lane) -> str:
+    """A lane's title with its units; for a picture also what its colours mean."""
+    if not lane.across_unit:
+        return f"{lane.title} ({lane.unit})" if lane.unit else lane.title
+    return f"{lane.title} by {lane.across_unit}; colours from {lane.low:.3g} to {lane.high:.3g} {lane.unit}"
 
 
 class Title(pg.GraphicsWidget):
@@ -35,10 +55,10 @@ class Title(pg.GraphicsWidget):
         self.setMinimumHeight(HEAD_PX)
         self.setMaximumHeight(HEAD_PX)
 
-    def set_text(self, text: str, unit: str) -> None:
-        """Change the words."""
+    def set_text(self, text: str, unit: str, tip: str) -> None:
+        """Change the words; ``tip`` says it whole."""
         self.text, self.unit = text, unit
-        self.setToolTip(f"{text} ({unit})" if unit else text)
+        self.setToolTip(tip)
         self.update()
 
     def paint(self, painter: object, *_: object) -> None:
@@ -51,6 +71,7 @@ class Title(pg.GraphicsWidget):
         for k, (text, colour) in enumerate(
             ((first, self.theme.ink), (second, self.theme.ink), (self.unit, self.theme.soft))
         ):
+            font.setStretch(100 if QFontMetricsF(font).horizontalAdvance(text) <= box.width() else NARROW)
             painter.setFont(font)
             painter.setPen(QColor(colour))
             short = QFontMetricsF(font).elidedText(text, Qt.TextElideMode.ElideRight, box.width())
@@ -93,6 +114,7 @@ class Foot(pg.GraphicsWidget):
             return
         font = painter.font()
         font.setPointSizeF(7.0)
+        font.setStretch(NARROW)
         painter.setFont(font)
         painter.setPen(QColor(self.theme.soft))
         measures = QFontMetricsF(font)
@@ -309,13 +331,12 @@ class Log(pg.GraphicsLayoutWidget):
             ticks: tuple[tuple[float, str], ...] = ()
             if column.kind == "lane":
                 lane = next(lanes)
-                words = (lane.title, f"{lane.across_unit} · {lane.unit}" if lane.across_unit else lane.unit)
-                ticks = lane.ticks
+                words, tip, ticks = (lane.title, lane.across_unit or lane.unit), _tip_of(lane), lane.ticks
             else:
-                words = heads[column.kind]
+                words, tip = heads[column.kind], TIPS[column.kind]
                 ticks = ((0.0, "0"), (1.0, "1")) if column.kind == "odds" else ()
-            if (column.title.text, column.title.unit) != words:
-                column.title.set_text(*words)
+            if (column.title.text, column.title.unit, column.title.toolTip()) != (*words, tip):
+                column.title.set_text(*words, tip)
             left, right = AXIS_PX if column.kind == "tissue" else 0.0, AXIS_PX if column.kind == "odds" else 0.0
             column.foot.set_ticks(ticks, left, right)
 

@@ -12,6 +12,7 @@ from qtpy.QtWidgets import (
     QDoubleSpinBox,
     QHBoxLayout,
     QLabel,
+    QPlainTextEdit,
     QSizePolicy,
     QToolButton,
     QVBoxLayout,
@@ -49,10 +50,30 @@ KEYS: dict[str, tuple[str, tuple[object, ...]]] = {
     "Ctrl+S": ("update_asked", ()),
     "Home": ("whole_asked", ()),
 }
+READOUT_LINES = 5
 HINT = (
     "Double-click in a lane adds an anchor; drag either end; arrow keys nudge by 5 um (Shift: 1 um, Alt: the contact's "
     "end); Page Up/Down goes from anchor to anchor, Insert adds one at the chosen contact."
 )
+
+
+class Line(QLabel):
+    """One line of words, cut where there is no more room; the tool tip says it whole."""
+
+    def __init__(self) -> None:
+        super().__init__()
+        self.setSizePolicy(QSizePolicy.Policy.Ignored, QSizePolicy.Policy.Fixed)
+
+    def say(self, words: str) -> None:
+        """Show these words."""
+        self.setToolTip(words)
+        room = max(self.width() - 8, 100)
+        self.setText(self.fontMetrics().elidedText(words, Qt.TextElideMode.ElideRight, room))
+
+    def resizeEvent(self, event: object) -> None:
+        """Cut anew."""
+        super().resizeEvent(event)
+        self.say(self.toolTip())
 
 
 class SectionView(QWidget):
@@ -90,21 +111,23 @@ class SectionView(QWidget):
         layout.setContentsMargins(6, 4, 6, 4)
         layout.setSpacing(4)
         layout.addLayout(self._bar())
-        self.banner = QLabel()
-        self.banner.setWordWrap(True)
+        # Always there, or the lanes would jump under the mouse when a warning comes up in the middle of a drag.
+        self.banner = Line()
         self.banner.setObjectName("leadline-banner")
-        self.banner.hide()
         layout.addWidget(self.banner)
         layout.addWidget(self.log, 1)
         layout.addWidget(self._hand())
-        self.readout = QLabel()
+        self.readout = QPlainTextEdit()
         self.readout.setObjectName("leadline-readout")
-        self.readout.setTextInteractionFlags(Qt.TextInteractionFlag.TextSelectableByMouse)
-        self.readout.setWordWrap(True)
-        self.readout.setAlignment(Qt.AlignmentFlag.AlignTop | Qt.AlignmentFlag.AlignLeft)
-        self.readout.setMinimumHeight(self.fontMetrics().lineSpacing() * 4)
-        self.readout.setMaximumHeight(self.fontMetrics().lineSpacing() * 4)
-        self.readout.setSizePolicy(QSizePolicy.Policy.Ignored, QSizePolicy.Policy.Fixed)
+        self.readout.setAccessibleName("Under the cursor, or the evidence for a suggestion")
+        self.readout.setToolTip("What lies under the cursor; for a suggestion in hand, the evidence for and against it")
+        self.readout.setReadOnly(True)
+        self.readout.setTabChangesFocus(True)
+        self.readout.setFrameShape(QPlainTextEdit.Shape.NoFrame)
+        self.readout.setHorizontalScrollBarPolicy(Qt.ScrollBarPolicy.ScrollBarAlwaysOff)
+        self.readout.setStyleSheet("background: transparent;")
+        self.readout.document().setDocumentMargin(2)
+        self.readout.setFixedHeight(self.fontMetrics().lineSpacing() * READOUT_LINES + 6)
         layout.addWidget(self.readout)
         self._watch_keys()
         self._wire_band()
@@ -262,11 +285,14 @@ class SectionView(QWidget):
         words = state.message or (state.band.out_of_range if state.band else "")
         warning = bool(words and not state.message)
         look = f"color: {self.theme.warning if warning else self.theme.soft}; padding: 1px 3px;"
-        if words != self.banner.text():
-            self.banner.setText(words)
+        if words != self.banner.toolTip():
+            self.banner.say(words)
         if look != self.banner.styleSheet():
             self.banner.setStyleSheet(look)
-        self.banner.setVisible(bool(words))
+
+    def _say(self, words: str) -> None:
+        if words != self.readout.toPlainText():
+            self.readout.setPlainText(words)
 
     def _show_shanks(self, state: SectionState) -> None:
         with QSignalBlocker(self.shank):
@@ -304,7 +330,7 @@ class SectionView(QWidget):
             for spin in (self.depth, self.tip, self.sd):
                 spin.setValue(spin.minimum())
         del blockers
-        self.readout.setText(held.evidence if held is not None and held.evidence else HINT)
+        self._say(held.evidence if held is not None and held.evidence else HINT)
 
     def _edited(self) -> None:
         """A box of the strip was changed; boxes that still show what they showed keep the exact value."""
@@ -325,7 +351,7 @@ class SectionView(QWidget):
         """Tell what lies under the cursor; without one, the evidence of a suggestion in hand, or how to begin."""
         held = self._shown_in_hand
         if readout is None:
-            self.readout.setText(held.evidence if held is not None and held.evidence else HINT)
+            self._say(held.evidence if held is not None and held.evidence else HINT)
         else:
-            self.readout.setText(readout.text)
+            self._say(readout.text)
         self.log.show_cursor(readout)

@@ -57,7 +57,7 @@ class SettingsDialog(QDialog):
         layout.addWidget(QLabel("Kept in brain.toml; only stages that depend on a change run again."))
         layout.addWidget(area)
         layout.addWidget(self._buttons())
-        self.resize(460, 560)
+        self.resize(max(460, inner.sizeHint().width() + 60), 560)
 
     def _buttons(self) -> QDialogButtonBox:
         kinds = QDialogButtonBox.StandardButton
@@ -137,6 +137,6 @@ def _box(value: object) -> QWidget:
     number = QDoubleSpinBox()
     number.setRange(-1e5, 1e5)
     number.setDecimals(2)
-    number.setMinimumWidth(number.fontMetrics().horizontalAdvance("00000.00") + 60)
+    number.setMinimumWidth(number.fontMetrics().horizontalAdvance("-00000.00") + 76)
     number.setValue(float(value))
     return number

@@ -3,22 +3,28 @@ import pytest
 
 from leadline.base.errors import LeadlineError
 from leadline.io.points import pairs_text, read_pairs, read_track_edits, track_edits_text
+from leadline.model.track import HandTrack
 
 
 def test_hand_drawn_tracks_come_back_bit_for_bit(tmp_path):
     rng = np.random.default_rng(4)
-    edits = {("007", 0): rng.normal(size=(3, 3)) * 1e3, ("=sum", 2): rng.normal(size=(2, 3))}
+    edits = {
+        ("007", 0): HandTrack(rng.normal(size=(3, 3)) * 1e3),
+        ("=sum", 2): HandTrack(rng.normal(size=(2, 3)), True),
+    }
     file = tmp_path / "track_edits.csv"
     file.write_text(track_edits_text(edits))
     back = read_track_edits(file)
     assert list(back) == [("007", 0), ("=sum", 2)]
-    assert all((back[key] == points).all() for key, points in edits.items())
+    assert all((back[key].points_um == drawn.points_um).all() for key, drawn in edits.items())
+    assert [drawn.entry_set for drawn in back.values()] == [False, True]
 
 
 def test_points_are_ordered_by_their_number_not_by_their_line(tmp_path):
     file = tmp_path / "track_edits.csv"
     file.write_text("penetration,shank,s0_um,s1_um,s2_um,order\nA,0,3,0,0,10\nA,0,1,0,0,0\nA,0,2,0,0,2\n")
-    assert read_track_edits(file)["A", 0][:, 0].tolist() == [1.0, 2.0, 3.0]
+    assert read_track_edits(file)["A", 0].points_um[:, 0].tolist() == [1.0, 2.0, 3.0]
+    assert not read_track_edits(file)["A", 0].entry_set
 
 
 @pytest.mark.parametrize(

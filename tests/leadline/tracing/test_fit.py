@@ -48,6 +48,17 @@ def test_points_begun_above_the_brain_are_cropped_to_the_surface(made):
     assert abs(beyond(got.points_um[0], line, -1)) < 40
 
 
+@pytest.mark.parametrize("first", [5, 60, 200])
+def test_an_entry_that_a_person_has_set_is_where_the_track_begins(made, first):
+    """Wherever the surface is found, and though the points may be given from the deep end."""
+    points = picked(made, 9, first=first)
+    for given in (points, points[::-1]):
+        got = from_points(given, made.background, entry_set=True)
+        assert np.linalg.norm(got.points_um[0] - given[0]) < 10.0
+        assert np.linalg.norm(got.points_um[-1] - given[-1]) < 10.0
+        assert got.entry_sd_um == got.end_sd_um
+
+
 def test_the_order_of_the_points_does_not_matter(made):
     points = picked(made, 9, noise=5.0)
     one = from_points(points, made.background)

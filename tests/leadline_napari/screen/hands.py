@@ -10,7 +10,7 @@ LEFT, NONE = Qt.MouseButton.LeftButton, Qt.KeyboardModifier.NoModifier
 
 def settle(bench, qtbot, timeout=120_000):
     """Wait until nothing is being worked out."""
-    qtbot.waitUntil(lambda: not bench.runner.busy and not bench._canvas_timer.isActive(), timeout=timeout)
+    qtbot.waitUntil(lambda: not bench.busy, timeout=timeout)
     QApplication.processEvents()
 
 
@@ -24,20 +24,20 @@ def opened(bench, qtbot, folder):
 
 def place(bench, kind, x, um):
     """Where in the log's viewport x (0 to 1) of a lane and um of the drawn scale lie."""
-    log = bench.section.log
+    log = bench.section.view.log
     box = next(c.plot.getViewBox() for c in log.columns if c.kind == kind)
     return log.mapFromScene(box.mapViewToScene(QPointF(x, um)))
 
 
 def click(bench, at):
     """A click in the log's viewport."""
-    QTest.mouseClick(bench.section.log.viewport(), LEFT, NONE, at)
+    QTest.mouseClick(bench.section.view.log.viewport(), LEFT, NONE, at)
     QApplication.processEvents()
 
 
 def double_click(bench, kind, x, um):
     """A double click in a lane."""
-    viewport, at = bench.section.log.viewport(), place(bench, kind, x, um)
+    viewport, at = bench.section.view.log.viewport(), place(bench, kind, x, um)
     QTest.mouseMove(viewport, at)
     QTest.mouseDClick(viewport, LEFT, NONE, at)
     QTest.mouseRelease(viewport, LEFT, NONE, at)  # QTest leaves the second press open
@@ -46,7 +46,7 @@ def double_click(bench, kind, x, um):
 
 def drag(bench, start, stop, steps=6):
     """A real drag: moves with the button down, which QTest's own moves do not carry."""
-    viewport = bench.section.log.viewport()
+    viewport = bench.section.view.log.viewport()
     QTest.mouseMove(viewport, start)
     QTest.mousePress(viewport, LEFT, NONE, start)
     for k in range(1, steps + 1):
@@ -60,7 +60,7 @@ def drag(bench, start, stop, steps=6):
 
 def tie_end(bench, anchor, end):
     """Where in the viewport the handle of a tie is."""
-    y = anchor.track_depth_um if end == "depth" else bench.section.log.end_um - anchor.tip_distance_um
+    y = anchor.track_depth_um if end == "depth" else bench.section.view.log.end_um - anchor.tip_distance_um
     at = place(bench, "band", 0.0 if end == "depth" else 1.0, y)
     return at + QPoint(6 if end == "depth" else -6, 0)
 

@@ -12,18 +12,39 @@ import pytest
 napari = pytest.importorskip("napari")
 pytest.importorskip("pyqtgraph")
 
-from qtpy.QtCore import QPoint, Qt
-from qtpy.QtGui import QImage
+from qtpy.QtCore import QEvent, QPoint, QPointF, Qt
+from qtpy.QtGui import QImage, QMouseEvent
 from qtpy.QtTest import QTest
-from qtpy.QtWidgets import QAbstractButton, QAbstractItemView, QApplication, QComboBox, QDoubleSpinBox, QLineEdit
+from qtpy.QtWidgets import (
+    QAbstractButton,
+    QAbstractItemView,
+    QAbstractSpinBox,
+    QApplication,
+    QComboBox,
+    QDialogButtonBox,
+    QHeaderView,
+    QLineEdit,
+    QPlainTextEdit,
+)
 from tests.good_brain import write_good_brain
-from tests.leadline_napari.screen.hands import anchors, click, double_click, drag, opened, place, settle, tie_end
+from tests.leadline_napari.screen.hands import (
+    LEFT,
+    NONE,
+    anchors,
+    click,
+    double_click,
+    drag,
+    opened,
+    place,
+    settle,
+    tie_end,
+)
 
 from leadline.io.tables import read_anchors
-from leadline_napari.docks import close_workbench, workbench
 from leadline_napari.session import AddAnchor
 from leadline_napari.style import DARK, LIGHT
 from leadline_napari.views.work import QtProgress
+from leadline_napari.workbench import close_workbench, workbench
 
 
 @pytest.fixture(scope="module")
@@ -66,9 +87,9 @@ def test_a_brain_opens_with_every_layer_in_um_and_the_canvas_is_not_blank(bench,
 
 def test_anchors_are_added_dragged_nudged_undone_and_deleted_with_mouse_and_keys(bench, qtbot, finished):
     opened(bench, qtbot, finished)
-    ccb = next(run for run in bench.sections.scene.strata.runs if run.acronym == "CCB")
+    ccb = next(run for run in bench.section.controller.scene.strata.runs if run.acronym == "CCB")
     double_click(bench, "strata", 0.5, ccb.top_um + 8.0)
-    double_click(bench, "lane", 0.5, bench.section.log.end_um - 400.0)
+    double_click(bench, "lane", 0.5, bench.section.view.log.end_um - 400.0)
     settle(bench, qtbot)
     assert [a.landmark for a in anchors(bench)] == ["VIP6 / CCB", ""]
     assert anchors(bench)[1].tip_distance_um == 400.0
@@ -78,7 +99,7 @@ def test_anchors_are_added_dragged_nudged_undone_and_deleted_with_mouse_and_keys
     moved = anchors(bench)[1]
     assert moved.track_depth_um == pytest.approx(start.track_depth_um + 80.0, abs=5.0)
     assert read_anchors(finished / "out" / "anchors.csv") == anchors(bench)
-    log = bench.section.log
+    log = bench.section.view.log
     log.setFocus()
     QTest.keyClick(log, Qt.Key.Key_Down)
     QTest.keyClick(log, Qt.Key.Key_Up, Qt.KeyboardModifier.ShiftModifier)
@@ -98,10 +119,10 @@ def test_anchors_are_added_dragged_nudged_undone_and_deleted_with_mouse_and_keys
 
 def test_a_suggestion_is_taken_in_hand_by_a_click_and_accepted_with_enter(bench, qtbot, finished):
     opened(bench, qtbot, finished)
-    (tie,) = bench.section._state.band.ties
-    log = bench.section.log
+    (tie,) = bench.section.view._state.band.ties
+    log = bench.section.view.log
     click(bench, tie_end(bench, tie.anchor, "depth"))
-    assert "gamma power falls" in bench.section.readout.text()
+    assert "gamma power falls" in bench.section.view.readout.toPlainText()
     QTest.keyClick(log, Qt.Key.Key_Return)
     settle(bench, qtbot)
     assert [a.source for a in anchors(bench)] == ["auto"]
@@ -109,24 +130,24 @@ def test_a_suggestion_is_taken_in_hand_by_a_click_and_accepted_with_enter(bench,
 
 def test_a_channel_chosen_anywhere_is_chosen_everywhere(bench, qtbot, finished):
     opened(bench, qtbot, finished)
-    log = bench.section.log
+    log = bench.section.view.log
     click(bench, place(bench, "lane", 0.5, log.end_um - 900.0))
     channel = bench.desk.session.selection.channel
-    contacts = bench.sections.scene.shank.contacts
+    contacts = bench.section.controller.scene.shank.contacts
     assert contacts.tip_distance_um[list(contacts.channel).index(channel)] == 900.0
-    assert bench.section._state.sites.chosen == channel
+    assert bench.section.view._state.sites.chosen == channel
     rows = bench.viewer.layers["Contacts"].selected_data
     assert list(bench.viewer.layers["Contacts"].features["channel"].iloc[list(rows)]) == [channel]
-    index = bench.table.table.selectionModel().selectedRows()[0]
-    columns = bench.table.model.state.columns
-    assert bench.table.filter.index(index.row(), columns.index("channel")).data() == str(channel)
-    bench._contact_picked(3)
+    index = bench.table.view.table.selectionModel().selectedRows()[0]
+    columns = bench.table.view.model.state.columns
+    assert bench.table.view.filter.index(index.row(), columns.index("channel")).data() == str(channel)
+    bench.layers._picked(3)
     assert bench.desk.session.selection.channel == bench.viewer.layers["Contacts"].features["channel"].iloc[3]
 
 
 def test_the_table_is_filtered_sorted_by_value_and_copied(bench, qtbot, finished):
     opened(bench, qtbot, finished)
-    table = bench.table
+    table = bench.table.view
     QTest.keyClicks(table.words, "ccb between")
     assert table.filter.rowCount() == 0
     table.words.setText("ccb")
@@ -145,29 +166,29 @@ def test_the_table_is_filtered_sorted_by_value_and_copied(bench, qtbot, finished
 
 def test_a_track_is_redrawn_by_hand_and_snapped_to_the_dye(bench, qtbot, finished):
     opened(bench, qtbot, finished)
-    bench.corrections.edit_button.click()
+    bench.corrections.view.edit_button.click()
     layer = bench.viewer.layers["Track points"]
-    before, end = layer.data.copy(), bench.sections.scene.end_um
+    before, end = layer.data.copy(), bench.section.controller.scene.end_um
     points = before.copy()
     points[3] += [0.0, 40.0, 60.0]
     layer.data = points
     settle(bench, qtbot)
     assert (finished / "track_edits.csv").is_file()
-    assert abs(bench.sections.scene.end_um - end) > 0.1
-    bench.corrections.snap_button.click()
+    assert abs(bench.section.controller.scene.end_um - end) > 0.1
+    bench.corrections.view.snap_button.click()
     settle(bench, qtbot)
     assert np.linalg.norm(layer.data[3] - before[3]) < 20.0
-    QTest.keyClick(bench.section.log, Qt.Key.Key_Z, Qt.KeyboardModifier.ControlModifier)
+    QTest.keyClick(bench.section.view.log, Qt.Key.Key_Z, Qt.KeyboardModifier.ControlModifier)
     settle(bench, qtbot)
     assert np.abs(layer.data - points).max() < 0.02
     layer.selected_data = {2}
     layer.remove_selected()
     settle(bench, qtbot)
     assert len(bench.desk.session.edits.tracks[0].points_um) == 7
-    bench.editing._set("end", layer.data[-1] + [0.0, 0.0, 10.0])
+    bench.corrections._set("end", layer.data[-1] + [0.0, 0.0, 10.0])
     settle(bench, qtbot)
     assert bench.desk.session.edits.tracks[0].points_um[-1][2] == pytest.approx(layer.data[-1][2], abs=0.01)
-    bench.corrections.forget_button.click()
+    bench.corrections.view.forget_button.click()
     settle(bench, qtbot)
     assert not (finished / "track_edits.csv").exists()
     assert bench.told == []
@@ -175,36 +196,37 @@ def test_a_track_is_redrawn_by_hand_and_snapped_to_the_dye(bench, qtbot, finishe
 
 def test_pairs_refine_the_registration_only_once_they_are_accepted(bench, qtbot, finished):
     opened(bench, qtbot, finished)
-    bench.editing._set("pair", np.array([2500.0, 3000.0, 2500.0]))
-    bench.editing._set("pair", np.array([2500.0, 3600.0, 2900.0]))
+    bench.corrections._set("pair", np.array([2500.0, 3000.0, 2500.0]))
+    bench.corrections._set("pair", np.array([2500.0, 3600.0, 2900.0]))
     ring = bench.viewer.layers["Pairs: place in the atlas"]
     ring.data = ring.data + np.array([60.0, 0.0, 0.0])
     ring.events.data(value=ring.data, action="changed", data_indices=(0, 1), vertex_indices=((),))
     settle(bench, qtbot)
-    assert "60 um before" in bench.corrections.errors.text()
+    assert "60 um before" in bench.corrections.view.errors.text()
     assert not (finished / "registration_pairs.csv").exists()
-    bench.corrections.preview_button.click()
-    bench.corrections.accept_button.click()
+    bench.corrections.view.preview_button.click()
+    bench.corrections.view.accept_button.click()
     assert (finished / "registration_pairs.csv").is_file()
-    bench.corrections.withdraw_button.click()
+    bench.corrections.view.withdraw_button.click()
     assert not (finished / "registration_pairs.csv").exists()
     assert bench.told == []
 
 
 def test_surfaces_and_the_plane_along_the_track_are_shown_in_3d(bench, qtbot, finished):
     opened(bench, qtbot, finished)
-    bench.brain.surfaces_button.click()
+    bench.brain.view.surfaces_button.click()
     settle(bench, qtbot)
     assert bench.viewer.dims.ndisplay == 3
+    assert bench.viewer.dims.order == (0, 1, 2)  # in which napari draws surfaces, whatever else it is set to
     shown = [layer.name for layer in bench.viewer.layers if layer.visible]
     assert "Brain hull" in shown
     assert "CCB surface" in shown
     assert shown[-2:] == ["Tracks", "Contacts"]
     assert all({str(u) for u in layer.units} == {"micrometer"} for layer in bench.viewer.layers)
-    bench.brain.plane_button.click()
+    bench.brain.view.plane_button.click()
     settle(bench, qtbot)
     image = bench.viewer.layers["Plane along track"]
-    track = bench.sections.scene.shank.track
+    track = bench.section.controller.scene.shank.track
     order = list(bench.viewer.dims.order)
     normal = np.empty(3)
     normal[order] = np.array(image.plane.normal)
@@ -219,10 +241,10 @@ def test_the_section_is_saved_as_a_figure(bench, qtbot, finished, tmp_path, suff
 
     opened(bench, qtbot, finished)
     file = tmp_path / f"section{suffix}"
-    save_view(bench.section.log, file)
+    save_view(bench.section.view.log, file)
     if suffix == ".png":
         image = QImage(str(file))
-        assert image.width() > 2.5 * bench.section.log.width()
+        assert image.width() > 2.5 * bench.section.view.log.width()
         colours = {image.pixel(x, y) for x in range(0, image.width(), 7) for y in range(0, image.height(), 7)}
         assert len(colours) > 50
     elif suffix == ".svg":
@@ -237,33 +259,219 @@ def test_the_section_is_saved_as_a_figure(bench, qtbot, finished, tmp_path, suff
 def test_appearance_follows_the_viewer(bench, qtbot, finished):
     opened(bench, qtbot, finished)
     bench.viewer.theme = "light"
-    assert bench.section.theme is LIGHT
-    assert bench.section.log.band.theme is LIGHT
-    assert bench.section.log.band.band is bench.section._state.band
+    assert bench.section.view.theme is LIGHT
+    assert bench.section.view.log.band.theme is LIGHT
+    assert bench.section.view.log.band.band is bench.section.view._state.band
     bench.viewer.theme = "dark"
-    assert bench.section.theme is DARK
+    assert bench.section.view.theme is DARK
 
 
-def test_every_control_has_a_tool_tip_and_can_be_reached_by_key(bench):
-    kinds = (QAbstractButton, QComboBox, QDoubleSpinBox)
-    for view in (bench.brain, bench.section, bench.table, bench.corrections):
+def test_every_control_has_a_tool_tip_and_can_be_reached_by_key(bench, qtbot, finished):
+    opened(bench, qtbot, finished)
+    dialogs = [bench.section.choose_lanes(), bench.brain.choose_settings()]
+    kinds = (QAbstractButton, QAbstractItemView, QComboBox, QAbstractSpinBox, QLineEdit, QPlainTextEdit)
+    views = [bench.brain.view, bench.section.view, bench.table.view, bench.corrections.view]
+    seen = 0
+    for view in (*views, *dialogs):
         for control in (w for kind in kinds for w in view.findChildren(kind)):
-            inner = isinstance(control.parent(), QComboBox | QLineEdit | QDoubleSpinBox | QAbstractItemView)
-            if inner or control.objectName().startswith("qt_"):
+            inner = isinstance(control.parent(), QComboBox | QLineEdit | QAbstractSpinBox | QAbstractItemView)
+            if inner or control.objectName().startswith("qt_") or isinstance(control, QHeaderView):
                 continue
-            assert control.toolTip(), (view.objectName(), control.metaObject().className(), control.property("text"))
-            assert control.focusPolicy() & Qt.FocusPolicy.TabFocus, (view.objectName(), control.property("text"))
+            what = (view.objectName() or view.windowTitle(), control.metaObject().className(), control.property("text"))
+            by_itself = isinstance(control.parent(), QDialogButtonBox)  # OK, Cancel, Close say what they do
+            assert control.toolTip() or by_itself, what
+            assert control.focusPolicy() & Qt.FocusPolicy.TabFocus, what
+            seen += 1
+    for dialog in dialogs:
+        dialog.reject()
+    assert seen > 80
+
+
+def entries(menu, path=()):
+    """Every entry of a menu and of those below it: the way to it, the menu that holds it, the entry."""
+    for action in menu.actions():
+        if action.menu() is not None:
+            yield from entries(action.menu(), (*path, action.text()))
+        else:
+            yield (*path, action.text()), menu, action
+
+
+def click_entry(viewer, *way):
+    """Open the menu that holds an entry and click it with the mouse."""
+    bar = viewer.window._qt_window.menuBar()
+    found = [e for top in bar.actions() for e in entries(top.menu(), (top.text(),)) if e[0] == way]
+    ((_, menu, action),) = found
+    menu.popup(QPoint(200, 200))
+    QApplication.processEvents()
+    QTest.mouseClick(menu, LEFT, NONE, menu.actionGeometry(action).center())
+    QApplication.processEvents()
+
+
+def test_menu_entries_do_what_they_say_when_clicked(bench, qtbot, finished):
+    opened(bench, qtbot, finished)
+    double_click(bench, "strata", 0.5, 700.0)
+    settle(bench, qtbot)
+    (kept,) = anchors(bench)
+    undo = ("&Layers", "Register", "Leadline", "Undo the last edit (Leadline)")
+    click_entry(bench.viewer, *undo)
+    assert anchors(bench) == ()
+    click_entry(bench.viewer, *undo[:-1], "Redo the edit that was undone (Leadline)")
+    assert anchors(bench) == (kept,)
+    for title, dock in (("Brain", bench.brain), ("Channels", bench.table), ("Corrections", bench.corrections)):
+        click_entry(bench.viewer, "&Plugins", "Leadline", f"{title} (Leadline)")
+        assert dock.view.isVisible(), title
+    bench.bring("section")
+
+
+def canvas_place(bench, point_um):
+    """Where on the canvas widget a place of the world is, in 2-D or 3-D: found by asking napari the way back."""
+    canvas = bench.viewer.window._qt_viewer.canvas
+    height, width = canvas.size
+    order = list(bench.viewer.dims.displayed)
+    wanted = np.asarray(point_um, float)[order]
+
+    def away(at):
+        here = np.array(canvas._map_canvas2world(tuple(at), canvas.view), float)[order]
+        gap = here - wanted
+        if len(order) == 3:
+            view = np.array(bench.viewer.scene.camera.view_direction)
+            gap = gap - (gap @ view) * view
+        return gap
+
+    at, step = np.array([width / 2, height / 2]), 20.0
+    for _ in range(4):  # the way there is linear: a few Newton steps settle rounding
+        start = away(at)
+        slope = np.column_stack([(away(at + np.array(d) * step) - start) / step for d in ((1, 0), (0, 1))])
+        at = at - np.linalg.lstsq(slope, start, rcond=None)[0]
+    return QPoint(round(at[0]), round(at[1]))
+
+
+def mouse(bench, *places):
+    """Press at the first place on the canvas, move along the others, let go."""
+    widget = bench.viewer.window._qt_viewer.canvas.native
+    QTest.mouseMove(widget, places[0])
+    QApplication.processEvents()
+    QTest.mousePress(widget, LEFT, NONE, places[0])
+    for at in places[1:]:
+        to = QPointF(widget.mapToGlobal(at))
+        QApplication.sendEvent(widget, QMouseEvent(QEvent.Type.MouseMove, QPointF(at), to, LEFT, LEFT, NONE))
+        QApplication.processEvents()
+    QTest.mouseRelease(widget, LEFT, NONE, places[-1])
+    QApplication.processEvents()
+
+
+@pytest.mark.parametrize("solid", [False, True], ids=["2-D", "3-D"])
+def test_points_of_a_track_are_moved_added_and_deleted_with_the_mouse(bench, qtbot, finished, solid):
+    opened(bench, qtbot, finished)
+    bench.bring("corrections")
+    bench.corrections.view.edit_button.click()
+    layer = bench.viewer.layers["Track points"]
+    if solid:
+        bench.layers._show_in_3d(True)
+    settle(bench, qtbot)
+    before = layer.data.copy()
+    start = canvas_place(bench, before[3])
+    mouse(bench, start, *(start + QPoint(3 * k, 0) for k in range(1, 7)))
+    settle(bench, qtbot)
+    assert layer.selected_data == {3}
+    assert len(bench.desk.session.edits.tracks) == 1
+    shift = layer.data[3] - before[3]
+    assert 20.0 < np.linalg.norm(shift) < 2000.0
+    np.testing.assert_allclose(np.delete(layer.data, 3, axis=0), np.delete(before, 3, axis=0), atol=0.02)
+    bench.corrections.view.setFocus()
+    layer.mode = "add"
+    half = (layer.data[4] + layer.data[5]) / 2
+    mouse(bench, canvas_place(bench, half))
+    settle(bench, qtbot)
+    assert len(layer.data) == len(bench.desk.session.edits.tracks[0].points_um) == 9
+    if not solid:
+        assert np.linalg.norm(layer.data - half, axis=1).min() < 200.0
+    layer.mode = "select"
+    layer.selected_data = {8}
+    canvas = bench.viewer.window._qt_viewer.canvas.native
+    canvas.setFocus()
+    QTest.keyClick(canvas, Qt.Key.Key_Delete)
+    settle(bench, qtbot)
+    assert len(bench.desk.session.edits.tracks[0].points_um) == 8
+    bench.corrections.view.forget_button.click()
+    settle(bench, qtbot)
+    assert bench.told == []
+
+
+def test_slicing_off_the_screen_shows_the_same(bench, qtbot, finished):
+    """napari's own setting for asynchronous slicing, which is the user's, changes nothing but when it is drawn."""
+    from napari.settings import get_settings
+
+    opened(bench, qtbot, finished)
+    place_um = bench.viewer.layers["Contacts"].data[10]
+    bench.canvas.go_to(place_um)
+    settle(bench, qtbot)
+    before = bench.viewer.screenshot(canvas_only=True, flash=False)
+    get_settings().experimental.async_ = True
+    try:
+        bench.canvas.go_to(place_um + 500.0)
+        bench.canvas.go_to(place_um)
+        qtbot.waitUntil(lambda: all(layer.loaded for layer in bench.viewer.layers), timeout=30_000)
+        qtbot.wait(200)
+        after = bench.viewer.screenshot(canvas_only=True, flash=False)
+    finally:
+        get_settings().experimental.async_ = False
+    assert np.mean(np.abs(before.astype(int) - after) > 30) < 0.002
+
+
+def test_units_are_shown_as_points_coloured_by_a_column_of_their_own(bench, qtbot, finished):
+    opened(bench, qtbot, finished)
+    bench.brain.view.units_button.click()
+    settle(bench, qtbot)
+    assert bench.told == []
+    layer, table = bench.viewer.layers["Units"], bench.layers.units
+    assert len(layer.data) == table["track_depth_um"].notna().sum() > 3
+    assert {str(u) for u in layer.units} == {"micrometer"}
+    track = bench.results.tracks["A", 0]
+    depth = layer.features["track_depth_um"].to_numpy(float)
+    np.testing.assert_allclose(layer.data, track.stack_at(depth), atol=1e-6)
+    box = bench.brain.view.unit_column
+    assert box.isVisibleTo(bench.brain.view)
+    box.setCurrentText("n_spikes")
+    box.textActivated.emit("n_spikes")
+    settle(bench, qtbot)
+    layer = bench.viewer.layers["Units"]
+    spikes = layer.features["n_spikes"].to_numpy(float)
+    light = layer.face_color[:, :3] @ [0.2126, 0.7152, 0.0722]
+    assert light[spikes.argmax()] > light[spikes.argmin()]
+    assert "…" in bench.brain.view.legend.text()
+    bench.brain.view.units_button.click()
+    assert "Units" not in bench.viewer.layers
+
+
+@pytest.mark.parametrize("suffix", [".png", ".svg", ".pdf"])
+def test_the_canvas_is_saved_as_a_figure_with_its_scale_bar(bench, qtbot, finished, tmp_path, suffix):
+    opened(bench, qtbot, finished)
+    file = tmp_path / f"canvas{suffix}"
+    bench.layers.save_figure(file)
+    _, width = bench.canvas.size
+    assert bench.viewer.canvas.overlays["scale_bar"].visible
+    if suffix == ".png":
+        image = QImage(str(file))
+        assert image.width() > 2.5 * width
+        assert image.dotsPerMeterX() == pytest.approx(300 / 0.0254, rel=0.01)
+    elif suffix == ".svg":
+        text = file.read_text()
+        assert "<image" in text
+        assert " mm</text>" in text
+    else:
+        assert file.read_bytes()[:5] == b"%PDF-"
 
 
 def test_errors_are_told_in_words_and_the_window_goes_on(bench, qtbot, finished):
     opened(bench, qtbot, finished)
     double_click(bench, "strata", 0.5, 700.0)
     (anchor,) = anchors(bench)
-    bench.sections._act(AddAnchor(replace(anchor, tip_distance_um=anchor.tip_distance_um + 100.0)))
+    bench.section.controller._act(AddAnchor(replace(anchor, tip_distance_um=anchor.tip_distance_um + 100.0)))
     settle(bench, qtbot)
     assert any("anchors cross" in words for words in bench.told)
     assert len(anchors(bench)) == 1
-    assert bench.brain.messages.count() >= 1
+    assert bench.brain.view.messages.count() >= 1
 
 
 def test_napari_itself_opens_a_brain_folder_and_offers_the_docks(bench, qtbot, finished):
@@ -273,7 +481,7 @@ def test_napari_itself_opens_a_brain_folder_and_offers_the_docks(bench, qtbot, f
     assert bench.desk.brain.folder == finished
     assert "Contacts" in bench.viewer.layers
     _, widget = bench.viewer.window.add_plugin_dock_widget("leadline", "Section")
-    assert widget is bench.section
+    assert widget is bench.section.view
     assert bench.told == []
 
 
@@ -284,13 +492,13 @@ def test_long_work_is_shown_in_the_activity_dock_and_cancelled_from_there(bench,
     seen = []
 
     def work():
-        bench.progress.begin("a long piece of work", 100)
+        bench.brain.progress.begin("a long piece of work", 100)
         for _ in range(2000):
-            bench.progress.step(0.05)
+            bench.brain.progress.step(0.05)
             time.sleep(0.005)
         return "never"
 
-    bench.progress = QtProgress(bench)
+    bench.brain.progress = QtProgress(bench)
     bench.runner.submit("run", work, seen.append, seen.append)
     qtbot.waitUntil(lambda: any(p.desc.startswith("a long") for p in progress._all_instances), timeout=10_000)
     (bar,) = [p for p in progress._all_instances if p.desc.startswith("a long")]
@@ -298,8 +506,8 @@ def test_long_work_is_shown_in_the_activity_dock_and_cancelled_from_there(bench,
     bar.cancel()
     qtbot.waitUntil(lambda: bool(seen), timeout=10_000)
     assert seen == [""]
-    bench.progress.finish()
-    bench.progress = None
+    bench.brain.progress.finish()
+    bench.brain.progress = None
     assert not [p for p in progress._all_instances if p.desc.startswith("a long")]
 
 
@@ -310,5 +518,5 @@ def test_the_demo_brain_is_written_off_the_screen_and_opened(bench, qtbot, monke
     settle(bench, qtbot)
     assert bench.desk.brain.name == "tiny-01"
     assert [layer.name for layer in bench.viewer.layers] == ["Stack background", "Stack dye"]
-    assert "run 'Trace'" in bench.section.banner.text()
+    assert "run 'Trace'" in bench.section.view.banner.toolTip()
     assert bench.told == []

@@ -1,9 +1,8 @@
-"""Points on the canvas that a person moves: a track's, and pairs of places; wired to the corrections controller."""
+"""The Corrections dock, wired: points on the canvas that a person moves, a track's, and pairs of places."""
 
 from __future__ import annotations
 
-from dataclasses import replace
-from typing import TYPE_CHECKING, Any, Protocol
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -13,42 +12,21 @@ from leadline_napari.controllers.corrections import CorrectionController
 from leadline_napari.views.corrections import CorrectionView
 
 if TYPE_CHECKING:
-    import napari
-
     from leadline.base.arrays import FloatArray
     from leadline.model.track import Track
-    from leadline.pipeline.bench import Bench
-    from leadline_napari.controllers.desk import Desk, Runner
-    from leadline_napari.results import Results
-    from leadline_napari.views.canvas import Canvas
+    from leadline_napari.docks.host import Host
 
 EDIT_LAYER = "Track points"
 DONE = ("added", "removed", "changed")
 KEYS = (("Alt-E", "entry"), ("Alt-T", "end"), ("Alt-P", "pair"))
 
 
-class Host(Protocol):
-    """What corrections need of the workbench that holds them."""
+class CorrectionDock:
+    """A track redrawn by hand, a registration corrected by pairs of places."""
 
-    viewer: napari.Viewer
-    canvas: Canvas
-    runner: Runner
-    desk: Desk | None
-    bench: Bench | None
-    results: Results | None
-
-    def tell(self, words: str) -> None:
-        """Say something to the user."""
-
-    def retrack(self, results: Results) -> None:
-        """Take products in which a track was redrawn."""
-
-
-class Editing:
-    """The corrections of one workbench."""
-
-    def __init__(self, bench: Host, view: CorrectionView) -> None:
-        self.bench, self.view = bench, view
+    def __init__(self, host: Host) -> None:
+        self.host = host
+        self.view = view = CorrectionView(host.theme)
         self.controller: CorrectionController | None = None
         self._own = False
         for signal, do in (
@@ -61,16 +39,16 @@ class Editing:
         ):  # fmt: skip
             signal.connect(do)
         for key, what in KEYS:
-            bench.viewer.bind_key(key, self._at_cursor(what), overwrite=True)
+            host.viewer.bind_key(key, self._at_cursor(what), overwrite=True)
 
     def open(self) -> None:
         """Take the desk and the products of the workbench."""
-        bench = self.bench
-        if self.controller is None or self.controller.desk is not bench.desk:
+        host = self.host
+        if self.controller is None or self.controller.desk is not host.desk:
             self.controller = CorrectionController(
-                bench.desk, self.view, bench.runner, bench.tell, self._retraced, self._edited, self._paired
+                host.desk, self.view, host.runner, host.tell, self._retraced, self._edited, self._paired
             )
-        self.controller.open(bench.bench, bench.results)
+        self.controller.open(host.bench, host.results)
         self._paired()
 
     def _do(self, name: str) -> None:
@@ -81,7 +59,7 @@ class Editing:
 
     def _centre(self) -> FloatArray:
         """The place in the middle of the view, on the plane that is looked at."""
-        viewer = self.bench.viewer
+        viewer = self.host.viewer
         place = np.array(viewer.dims.point, float)[-3:]
         shown = list(viewer.dims.displayed)
         place[shown] = np.array(viewer.scene.camera.center)[-len(shown) :]
@@ -97,7 +75,7 @@ class Editing:
         if self.controller is None:
             return
         if what == "pair":
-            registration = self.bench.results.registration if self.bench.results else None
+            registration = self.host.results.registration if self.host.results else None
             if registration is not None:
                 self.controller.add_pair(at_um, registration.stack_to_atlas(at_um[None])[0])
         else:
@@ -108,7 +86,7 @@ class Editing:
     def _edit(self, on: bool) -> None:
         if self.controller is None:
             return
-        canvas = self.bench.canvas
+        canvas = self.host.canvas
         canvas.remove([EDIT_LAYER])
         if not on:
             self.controller.end()
@@ -117,11 +95,12 @@ class Editing:
         if points is None:
             self.controller.end()
             return
-        layer = canvas.put(layers.edit_spec(points, self.bench.bench.background.finest.code, EDIT_LAYER))
-        layer.mode = "select"
+        layer = canvas.put(layers.edit_spec(points, self.host.bench.background.finest.code, EDIT_LAYER))
+        layer.mode = "select" if len(points) else "add"
         layer.events.data.connect(self._moved)
-        self.bench.viewer.layers.selection.active = layer
-        canvas.go_to(points[len(points) // 2])
+        self.host.viewer.layers.selection.active = layer
+        if len(points):
+            canvas.go_to(points[len(points) // 2])
 
     def _moved(self, event: Any) -> None:
         """The person moved, added or deleted a point."""
@@ -130,7 +109,7 @@ class Editing:
 
     def _edited(self, points_um: FloatArray) -> None:
         """Someone else moved the points: undo, snapping, an end set."""
-        viewer = self.bench.viewer
+        viewer = self.host.viewer
         if EDIT_LAYER not in viewer.layers:
             return
         layer = viewer.layers[EDIT_LAYER]
@@ -146,40 +125,36 @@ class Editing:
             self._own = False
 
     def _forget(self) -> None:
-        self.bench.canvas.remove([EDIT_LAYER])
+        self.host.canvas.remove([EDIT_LAYER])
         self._do("forget")
 
     def _retraced(self, track: Track) -> None:
-        results = self.bench.results
-        if results is not None:
-            tracks = dict(results.tracks) | {(track.penetration, track.shank): track}
-            self.bench.retrack(replace(results, tracks=tracks))
+        self.host.retrack(track)
+        self.controller.results = self.host.results
 
     # -- pairs --------------------------------------------------------------------------------------------------
 
     def _paired(self) -> None:
         """Draw both ends of every pair."""
-        controller, results = self.controller, self.bench.results
+        controller, results = self.controller, self.host.results
         if controller is None or results is None or results.registration is None:
             return
         stack = np.array([p.stack_um for p in controller.draft]).reshape(-1, 3)
         atlas = np.array([p.atlas_um for p in controller.draft]).reshape(-1, 3)
-        specs = layers.pair_specs(stack, atlas, results.registration, self.bench.bench.background.finest.code)
+        specs = layers.pair_specs(stack, atlas, results.registration, self.host.bench.background.finest.code)
         if not len(stack):
-            self.bench.canvas.remove([s.name for s in specs])
+            self.host.canvas.remove([s.name for s in specs])
             return
         for end, spec in enumerate(specs):
-            if spec.name in self.bench.viewer.layers and len(self.bench.viewer.layers[spec.name].data) == len(
-                spec.data
-            ):
+            if spec.name in self.host.viewer.layers and len(self.host.viewer.layers[spec.name].data) == len(spec.data):
                 self._own = True
                 try:
-                    self.bench.viewer.layers[spec.name].data = spec.data
+                    self.host.viewer.layers[spec.name].data = spec.data
                 finally:
                     self._own = False
                 continue
-            self.bench.canvas.remove([spec.name])
-            layer = self.bench.canvas.put(spec)
+            self.host.canvas.remove([spec.name])
+            layer = self.host.canvas.put(spec)
             layer.mode = "select"
             layer.events.data.connect(lambda event, end=end: self._pair_moved(event, end))
 
@@ -187,7 +162,7 @@ class Editing:
         if self._own or str(getattr(event.action, "value", event.action)) != "changed":
             return
         data = np.array(event.source.data, float)
-        registration = self.bench.results.registration
+        registration = self.host.results.registration
         for index, pair in enumerate(self.controller.draft):
             old = np.array(pair.stack_um) if end == 0 else registration.atlas_to_stack(np.array([pair.atlas_um]))[0]
             if np.abs(data[index] - old).max() > 0.01:
@@ -202,16 +177,16 @@ class Editing:
 
     def _go_to_pair(self, index: int) -> None:
         if self.controller is not None and 0 <= index < len(self.controller.draft):
-            self.bench.canvas.go_to(self.controller.draft[index].stack_um)
+            self.host.canvas.go_to(self.controller.draft[index].stack_um)
 
     def _preview(self, on: bool) -> None:
         """Draw the atlas as the pairs would refine it, or as it was found."""
-        results = self.bench.results
+        results = self.host.results
         if self.controller is None or results is None or results.registration is None:
             return
         try:
             shown = self.controller.preview() if on else results.registration
         except LeadlineError as error:
-            self.bench.tell(str(error))
+            self.host.tell(str(error))
             return
-        self.bench.canvas.put(layers.outline_spec(self.bench.bench, shown))
+        self.host.canvas.put(layers.outline_spec(self.host.bench, shown))

@@ -1,0 +1,1 @@
+"""What the section's lanes are made of: graphics items that draw one snapshot each."""
