@@ -120,7 +120,7 @@ class _Table:
 
     def _existing(self, value: object, folder_ok: bool) -> Path:
         path = self.folder / _text(value)
-        if not path.exists():
+        if not os.path.exists(path):  # unlike Path.exists it takes any text for a name
             raise LeadlineError(f"{path} does not exist", mend=_neighbours(path))
         if path.is_dir() and not folder_ok:
             raise LeadlineError(f"{path} is a folder", mend="Name a file")
@@ -291,7 +291,7 @@ def _unique(names: Iterable[str], table: _Table, what: str) -> None:
 
 
 def _neighbours(path: Path) -> str:
-    if not path.parent.is_dir():
+    if not os.path.isdir(path.parent):
         return f"There is no folder {path.parent} either; paths are relative to brain.toml"
     return f"Paths are relative to brain.toml. {nearest(path.name, [p.name for p in path.parent.iterdir()])}"
 

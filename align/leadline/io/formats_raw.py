@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import bz2
 import gzip
+import os
 import tempfile
 from pathlib import Path
 from typing import Any
@@ -236,7 +237,7 @@ def _nrrd_block(path: Path, header: Any, shape: tuple[int, ...], offset: int) ->
     encoding = str(header.get("encoding", "raw")).lower()
     name = header.get("data file") or header.get("datafile")
     file = path if name is None else path.parent / str(name)
-    if name is not None and not file.is_file():
+    if name is not None and not os.path.isfile(file):
         raise LeadlineError(f"its voxels are to be in {name!r}, which is no file", where=str(path),
                             mend="Keep header and data file together; lists of data files are not read")  # fmt: skip
     plain = not header.get("byte skip") and not header.get("line skip")

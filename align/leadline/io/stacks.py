@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 from typing import TYPE_CHECKING
 
 from leadline.base.errors import LeadlineError
@@ -27,7 +28,7 @@ def open_image(path: Path, channel: int = 0) -> Image:
     from leadline.io.formats_zarr import is_zarr, open_zarr
 
     name = path.name.lower()
-    if not path.exists():
+    if not os.path.exists(path):  # unlike Path.exists it takes any text for a name
         raise LeadlineError("is not there", where=str(path), mend="Correct the path; it is relative to its toml file")
     if path.is_dir():
         zarr = is_zarr(path) or name.endswith(".zarr")

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import csv
 import json
+import os
 import re
 from typing import TYPE_CHECKING, Any
 
@@ -24,7 +25,7 @@ def read_structures(path: Path) -> tuple[Structures, tuple[str, ...]]:
 
     Raises LeadlineError with all faults of the table at once.
     """
-    if not path.is_file():
+    if not os.path.isfile(path):
         raise LeadlineError("is not there", where=str(path), mend="Name the structure table in atlas.toml")
     try:
         with path.open(newline="", encoding="utf-8-sig") as handle:
