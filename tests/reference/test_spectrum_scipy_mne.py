@@ -15,7 +15,7 @@ NO_MAINS = ProfileSettings(mains_hz=0.0)
 
 def spectrum_of(samples, sampling_hz, settings=NO_MAINS):
     traces = InMemory(samples, sampling_hz)
-    chosen = plan(traces, traces.n_channels, NOTHING)
+    chosen = plan(traces, NOTHING)
     return chosen, field_statistics(traces, np.arange(traces.n_channels), chosen, settings)
 
 

@@ -37,8 +37,11 @@ LANES: tuple[tuple[str, tuple[tuple[str, str], ...]], ...] = (
     ),
     ("theta phase (°)", (("theta_phase_rad", GREEN),)),
     ("units per 100 µm", (("unit_density_per_100um", BLUE),)),
-    ("spikes/s per 100 µm", (("spike_rate_hz", RED), ("evoked_rate_hz", SKY))),
-    ("spike amplitude (µV)", (("spike_amplitude_uv", PINK),)),
+    (
+        "spikes/s per 100 µm",
+        (("spike_rate_hz", RED), ("crossing_density_hz_per_100um", ORANGE), ("evoked_rate_hz", SKY)),
+    ),
+    ("spike amplitude (µV)", (("spike_amplitude_uv", PINK), ("crossing_amplitude_uv", ORANGE))),
 )
 SHORT = {
     "delta_power_db": "delta",
@@ -50,6 +53,9 @@ SHORT = {
     "neighbour_correlation": "neighbours, all bands",
     "neighbour_coherence": "neighbours, gamma",
     "spike_rate_hz": "all spikes",
+    "spike_amplitude_uv": "units",
+    "crossing_density_hz_per_100um": "threshold crossings",
+    "crossing_amplitude_uv": "threshold crossings",
     "evoked_rate_hz": "added after events",
 }
 GAP = 2.5  # times the usual pitch; a wider step between rows is left white

@@ -27,7 +27,7 @@ _NEEDED = {
 
 @dataclass(frozen=True, slots=True)
 class BinaryTraces:
-    """Samples of a flat file. Every read maps the file anew and lets go of it, so memory does not grow with the file.
+    """Samples of a flat file. Every read opens the file anew and keeps nothing, so memory does not grow with the file.
 
     ``uv_per_bit`` : microvolts of one unit of the file.
     """
@@ -49,14 +49,11 @@ class BinaryTraces:
         start, stop = max(0, start), min(stop, self.n_samples)
         if stop <= start:
             return np.zeros((0, len(channels)), np.float32)
-        raw = np.memmap(
-            self.path,
-            self.dtype,
-            "r",
-            offset=start * self.n_channels * np.dtype(self.dtype).itemsize,
-            shape=(stop - start, self.n_channels),
-        )
-        samples: Float32Array = as_microvolts(raw, channels, self.uv_per_bit)
+        count = (stop - start) * self.n_channels
+        raw = np.fromfile(self.path, self.dtype, count, offset=start * self.n_channels * np.dtype(self.dtype).itemsize)
+        if raw.size < count:
+            raise LeadlineError("ends early; it was whole when opened", where=str(self.path), mend="Copy it again")
+        samples: Float32Array = as_microvolts(raw.reshape(-1, self.n_channels), channels, self.uv_per_bit)
         if np.dtype(self.dtype).kind == "f" and not np.isfinite(samples).all():
             row, column = np.argwhere(~np.isfinite(samples))[0]
             raise LeadlineError(

@@ -48,6 +48,8 @@ FEATURES = (
     Feature("spike_amplitude_uv", "units", "spike amplitude"),
     Feature("spike_width_s", "units", "spike width"),
     Feature("evoked_rate_hz", "units", "spike response to events"),
+    Feature("crossing_density_hz_per_100um", "units", "spike density (threshold crossings)"),
+    Feature("crossing_amplitude_uv", "units", "depth of threshold crossings"),
 )
 FEATURE_BY_NAME: Mapping[str, Feature] = MappingProxyType({f.name: f for f in FEATURES})
 

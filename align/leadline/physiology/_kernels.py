@@ -7,40 +7,30 @@ from typing import Any
 import numpy as np
 from numba import njit
 
-HALF = np.float32(0.5)
-QUARTER = np.float32(0.25)
+
+@njit(cache=True, fastmath=True, nogil=True)  # type: ignore[untyped-decorator]
+def join_and_window(before: Any, after: Any, window: Any, out: Any) -> None:
+    """Segments of two halves (C, N / 2) each, less their mean and times ``window`` (N,), in ``out`` (C, N) float32."""
+    half = before.shape[1]
+    for c in range(out.shape[0]):
+        first, second, target = before[c], after[c], out[c]
+        total = np.float32(0)
+        for t in range(half):
+            total += first[t] + second[t]
+        mean = total / np.float32(2 * half)
+        for t in range(half):
+            target[t] = (first[t] - mean) * window[t]
+        for t in range(half):
+            target[half + t] = (second[t] - mean) * window[half + t]
 
 
 @njit(cache=True, fastmath=True, nogil=True)  # type: ignore[untyped-decorator]
-def add_hann_power(spectrum: Any, kept: Any, power: Any) -> None:
-    """Add the power of every kept segment, mean removed and Hann window applied, to ``power``.
-
-    ``spectrum`` : (C, S, 2 F) float32, the real FFT of the bare segments as pairs of real and imaginary parts; its
-    first bin is set to zero, which removes the mean. The periodic Hann window is the convolution
-    ``X[k] / 2 - (X[k - 1] + X[k + 1]) / 4`` of the spectrum. ``kept`` : (S,) bool. ``power`` : (C, F) float32.
-    """
-    channels, segments, width = spectrum.shape
-    bins = width // 2
-    square = np.zeros(width - 4, np.float32)
-    for c in range(channels):
-        total = power[c]
-        for s in range(segments):
-            x = spectrum[c, s]
-            x[0] = 0
-            x[1] = 0
-            if not kept[s]:
-                continue
-            before, here, after = x[: width - 4], x[2 : width - 2], x[4:]
-            for k in range(width - 4):
-                y = HALF * here[k] - QUARTER * (before[k] + after[k])
-                square[k] = y * y
-            inner = total[1 : bins - 1]
-            for k in range(bins - 2):
-                inner[k] += square[2 * k] + square[2 * k + 1]
-            first = HALF * x[2]
-            last = HALF * (x[width - 2] - x[width - 4])
-            total[0] += first * first
-            total[bins - 1] += last * last
+def add_power(spectrum: Any, power: Any) -> None:
+    """Add the squared size of spectra, (C, 2 F) pairs of real and imaginary parts, to ``power`` (C, F)."""
+    for c in range(spectrum.shape[0]):
+        x, total = spectrum[c], power[c]
+        for k in range(total.size):
+            total[k] += x[2 * k] * x[2 * k] + x[2 * k + 1] * x[2 * k + 1]
 
 
 @njit(cache=True, fastmath=True, nogil=True)  # type: ignore[untyped-decorator]

@@ -13,19 +13,19 @@ from leadline.base.arrays import Float32Array, FloatArray, IntArray
 from leadline.model.recording import Traces
 
 if TYPE_CHECKING:
-    from collections.abc import Iterator
+    from collections.abc import Callable, Iterator
 
 FIELD_HZ = 2500.0  # the rate that fields are thinned to: the high-frequency band reaches 1000 Hz
 GUARD_S = 0.1  # left out on either side of an excluded interval: filters and amplifiers ring
 SEGMENT_S = 2.0
 MIN_SEGMENTS = 8
 MAX_READ_S = 1200.0  # more adds nothing: 1200 segments give band powers to 0.2 dB
-BLOCK_SAMPLES = 8_000_000  # samples of all channels held at once: 32 MB, which the allocator uses again
+BLOCK_S = 10.0  # read in one go where a recording is not read whole
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Plan:
-    """Segments to read, half overlapping, in blocks that are held at once.
+    """Segments to read, half overlapping, in blocks without a gap.
 
     ``segment`` : samples of a segment, even. ``start`` : (B,) first sample of each block. ``count`` : (B,) segments of
     each block. ``share`` : of the allowed time that is read. ``allowed_s`` : time outside excluded intervals.
@@ -46,6 +46,12 @@ class Plan:
     def n_segments(self) -> int:
         """Number of segments of all blocks."""
         return int(self.count.sum())
+
+    def spans(self) -> IntArray:
+        """Stretches ``(k, 2)`` of samples that are read, joined blocks as one."""
+        ends = self.start + (self.count + 1) * self.hop
+        first = np.flatnonzero(np.concatenate([[True], self.start[1:] + self.hop != ends[:-1]])[: self.start.size])
+        return np.stack([self.start[first], ends[np.append(first[1:], self.start.size) - 1]], axis=1)
 
     def blocks(self) -> Iterator[tuple[int, int, int]]:
         """First sample, stop and number of segments of each block."""
@@ -75,7 +81,7 @@ def allowed_spans(n_samples: int, sampling_hz: float, excluded_s: FloatArray) ->
     return np.array(spans, np.int64).reshape(-1, 2)
 
 
-def plan(traces: Traces, n_channels: int, excluded_s: FloatArray, fraction: float = 1.0) -> Plan:
+def plan(traces: Traces, excluded_s: FloatArray, fraction: float = 1.0) -> Plan:
     """Choose segments and blocks: ``fraction`` of the allowed time, at most 20 minutes, spread evenly.
 
     Segments last two seconds, less where excluded intervals leave no room for enough of those.
@@ -85,9 +91,7 @@ def plan(traces: Traces, n_channels: int, excluded_s: FloatArray, fraction: floa
     segment = _segment(spans, traces.sampling_hz)
     hop = segment // 2
     share = min(fraction, MAX_READ_S / allowed_s if allowed_s else 1.0, 1.0)
-    longest = max(1, BLOCK_SAMPLES // (max(n_channels, 1) * hop) - 1)
-    if share < 1.0:
-        longest = min(longest, max(4, int(10.0 * traces.sampling_hz) // hop))
+    longest = max(4, int(BLOCK_S * traces.sampling_hz) // hop)
     starts, counts = [], []
     for start, stop in spans.tolist():
         segments = (stop - start) // hop - 1
@@ -116,6 +120,23 @@ def _evenly(n: int, share: float) -> IntArray:
     return np.floor((np.arange(wanted) + 0.5) * n / max(wanted, 1)).astype(np.int64)
 
 
+def halves(read: Callable[[int, int], Float32Array], plan: Plan) -> Iterator[tuple[Float32Array, Float32Array]]:
+    """First and second half ``(C, hop)`` of every segment of ``plan``; what two segments share is read once.
+
+    ``read`` gives samples ``(stop - start, C)``; it is asked for half a segment at once, which the cache holds.
+    """
+    end = -1
+    before = np.zeros((0, 0), np.float32)
+    for start, stop, _ in plan.blocks():
+        joined = start + plan.hop == end
+        for at in range(end if joined else start, stop, plan.hop):
+            after = np.ascontiguousarray(read(at, at + plan.hop).T)
+            if at > start:
+                yield before, after
+            before = after
+        end = stop
+
+
 def fields(traces: Traces) -> Traces:
     """The same recording thinned to the lowest whole-number rate of at least 2500 Hz; itself where it is not faster."""
     factor = int(traces.sampling_hz // FIELD_HZ)
@@ -127,11 +148,13 @@ class Thinned:
     """Traces low-passed and thinned by ``factor`` while they are read.
 
     A linear-phase Kaiser-window filter passes up to 0.4 of the new rate and takes away 60 dB from 0.6 of it on, so
-    that only frequencies above 0.4 of the rate can hold anything folded back.
+    that only frequencies above 0.4 of the rate can hold anything folded back. ``hear`` : told of the samples as they
+    were, once for each that is read: number of the first, samples (C, T), and how many on either side are only margin.
     """
 
     source: Traces
     factor: int
+    hear: Callable[[int, Float32Array, int], None] | None = None
 
     @property
     def sampling_hz(self) -> float:
@@ -157,10 +180,10 @@ class Thinned:
         return np.asarray(taps / taps.sum(), np.float32)
 
     def read_uv(self, start: int, stop: int, channels: IntArray) -> Float32Array:
-        """Samples ``[start, stop)`` after thinning, ``(stop - start, len(channels))``, half a second at once."""
+        """Samples ``[start, stop)`` after thinning, ``(stop - start, len(channels))``, a fifth of a second at once."""
         start, stop = max(0, start), min(stop, self.n_samples)
         out = np.empty((len(channels), max(0, stop - start)), np.float32)
-        step = max(1, int(self.sampling_hz / 2))
+        step = max(1, int(self.sampling_hz / 5))
         for first in range(start, stop, step):
             last = min(first + step, stop)
             self._fill(first, last, channels, out[:, first - start : last - start])
@@ -170,8 +193,10 @@ class Thinned:
         from leadline.physiology._kernels import filter_and_thin
 
         half = len(self.taps) // 2
-        first, last = start * self.factor - half, (stop - 1) * self.factor + half + 1
+        first, last = start * self.factor - half, stop * self.factor + half
         inside = self.source.read_uv(max(first, 0), min(last, self.source.n_samples), channels).T
         pad = (max(-first, 0), max(last - self.source.n_samples, 0))
         samples = np.pad(inside, ((0, 0), pad), mode="edge") if any(pad) else np.ascontiguousarray(inside)
         filter_and_thin(samples, self.taps, self.factor, out)
+        if self.hear is not None:
+            self.hear(start * self.factor, samples, half)

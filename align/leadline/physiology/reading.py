@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
+from functools import partial
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -11,10 +12,12 @@ from leadline.base.arrays import AnyArray, BoolArray, FloatArray
 from leadline.base.errors import LeadlineError
 from leadline.base.progress import SILENT, Progress
 from leadline.physiology.channels import bad_channels, outside_rows
-from leadline.physiology.chunks import fields, plan
+from leadline.physiology.chunks import Plan, Thinned, fields, plan
 from leadline.physiology.coherence import neighbour_likeness, theta_features
+from leadline.physiology.crossings import LEAST_HZ, Counts, counts_for, crossing_features, detector_for
 from leadline.physiology.csd import row_csd_operator
 from leadline.physiology.evoked import EvokedRows, evoked_rows, responses, usable_events
+from leadline.physiology.order import deaf, order_doubts
 from leadline.physiology.rows import Rows
 from leadline.physiology.spectrum import USABLE, FieldStatistics, band_power_db, bands_hz, field_statistics
 from leadline.physiology.units import unit_features
@@ -25,6 +28,7 @@ if TYPE_CHECKING:
     from leadline.model.settings import ProfileSettings
 
 FREQUENCY_HZ = 0.5 * 2.0 ** (np.arange(0, 89) / 8.0)  # 0.5 to 1024 Hz, eight to the octave
+ENOUGH_SPIKES, ENDS_EARLY = 500, 0.8  # so many spikes do not stop by chance before that share of a recording
 LIMIT_SD = 5.0  # samples around an event count for at most this many standard deviations of their channel
 CLEAR = 5.5  # standard deviations of the noise; random times reach 3 to 5
 
@@ -34,7 +38,8 @@ class Reading:
     """Features of one recording by row, with what is needed to merge several.
 
     ``features`` : name -> (R,). ``flags`` : (R,) text. ``power_uv2_per_hz`` : (R, F) at ``FREQUENCY_HZ``. ``field_s``,
-    ``unit_s`` : time that fields and spikes were read over. ``evoked`` : the response, where there is one.
+    ``unit_s`` : time that fields and spikes were read over. ``read_s``, ``of_s`` : time that samples were read of, and
+    that lies outside excluded intervals. ``evoked`` : the response, where there is one.
     """
 
     rows: Rows
@@ -43,6 +48,8 @@ class Reading:
     power_uv2_per_hz: FloatArray = field(default_factory=lambda: np.zeros((0, 0)))
     field_s: float = 0.0
     unit_s: float = 0.0
+    read_s: float = 0.0
+    of_s: float = 0.0
     evoked: EvokedRows | None = None
     event_kind: str = ""
     event_count: int = 0
@@ -84,6 +91,11 @@ def _add_units(reading: Reading, recording: Recording, spikes: Spikes, settings:
         late = int((spikes.time_s > duration).sum())
         if late:
             reading.warnings.append(f"spikes after the recording's end at {duration:.0f} s were left out: {late}")
+        if len(spikes.time_s) >= ENOUGH_SPIKES and last < ENDS_EARLY * duration:
+            reading.warnings.append(
+                f"spikes end at {last:.0f} s, the fields at {duration:.0f} s: are they of one recording, is "
+                "sampling_hz right, and are spike times in seconds?"
+            )
     if recording.events is not None:
         usable = usable_events(
             recording.events, 1000 * int(duration), 1000.0, recording.excluded_s, settings.event_window_s
@@ -103,26 +115,39 @@ def _add_fields(
     settings: ProfileSettings,
     progress: Progress,
 ) -> None:
-    read_plan = plan(traces, len(probe.channel), recording.excluded_s, settings.fraction)
+    read_plan = plan(traces, recording.excluded_s, settings.fraction)
     if not read_plan.n_segments:
         reading.warnings.append("the excluded intervals leave no stretch of fields to read")
         return
-    statistics = field_statistics(traces, probe.channel, read_plan, settings, progress=progress)
+    counts = _listener(recording, traces, probe, read_plan, settings)
+    listening = traces if counts is None else replace(traces, hear=counts.hear)  # type: ignore[type-var]
+    statistics = field_statistics(
+        traces,
+        probe.channel,
+        read_plan,
+        settings,
+        read=partial(listening.read_uv, channels=probe.channel),
+        progress=progress,
+    )
     if read_plan.share < 0.999:
         read_s = read_plan.n_segments * read_plan.hop / traces.sampling_hz
         reading.warnings.append(
             f"{read_s:.0f} s of {read_plan.allowed_s:.0f} s ({read_s / read_plan.allowed_s:.0%}) of the "
-            "fields were read, spread evenly"
+            f"{'fields' if counts is None else 'samples'} were read, spread evenly"
         )
     if statistics.artefacts > 0.005:
         reading.warnings.append(f"{statistics.artefacts:.1%} of the time was left out because of artefacts")
     reading.field_s = statistics.seconds
+    reading.read_s, reading.of_s = read_plan.n_segments * read_plan.hop / traces.sampling_hz, read_plan.allowed_s
     dead, noisy = bad_channels(statistics, probe)
     good = ~(dead | noisy)
     _note_bad(reading, probe, dead, noisy)
     _flag_rows(reading, statistics, probe, dead, noisy)
     _add_powers(reading, statistics, good, settings)
     _add_likeness(reading, statistics, probe, good)
+    if counts is not None:
+        reading.unit_s = counts.seconds
+        reading.features |= crossing_features(counts, probe, reading.rows, good)
     if recording.events is not None:
         step_hz = float(statistics.frequency_hz[1])
         limit_uv = LIMIT_SD * np.sqrt(statistics.power_uv2_per_hz.sum(axis=1) * step_hz)
@@ -137,6 +162,23 @@ def _add_fields(
             settings,
             progress,
         )
+
+
+def _listener(
+    recording: Recording, traces: Traces, probe: Probe, read_plan: Plan, settings: ProfileSettings
+) -> Counts | None:
+    """What counts threshold crossings while fields are read; None with sorted spikes or without wideband samples."""
+    if recording.spikes is not None or not isinstance(traces, Thinned) or traces.source.sampling_hz < LEAST_HZ:
+        return None
+    event_s = np.zeros(0)
+    if recording.events is not None:
+        low, high = settings.event_window_s
+        event_s = recording.events.time_s
+        read_s = read_plan.spans() / traces.sampling_hz
+        inside = (event_s[:, None] + low >= read_s[:, 0]) & (event_s[:, None] + high <= read_s[:, 1])
+        event_s = event_s[inside.any(axis=1)]
+    detector = detector_for(traces.source, probe, read_plan, traces.factor)
+    return counts_for(detector, event_s, settings.event_window_s)
 
 
 def _note_bad(reading: Reading, probe: Probe, dead: BoolArray, noisy: BoolArray) -> None:
@@ -207,6 +249,11 @@ def _add_likeness(reading: Reading, statistics: FieldStatistics, probe: Probe, g
     correlation, coherence = neighbour_likeness(cross, probe, rows, good)
     reading.features["neighbour_correlation"] = correlation
     reading.features["neighbour_coherence"] = coherence
+    heard = np.isin(np.arange(len(rows)), rows.row_of_contact[good])
+    bands = [row_cross(cross[b], rows, good) for b in ("theta", "gamma", "ripple") if b in cross]
+    if bands:
+        told = deaf(bands[0], rows, heard)
+        reading.warnings += told or order_doubts(bands[-1], rows, rows.mean(probe.x_um), heard)
     if "theta" in cross:
         phase, likeness = theta_features(row_cross(cross["theta"], rows, good), rows, reading.flags == "")
         reading.features["theta_phase_rad"] = phase

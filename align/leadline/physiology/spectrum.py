@@ -3,23 +3,26 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cache, partial
 from typing import TYPE_CHECKING
 
 import numpy as np
 
-from leadline.base.arrays import AnyArray, BoolArray, FloatArray, IntArray
+from leadline.base.arrays import AnyArray, BoolArray, Float32Array, FloatArray, IntArray
 from leadline.base.progress import SILENT, Progress
+from leadline.physiology.chunks import halves
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping
+    from collections.abc import Callable, Mapping
 
     from leadline.model.recording import Traces
     from leadline.model.settings import ProfileSettings
     from leadline.physiology.chunks import Plan
 
-GROUP = 64  # channels transformed at once: their spectra stay in the cache
+GROUP = 48  # channels transformed at once: their spectra stay in the cache
 CROSS_BINS = 24  # bins of a band that enter the cross-spectra; neighbouring bins say much the same
 CROSS_SEGMENTS = 64
+CROSS_TOGETHER = 16  # segments that are multiplied at once
 FLUSH_SEGMENTS = 64  # segments that are summed in float32 before float64 takes over
 USABLE = 0.45  # of the sampling rate; above it anti-alias filters have taken the power away
 LINE_EXCESS = 4.0  # 6 dB above its surroundings, and narrow, is pickup
@@ -68,14 +71,23 @@ def field_statistics(
     plan: Plan,
     settings: ProfileSettings,
     *,
+    read: Callable[[int, int], Float32Array] | None = None,
     progress: Progress = SILENT,
 ) -> FieldStatistics:
     """Read the segments of ``plan`` once and average their spectra [1]_.
 
-    Segments overlap by half, lose their mean and take a periodic Hann window, as in ``scipy.signal.welch``; the window
-    is applied to the spectra, not to the samples. Segments that most contacts hear louder than usual in some band, by
-    3 dB and four robust standard deviations of the recording's own changes, are left out as artefacts. Samples are
-    float32 throughout.
+    Segments overlap by half, lose their mean and take a periodic Hann window, as in ``scipy.signal.welch``. Segments
+    that most contacts hear louder than usual in some band, by 3 dB and four robust standard deviations of the
+    recording's own changes, are left out as artefacts. Samples are float32 throughout.
+
+    Parameters
+    ----------
+    traces : what is read.
+    channels : (C,) traces of the contacts.
+    plan : which segments.
+    settings : bands and mains.
+    read : gives samples ``(stop - start, C)``, asked for in order and none twice; ``traces.read_uv`` without it.
+    progress : told how far reading has come.
 
     References
     ----------
@@ -86,12 +98,10 @@ def field_statistics(
     line = line_bins(frequency, typical, settings.mains_hz)
     sums = _Sums(len(channels), frequency, line, settings, plan)
     progress.begin("reading fields", plan.n_segments)
-    for start, stop, count in plan.blocks():
-        samples = np.ascontiguousarray(traces.read_uv(start, stop, channels).T)
-        samples -= samples[:, ::16].mean(axis=1, keepdims=True)  # float32 would round small signals on a large offset
-        segments = np.lib.stride_tricks.sliding_window_view(samples, plan.segment, axis=1)[:, :: plan.hop]
-        sums.add(segments, np.asarray((_levels(_watched(segments), frequency) <= threshold).all(axis=1), bool))
-        progress.step(count)
+    for before, after in halves(read or partial(traces.read_uv, channels=channels), plan):
+        power = _power(before[:: _step(channels)], after[:: _step(channels)])
+        sums.add(before, after, bool((_levels(power, frequency) <= threshold).all()))
+        progress.step()
     return sums.result(traces.sampling_hz)
 
 
@@ -104,51 +114,66 @@ class _Sums:
         self.frequency_hz, self.line, self.plan = frequency_hz, line, plan
         self.power = np.zeros((n_channels, frequency_hz.size))
         self.recent = np.zeros(self.power.shape, np.float32)
-        self.kept = self.seen = self.crossed = self.unflushed = 0
+        self.kept = self.seen = self.crossed = 0
         self.every = max(2, -(-plan.n_segments // CROSS_SEGMENTS))
-        self.bins: dict[str, IntArray] = {}
+        bins: dict[str, IntArray] = {}
         self.weight: dict[str, float] = {}
         top = USABLE * 2 * frequency_hz[-1]
         for name, (low, high) in bands_hz(settings).items():
             inside = np.flatnonzero((frequency_hz >= low) & (frequency_hz <= min(high, top)) & ~line)
             inside = inside[(inside > 0) & (inside < frequency_hz.size - 1)]
             if name in CROSSED and inside.size and high <= top:
-                self.bins[name] = inside[:: max(1, inside.size // CROSS_BINS)]
-                self.weight[name] = inside.size / self.bins[name].size
-        self.cross = {name: np.zeros((n_channels, n_channels), np.complex128) for name in self.bins}
+                bins[name] = inside[:: max(1, inside.size // CROSS_BINS)]
+                self.weight[name] = inside.size / bins[name].size
+        self.cross = {name: np.zeros((n_channels, n_channels), np.complex128) for name in bins}
+        self.all_bins = np.concatenate([*bins.values(), np.zeros(0, np.int64)])
+        ends = np.cumsum([b.size for b in bins.values()])
+        self.places = {name: slice(end - bins[name].size, end) for name, end in zip(bins, ends, strict=True)}
+        self.parts: list[AnyArray] = []
 
-    def add(self, segments: AnyArray, kept: BoolArray) -> None:
-        """Add the segments ``(C, S, N)`` that are kept."""
-        from scipy.fft import rfft
-
-        from leadline.physiology._kernels import add_hann_power
-
-        chosen = np.flatnonzero(kept & ((self.seen + np.arange(kept.size)) % self.every == 0))
-        parts: dict[str, list[AnyArray]] = {name: [] for name in self.bins}
-        for first in range(0, len(segments), GROUP):
-            spectrum = rfft(segments[first : first + GROUP], axis=-1)
-            add_hann_power(spectrum.view(np.float32), kept, self.recent[first : first + GROUP])
-            if chosen.size:
-                for name, bins in self.bins.items():
-                    parts[name].append(_hann(spectrum, chosen, bins))
-        for name, pieces in parts.items():
-            if pieces:
-                self.cross[name] += _half_outer(np.concatenate(pieces).reshape(len(segments), -1))
-        self.seen += kept.size
-        self.kept += int(kept.sum())
-        self.crossed += chosen.size
-        self.unflushed += kept.size
-        if self.unflushed >= FLUSH_SEGMENTS:
+    def add(self, before: Float32Array, after: Float32Array, kept: bool) -> None:
+        """Add the segment of two halves ``(C, hop)``, or only count it."""
+        crossed = kept and self.seen % self.every == 0
+        self.seen += 1
+        if not kept:
+            return
+        parts = []
+        for first in range(0, len(before), GROUP):
+            group = slice(first, first + GROUP)
+            spectrum = _spectra(before[group], after[group])
+            self._add_power(spectrum, group)
+            if crossed:
+                parts.append(np.take(spectrum, self.all_bins, axis=1))
+        self.kept += 1
+        if self.kept % FLUSH_SEGMENTS == 0:
             self._flush()
+        if crossed:
+            self.crossed += 1
+            self.parts.append(np.concatenate(parts))
+            if len(self.parts) == CROSS_TOGETHER:
+                self._cross()
+
+    def _add_power(self, spectrum: AnyArray, group: slice) -> None:
+        from leadline.physiology._kernels import add_power
+
+        add_power(spectrum.view(np.float32), self.recent[group])
+
+    def _cross(self) -> None:
+        """Add what has gathered to the cross-spectra."""
+        if self.parts:
+            gathered = np.stack(self.parts, axis=1)
+            for name, place in self.places.items():
+                self.cross[name] += _half_outer(gathered[:, :, place].reshape(len(gathered), -1))
+            self.parts.clear()
 
     def _flush(self) -> None:
         self.power += self.recent
         self.recent[:] = 0
-        self.unflushed = 0
 
     def result(self, sampling_hz: float) -> FieldStatistics:
         """Means in uV^2 and uV^2/Hz."""
         self._flush()
+        self._cross()
         density = 2.0 / (sampling_hz * 0.375 * self.plan.segment)  # the squares of a periodic Hann window sum to 3/8 N
         power = self.power * density / max(self.kept, 1)
         power[:, [0, -1]] /= 2.0
@@ -175,46 +200,54 @@ def _whole(half: AnyArray) -> AnyArray:
     return whole
 
 
-def _hann(spectrum: AnyArray, segments: IntArray, bins: IntArray) -> AnyArray:
-    """The Hann window applied to some bins of some segments of spectra ``(C, S, F)``."""
-    at = segments[:, None]
-    return 0.5 * spectrum[:, at, bins] - 0.25 * (spectrum[:, at, bins - 1] + spectrum[:, at, bins + 1])
-
-
-def _watched(segments: AnyArray) -> AnyArray:
-    """Windowed power ``(C, S, F)`` of segments of a few contacts."""
+def _spectra(before: Float32Array, after: Float32Array) -> AnyArray:
+    """Spectra ``(C, F)`` complex64 of segments of two halves ``(C, hop)``."""
     from scipy.fft import rfft
 
-    spectrum = rfft(segments[:: max(1, len(segments) // WATCHED_CHANNELS)], axis=-1)
-    spectrum[..., 0] = 0.0
-    power = np.empty(spectrum.shape, np.float32)
-    inner = 0.5 * spectrum[..., 1:-1] - 0.25 * (spectrum[..., :-2] + spectrum[..., 2:])
-    np.add(np.square(inner.real), np.square(inner.imag), out=power[..., 1:-1])
-    power[..., 0], power[..., -1] = power[..., 1], power[..., -2]
+    from leadline.physiology._kernels import join_and_window
+
+    out = np.empty((len(before), 2 * before.shape[1]), np.float32)
+    join_and_window(before, after, _window(out.shape[1]), out)
+    spectrum: AnyArray = rfft(out, axis=-1, overwrite_x=True)
+    return spectrum
+
+
+@cache
+def _window(segment: int) -> Float32Array:
+    """The periodic Hann window."""
+    return np.asarray(0.5 - 0.5 * np.cos(2.0 * np.pi * np.arange(segment) / segment), np.float32)
+
+
+def _power(before: Float32Array, after: Float32Array) -> AnyArray:
+    """Windowed power ``(C, F)`` of a segment at a few contacts."""
+    spectrum = _spectra(np.ascontiguousarray(before), np.ascontiguousarray(after))
+    power: AnyArray = np.square(spectrum.real) + np.square(spectrum.imag)
     return power
 
 
+def _step(channels: IntArray) -> int:
+    """From one watched contact to the next."""
+    return max(1, len(channels) // WATCHED_CHANNELS)
+
+
 def _levels(power: AnyArray, frequency_hz: FloatArray) -> FloatArray:
-    """Level ``(S, B)`` in dB of each segment in the watched bands: the median over contacts."""
-    levels = []
-    for low, high in WATCHED_HZ:
-        first, last = np.searchsorted(frequency_hz, (low, high))
-        if last > first:
-            levels.append(np.median(power[..., first:last].mean(axis=-1), axis=0))
-    return np.asarray(10.0 * np.log10(np.stack(levels, axis=-1) + 1e-12), float)
+    """Level ``(B,)`` in dB of a segment ``(C, F)`` in the watched bands: the median over contacts."""
+    ends = np.searchsorted(frequency_hz, WATCHED_HZ)
+    bands = [power[:, first:last].mean(axis=-1) for first, last in ends.tolist() if last > first]
+    return np.asarray(10.0 * np.log10(np.median(bands, axis=-1) + 1e-12), float)
 
 
 def _scan(traces: Traces, channels: IntArray, plan: Plan, frequency_hz: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Typical spectrum ``(F,)`` and artefact thresholds ``(B,)`` in dB, from a few segments spread evenly."""
-    some = channels[:: max(1, len(channels) // WATCHED_CHANNELS)]
+    some = channels[:: _step(channels)]
     starts = np.concatenate([start + plan.hop * np.arange(n) for start, _, n in plan.blocks()])
     starts = starts[:: max(1, len(starts) // SCAN_SEGMENTS)]
     logs, levels = [], []
     for start in starts.tolist():
-        samples = np.ascontiguousarray(traces.read_uv(start, start + plan.segment, some).T)
-        power = _watched(samples[:, None])
-        logs.append(np.log(power[:, 0] + 1e-12).mean(axis=0))
-        levels.append(_levels(power, frequency_hz)[0])
+        samples = traces.read_uv(start, start + plan.segment, some).T
+        power = _power(samples[:, : plan.hop], samples[:, plan.hop :])
+        logs.append(np.log(power + 1e-12).mean(axis=0))
+        levels.append(_levels(power, frequency_hz))
     found = np.array(levels)
     usual = np.median(found, axis=0)
     spread = 1.4826 * np.median(np.abs(found - usual), axis=0)

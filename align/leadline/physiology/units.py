@@ -52,9 +52,9 @@ def unit_features(
     count = np.bincount(unit, minlength=n_units)
     tip = _by_unit(spikes.tip_distance_um[kept], unit, n_units)
     shank = _by_unit(spikes.shank[kept].astype(float), unit, n_units)
-    near = _kernel(rows, tip, shank)
+    near = kernel(rows, tip, shank)
     enough = count >= MIN_SPIKES
-    cover = _coverage(rows)
+    cover = coverage(rows)
     features = {
         "unit_density_per_100um": near[:, enough].sum(axis=1) * PER_UM / cover,
         "spike_rate_hz": near @ (count / time_s) * PER_UM / cover,
@@ -96,20 +96,22 @@ def _by_unit(values: FloatArray, unit: IntArray, n_units: int) -> FloatArray:
     return np.where(count > 0, (ordered[safe] + ordered[upper]) / 2.0, np.nan)
 
 
-def _kernel(rows: Rows, tip_um: FloatArray, shank: FloatArray) -> FloatArray:
+def kernel(rows: Rows, tip_um: FloatArray, shank: FloatArray) -> FloatArray:
     """Density ``(R, U)`` per um that each unit contributes to each row of its shank."""
     offset = (rows.tip_distance_um[:, None] - tip_um) / KERNEL_SD_UM
     density = np.where(np.abs(offset) < REACH_SD, np.exp(-0.5 * offset**2), 0.0) / (KERNEL_SD_UM * np.sqrt(2 * np.pi))
     return np.where(rows.shank[:, None] == shank, np.nan_to_num(density), 0.0)
 
 
-def _coverage(rows: Rows) -> FloatArray:
-    """Share ``(R,)`` of the kernel at each row over which sites of its shank pick up units."""
+def coverage(rows: Rows, usable: BoolArray | None = None) -> FloatArray:
+    """Share ``(R,)`` of the kernel at each row over which sites of its shank pick up units; ``usable`` : (R,) rows."""
     from scipy.special import ndtr
 
     cover = np.zeros(len(rows))
     for shank in np.unique(rows.shank):
-        members = np.flatnonzero(rows.shank == shank)
+        members = np.flatnonzero((rows.shank == shank) & (True if usable is None else usable))
+        if not members.size:
+            continue
         tip = rows.tip_distance_um[members]
         reach = min(max(rows.pitch_um(int(shank)) / 2, 10.0), 50.0) if members.size > 1 else 50.0
         edges = np.stack([tip - reach, tip + reach], axis=1)

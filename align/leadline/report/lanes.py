@@ -37,6 +37,7 @@ CURVES = (
     "ripple_power_db",
     "unit_density_per_100um",
     "spike_amplitude_uv",
+    "crossing_density_hz_per_100um",
     "theta_power_db",
     "gamma_power_db",
     "neighbour_correlation",

@@ -27,6 +27,8 @@ TITLES = {
     "high_frequency_power_db": "Fast power",
     "unit_density_per_100um": "Unit density",
     "spike_amplitude_uv": "Spike size",
+    "crossing_density_hz_per_100um": "Spike density",
+    "crossing_amplitude_uv": "Crossing depth",
     "theta_coherence": "Theta coherence",
     "neighbour_correlation": "Neighbour corr.",
     "neighbour_coherence": "Neighbour coh.",
