@@ -16,12 +16,12 @@ COLUMNS = 7
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
 def ridge_points(  # pragma: no cover - compiled
-    smooth: Any, inside: Any, lo: Any, hi: Any, voxel_um: Any, scale_um: float, threshold: float
+    smooth: Any, inside: Any, base: Any, lo: Any, hi: Any, voxel_um: Any, scale_um: float, threshold: float
 ) -> Any:
     """Rows (index 3, axis 3, strength) of ridge points of one block.
 
-    The Hessian is formed only where the Laplacian says tube. ``smooth`` : float32 block. ``lo``, ``hi`` : (3,) the
-    voxels to look at; the rest is margin.
+    The Hessian is formed only where the Laplacian says tube. ``smooth`` : float32 block that begins at voxel
+    ``base`` of the volume. ``lo``, ``hi`` : (3,) the voxels of it to look at; the rest is margin.
     """
     room = 1024
     rows = np.empty((room, COLUMNS))
@@ -77,7 +77,7 @@ def ridge_points(  # pragma: no cover - compiled
                     grown = np.empty((room, COLUMNS))
                     grown[:many] = rows[:many]
                     rows = grown
-                rows[many, 0], rows[many, 1], rows[many, 2] = i + o0, j + o1, k + o2
+                rows[many, 0], rows[many, 1], rows[many, 2] = base[0] + i + o0, base[1] + j + o1, base[2] + k + o2
                 rows[many, 3], rows[many, 4], rows[many, 5] = vector[0, 2], vector[1, 2], vector[2, 2]
                 rows[many, 6] = strength
                 many += 1

@@ -2,18 +2,19 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 
 from leadline.base.arrays import AnyArray, Float32Array, FloatArray
 from leadline.model.volume import Volume
 from leadline.tracing.grid import grown, sampled
+from leadline.tracing.lazy import Region, region_of
 
 TILE_UM = 320.0
 ROUNDS = 5
 INLIER_LOW, INLIER_HIGH = -3.5, 2.5
-THIN = 2
 SLAB = 32
 
 
@@ -36,43 +37,38 @@ class Foretold:
         columns = [map_coordinates(self.maps[..., k], index, order=1, mode="nearest") for k in range(3)]
         return np.asarray(np.column_stack(columns), np.float64)
 
-    def planes(self, grid: Volume, rows: slice) -> Float32Array:
-        """The maps ``(3, rows, n1, n2)`` on planes of a grid, linear between tile centres."""
-        frame = zip(grid.shape, grid.voxel_um, grid.origin_um, self.origin_um, self.tile_um, strict=True)
-        a, b, c = ((np.arange(n) * v + o - so) / size for n, v, o, so, size in frame)
-        return np.asarray(np.moveaxis(grown(self.maps, (a[rows], b, c)), -1, 0), np.float32)
+    def on(self, grid: Volume, region: Region) -> Float32Array:
+        """The maps ``(3, ...)`` on a region of a grid, linear between tile centres."""
+        frame = zip(grid.shape, grid.voxel_um, grid.origin_um, self.origin_um, self.tile_um, region, strict=True)
+        a, b, c = (((np.arange(n) * v + o - so) / size)[part] for n, v, o, so, size, part in frame)
+        return np.asarray(np.moveaxis(grown(self.maps, (a, b, c)), -1, 0), np.float32)
 
 
 def foretell(dye: Volume, background: Volume, inside: np.ndarray) -> Foretold:
     """Regress dye on background in tiles of 320 um, robust against the dye itself.
 
     Values more than 2.5 sd above or 3.5 sd below the line are left out and the line is fitted again, five times. Sums
-    over every second voxel of each axis are smoothed over neighbouring tiles, and slopes of tiles with little contrast
-    lean on the slope of the whole brain.
+    are smoothed over neighbouring tiles, and slopes of tiles with little contrast lean on the slope of the whole brain.
 
     Parameters
     ----------
-    dye, background : volumes in memory on one grid.
+    dye, background : volumes in memory on one grid; a sample of the voxels is enough.
     inside : bool on that grid; only these voxels count.
     """
-    thin = tuple(slice(None, None, THIN if n > 2 * THIN else 1) for n in dye.shape)
-    y, x = (
-        Volume(v.array()[thin], v.voxel_um * [s.step for s in thin], v.code, v.origin_um) for v in (dye, background)
-    )
-    keep, shape = inside[thin], np.asarray(y.shape)
-    size = np.maximum(1, np.round(TILE_UM / y.voxel_um)).astype(int)
+    shape, y, x = np.asarray(dye.shape), dye.array(), background.array()
+    size = np.maximum(1, np.round(TILE_UM / dye.voxel_um)).astype(int)
     labels = [np.arange(n) // s for n, s in zip(shape, size, strict=True)]
-    frame = (size * y.voxel_um, y.origin_um + (size - 1) / 2 * y.voxel_um)
-    fit = Foretold(_solve(_sums(y.array(), x.array(), None, keep, labels)), *frame)
-    left = np.empty(y.shape, np.float32)
+    frame = (size * dye.voxel_um, dye.origin_um + (size - 1) / 2 * dye.voxel_um)
+    fit = Foretold(_solve(_sums(y, x, None, inside, labels)), *frame)
+    left = np.empty(dye.shape, np.float32)
     for _ in range(ROUNDS - 1):
-        near = np.empty_like(keep)
+        near = np.empty_like(inside)
         for start in range(0, int(shape[0]), SLAB):
             rows = slice(start, start + SLAB)
-            offset, slope, sd = fit.planes(y, rows)
-            left[rows] = y.array()[rows] - offset - slope * x.array()[rows]
-            near[rows] = keep[rows] & (left[rows] < INLIER_HIGH * sd) & (left[rows] > INLIER_LOW * sd)
-        fit = Foretold(_solve(_sums(y.array(), x.array(), left, near, labels)), *frame)
+            offset, slope, sd = fit.on(dye, (rows, slice(None), slice(None)))
+            left[rows] = y[rows] - offset - slope * x[rows]
+            near[rows] = inside[rows] & (left[rows] < INLIER_HIGH * sd) & (left[rows] > INLIER_LOW * sd)
+        fit = Foretold(_solve(_sums(y, x, left, near, labels)), *frame)
     return fit
 
 
@@ -118,18 +114,29 @@ def _line(moments: FloatArray, slope_all: float, ridge: float) -> tuple[FloatArr
     return my - slope * mx, slope, np.sqrt(left)
 
 
+class Excess:
+    """Dye over what the background foretells, in noise sd, worked out for the voxels that are asked for."""
+
+    dtype = np.dtype(np.float32)
+
+    def __init__(self, dye: Volume, background: Volume, foretold: Foretold) -> None:
+        self._dye, self._background, self._foretold = dye, background, foretold
+        self.shape = dye.shape
+
+    def __getitem__(self, key: Any) -> Float32Array:
+        """Values on a region of slices."""
+        region = region_of(key, self.shape)
+        offset, slope, sd = self._foretold.on(self._dye, region)
+        left = self._dye.data[region] - offset - slope * self._background.data[region]
+        return np.asarray(4 * np.arcsinh(left / sd / 4), np.float32)
+
+
 def excess(dye: Volume, background: Volume, foretold: Foretold) -> Volume:
-    """Dye over what the background foretells, in noise sd, on the grid of both (in memory).
+    """Dye over what the background foretells, in noise sd, on the grid of both; worked out as it is sliced.
 
     Bright values are compressed, ``4 asinh(z / 4)``, so that a pool does not outshine a faint track.
     """
-    out = np.empty(dye.shape, np.float32)
-    y, x = dye.array(), background.array()
-    for start in range(0, dye.shape[0], SLAB):
-        rows = slice(start, min(start + SLAB, dye.shape[0]))
-        offset, slope, sd = foretold.planes(dye, rows)
-        out[rows] = 4 * np.arcsinh((y[rows] - offset - slope * x[rows]) / sd / 4)
-    return Volume(out, dye.voxel_um, dye.code, dye.origin_um)
+    return replace(dye, data=Excess(dye, background, foretold), chunk=None)
 
 
 def excess_at(dye: Volume, background: Volume, foretold: Foretold, points_um: FloatArray) -> FloatArray:

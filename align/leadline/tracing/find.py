@@ -9,21 +9,23 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from leadline.base.arrays import BoolArray, FloatArray
-from leadline.base.progress import SILENT, Progress
+from leadline.base.progress import SILENT, Progress, tracked
 from leadline.model.frames import axes_matrix
 from leadline.model.settings import TraceSettings
 from leadline.model.track import Trace
-from leadline.model.volume import Volume
+from leadline.model.volume import Volume, Voxels
 from leadline.tracing import centre, ends, path
 from leadline.tracing.autofluorescence import Foretold, excess, excess_at, foretell
-from leadline.tracing.grid import check_frame, reduced
+from leadline.tracing.grid import check_frame, slabs
+from leadline.tracing.lazy import averaged, block_mean, remembering
 from leadline.tracing.ridge import Ridges, find_ridges
-from leadline.tracing.tissue import Tissue, depth_on, find_tissue
+from leadline.tracing.tissue import MASK_UM, Deeper, Tissue, depth_on, find_tissue
 
 if TYPE_CHECKING:
     from collections.abc import Iterator
 
 DETECT_UM = 27.0
+THIN = 2
 SEED = 20
 SKIN_UM = 120.0
 MIN_GAIN = 0.15
@@ -83,7 +85,8 @@ def trace(
 
     Parameters
     ----------
-    dye, background : two channels of one stack, any voxel size, any orientation; may be read lazily.
+    dye, background : two channels of one stack, any voxel size, any orientation; may be on disk, then memory does not
+        grow with them.
     settings : ``sensitivity`` scales what counts as faint, ``min_length_um`` what counts as short.
     progress : told of each step.
 
@@ -98,36 +101,54 @@ def trace(
     """
     settings = settings or TraceSettings()
     check_frame(dye, background)
-    progress.begin("tracing", 4)
-    coarse_dye, coarse_background = reduced(dye, DETECT_UM), reduced(background, DETECT_UM)
-    tissue = find_tissue(coarse_background)
-    depth = depth_on(tissue, coarse_dye)
-    progress.step()
-    foretold = foretell(coarse_dye, coarse_background, depth > 0)
+    dye, background = remembering(dye), remembering(background)
+    coarse_dye, coarse_background = averaged(dye, DETECT_UM), averaged(background, DETECT_UM)
+    some_dye, some_background, small = _survey(dye, background, coarse_dye, coarse_background, progress)
+    tissue = find_tissue(small)
+    foretold = foretell(some_dye, some_background, depth_on(tissue, some_dye) > 0)
+    del some_dye, some_background
     image = excess(coarse_dye, coarse_background, foretold)
-    del coarse_background, coarse_dye
-    progress.step()
-    ridges = _ridges(image, depth > SKIN_UM, settings.sensitivity)
-    del image, depth
-    progress.step()
+    ridges = _ridges(image, Deeper(tissue, image, SKIN_UM), settings.sensitivity, progress)
     scene = Scene(dye, background, tissue, foretold, settings)
-    kept = _candidates(scene, ridges)
-    kept = _second_look(scene, kept)
-    found = [_finish(scene, item) for item in kept]
-    progress.step()
+    progress.begin("following tracks", MAX_TRIES)
+    taken = _candidates(scene, ridges, progress)
+    taken = _second_look(scene, taken, progress)
+    found = [_finish(scene, item) for item in taken]
     return tuple(sorted(found, key=lambda t: -t.contrast * t.length_um))
 
 
-def _ridges(image: Volume, inside: BoolArray, sensitivity: float) -> Ridges:
+def _survey(
+    dye: Volume, background: Volume, coarse_dye: Volume, coarse_background: Volume, progress: Progress
+) -> tuple[Volume, Volume, Volume]:
+    """A sample of the voxels of both channels, every second along each axis, and the background small and whole."""
+    small = averaged(coarse_background, MASK_UM)
+    step = np.round(small.voxel_um / coarse_background.voxel_um).astype(int)
+    thin = np.array([THIN if n > 2 * THIN else 1 for n in coarse_dye.shape])
+    whole = np.empty(small.shape, np.float32)
+    some = [np.empty([-(-n // t) for n, t in zip(coarse_dye.shape, thin, strict=True)], np.float32) for _ in range(2)]
+    cut = slabs(dye, coarse_dye, multiple=int(np.lcm(step[0], thin[0])))
+    for rows in tracked(cut, progress, "looking through the stack", len(cut)):
+        for sample, coarse in zip(some, (coarse_dye, coarse_background), strict=True):
+            slab = coarse.data[rows]
+            part = slab[:: thin[0], :: thin[1], :: thin[2]]
+            sample[rows.start // thin[0] :][: len(part)] = part
+        fits = [int(n // s * s) for n, s in zip(slab.shape, step, strict=True)]
+        part = block_mean(slab[: fits[0], : fits[1], : fits[2]], step)
+        whole[rows.start // step[0] :][: len(part)] = part
+    frame = coarse_dye.voxel_um * thin, coarse_dye.code, coarse_dye.origin_um
+    return Volume(some[0], *frame), Volume(some[1], *frame), replace(small, data=whole)
+
+
+def _ridges(image: Volume, inside: Voxels, sensitivity: float, progress: Progress) -> Ridges:
     voxel = float(image.voxel_um.max())
     scales = (max(30.0, voxel), max(50.0, 1.5 * voxel))
-    ridges = find_ridges(image, inside, scales, THRESHOLD / sensitivity)
+    ridges = find_ridges(image, inside, scales, THRESHOLD / sensitivity, progress)
     if len(ridges) > MAX_POINTS:
-        ridges = ridges.take(np.sort(np.argsort(-ridges.strength)[:MAX_POINTS]))
+        ridges = ridges.take(np.sort(np.argsort(-ridges.strength, kind="stable")[:MAX_POINTS]))
     return ridges
 
 
-def _candidates(scene: Scene, ridges: Ridges) -> list[Candidate]:
+def _candidates(scene: Scene, ridges: Ridges, progress: Progress) -> list[Candidate]:
     """Take the best line, look closely, keep or drop it, take its points away, and so on until lines are poor."""
     kept: list[Candidate] = []
     doubtful: list[Candidate] = []
@@ -136,6 +157,7 @@ def _candidates(scene: Scene, ridges: Ridges) -> list[Candidate]:
     alive = np.ones(len(ridges), bool)
     lines = path.draw_lines(ridges, np.random.default_rng(SEED))
     for row, run in _best_first(lines, ridges, alive):
+        progress.step()
         rough = path.bend(lines.origin_um[row], lines.way[row], run, ridges, alive)
         item = examine(scene, rough)
         if not item.fault and not any(_same(item, other) for other in kept):
@@ -278,12 +300,13 @@ def _same(a: Candidate, b: Candidate) -> bool:
     return float((gap < SAME_UM).mean()) > 0.5
 
 
-def _second_look(scene: Scene, kept: list[Candidate]) -> list[Candidate]:
+def _second_look(scene: Scene, kept: list[Candidate], progress: Progress) -> list[Candidate]:
     """Look at tracks with near neighbours again, the neighbours' dye taken away."""
     from scipy.spatial import cKDTree
 
     out = []
     for i, item in enumerate(kept):
+        progress.step(0.0)
         tree = cKDTree(item.curve_um)
         others = tuple(other for k, other in enumerate(kept) if k != i and tree.query(other.curve_um)[0].min() < 330.0)
         again = examine(scene, item.curve_um[item.run[0] : item.run[1] + 1], others) if others else item

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from itertools import product
 from typing import TYPE_CHECKING
 
@@ -9,6 +10,7 @@ import numpy as np
 
 from leadline.base.errors import LeadlineError
 from leadline.model.volume import Volume
+from leadline.tracing.lazy import averaged
 
 if TYPE_CHECKING:
     from collections.abc import Iterator
@@ -16,7 +18,7 @@ if TYPE_CHECKING:
     from leadline.base.arrays import AnyArray, Float32Array, FloatArray
 
 SLAB_VOXELS = 8_000_000
-READ_VOXELS = 4_000_000
+READ_VOXELS = 1_000_000
 
 
 def check_frame(dye: Volume, background: Volume) -> None:
@@ -38,33 +40,20 @@ def check_frame(dye: Volume, background: Volume) -> None:
 def reduced(volume: Volume, target_um: float) -> Volume:
     """The volume in memory as float32, averaged over whole blocks of about ``target_um``.
 
-    Each axis is averaged over ``max(1, round(target_um / voxel))`` voxels; what is left over at the far end is
-    dropped. Reads slabs along the first axis, so that a volume on disk is never held whole.
+    Reads slabs along the first axis, so that a volume on disk is never held whole.
     """
-    factor = np.maximum(1, np.round(target_um / volume.voxel_um)).astype(int)
-    factor = np.minimum(factor, volume.shape)
-    shape = tuple(int(n) for n in np.asarray(volume.shape) // factor)
-    out = np.empty(shape, np.float32)
-    rows = max(1, int(SLAB_VOXELS // (factor[0] * volume.shape[1] * volume.shape[2])))
-    for start in range(0, shape[0], rows):
-        stop = min(start + rows, shape[0])
-        slab = np.asarray(
-            volume.data[start * factor[0] : stop * factor[0], : shape[1] * factor[1], : shape[2] * factor[2]]
-        )
-        out[start:stop] = _block_mean(slab, factor)
-    origin = volume.origin_um + (factor - 1) / 2 * volume.voxel_um
-    return Volume(out, factor * volume.voxel_um, volume.code, origin)
+    coarse = averaged(volume, target_um)
+    out = np.empty(coarse.shape, np.float32)
+    for rows in slabs(volume, coarse):
+        out[rows] = coarse.data[rows]
+    return replace(coarse, data=out)
 
 
-def _block_mean(slab: np.ndarray, factor: np.ndarray) -> Float32Array:
-    """Mean over blocks, one axis after the other; values that are not finite count as 0."""
-    values = np.nan_to_num(slab.astype(np.float32, copy=False), nan=0.0, posinf=0.0, neginf=0.0)
-    for axis in (2, 1, 0):
-        n = int(factor[axis])
-        if n > 1:
-            shape = (*values.shape[:axis], values.shape[axis] // n, n, *values.shape[axis + 1 :])
-            values = values.reshape(shape).mean(axis=axis + 1, dtype=np.float32)
-    return values
+def slabs(volume: Volume, coarse: Volume, multiple: int = 1) -> list[slice]:
+    """Rows of a volume averaged from another that are read at once; their number is a multiple of ``multiple``."""
+    planes = round(float(coarse.voxel_um[0] / volume.voxel_um[0]))
+    rows = max(1, int(SLAB_VOXELS // (planes * volume.shape[1] * volume.shape[2])) // multiple) * multiple
+    return [slice(start, min(start + rows, coarse.shape[0])) for start in range(0, coarse.shape[0], rows)]
 
 
 def sampled(volume: Volume, points_um: FloatArray) -> FloatArray:
@@ -85,10 +74,10 @@ def sampled(volume: Volume, points_um: FloatArray) -> FloatArray:
             continue
         lo = np.clip(np.floor(part[inside].min(axis=0)).astype(int), 0, last)
         hi = np.clip(np.ceil(part[inside].max(axis=0)).astype(int) + 1, lo + 1, last + 1)
-        block = np.asarray(volume.data[lo[0] : hi[0], lo[1] : hi[1], lo[2] : hi[2]]).astype(np.float32, copy=False)
-        values = map_coordinates(
-            np.nan_to_num(block, nan=0.0, posinf=0.0, neginf=0.0), (part[inside] - lo).T, order=1, mode="nearest"
-        )
+        block = np.asarray(volume.data[lo[0] : hi[0], lo[1] : hi[1], lo[2] : hi[2]])
+        if block.dtype.kind == "f":
+            block = np.nan_to_num(block.astype(np.float32, copy=False), nan=0.0, posinf=0.0, neginf=0.0)
+        values = map_coordinates(block, (part[inside] - lo).T, order=1, mode="nearest", output=np.float32)
         out[np.arange(rows.start, rows.stop)[inside]] = values
     return out
 

@@ -10,10 +10,11 @@ from dataclasses import dataclass
 import numpy as np
 
 from leadline.base.arrays import AnyArray, FloatArray
-from leadline.model.volume import Volume
+from leadline.base.progress import SILENT, Progress, tracked
+from leadline.model.volume import Volume, Voxels
 from leadline.tracing.grid import blocks
 
-BLOCK = 160
+BLOCK = 96
 TRUNCATE = 3.0
 
 
@@ -33,20 +34,23 @@ class Ridges:
         return len(self.points_um)
 
 
-def find_ridges(image: Volume, inside: AnyArray, scales_um: tuple[float, ...], threshold: float) -> Ridges:
+def find_ridges(
+    image: Volume, inside: Voxels, scales_um: tuple[float, ...], threshold: float, progress: Progress = SILENT
+) -> Ridges:
     """Points on the centre lines of bright tubes, by the eigenvalues of the Hessian [1]_ and a sub-voxel test [2]_.
 
     Parameters
     ----------
-    image : volume in memory.
+    image : a volume that may be worked out as it is sliced: it is asked for in blocks, where ``inside`` is true.
     inside : bool on the same grid; only these voxels are looked at.
     scales_um : sd of the Gaussians, um.
     threshold : least tube strength ``scale**2 sqrt(l1 l2)``, in units of the image.
 
     Returns
     -------
-    Points of all scales; of two scales at one voxel the stronger is kept. The answer does not depend on how the
-    volume is cut into blocks: every block carries the margin that the Gaussian and the differences need.
+    Points of all scales in the order of the voxels; of two scales at one voxel the stronger is kept. The answer does
+    not depend on how the volume is cut into blocks: every block carries the margin that the Gaussian and the
+    differences need.
 
     References
     ----------
@@ -57,22 +61,21 @@ def find_ridges(image: Volume, inside: AnyArray, scales_um: tuple[float, ...], t
 
     from leadline.tracing._kernels import ridge_points
 
-    values = image.array()
     found: list[AnyArray] = []
     reach = max(scales_um) / image.voxel_um
     margin = tuple(int(np.ceil(TRUNCATE * r)) + 3 for r in reach)
-    for outer, inner in blocks(image.shape, BLOCK, margin):
-        if not inside[outer][inner].any():
+    cut = list(blocks(image.shape, BLOCK, margin))
+    for outer, inner in tracked(cut, progress, "looking for tubes", len(cut)):
+        within = np.asarray(inside[outer])
+        if not within[inner].any():
             continue
-        block = values[outer]
+        block = np.asarray(image.data[outer])
         lo = np.array([s.start for s in inner])
         hi = np.array([s.stop for s in inner])
         base = np.array([s.start for s in outer])
         for scale in scales_um:
             smooth = gaussian_filter(block, scale / image.voxel_um, truncate=TRUNCATE, mode="nearest")
-            rows = ridge_points(smooth, inside[outer], lo, hi, image.voxel_um, scale, threshold)
-            rows[:, :3] += base
-            found.append(rows)
+            found.append(ridge_points(smooth, within, base, lo, hi, image.voxel_um, scale, threshold))
     rows = np.concatenate(found) if found else np.zeros((0, 7))
     rows = rows[_strongest_per_voxel(rows, image.shape)]
     return Ridges(image.points(rows[:, :3]), rows[:, 3:6], rows[:, 6])
@@ -80,7 +83,7 @@ def find_ridges(image: Volume, inside: AnyArray, scales_um: tuple[float, ...], t
 
 def _strongest_per_voxel(rows: AnyArray, shape: tuple[int, int, int]) -> AnyArray:
     voxel = np.ravel_multi_index(tuple(np.clip(np.rint(rows[:, :3]).astype(int), 0, np.array(shape) - 1).T), shape)
-    order = np.lexsort((-rows[:, 6], voxel))
+    order = np.lexsort((*rows[:, :3].T, -rows[:, 6], voxel))
     first = np.ones(len(rows), bool)
     first[1:] = np.diff(voxel[order]) != 0
-    return np.asarray(np.sort(order[first]))
+    return np.asarray(order[first])

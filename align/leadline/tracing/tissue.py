@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 
@@ -10,7 +11,9 @@ from leadline.base.arrays import AnyArray, Float32Array, FloatArray
 from leadline.base.errors import LeadlineError
 from leadline.model.volume import Volume
 from leadline.tracing.grid import grown, reduced
+from leadline.tracing.lazy import Region, region_of
 
+EVERYWHERE = (slice(None), slice(None), slice(None))
 MASK_UM = 80.0
 OUTSIDE_SHARE = 0.002
 
@@ -89,13 +92,23 @@ def _edge(shape: tuple[int, ...]) -> AnyArray:
     return edge
 
 
-def depth_on(tissue: Tissue, grid: Volume) -> Float32Array:
-    """Depth below the surface at every voxel of another grid of the same stack."""
+def depth_on(tissue: Tissue, grid: Volume, region: Region = EVERYWHERE) -> Float32Array:
+    """Depth below the surface at the voxels of a region of another grid of the same stack."""
     source = tissue.depth_um
-    a, b, c = (
-        (np.arange(n) * v + o - so) / sv
-        for n, v, o, sv, so in zip(
-            grid.shape, grid.voxel_um, grid.origin_um, source.voxel_um, source.origin_um, strict=True
-        )
-    )
+    frame = zip(grid.shape, grid.voxel_um, grid.origin_um, source.voxel_um, source.origin_um, region, strict=True)
+    a, b, c = (((np.arange(n) * v + o - so) / sv)[part] for n, v, o, sv, so, part in frame)
     return grown(source.array(), (a, b, c))
+
+
+class Deeper:
+    """Which voxels of a grid lie deeper than ``least_um``, worked out for those that are asked for."""
+
+    dtype = np.dtype(bool)
+
+    def __init__(self, tissue: Tissue, grid: Volume, least_um: float) -> None:
+        self._tissue, self._grid, self._least_um = tissue, grid, least_um
+        self.shape = grid.shape
+
+    def __getitem__(self, key: Any) -> AnyArray:
+        """Whether, on a region of slices."""
+        return depth_on(self._tissue, self._grid, region_of(key, self.shape)) > self._least_um
