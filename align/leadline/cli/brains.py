@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated
+from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
@@ -159,8 +159,14 @@ def _tell(brain: Brain, summary: Summary, until: str, verbose: bool) -> None:
         out("nothing has changed since the last run")
     if until == "locate" and (summary.done or verbose):
         for row in penetration_rows(brain):
-            out(
-                f"{row['penetration']}: {row['in_brain']} of {row['channels']} channels in the brain, "
-                f"depth sd {row['depth_sd_um']} um, p_region {row['p_region']}; {' > '.join(row['regions'])}"
-            )
+            out(_told(row))
         out(f"written: {brain.out / 'channels.csv'}")
+
+
+def _told(row: dict[str, Any]) -> str:
+    if row["p_region"] is None:
+        return f"{row['penetration']}: none of its {row['channels']} channels is located; the warnings say why"
+    return (
+        f"{row['penetration']}: {row['in_brain']} of {row['channels']} channels in the brain, "
+        f"depth sd {row['depth_sd_um']} um, p_region {row['p_region']}; {' > '.join(row['regions'])}"
+    )

@@ -270,7 +270,7 @@ def _found(wanted: Wanted, tracks: Sequence[TracedPath], owner: Mapping[int, tup
         if i in owner:
             text += f", taken by '{owner[i][0]}' shank {owner[i][1]}"
         lines.append(text)
-    return f"Found {len(tracks)} tracks, entries in atlas um (ap, dv, ml): " + "; ".join(lines)
+    return f"Found {len(tracks)} track{'s' if len(tracks) > 1 else ''}, entries in atlas um (ap, dv, ml): " + "; ".join(lines)
 
 
 def _place(point: FloatArray) -> str:
