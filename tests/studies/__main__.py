@@ -4,7 +4,7 @@ import subprocess
 import sys
 from pathlib import Path
 
-STUDIES = ("registration", "tracing", "inference")
+STUDIES = ("registration", "tracing", "inference", "silence")
 
 
 def main() -> int:

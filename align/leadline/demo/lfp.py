@@ -148,8 +148,8 @@ def background(rng: np.random.Generator, sources: Sources, n: int, running: bool
     for low, high, reach in _REACH:
         cols = np.flatnonzero((hz >= low) & (hz < high))
         noise = rng.standard_normal((rows, 2 * len(cols)), np.float32)
-        smooth = gaussian_filter1d(noise, reach / ROW_UM, axis=0, mode="wrap", truncate=2.5)
-        smooth *= np.float32(1 / max(smooth.std(), 1e-9))
+        smooth = gaussian_filter1d(noise, reach / ROW_UM, axis=0, mode="reflect", truncate=2.5)
+        smooth /= np.maximum(smooth.std(axis=1, keepdims=True), np.float32(1e-9))
         shared = rng.standard_normal(2 * len(cols), np.float32)
         share = np.float32(0.5 if high <= 15 else 0.15)
         mixed = (np.sqrt(1 - share) * smooth + np.sqrt(share) * shared).view(np.complex64)

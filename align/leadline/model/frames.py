@@ -58,6 +58,17 @@ def direction(letter: str) -> FloatArray:
     return vector
 
 
+def mirrored(code: str) -> str:
+    """The code with left and right exchanged.
+
+    Examples
+    --------
+    >>> mirrored("IAR")
+    'IAL'
+    """
+    return code.translate(str.maketrans("RL", "LR"))
+
+
 def axes_matrix(code: str) -> FloatArray:
     """Signed permutation that carries vectors along the stored axes of ``code`` to (ap, dv, ml).
 

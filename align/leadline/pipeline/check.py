@@ -11,6 +11,7 @@ from leadline.pipeline.bench import Bench
 if TYPE_CHECKING:
     from collections.abc import Callable
 
+    from leadline.model.anchor import Anchor
     from leadline.model.brain import Brain, Penetration
     from leadline.model.probe import Probe
 
@@ -33,6 +34,7 @@ def check(brain: Brain, bench: Bench | None = None) -> Findings:
         look.penetration(penetration)
     look.anchors()
     look.hear(lambda: look.bench.knowledge)
+    look.contradictions()
     return Findings(tuple({str(f): f for f in look.faults}.values()), tuple(look.notes))
 
 
@@ -41,6 +43,7 @@ class _Look:
         self.bench, self.brain = bench, bench.brain
         self.faults: list[LeadlineError] = []
         self.notes: list[str] = []
+        self.anchors_in_force: tuple[Anchor, ...] = ()
 
     def hear(self, ask: Callable[[], T], about: str = "") -> T | None:
         """Call ``ask``; keep what it complains of, with the penetration it is about."""
@@ -52,6 +55,19 @@ class _Look:
             where = f"{about}: {error.where}" if about and error.where else error.where or about
             self.faults.append(LeadlineError(error.what, where=where, mend=error.mend))
         return None
+
+    def contradictions(self) -> None:
+        """What is readable and cannot be right; only asked where everything can be read."""
+        from leadline.pipeline import contradictions
+
+        if self.faults:
+            return
+        self.notes += contradictions.of_insertions(self.bench)
+        for penetration in self.brain.penetrations:
+            self.notes += contradictions.of_recordings(self.brain, penetration)
+            probe = self.bench.probe(penetration)
+            self.notes += contradictions.of_anchors(self.anchors_in_force, penetration, probe)
+        self.notes += contradictions.without_plan(self.brain)
 
     def images(self) -> None:
         from leadline.atlas.laminar import require_chosen
@@ -81,18 +97,18 @@ class _Look:
                     mend="device_channel_indices is -1 everywhere; write the trace of each contact",
                 )
             )
-        self._left_out(penetration, probe, about)
+        self._left_out(penetration, about)
         self.hear(lambda: self.bench.recordings(penetration, probe), about)
         if penetration.points is not None:
             self._points(penetration, probe, about)
         if penetration.shank_toward and len(probe.shanks) == 1:
             self.notes.append(f"{about}: shank_toward says nothing of a probe with one shank")
 
-    def _left_out(self, penetration: Penetration, probe: Probe, about: str) -> None:
+    def _left_out(self, penetration: Penetration, about: str) -> None:
         from leadline.io.sources import left_out
 
-        for source in penetration.recordings:
-            unused = left_out(source, probe, penetration.name)
+        for source, site_map in zip(penetration.recordings, self.bench.site_maps(penetration), strict=True):
+            unused = left_out(source, site_map, penetration.name)
             if unused:
                 self.notes.append(f"{about}: {unused}")
 
@@ -129,6 +145,7 @@ class _Look:
 
         record = self.hear(lambda: Record(self.brain.folder, self.brain.cache))
         anchors = self.hear(lambda: anchors_in_force(self.brain, record)) if record is not None else None
+        self.anchors_in_force = anchors or ()
         names = [p.name for p in self.brain.penetrations]
         for key in sorted({(a.penetration, a.shank) for a in anchors or ()}):
             if key[0] not in names:

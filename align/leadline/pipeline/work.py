@@ -10,11 +10,12 @@ import numpy as np
 from leadline.base.atomic import write_text
 from leadline.base.errors import LeadlineError
 from leadline.model.track import HandTrack, Track
-from leadline.pipeline import products
+from leadline.pipeline import contradictions, products
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Mapping, Sequence
 
+    from leadline.base.arrays import FloatArray
     from leadline.model.anchor import Anchor
     from leadline.model.atlas import Atlas
     from leadline.model.brain import Brain, Penetration
@@ -44,6 +45,9 @@ def register(bench: Bench, files: products.RegistrationFiles) -> tuple[str, ...]
         settings=settings,
         dye=dye,
         progress=bench.progress,
+    )
+    registration = replace(
+        registration, warnings=(*registration.warnings, *contradictions.of_registration(registration))
     )
     registration = _refined_by_pairs(bench.brain, registration)
     files.write(registration)
@@ -79,11 +83,13 @@ def trace(bench: Bench) -> tuple[str, ...]:
     background = bench.reduced(bench.background, grain)
     hand = _hand_tracks(brain, background, dye, transform)
     wanted = [w for p in brain.penetrations if p.points is None and (w := _wanted(p, hand)) is not None]
-    found, missing, notes = _dye_tracks(bench, wanted, background, dye, transform)
+    found, missing, notes, entries = _dye_tracks(bench, wanted, background, dye, transform)
     order = {p.name: i for i, p in enumerate(brain.penetrations)}
     tracks = sorted([*hand.values(), *found], key=lambda t: (order[t.penetration], t.shank))
     products.write_tracks(brain, tracks, missing)
-    return (*missing, *notes)
+    entries += [t.atlas_um[0] for t in hand.values()]
+    doubts = (*contradictions.of_insertions(bench), *contradictions.of_tracks(bench, tracks, entries))
+    return (*missing, *notes, *doubts)
 
 
 def _hand_tracks(
@@ -114,7 +120,7 @@ def _wanted(penetration: Penetration, traced: Mapping[tuple[str, int], Track]) -
     from leadline.io.probes import read_probe
     from leadline.tracing.assign import Wanted
 
-    probe = read_probe(penetration.probe, probe_index=penetration.probe_index)
+    probe = read_probe(penetration.probe, probe_index=penetration.probe_index, connected=False)
     shanks = tuple(s for s in probe.shanks if (penetration.name, s) not in traced)
     if not shanks:
         return None
@@ -130,19 +136,21 @@ def _wanted(penetration: Penetration, traced: Mapping[tuple[str, int], Track]) -
 
 def _dye_tracks(
     bench: Bench, wanted: Sequence[Wanted], background: Volume, dye: Volume | None, transform: PointTransform
-) -> tuple[list[Track], tuple[str, ...], tuple[str, ...]]:
+) -> tuple[list[Track], tuple[str, ...], tuple[str, ...], list[FloatArray]]:
+    """Tracks of penetrations, what is missing, notes, and where all traces enter the brain."""
     from leadline.tracing.assign import TracedPath, assign
     from leadline.tracing.find import trace as find
 
     if not wanted:
-        return [], (), ()
+        return [], (), (), []
     if dye is None:
         why = "the brain has no dye channel, and the penetration no hand-traced points"
-        return [], tuple(f"penetration '{w.name}' has no track: {why}" for w in wanted), ()
+        return [], tuple(f"penetration '{w.name}' has no track: {why}" for w in wanted), (), []
     traces = find(dye, background, settings=bench.brain.settings.trace, progress=bench.progress)
-    result = assign([TracedPath(transform(t.points_um), t.contrast) for t in traces], wanted)
+    paths = [TracedPath(transform(t.points_um), t.contrast) for t in traces]
+    result = assign(paths, wanted)
     tracks = [_track(name, shank, traces[i], transform, "dye") for (name, shank), i in result.matches.items()]
-    return tracks, result.missing, result.notes
+    return tracks, result.missing, result.notes, [p.atlas_um[0] for p in paths]
 
 
 def _track(name: str, shank: int, traced: Trace, transform: PointTransform, source: str) -> Track:
@@ -169,7 +177,7 @@ def profile(bench: Bench, penetration: Penetration, files: products.ProfileFiles
     write_profile(files.table, found)
     write_spectra(files.spectra, spectra)
     draw_profiles(files.picture, found, spectra)
-    return found.warnings
+    return (*found.warnings, *contradictions.of_recordings(bench.brain, penetration))
 
 
 def anchor(bench: Bench, anchors: tuple[Anchor, ...], in_force: Callable[[], tuple[Anchor, ...]]) -> tuple[str, ...]:
@@ -200,7 +208,8 @@ def anchor(bench: Bench, anchors: tuple[Anchor, ...], in_force: Callable[[], tup
         )  # fmt: skip
     write_text(brain.out / "anchors.csv", anchors_text(anchors))
     write_text(brain.out / "suggestions.csv", suggestions_text(open_ones))
-    return tuple(f"penetration {p.penetration}, shank {p.shank}: {w}" for p in posteriors for w in p.warnings)
+    told = (f"penetration {p.penetration}, shank {p.shank}: {w}" for p in posteriors for w in p.warnings)
+    return (*told, *contradictions.of_places(bench, evidence))
 
 
 def locate(bench: Bench) -> tuple[str, ...]:

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from leadline.base.progress import SILENT, Progress
+from leadline.model.frames import mirrored
 from leadline.model.transform import Affine, Field, PointTransform, Registration
 from leadline.registration import contrast, deformable, orient, quality
 from leadline.registration.grids import halve
@@ -185,6 +186,8 @@ def _registration(
             warnings.append(
                 f"The stored orientation {start.code} looks wrong: {rival.code} fits the atlas much better "
                 f"(local correlation {rival.agreement:.2f} against {start.agreement:.2f}). {start.code} was kept; "
-                f"if the stack was stored as {rival.code}, write that in brain.toml and run again."
+                f"if the stack was stored as {rival.code}, write that in brain.toml and run again. Images cannot tell "
+                f"it from its mirror image {mirrored(rival.code)}: make sure of R and L by another way. If the stack's "
+                "code is right, look at the atlas's."
             )
     return Registration(stack_to_atlas, atlas_to_stack, error_um, numbers, tuple(warnings))
