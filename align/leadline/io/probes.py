@@ -199,7 +199,7 @@ def _plane_um(probe: Any, where: str) -> tuple[FloatArray, FloatArray]:
     A three-dimensional file is read through ``contact_plane_axes``: the contacts of one planar probe share the two
     axes, and their coordinates in them are x and y.
     """
-    unit = _UNIT_UM.get(probe.get("si_units", "um"))
+    unit = _UNIT_UM.get(str(probe.get("si_units", "um")))
     if unit is None:
         raise LeadlineError(f"si_units is {probe['si_units']!r}", where=where, mend="It is 'um' or 'mm'")
     try:

@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from leadline.base.errors import LeadlineError, nearest
+from leadline.io.images import READ_FAULTS
 from leadline.io.tables import numbers, read_csv
 from leadline.model.recording import Events, Spikes
 
@@ -108,7 +109,7 @@ def _read_parquet(path: Path, needed: Sequence[str], what: str) -> pd.DataFrame:
 
     try:
         table = pd.read_parquet(path)
-    except (ArrowException, OSError, ValueError) as error:
+    except (ArrowException, AttributeError, *READ_FAULTS) as error:
         first = (str(error).splitlines() or [type(error).__name__])[0]
         raise LeadlineError(
             f"cannot be read as a Parquet table of {what} ({first})", where=str(path), mend="Write it again"
