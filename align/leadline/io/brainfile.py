@@ -203,10 +203,16 @@ def _recording(table: _Table) -> RecordingSource:
         exclude=table.path("exclude", None, folder_ok=False),
         skip_channels=table.get("skip_channels", _whole_list, "a list of trace numbers, such as [384]", ()),
         lfp_series=table.get("lfp_series", _text, '"the name of an electrical series of the NWB file"', None),
+        probe=table.path("probe", None, folder_ok=False),
+        probe_index=table.get("probe_index", _whole, "0, 1, 2 …: which probe of the recording's probe file", None),
     )
     table.finish()
     if source.lfp is None and source.spikes is None:
         table.fault("names neither lfp nor spikes", 'Write lfp = "…" or spikes = "…"')
+    if source.probe_index is not None and source.probe is None and "probe" not in table.values:
+        table.fault(
+            "'probe_index' chooses from a probe file, and the recording names none", "Write probe, or leave it out"
+        )
     in_nwb = source.lfp is not None and source.lfp.suffix.lower() == ".nwb"
     if source.lfp_series is not None and not in_nwb:
         table.fault("'lfp_series' names a series inside an NWB file, and lfp is none", "Leave it out")

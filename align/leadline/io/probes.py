@@ -21,7 +21,14 @@ _LONGEST_UM = 100_000.0
 _TIP_SLACK_UM = 1.0
 
 
-def read_probe(path: Path, *, tip_offset_um: float = 0.0, probe_index: int | None = None) -> Probe:
+def read_probe(
+    path: Path,
+    *,
+    tip_offset_um: float = 0.0,
+    probe_index: int | None = None,
+    shank_names: Sequence[str] = (),
+    connected: bool = True,
+) -> Probe:
     """Read one probe from a probeinterface file.
 
     ``channel`` holds ``device_channel_indices``; where the file has none, -1 throughout, to be filled by :func:`wire`.
@@ -30,11 +37,13 @@ def read_probe(path: Path, *, tip_offset_um: float = 0.0, probe_index: int | Non
     ----------
     tip_offset_um : from the tip to y = 0 of the file.
     probe_index : which probe, where the file holds several.
+    shank_names : shanks that are numbered already, in order: those of the insertion's other site maps.
+    connected : whether a file that says of every contact that it was not connected is an error.
 
     Raises
     ------
     LeadlineError : the file is no probe file, holds several probes and none is chosen, or its contacts are not
-        finite, double or of unequal number.
+        finite, double, of unequal number or all unconnected.
 
     References
     ----------
@@ -46,9 +55,18 @@ def read_probe(path: Path, *, tip_offset_um: float = 0.0, probe_index: int | Non
     x_um, y_um = _plane_um(chosen, where)
     n = len(x_um)
     ids = _ids(chosen, n, where)
-    shank = _shanks(chosen, n, where)
+    shank = _shanks(chosen, n, where, shank_names)
     _require_apart(ids, x_um, y_um, shank, where)
-    return Probe(ids, x_um, y_um, shank, _channels(chosen, n, where), float(tip_offset_um))
+    return Probe(ids, x_um, y_um, shank, _channels(chosen, n, where, connected), float(tip_offset_um))
+
+
+def read_shank_names(path: Path, *, probe_index: int | None = None) -> tuple[str, ...]:
+    """Names of a probe's shanks in the order in which the file first gives them; none where it names none.
+
+    Raises LeadlineError as :func:`read_probe` does.
+    """
+    chosen = _choose(_content(path)["probes"], probe_index, str(path))
+    return tuple(dict.fromkeys(str(v) for v in chosen.get("shank_ids") or ()))
 
 
 def is_wired(probe: Probe) -> bool:
@@ -275,11 +293,11 @@ def _ids(probe: Any, n: int, where: str) -> tuple[str, ...]:
     return ids
 
 
-def _shanks(probe: Any, n: int, where: str) -> IntArray:
+def _shanks(probe: Any, n: int, where: str, known: Sequence[str]) -> IntArray:
     values = _column(probe, "shank_ids", n, where)
     if values is None:
         return np.zeros(n, np.int64)
-    order = {name: k for k, name in enumerate(dict.fromkeys(str(v) for v in values))}
+    order = {name: k for k, name in enumerate(dict.fromkeys([*known, *(str(v) for v in values)]))}
     return np.array([order[str(v)] for v in values], np.int64)
 
 
@@ -295,7 +313,7 @@ def _require_apart(ids: tuple[str, ...], x_um: FloatArray, y_um: FloatArray, sha
         seen[place] = k
 
 
-def _channels(probe: Any, n: int, where: str) -> IntArray:
+def _channels(probe: Any, n: int, where: str, connected: bool) -> IntArray:
     values = _column(probe, "device_channel_indices", n, where)
     if values is None:
         return np.full(n, NOT_RECORDED)
@@ -305,5 +323,11 @@ def _channels(probe: Any, n: int, where: str) -> IntArray:
             f"device_channel_indices hold {bad[0]!r}",
             where=where,
             mend="Write trace indices from 0; -1 is not recorded",
+        )
+    if connected and all(v == NOT_RECORDED for v in values):
+        raise LeadlineError(
+            "no contact is connected: device_channel_indices is -1 throughout",
+            where=where,
+            mend="Write the trace of each contact, or leave device_channel_indices out where they are in order",
         )
     return np.asarray(values, np.int64)

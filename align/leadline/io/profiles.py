@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 from typing import TYPE_CHECKING
 from zipfile import BadZipFile
 
@@ -22,7 +23,7 @@ FLAGS = ("", "dead", "noisy", "outside")
 def write_profile(path: Path, profile: Profile) -> None:
     """Write ``shank``, ``tip_distance_um``, a column for every feature and ``flag`` as Parquet.
 
-    The penetration's name and the warnings are kept in the file's own key-value notes.
+    The penetration's name, the warnings and how much was read are kept in the file's own key-value notes.
     """
     import pyarrow as pa
     import pyarrow.parquet as pq
@@ -32,7 +33,11 @@ def write_profile(path: Path, profile: Profile) -> None:
         if feature.name in profile.features:
             columns[feature.name] = pa.array(profile.features[feature.name])
     columns["flag"] = pa.array(profile.flags, pa.string())
-    notes = {"leadline.penetration": profile.penetration, "leadline.warnings": "\n".join(profile.warnings)}
+    notes = {
+        "leadline.penetration": profile.penetration,
+        "leadline.warnings": "\n".join(profile.warnings),
+        "leadline.read_s": json.dumps(profile.read_s),
+    }
     with whole_file(path) as part:
         pq.write_table(pa.table(columns, metadata=notes), part)
 
@@ -67,6 +72,7 @@ def read_profile(path: Path) -> Profile:
         values,
         tuple(table["flag"].to_pylist()),
         tuple(line for line in notes.get("leadline.warnings", "").split("\n") if line),
+        tuple((float(a), float(b)) for a, b in json.loads(notes.get("leadline.read_s", "[]"))),
     )
 
 

@@ -53,8 +53,18 @@ def left_out(source: RecordingSource, probe: Probe, group: str) -> str:
     return f"traces {in_words(idle)} of {source.lfp.name} are no contact, left out" if idle.size else ""
 
 
-def open_recording(source: RecordingSource, probe: Probe, group: str, name: str) -> Recording:
-    """A recording of a wired probe: traces opened; spikes, events and excluded intervals read."""
+def n_traces(source: RecordingSource, probe: Probe, group: str) -> int:
+    """How many traces a recording has; without samples, as many as its wired ``probe`` needs."""
+    if source.lfp is None:
+        return int(probe.channel.max(initial=-1)) + 1
+    return open_source(source, probe, group).n_channels
+
+
+def open_recording(source: RecordingSource, probe: Probe, group: str, name: str, *, own: bool = False) -> Recording:
+    """A recording of a wired probe: traces opened; spikes, events and excluded intervals read.
+
+    ``own`` : whether the penetration holds other contacts too, so that the recording has to carry its own.
+    """
     from leadline.io import nwb, spikes
 
     sorted_spikes = events = None
@@ -76,4 +86,5 @@ def open_recording(source: RecordingSource, probe: Probe, group: str, name: str)
         events=events,
         excluded_s=excluded,
         name=name,
+        probe=probe if own else None,
     )

@@ -25,7 +25,8 @@ class StackSource:
 class RecordingSource:
     """Where one recording's files are; a key is None where the user gave none.
 
-    ``lfp_series`` : which electrical series of an NWB file that holds several of one electrode group.
+    ``lfp_series`` : which electrical series of an NWB file that holds several of one electrode group. ``probe``,
+    ``probe_index`` : its own site map, where it was not recorded through the penetration's.
     """
 
     lfp: Path | None = None
@@ -38,6 +39,8 @@ class RecordingSource:
     exclude: Path | None = None
     skip_channels: tuple[int, ...] = ()
     lfp_series: str | None = None
+    probe: Path | None = None
+    probe_index: int | None = None
 
 
 @dataclass(frozen=True, slots=True)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -67,3 +68,30 @@ class Probe:
             self.channel[rows],
             self.tip_offset_um,
         )
+
+
+def united(site_maps: Sequence[Probe], n_traces: Sequence[int]) -> Probe:
+    """The recorded contacts of several site maps of one insertion, each place once.
+
+    Channels count on through the maps: trace ``k`` of the second is ``k + n_traces[0]``. A place that several maps
+    hold keeps the name and the channel of the first; a name that means two places gets its map's number before it.
+    """
+    maps = [m.recorded for m in site_maps]
+    first_trace = np.concatenate([[0], np.cumsum(n_traces)])[:-1]
+    place = np.concatenate([np.stack([m.shank, m.x_um.round(1), m.y_um.round(1)], axis=1) for m in maps])
+    keep = np.sort(np.unique(place, axis=0, return_index=True)[1])
+    number = np.repeat(np.arange(len(maps)), [len(m.contact_id) for m in maps])
+    ids = [name for m in maps for name in m.contact_id]
+    taken: dict[str, int] = {}
+    names = []
+    for k in keep.tolist():
+        names.append(ids[k] if ids[k] not in taken else f"{number[k] + 1}:{ids[k]}")
+        taken[ids[k]] = k
+    return Probe(
+        tuple(names),
+        np.concatenate([m.x_um for m in maps])[keep],
+        np.concatenate([m.y_um for m in maps])[keep],
+        np.concatenate([m.shank for m in maps])[keep],
+        np.concatenate([m.channel + t for m, t in zip(maps, first_trace, strict=True)])[keep],
+        maps[0].tip_offset_um,
+    )

@@ -60,7 +60,8 @@ class Profile:
 
     ``shank``, ``tip_distance_um`` : (R,), sorted by shank, then from the tip upward.
     ``features`` : name -> (R,) float64. ``flags`` : (R,) text, '' or 'dead', 'noisy', 'outside'.
-    ``warnings`` : sentences for the user (what share was read, what was left out).
+    ``warnings`` : sentences for the user (what share was read, what was left out). ``read_s`` : of each recording, how
+    many seconds of samples were read, and of how many outside excluded intervals.
     """
 
     penetration: str
@@ -69,6 +70,7 @@ class Profile:
     features: Mapping[str, FloatArray]
     flags: tuple[str, ...] = ()
     warnings: tuple[str, ...] = field(default=())
+    read_s: tuple[tuple[float, float], ...] = ()
 
     def __post_init__(self) -> None:
         rows = len(self.tip_distance_um)
@@ -92,4 +94,5 @@ class Profile:
             {name: values[rows] for name, values in self.features.items()},
             tuple(self.flags[int(i)] for i in rows),
             self.warnings,
+            self.read_s,
         )

@@ -9,6 +9,7 @@ import numpy as np
 
 from leadline.base.arrays import AnyArray, Float32Array, FloatArray, IntArray, frozen, frozen_vector
 from leadline.base.errors import LeadlineError
+from leadline.model.probe import Probe
 
 
 class Traces(Protocol):
@@ -71,13 +72,17 @@ class Events:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Recording:
-    """One recording of a penetration. ``excluded_s`` : (k, 2) start and stop of intervals left out."""
+    """One recording of a penetration. ``excluded_s`` : (k, 2) start and stop of intervals left out.
+
+    ``probe`` : the contacts that it was recorded through, where they are not the penetration's.
+    """
 
     traces: Traces | None
     spikes: Spikes | None = None
     events: Events | None = None
     excluded_s: FloatArray = None  # type: ignore[assignment]
     name: str = ""
+    probe: Probe | None = None
 
     def __post_init__(self) -> None:
         spans = np.zeros((0, 2)) if self.excluded_s is None else self.excluded_s

@@ -9,11 +9,11 @@ import numpy as np
 from leadline.base.progress import SILENT, Progress
 from leadline.model.profile import FEATURES, Profile
 from leadline.model.spectra import Spectra
-from leadline.physiology.reading import FREQUENCY_HZ, Reading, read
+from leadline.physiology.reading import ABSENT, FREQUENCY_HZ, Reading, read
 from leadline.physiology.rows import Rows, rows_of
 
 if TYPE_CHECKING:
-    from collections.abc import Sequence
+    from collections.abc import Iterator, Sequence
 
     from leadline.base.arrays import AnyArray, FloatArray
     from leadline.model.probe import Probe
@@ -41,7 +41,8 @@ def profile_of(
     ----------
     name : of the penetration.
     probe : wired to the recordings' traces; contacts that were not recorded are left out.
-    recordings : one or several, of the same wiring.
+    recordings : one or several, through the contacts of ``probe`` or through contacts of their own, which ``probe``
+        holds too.
     settings : bands, mains, share to read, window around events.
     progress : told how far reading has come; may cancel it.
 
@@ -55,16 +56,49 @@ def profile_of(
     """
     wired = probe.recorded
     rows = rows_of(wired)
-    readings = [read(recording, wired, rows, settings, progress) for recording in recordings]
+    readings = [_read(recording, wired, rows, settings, progress) for recording in recordings]
     warnings = tuple(
         f"{recording.name or f'recording {number}'}: {text}" if len(recordings) > 1 else text
         for number, (recording, reading) in enumerate(zip(recordings, readings, strict=True), 1)
         for text in reading.warnings
     )
     profile = Profile(
-        name, rows.shank, rows.tip_distance_um, merged_features(readings), _flags(readings, len(rows)), warnings
+        name,
+        rows.shank,
+        rows.tip_distance_um,
+        merged_features(readings),
+        _flags(readings, len(rows)),
+        warnings + _strangers(recordings, readings),
+        tuple((round(r.read_s, 3), round(r.of_s, 3)) for r in readings),
     )
     return profile, _spectra(name, rows, readings)
+
+
+def _read(recording: Recording, wired: Probe, rows: Rows, settings: ProfileSettings, progress: Progress) -> Reading:
+    """Read a recording through its own contacts, where it has some, and put what it says into the rows of all."""
+    if recording.probe is None:
+        return read(recording, wired, rows, settings, progress)
+    own = recording.probe.recorded
+    return read(recording, own, rows_of(own), settings, progress).placed(rows)
+
+
+def _strangers(recordings: Sequence[Recording], readings: Sequence[Reading]) -> tuple[str, ...]:
+    """Says which recordings share too few rows with the others to be brought to one level."""
+    told = [(k, r) for k, r in enumerate(readings, 1) if r.field_s > 0]
+    if len(told) < 2:
+        return ()
+    there = np.array([r.flags != ABSENT for _, r in told])
+    lonely = [
+        recordings[k - 1].name or f"recording {k}"
+        for (k, _), mine, others in zip(told, there, there.sum(axis=0) - there, strict=True)
+        if (mine & (others > 0)).sum() < SHARED_ROWS
+    ]
+    if not lonely:
+        return ()
+    return (
+        f"{', '.join(lonely)}: fewer than {SHARED_ROWS} rows in common with the other recordings, so that levels "
+        "cannot be compared; a step where one ends may be no border",
+    )
 
 
 def merged_features(readings: Sequence[Reading]) -> dict[str, FloatArray]:
@@ -102,22 +136,41 @@ def _mean(values: FloatArray, weights: FloatArray) -> FloatArray:
 
 
 def _levelled(values: FloatArray) -> FloatArray:
-    """Recordings ``(K, R)`` shifted to the first one's level by the rows that they share with it."""
-    shift = [float(np.median(s)) if s.size >= SHARED_ROWS else 0.0 for s in map(_finite, values[:1] - values)]
-    levelled: FloatArray = values + np.array(shift)[:, None]
+    """Recordings ``(K, R)`` shifted to one level by the rows that each shares with those before it."""
+    levelled = values.copy()
+    for k, held in _joined(values):
+        shared = _finite(_mean(levelled[held], np.ones(len(held))) - values[k])
+        if shared.size >= SHARED_ROWS:
+            levelled[k] += float(np.median(shared))
     return levelled
 
 
-def _circular_mean(values: FloatArray, weights: FloatArray) -> FloatArray:
-    """As :func:`_mean` for angles, each recording first turned to agree with the first one."""
-    turned = []
-    for angles in values:
-        shared = _finite(values[0] - angles)
-        turn = np.exp(1j * shared).mean() if shared.size >= SHARED_ROWS else 1.0
-        turned.append(np.exp(1j * angles) * (turn / max(abs(turn), 1e-12)))
+def _joined(values: FloatArray) -> Iterator[tuple[int, list[int]]]:
+    """The recordings ``(K, R)`` after the first, each next the one that shares most rows with those before it."""
     known = np.isfinite(values)
-    total = (np.where(known, np.array(turned), 0.0) * weights[:, None]).sum(axis=0)
-    return np.where(known.any(axis=0), np.angle(total), np.nan)
+    held, left = [0], list(range(1, len(values)))
+    while left:
+        covered = known[held].any(axis=0)
+        best = max(left, key=lambda k: (int((known[k] & covered).sum()), -k))
+        yield best, held
+        held.append(best)
+        left.remove(best)
+
+
+def _circular_mean(values: FloatArray, weights: FloatArray) -> FloatArray:
+    """As :func:`_mean` for angles, each recording first turned to agree with those before it.
+
+    A recording that shares too few rows with them counts from a clock of its own and is left out.
+    """
+    known = np.isfinite(values)
+    turned = np.where(known, np.exp(1j * np.nan_to_num(values)), 0.0)
+    for k, held in _joined(values):
+        with_others = (turned[held] * weights[held][:, None]).sum(axis=0) * np.conj(turned[k])
+        shared = with_others[(known[held].any(axis=0)) & known[k]]
+        turn = np.exp(1j * np.angle(shared)).mean() if shared.size >= SHARED_ROWS else 0.0
+        turned[k] *= turn / max(abs(turn), 1e-12)
+    total = (turned * weights[:, None]).sum(axis=0)
+    return np.where(np.abs(total) > 0, np.angle(total), np.nan)
 
 
 def _finite(values: FloatArray) -> FloatArray:
@@ -130,7 +183,9 @@ def _flags(readings: Sequence[Reading], n_rows: int) -> tuple[str, ...]:
     if not told:
         return ("",) * n_rows
     flags = np.stack(told)
-    return tuple(str(f) for f in np.where((flags != "").all(axis=0), flags[0], ""))
+    sound = (flags == "").any(axis=0)
+    first = np.take_along_axis(flags, (flags != ABSENT).argmax(axis=0)[None], axis=0)[0]
+    return tuple(str(f) for f in np.where(sound | (first == ABSENT), "", first))
 
 
 def _spectra(name: str, rows: Rows, readings: Sequence[Reading]) -> Spectra:

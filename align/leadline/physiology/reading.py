@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass, field, replace
 from functools import partial
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -30,6 +30,7 @@ if TYPE_CHECKING:
 FREQUENCY_HZ = 0.5 * 2.0 ** (np.arange(0, 89) / 8.0)  # 0.5 to 1024 Hz, eight to the octave
 ENOUGH_SPIKES, ENDS_EARLY = 500, 0.8  # so many spikes do not stop by chance before that share of a recording
 LIMIT_SD = 5.0  # samples around an event count for at most this many standard deviations of their channel
+ABSENT = "absent"  # the flag of a row that a recording did not see
 CLEAR = 5.5  # standard deviations of the noise; random times reach 3 to 5
 
 
@@ -58,6 +59,26 @@ class Reading:
     def __post_init__(self) -> None:
         self.flags = np.full(len(self.rows), "", "U7")
         self.power_uv2_per_hz = np.full((len(self.rows), FREQUENCY_HZ.size), np.nan)
+
+    def placed(self, rows: Rows) -> Reading:
+        """The same in the rows of a larger probe; rows that this recording did not see are missing and absent."""
+        apart = np.abs(rows.tip_distance_um[:, None] - self.rows.tip_distance_um)
+        to = np.where(rows.shank[:, None] == self.rows.shank, apart, np.inf).argmin(axis=0)
+
+        def spread(values: AnyArray) -> AnyArray:
+            out = np.full((len(rows), *values.shape[1:]), np.nan)
+            out[to] = values
+            return out
+
+        found = replace(self, rows=rows, features={name: spread(v) for name, v in self.features.items()})
+        found.flags[:] = ABSENT
+        found.flags[to] = self.flags
+        found.power_uv2_per_hz = spread(self.power_uv2_per_hz)
+        if self.evoked is not None:
+            names = ("csd_ua_per_mm3", "amplitude_uv", "latency_s", "sink_latency_s", "map_uv", "map_csd")
+            maps: dict[str, Any] = {name: spread(getattr(self.evoked, name)) for name in names}
+            found.evoked = replace(self.evoked, **maps)
+        return found
 
 
 def read(

@@ -13,9 +13,12 @@ from leadline.base.progress import SILENT, Progress
 from leadline.model.brain import Brain, Penetration
 
 if TYPE_CHECKING:
+    from pathlib import Path
+
     from leadline.anchoring.knowledge import Knowledge
     from leadline.model.anchor import Anchor
     from leadline.model.atlas import Atlas
+    from leadline.model.brain import RecordingSource
     from leadline.model.probe import Probe
     from leadline.model.recording import Recording
     from leadline.model.volume import Stack, Volume
@@ -85,7 +88,32 @@ class Bench:
         return reduce_to(stack.fitting(target), target, progress=self.progress)
 
     def probe(self, penetration: Penetration) -> Probe:
-        """The probe of a penetration, wired to its recordings; contacts that were not recorded left out."""
+        """The contacts of a penetration that were recorded; ``channel`` counts on through site maps of recordings."""
+        from leadline.io.sources import n_traces
+        from leadline.model.probe import united
+
+        if not any(source.probe for source in penetration.recordings):
+            return self._common_map(penetration)
+        maps: dict[tuple[Path | None, int | None], Probe] = {}
+        size: dict[tuple[Path | None, int | None], int] = {}
+        for source, site_map in zip(penetration.recordings, self.site_maps(penetration), strict=True):
+            key = (source.probe, source.probe_index)
+            maps.setdefault(key, site_map)
+            size[key] = max(size.get(key, 0), n_traces(source, site_map, penetration.name))
+        return united(list(maps.values()), list(size.values()))
+
+    def site_maps(self, penetration: Penetration) -> tuple[Probe, ...]:
+        """The recorded contacts of each recording, wired to its own traces."""
+        common = None
+        if any(source.probe is None for source in penetration.recordings):
+            common = self._common_map(penetration)
+        return tuple(
+            common if common is not None and source.probe is None else self._own_map(penetration, source)
+            for source in penetration.recordings
+        )
+
+    def _common_map(self, penetration: Penetration) -> Probe:
+        """The penetration's own probe, wired to the recordings that were made through it."""
         from leadline.io.probes import is_wired, read_probe, wire
         from leadline.io.sources import wired_to
 
@@ -93,19 +121,37 @@ class Bench:
             penetration.probe, tip_offset_um=penetration.tip_offset_um, probe_index=penetration.probe_index
         )
         for source in penetration.recordings:
-            if source.lfp is not None:
+            if source.lfp is not None and source.probe is None:
                 probe = wired_to(source, probe, penetration.name)
-        if not is_wired(probe):
-            probe = wire(probe, len(probe.contact_id))
-        return probe.recorded
+        return (probe if is_wired(probe) else wire(probe, len(probe.contact_id))).recorded
+
+    def _own_map(self, penetration: Penetration, source: RecordingSource) -> Probe:
+        from leadline.io.probes import is_wired, read_probe, read_shank_names, wire
+        from leadline.io.sources import wired_to
+
+        assert source.probe is not None
+        probe = read_probe(
+            source.probe,
+            tip_offset_um=penetration.tip_offset_um,
+            probe_index=source.probe_index,
+            shank_names=read_shank_names(penetration.probe, probe_index=penetration.probe_index),
+        )
+        if source.lfp is not None:
+            probe = wired_to(source, probe, penetration.name)
+        return (probe if is_wired(probe) else wire(probe, len(probe.contact_id))).recorded
 
     def recordings(self, penetration: Penetration, probe: Probe) -> tuple[Recording, ...]:
-        """The recordings of a penetration: traces opened, spikes, events and exclusions read."""
+        """The recordings of a penetration: traces opened, spikes, events and exclusions read.
+
+        ``probe`` : what :meth:`probe` gives.
+        """
         from leadline.io.sources import open_recording
 
+        own = any(source.probe for source in penetration.recordings)
+        maps = self.site_maps(penetration) if own else (probe,) * len(penetration.recordings)
         return tuple(
-            open_recording(source, probe, penetration.name, f"{penetration.name}, recording {number}")
-            for number, source in enumerate(penetration.recordings, 1)
+            open_recording(source, site_map, penetration.name, f"{penetration.name}, recording {number}", own=own)
+            for number, (source, site_map) in enumerate(zip(penetration.recordings, maps, strict=True), 1)
         )
 
     @cached_property

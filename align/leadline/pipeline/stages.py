@@ -106,7 +106,8 @@ def _profile(brain: Brain, penetration: Penetration) -> Step:
     files = products.ProfileFiles(brain, penetration.name)
     reads = [penetration.probe]
     for source in penetration.recordings:
-        reads += [p for p in (source.lfp, source.spikes, source.events, source.exclude) if p is not None]
+        files_of = (source.lfp, source.spikes, source.events, source.exclude, source.probe)
+        reads += [p for p in files_of if p is not None]
     return Step(
         f"profile {penetration.name}",
         "profile",
@@ -130,7 +131,7 @@ def _anchor(brain: Brain, record: Record, profiles: tuple[str, ...]) -> Step:
         "anchor",
         ("register", "trace", *profiles),
         key=(brain.settings.anchor, anchors, [p.inserted_um for p in brain.penetrations]),
-        reads=_present(brain.atlas, brain.knowledge, *(p.probe for p in brain.penetrations)),
+        reads=_present(brain.atlas, brain.knowledge, *_probe_files(brain)),
         gives=(brain.out / "anchors.csv", brain.out / "suggestions.csv", brain.cache / "posterior.npz"),
         run=lambda bench: work.anchor(bench, anchors, lambda: anchors_in_force(brain, record)),
         extra={"from_brain_toml": [dataclasses.asdict(a) for a in brain.anchors]},
@@ -143,10 +144,14 @@ def _locate(brain: Brain) -> Step:
         "locate",
         ("register", "trace", "anchor"),
         key=(brain.settings.locate, brain.name, [p.name for p in brain.penetrations]),
-        reads=_present(brain.atlas, *(p.probe for p in brain.penetrations)),
+        reads=_present(brain.atlas, *_probe_files(brain)),
         gives=(brain.out / "channels.csv", brain.out / "channels.parquet", brain.out / "posterior.parquet"),
         run=work.locate,
     )
+
+
+def _probe_files(brain: Brain) -> tuple[Path | None, ...]:
+    return tuple(path for p in brain.penetrations for path in (p.probe, *(r.probe for r in p.recordings)))
 
 
 def _present(*paths: Path | None) -> tuple[Path, ...]:
