@@ -208,7 +208,8 @@ def _choose(probes: list[Any], index: int | None, where: str) -> Any:
 def _name(probe: Any) -> str:
     notes = probe.get("annotations") if isinstance(probe.get("annotations"), dict) else {}
     name = notes.get("name") or notes.get("model_name") or "unnamed"
-    return f"{name!s}, {len(probe.get('contact_positions') or ())} contacts"
+    contacts = probe.get("contact_positions")
+    return f"{name!s}, {len(contacts) if isinstance(contacts, list) else 0} contacts"
 
 
 def _plane_um(probe: Any, where: str) -> tuple[FloatArray, FloatArray]:
