@@ -38,7 +38,10 @@ from tempfile import TemporaryDirectory
 from typing import Any
 
 ROOT = Path(__file__).parents[2]
-THREADS = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS", "NUMBA_NUM_THREADS")
+THREADS = (
+    "OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS", "NUMBA_NUM_THREADS",
+    "ITK_GLOBAL_DEFAULT_NUMBER_OF_THREADS",
+)  # fmt: skip
 MB = 1e6
 
 
@@ -94,8 +97,10 @@ class Row:
         return all(met) if met else None
 
 
-def in_child(function: Callable[..., Any], *, threads: int = 1, **arguments: Any) -> Cost:
+def in_child(function: Callable[..., Any], *, threads: int = 1, python: str = sys.executable, **arguments: Any) -> Cost:
     """Run ``function(**arguments)`` of an importable module in a fresh process; arguments and answer are JSON.
+
+    ``python`` : the interpreter, where a reference needs an environment of its own.
 
     Raises RuntimeError when the child fails; what it said stands on standard error.
     """
@@ -103,7 +108,7 @@ def in_child(function: Callable[..., Any], *, threads: int = 1, **arguments: Any
     with TemporaryDirectory() as folder:
         answer = Path(folder) / "cost.json"
         call = json.dumps([function.__module__, function.__qualname__, arguments])
-        command = [sys.executable, "-m", "tests.benchmarks.frame", str(answer), call]
+        command = [python, "-m", "tests.benchmarks.frame", str(answer), call]
         if subprocess.run(command, cwd=ROOT, env=environment, stdout=sys.stderr, check=False).returncode:
             raise RuntimeError(f"{function.__module__}.{function.__qualname__} failed")
         return Cost(**json.loads(answer.read_text()))
