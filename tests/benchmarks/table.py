@@ -82,14 +82,14 @@ def show(rows: Sequence[Row], console: Console) -> None:
     for name in ("work", "size", "ours", "reference", "ratio", "bar", "peak MB", "met"):
         table.add_column(name, justify="left" if name in ("work", "reference") else "right")
     for row in rows:
-        theirs = "-" if row.theirs is None else f"{row.theirs:.3g}"
+        theirs = "-" if row.theirs is None else f"{row.theirs:.3g} {row.reference}"
         sign = "≥" if row.at_least else "≤"
         peak = "-" if row.peak_mb is None else f"{row.peak_mb:.0f}"
         table.add_row(
             row.work,
             f"{row.size:g} {row.unit}",
             f"{row.ours:.3g} {row.measured}",
-            f"{theirs} {row.reference}".strip(),
+            theirs,
             "-" if row.ratio is None else f"{row.ratio:.2f}",
             "-" if row.bar is None else f"{sign} {row.bar:g}",
             peak if row.peak_bar_mb is None else f"{peak} ≤ {row.peak_bar_mb:.0f}",
