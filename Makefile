@@ -3,7 +3,7 @@ PYTHON ?= $(shell for p in python3 python3.13 python3.12 python3.11; do $$p -c "
 BIN := .venv/bin
 ONE_THREAD := OMP_NUM_THREADS=1 OPENBLAS_NUM_THREADS=1 MKL_NUM_THREADS=1 NUMBA_NUM_THREADS=1
 
-.PHONY: demo test bench lint study clean docs screenshots
+.PHONY: demo test bench lint study faults fuzz clean docs screenshots
 demo: .venv/.core
 	$(BIN)/leadline demo leadline-demo
 
@@ -21,6 +21,17 @@ lint: .venv/.dev
 
 study: .venv/.dev
 	$(ONE_THREAD) $(BIN)/python -m tests.studies
+
+# kills everything that writes at more than 200 moments of each, about an hour; FAULTS="run=20" for less
+faults: .venv/.dev
+	$(ONE_THREAD) $(BIN)/python -m tests.faults $(FAULTS)
+
+# a million spoilt files, then cases that grow by coverage; FUZZ="nrrd --cases 1000" for less
+FUZZ ?= --cases 32000 --seconds 600
+fuzz: .venv/.dev
+	$(BIN)/python -m pip install -q --disable-pip-version-check -c constraints.txt -e '.[fuzz]'
+	$(ONE_THREAD) nice -n 15 $(BIN)/python -m tests.fuzz $(FUZZ)
+	$(ONE_THREAD) nice -n 15 $(BIN)/python -m tests.fuzz $(FUZZ) --guided --seconds 60
 
 docs: .venv/.dev
 	$(BIN)/python -m pdoc --docformat numpy -o docs/reference leadline '!leadline.demo'

@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import json
+import os
 from dataclasses import dataclass, field
+from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from leadline.base.atomic import write_text
@@ -12,7 +14,6 @@ from leadline.base.fingerprint import fingerprint_path, fingerprint_value
 
 if TYPE_CHECKING:
     from collections.abc import Mapping
-    from pathlib import Path
 
 RECORD_FORMAT = 1
 
@@ -82,4 +83,4 @@ class Record:
 
 def _inside(path: Path, folder: Path) -> bool:
     """Whether ``path`` is a file there is, inside ``folder``."""
-    return path.is_file() and path.resolve().is_relative_to(folder.resolve())
+    return os.path.isfile(path) and Path(os.path.realpath(path)).is_relative_to(folder.resolve())
