@@ -36,9 +36,22 @@ def write_provenance(brain: Brain, record: Record, steps: Sequence[str]) -> None
         "settings": dataclasses.asdict(brain.settings),
         "inputs": dict(sorted(inputs.items())),
         "outputs": {k: v for n in steps for k, v in record.steps[n].outputs.items() if k.startswith("out")},
+        "recordings_read_s": _read_s(brain),
         "warnings": [{"step": n, "warning": w} for n in steps for w in record.steps[n].warnings],
     }
     write_json(content, brain.out / "provenance.json")
+
+
+def _read_s(brain: Brain) -> dict[str, list[dict[str, float]]]:
+    """Of each recording of each penetration, how many seconds of samples were read, and of how many."""
+    from leadline.io.profiles import read_profile
+    from leadline.pipeline.products import ProfileFiles
+
+    files = {p.name: ProfileFiles(brain, p.name).table for p in brain.penetrations if p.recordings}
+    return {
+        name: [{"read_s": read, "of_s": whole} for read, whole in read_profile(file).read_s]
+        for name, file in files.items()
+    }
 
 
 def _versions() -> dict[str, str]:
