@@ -11,19 +11,20 @@ LOG_REFUSED = -1e18
 
 
 class Pack(NamedTuple):
-    """All shanks of one probe in padded arrays: S shanks, G groups, C noise models, R rows, F features, L labels.
+    """All shanks of one probe in padded arrays: S shanks, G groups, C noise models, R rows, F features, L labels, of
+    which the last S are an intercept of each shank.
 
     ``centre`` (S, R), ``basis`` (S, R, J) : label depth of the rows, ``centre + basis @ z``. ``whitener`` (S, G, C,
-    R, R) : entry [r, t] carries row r into whitened row t. ``white_one`` (S, G, C, R), ``white_data``
-    (S, G, C, F, R), ``square`` (S, G, C, F) its sum of squares. ``log_scale`` (S, G, C) : log determinant of the
-    whitener. ``power`` (S, G, F) : what a feature counts beside its correlated fellows. ``mean`` (S, G, F, L).
-    ``precision`` (S, L, L), ``log_covariance`` (S,). ``log_null`` (S, G, C, F). ``active``, ``weight``
-    (S, G, M, 8) and ``start`` (S,) : cells of the label tables.
+    R, B) : entry [r, k] carries row r into whitened row r + k. ``white_one`` (S, G, C, R), ``white_data``
+    (S, G, C, R, F). ``square``, ``log_scale``, ``log_null`` (G, C, F) : sum of squares, log determinant of the
+    whitener and evidence of mere noise, over the shanks that have the feature; ``counted`` (G, F) their rows.
+    ``pattern`` (G, F) : which row of ``has`` (G, P, S) names those shanks. ``power`` (G, F) : what a feature counts
+    beside its correlated fellows. ``mean`` (G, L, F). ``precision`` (L, L), ``log_covariance``. ``active``,
+    ``weight`` (S, G, M, 8) and ``start`` (S,) : cells of the label tables.
     """
 
     n_rows: Any
     n_features: Any
-    n_labels: Any
     n_cells: Any
     centre: Any
     basis: Any
@@ -32,10 +33,13 @@ class Pack(NamedTuple):
     white_data: Any
     square: Any
     log_scale: Any
+    counted: Any
+    pattern: Any
+    has: Any
     power: Any
     mean: Any
     precision: Any
-    log_covariance: Any
+    log_covariance: float
     log_null: Any
     active: Any
     weight: Any
@@ -69,104 +73,144 @@ def _cholesky(a, n):  # type: ignore[no-untyped-def]  # pragma: no cover
 
 
 @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
-def _design(p, s, g, c, depth, white):  # type: ignore[no-untyped-def]  # pragma: no cover
-    """Whitened label membership of every row, ``white`` (L, R)."""
-    rows, last = p.n_rows[s], p.n_labels[s] - 1
-    white[: last + 1, :rows] = 0.0
+def _design(p, s, g, c, depth, white, first, last):  # type: ignore[no-untyped-def]  # pragma: no cover
+    """Whitened label membership of the rows of one shank, ``white`` (L, R), and the range of rows that each label
+    touches."""
+    rows, labels = p.n_rows[s], first.size
+    band = p.whitener.shape[4]
+    for i in range(labels):
+        first[i] = rows
+        last[i] = 0
     for r in range(rows):
         cell = int((depth[r] - p.start[s]) / p.cell_um + 0.5)
         cell = min(max(cell, 0), p.n_cells[s] - 1)
+        end = min(rows, r + band)
         for a in range(p.active.shape[3]):
             label = p.active[s, g, cell, a]
             if label < 0:
                 break
-            share = np.float32(p.weight[s, g, cell, a])
-            for t in range(r, rows):
-                white[label, t] += share * p.whitener[s, g, c, r, t]
+            for t in range(last[label] if first[label] < rows else r, end):
+                white[label, t] = 0.0
+            first[label] = min(first[label], r)
+            last[label] = end
+            share = p.weight[s, g, cell, a]
+            for k in range(end - r):
+                white[label, r + k] += share * p.whitener[s, g, c, r, k]
+    own = labels - p.n_rows.size + s
+    first[own] = 0
+    last[own] = rows
     for t in range(rows):
-        white[last, t] = p.white_one[s, g, c, t]
+        white[own, t] = p.white_one[s, g, c, t]
 
 
 @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
-def _products(p, s, g, c, white, gram, cross):  # type: ignore[no-untyped-def]  # pragma: no cover
-    """Products of whitened labels with each other, ``gram`` (L, L), and with the data, ``cross`` (F, L)."""
-    rows, features = p.n_rows[s], p.n_features[s, g]
-    for i in range(gram.shape[0]):
+def _add_products(p, s, g, c, white, first, last, gram, cross):  # type: ignore[no-untyped-def]  # pragma: no cover
+    """Add one shank's products of whitened labels with each other, ``gram`` (P, L, L), and with the data, ``cross``
+    (L, F)."""
+    for i in range(first.size):
+        if last[i] == 0:
+            continue
         for j in range(i + 1):
             total = np.float32(0.0)
-            for t in range(rows):
+            for t in range(max(first[i], first[j]), min(last[i], last[j])):
                 total += white[i, t] * white[j, t]
-            gram[i, j] = total
-            gram[j, i] = total
+            if total != 0:
+                for pattern in range(gram.shape[0]):
+                    if p.has[g, pattern, s]:
+                        gram[pattern, i, j] += total
+                        if j < i:
+                            gram[pattern, j, i] += total
+        for t in range(first[i], last[i]):
+            w = white[i, t]
+            for f in range(p.n_features[g]):
+                cross[i, f] += w * p.white_data[s, g, c, t, f]
+
+
+@njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
+def _left(mean, gram, cross, factor, used, b, rss):  # type: ignore[no-untyped-def]  # pragma: no cover
+    """Take what the labels explain off the sums of squares ``rss`` (F,); ``used`` : labels that any row touches."""
+    labels, features = b.shape[0], rss.size
+    b[:] = 0.0
+    for a in range(used.size):
+        i = used[a]
+        for e in range(used.size):
+            known = gram[i, used[e]]
+            if known != 0:
+                for f in range(features):
+                    b[i, f] += known * mean[used[e], f]
         for f in range(features):
-            total = np.float32(0.0)
-            for t in range(rows):
-                total += white[i, t] * p.white_data[s, g, c, f, t]
-            cross[f, i] = total
-
-
-@njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
-def _explained(mean, gram, cross, factor, b):  # type: ignore[no-untyped-def]  # pragma: no cover
-    """What the labels take off the sum of squares of one feature."""
-    labels, rss = b.size, 0.0
+            rss[f] += mean[i, f] * (b[i, f] - 2 * cross[i, f])
+            b[i, f] = cross[i, f] - b[i, f]
     for i in range(labels):
-        total = 0.0
-        for j in range(labels):
-            total += gram[i, j] * mean[j]
-        rss += mean[i] * (total - 2 * cross[i])
-        b[i] = cross[i] - total
-    for i in range(labels):
-        total = b[i]
         for k in range(i):
-            total -= factor[i, k] * b[k]
-        b[i] = total / factor[i, i]
-        rss -= b[i] * b[i]
-    return -rss
+            share = factor[i, k]
+            if share != 0:
+                for f in range(features):
+                    b[i, f] -= share * b[k, f]
+        for f in range(features):
+            b[i, f] /= factor[i, i]
+            rss[f] -= b[i, f] * b[i, f]
 
 
 @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
-def group_evidence(p, s, g, c, depth, white, out):  # type: ignore[no-untyped-def]  # pragma: no cover
-    """Log evidence of each feature of a group, emissions integrated out (Student-t), into ``out`` (F,).
+def group_evidence(p, g, c, depth, out):  # type: ignore[no-untyped-def]  # pragma: no cover
+    """Log evidence of each feature of a group at label depths ``depth`` (S, R), emissions integrated out (Student-t),
+    into ``out`` (F,).
 
     With y ~ N(A mu, v C), mu ~ N(m, v V), v ~ IG(shape, rate): Bishop 2006, section 2.3.7.
     """
-    rows, labels, features = p.n_rows[s], p.n_labels[s], p.n_features[s, g]
-    _design(p, s, g, c, depth, white)
-    gram, cross = np.empty((labels, labels)), np.empty((features, labels))
-    _products(p, s, g, c, white, gram, cross)
-    factor = gram + p.precision[s, :labels, :labels]
-    log_det = _cholesky(factor, labels) + p.log_covariance[s]
-    b = np.empty(labels)
+    labels, features = p.mean.shape[1], p.n_features[g]
+    patterns = 1
     for f in range(features):
-        rss = p.square[s, g, c, f] - _explained(p.mean[s, g, f], gram, cross[f], factor, b)
-        fit = (p.shape + 0.5 * rows) * np.log(p.rate + 0.5 * max(rss, 0.0))
-        out[f] = p.log_scale[s, g, c] - 0.5 * log_det - fit
+        patterns = max(patterns, p.pattern[g, f] + 1)
+    gram, cross = np.zeros((patterns, labels, labels)), np.zeros((labels, features), np.float32)
+    white = np.empty((labels, p.centre.shape[1]), np.float32)
+    first, last = np.empty(labels, np.int64), np.empty(labels, np.int64)
+    touched = np.zeros(labels, np.bool_)
+    for s in range(p.n_rows.size):
+        if p.n_rows[s] > 0:
+            _design(p, s, g, c, depth[s], white, first, last)
+            _add_products(p, s, g, c, white, first, last, gram, cross)
+            for i in range(labels):
+                touched[i] |= last[i] > 0
+    used = np.flatnonzero(touched)
+    b, rss = np.empty((labels, features)), np.empty(features)
+    for pattern in range(patterns):
+        factor = gram[pattern] + p.precision
+        log_det = _cholesky(factor, labels) + p.log_covariance
+        for f in range(features):
+            rss[f] = p.square[g, c, f]
+        _left(p.mean[g], gram[pattern], cross, factor, used, b, rss)
+        for f in range(features):
+            if p.pattern[g, f] == pattern:
+                fit = np.log(p.rate + 0.5 * max(rss[f], 0.0))
+                out[f] = p.log_scale[g, c, f] - 0.5 * log_det - (p.shape + 0.5 * p.counted[g, f]) * fit
 
 
 @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
-def log_likelihood(p, z, c, depth, white, out):  # type: ignore[no-untyped-def]  # pragma: no cover
+def log_likelihood(p, z, c, depth, out):  # type: ignore[no-untyped-def]  # pragma: no cover
     """Log evidence of all shanks for one path, each feature mixed with one that says nothing."""
-    total = 0.0
     for s in range(p.n_rows.size):
         for r in range(p.n_rows[s]):
             d = p.centre[s, r]
             for j in range(z.size):
                 d += p.basis[s, r, j] * z[j]
-            depth[r] = d
-            if r > 0 and depth[r - 1] - d < p.min_step:
+            depth[s, r] = d
+            if r > 0 and depth[s, r - 1] - d < p.min_step:
                 return LOG_REFUSED
-        for g in range(p.n_features.shape[1]):
-            if p.n_features[s, g] == 0:
-                continue
-            group_evidence(p, s, g, c[g], depth, white, out)
-            for f in range(p.n_features[s, g]):
-                null = p.log_null[s, g, c[g], f]
-                gain = out[f] - null
-                if gain > 0:
-                    mixed = gain + np.log((1 - p.null_share) + p.null_share * np.exp(-gain))
-                else:
-                    mixed = np.log(p.null_share + (1 - p.null_share) * np.exp(gain))
-                total += p.power[s, g, f] * (mixed + null)
+    total = 0.0
+    for g in range(p.n_features.size):
+        if p.n_features[g] == 0:
+            continue
+        group_evidence(p, g, c[g], depth, out)
+        for f in range(p.n_features[g]):
+            null = p.log_null[g, c[g], f]
+            gain = out[f] - null
+            if gain > 0:
+                mixed = gain + np.log((1 - p.null_share) + p.null_share * np.exp(-gain))
+            else:
+                mixed = np.log(p.null_share + (1 - p.null_share) * np.exp(gain))
+            total += p.power[g, f] * (mixed + null)
     return total
 
 
@@ -185,11 +229,9 @@ def log_offset_ratio(p, z):  # type: ignore[no-untyped-def]  # pragma: no cover
 @njit(cache=True, nogil=True, error_model="numpy")
 def evaluate(p, z, c, out):  # type: ignore[no-untyped-def]  # pragma: no cover
     """Log likelihood of paths ``z`` (N, J) into ``out`` (N,)."""
-    width = p.centre.shape[1]
-    depth, white = np.empty(width), np.empty((p.mean.shape[3], width), np.float32)
-    scratch = np.empty(max(1, p.mean.shape[2]))
+    depth, scratch = np.empty(p.centre.shape), np.empty(p.mean.shape[2])
     for i in range(z.shape[0]):
-        out[i] = log_likelihood(p, z[i], c[i], depth, white, scratch)
+        out[i] = log_likelihood(p, z[i], c[i], depth, scratch)
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
@@ -199,9 +241,7 @@ def slice_move(  # type: ignore[no-untyped-def]  # pragma: no cover
     """One elliptical slice move of every path under the Gaussian ``centre + root @ a`` (Murray et al. 2010, AISTATS;
     generalised to a fitted Gaussian as in Nishihara et al. 2014, JMLR 15, 2087). Changes ``z``, ``ll``, ``a``."""
     dims = z.shape[1]
-    width = p.centre.shape[1]
-    depth, white = np.empty(width), np.empty((p.mean.shape[3], width), np.float32)
-    scratch = np.empty(max(1, p.mean.shape[2]))
+    depth, scratch = np.empty(p.centre.shape), np.empty(p.mean.shape[2])
     new_a, new_z = np.empty(dims), np.empty(dims)
     for i in range(z.shape[0]):
         level = power * ll[i] + log_offset_ratio(p, z[i]) + log_u[i]
@@ -218,7 +258,7 @@ def slice_move(  # type: ignore[no-untyped-def]  # pragma: no cover
                 for k in range(j + 1):
                     total += root[j, k] * new_a[k]
                 new_z[j] = total
-            value = log_likelihood(p, new_z, c[i], depth, white, scratch)
+            value = log_likelihood(p, new_z, c[i], depth, scratch)
             evaluations[i] += 1
             here = power * value + log_offset_ratio(p, new_z)
             for j in range(dims):

@@ -13,7 +13,7 @@ from leadline.base.arrays import FloatArray, IntArray
 
 if TYPE_CHECKING:
     from leadline.anchoring.evidence import ShankEvidence
-    from leadline.anchoring.features import FeatureSet
+    from leadline.anchoring.features import Column
     from leadline.anchoring.knowledge import Knowledge
     from leadline.model.atlas import Structures
 
@@ -22,6 +22,7 @@ BLUR_UM = {"lfp": 45.0, "units": 20.0}
 ACTIVE = 8
 MIN_WEIGHT = 0.01
 INTERCEPT_SD = 1.0
+OWN_INTERCEPT_SD = 0.35
 MIN_SPAN_UM = 500.0
 NOISE_VARIANCE = 0.4
 
@@ -31,23 +32,17 @@ class LabelTable:
     """Blurred label membership along a track, on cells of 2.5 um, and the prior of the features of each label.
 
     ``start_um`` : depth of cell 0. ``ids`` : (L,) structures. ``active``, ``weight`` : (G, M, 8) labels that a contact
-    in the cell records and their shares, for each group of features, averaged over the lateral copies of the track; -1
-    where there is none.
-    ``mean`` : group -> (L + 1, F) prior means; ``covariance`` : (L + 1, L + 1) in units of the noise variance. The
-    last entry is an intercept, since the scaling of a feature depends on what the shank covers.
+    in the cell records (positions in ``ids``) and their shares, for each group of features, averaged over the lateral
+    copies of the track; -1 where there is none.
     """
 
     start_um: float
     ids: IntArray
     active: IntArray
     weight: FloatArray
-    mean: dict[str, FloatArray]
-    covariance: FloatArray
 
 
-def tabulate(
-    shank: ShankEvidence, features: FeatureSet, structures: Structures, knowledge: Knowledge, reach_um: FloatArray
-) -> LabelTable:
+def tabulate(shank: ShankEvidence, reach_um: FloatArray) -> LabelTable:
     """Membership tables for depths between ``reach_um[0]`` and ``reach_um[1]``."""
     from scipy.ndimage import gaussian_filter1d
 
@@ -73,16 +68,24 @@ def tabulate(
         most /= most.sum(axis=1, keepdims=True)
         active[g, :, : order.shape[1]] = np.where(most > 0, order, -1)
         weight[g, :, : order.shape[1]] = most
-    mean, covariance = _prior(ids, features, structures, knowledge)
-    return LabelTable(float(cells[0]), ids.astype(np.int64), active, weight, mean, covariance)
+    return LabelTable(float(cells[0]), ids.astype(np.int64), active, weight)
 
 
-def _prior(
-    ids: IntArray, features: FeatureSet, structures: Structures, knowledge: Knowledge
+def label_prior(
+    ids: IntArray,
+    columns: dict[str, tuple[Column, ...]],
+    shanks: int,
+    structures: Structures,
+    knowledge: Knowledge,
 ) -> tuple[dict[str, FloatArray], FloatArray]:
-    """Prior means by group, and the covariance: labels of one type share the animal's departure from the type."""
+    """What is known beforehand of the features of each label: group -> means (L + S, F), and their covariance.
+
+    ``covariance`` : (L + S, L + S) in units of the noise variance; labels of one type share the animal's departure
+    from the type. The last S entries are an intercept of each shank, since the scaling of a feature depends on what
+    the probe covers. The two columns of an angle have no mean of their own: the angle is relative.
+    """
     types = [knowledge.of(structures, int(i)) for i in ids]
-    covariance = np.zeros((ids.size + 1, ids.size + 1))
+    covariance = np.zeros((ids.size + shanks, ids.size + shanks))
     for a, kind in enumerate(types):
         if kind is None:
             covariance[a, a] = UNKNOWN_SD**2
@@ -90,11 +93,15 @@ def _prior(
         for b, other in enumerate(types):
             if other is not None and other.name == kind.name:
                 covariance[a, b] = kind.sd**2 + (kind.instance_sd**2 if a == b else 0.0)
-    covariance[-1, -1] = INTERCEPT_SD**2
+    covariance[ids.size :, ids.size :] = intercepts(shanks)
     mean = {}
     for group in GROUPS:
-        table = [[0.0 if t is None else t.mean.get(f, 0.0) for f in features.names[group]] for t in types]
-        table.append([0.0] * len(features.names[group]))
-        mean[group] = np.array(table, float).reshape(ids.size + 1, len(features.names[group]))
-        # an angle's two columns have no prior mean of their own: the angle is relative
+        rows = [[0.0 if t is None else t.mean.get(key[0], 0.0) for key in columns[group]] for t in types]
+        rows += [[0.0] * len(columns[group])] * shanks
+        mean[group] = np.array(rows, float).reshape(ids.size + shanks, len(columns[group]))
     return mean, covariance / NOISE_VARIANCE
+
+
+def intercepts(shanks: int) -> FloatArray:
+    """Covariance (S, S) of the intercepts of the shanks of one probe."""
+    return np.full((shanks, shanks), INTERCEPT_SD**2 - OWN_INTERCEPT_SD**2) + OWN_INTERCEPT_SD**2 * np.eye(shanks)

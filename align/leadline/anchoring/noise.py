@@ -3,11 +3,15 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import TYPE_CHECKING
 
 import numpy as np
 
 from leadline.anchoring.depth_prior import matern32
 from leadline.base.arrays import FloatArray
+
+if TYPE_CHECKING:
+    from collections.abc import Sequence
 
 
 @dataclass(frozen=True, slots=True)
@@ -20,6 +24,7 @@ class NoiseModel:
     smooth_length_um: float
 
 
+BAND = 16
 MODELS = {
     "lfp": (
         NoiseModel(0.06, 100.0, 0.0, 1.0),
@@ -61,11 +66,36 @@ def correlation(tip_distance_um: FloatArray, model: NoiseModel) -> FloatArray:
 
 
 def whitener(correlation_matrix: FloatArray) -> FloatArray:
-    """Lower-triangular ``U`` with ``U C U' = I``."""
+    """Lower-triangular ``U`` with ``U C U' = I``, but for what lies more than ``BAND`` rows off its diagonal.
+
+    Rows so far apart tell next to nothing of each other once those between are known: the entries left out are below
+    0.001 of the diagonal.
+    """
     from scipy.linalg import solve_triangular
 
     factor = np.linalg.cholesky(correlation_matrix)
-    return np.asarray(solve_triangular(factor, np.eye(len(factor)), lower=True), np.float64)
+    whole = solve_triangular(factor, np.eye(len(factor)), lower=True)
+    return np.asarray(np.triu(whole, 1 - BAND), np.float64)
+
+
+def flat_evidence(
+    data: Sequence[FloatArray], noise: Sequence[FloatArray], covariance: FloatArray, shape: float, rate: float
+) -> FloatArray:
+    """Log evidence ``(F,)`` of features that are an intercept of each shank and noise.
+
+    ``data`` : (F, R) of each shank; ``noise`` : its correlation (R, R); ``covariance`` : (S, S) of the intercepts in
+    units of the noise variance. See `student_evidence` for the constant left out.
+    """
+    white = [whitener(n) for n in noise]
+    ones = [u.sum(axis=1) for u in white]
+    values = [d @ u.T for d, u in zip(data, white, strict=True)]
+    cross = np.stack([v @ one for v, one in zip(values, ones, strict=True)], axis=1)
+    factor = np.linalg.inv(covariance) + np.diag([one @ one for one in ones])
+    rss = sum((v**2).sum(axis=1) for v in values) - np.einsum("fs,sf->f", cross, np.linalg.solve(factor, cross.T))
+    log_det = np.linalg.slogdet(factor)[1] + np.linalg.slogdet(covariance)[1]
+    log_scale = sum(np.log(np.diag(u)).sum() for u in white)
+    rows = sum(d.shape[1] for d in data)
+    return np.asarray(log_scale - 0.5 * log_det - (shape + rows / 2) * np.log(rate + rss / 2), np.float64)
 
 
 def student_evidence(

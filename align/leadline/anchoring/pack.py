@@ -7,9 +7,10 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from leadline.anchoring.features import GROUPS, FeatureSet, prepare
-from leadline.anchoring.labels import CELL_UM, LabelTable, tabulate
-from leadline.anchoring.noise import MODELS, SILENT_MODELS, correlation, student_evidence, whitener
+from leadline.anchoring.features import GROUPS, Column, FeatureSet, prepare_probe
+from leadline.anchoring.labels import CELL_UM, NOISE_VARIANCE, LabelTable, intercepts, label_prior, tabulate
+from leadline.anchoring.noise import BAND, MODELS, SILENT_MODELS, NoiseModel, correlation, flat_evidence, whitener
+from leadline.base.arrays import BoolArray, FloatArray, IntArray
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -17,7 +18,6 @@ if TYPE_CHECKING:
     from leadline.anchoring.depth_prior import DepthPrior
     from leadline.anchoring.evidence import ShankEvidence
     from leadline.anchoring.knowledge import Knowledge
-    from leadline.base.arrays import FloatArray
     from leadline.model.atlas import Structures
 
 SHAPE, RATE = 4.0, 1.2
@@ -30,13 +30,23 @@ REACH_UM = 300.0
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Packed:
-    """``pack`` : the kernel's arrays. ``features``, ``tables`` : of each shank. ``log_silent`` : log evidence of all
-    features as smooth noise that knows no labels, with the same powers."""
+    """``pack`` : the kernel's arrays. ``features``, ``tables`` : of each shank. ``ids`` : (L,) labels that any shank
+    may cross; ``mean``, ``covariance`` : what is known of them beforehand. ``columns`` : the features by group.
+    ``log_silent`` : log evidence of all features as smooth noise that knows no labels, with the same powers."""
 
     pack: Any
     features: tuple[FeatureSet, ...]
     tables: tuple[LabelTable | None, ...]
+    ids: IntArray
+    columns: dict[str, tuple[Column, ...]]
+    mean: dict[str, FloatArray]
+    covariance: FloatArray
     log_silent: float
+
+    @property
+    def size(self) -> float:
+        """Rows times features, as far as these are independent."""
+        return float((self.pack.power * self.pack.counted).sum())
 
     @property
     def informative(self) -> bool:
@@ -47,21 +57,31 @@ class Packed:
 def assemble(
     shanks: Sequence[ShankEvidence], prior: DepthPrior, structures: Structures, knowledge: Knowledge
 ) -> Packed:
-    """Prepare features and label tables of every shank and pad them into arrays."""
-    features = tuple(prepare(s.profile) for s in shanks)
-    features = tuple(f if f.informative else prepare(None) for f in features)
-    sd = np.sqrt((prior.basis**2).sum(axis=1))
-    tables: list[LabelTable | None] = []
-    for i, (shank, feature) in enumerate(zip(shanks, features, strict=True)):
-        if not feature.informative:
-            tables.append(None)
-            continue
-        mean, spread = prior.mean_um[prior.slice(i)], sd[prior.slice(i)]
-        span = prior.law.offset_sd_um / prior.law.stray_offset_sd_um
-        reach = np.array([(mean - REACH_SD * spread * span).min(), (mean + REACH_SD * spread * span).max()])
-        tables.append(tabulate(shank, feature, structures, knowledge, reach + np.array([-REACH_UM, REACH_UM])))
-    pack = _pack(prior, features, tables)
-    return Packed(pack, features, tuple(tables), _log_silent(features, pack.power))
+    """Prepare features and label tables of every shank and pad them into arrays.
+
+    What a label sounds like is unknown but the same in all shanks of the probe.
+    """
+    features = prepare_probe([s.profile for s in shanks])
+    nothing = prepare_probe([None])[0]
+    features = tuple(f if f.informative else nothing for f in features)
+    tables = tuple(
+        tabulate(s, _reach(prior, i)) if f.informative else None
+        for i, (s, f) in enumerate(zip(shanks, features, strict=True))
+    )
+    ids = np.unique(np.concatenate([np.zeros(0, np.int64), *(t.ids for t in tables if t is not None)]))
+    columns = {g: tuple(dict.fromkeys(key for f in features for key in f.columns[g])) for g in GROUPS}
+    mean, covariance = label_prior(ids, columns, len(shanks), structures, knowledge)
+    whole = Packed(None, features, tables, ids, columns, mean, covariance, 0.0)
+    pack = _filled(_empty(whole, prior), whole, prior)
+    return Packed(pack, features, tables, ids, columns, mean, covariance, _log_silent(whole, pack.power))
+
+
+def _reach(prior: DepthPrior, shank: int) -> FloatArray:
+    """Label depths that the rows of a shank may take, (low, high)."""
+    rows = prior.slice(shank)
+    mean, sd = prior.mean_um[rows], np.sqrt((prior.basis[rows] ** 2).sum(axis=1))
+    span = REACH_SD * sd * prior.law.offset_sd_um / prior.law.stray_offset_sd_um
+    return np.array([(mean - span).min() - REACH_UM, (mean + span).max() + REACH_UM])
 
 
 def independence(data: FloatArray) -> float:
@@ -78,36 +98,45 @@ def independence(data: FloatArray) -> float:
     return float(min(1.0, values.sum() ** 2 / (values**2).sum() / len(steps) / USUAL_INDEPENDENCE))
 
 
-def _pack(prior: DepthPrior, features: Sequence[FeatureSet], tables: Sequence[LabelTable | None]) -> Any:
+def owners(whole: Packed, group: str) -> BoolArray:
+    """Which shank has which feature, ``(F, S)``."""
+    return np.array([[key in f.columns[group] for f in whole.features] for key in whole.columns[group]], bool).reshape(
+        len(whole.columns[group]), len(whole.features)
+    )
+
+
+def _empty(whole: Packed, prior: DepthPrior) -> Any:
+    """The kernel's arrays, padded to the largest shank and group."""
     from leadline.anchoring._kernels import Pack
 
-    n, g_count, c_count = len(features), len(GROUPS), len(MODELS["lfp"])
+    features, tables, law = whole.features, [t for t in whole.tables if t is not None], prior.law
+    n, groups, models = len(features), len(GROUPS), len(MODELS["lfp"])
     rows = max(1, *(f.tip_distance_um.size for f in features))
-    wide = max(1, *(len(f.values[g]) for f in features for g in GROUPS))
-    labels = max([2, *(t.ids.size + 1 for t in tables if t is not None)])
-    cells = max([1, *(t.active.shape[1] for t in tables if t is not None)])
-    slots = max([1, *(t.active.shape[2] for t in tables if t is not None)])
-    shape = (n, g_count, c_count)
-    law = prior.law
-    pack = Pack(
+    wide = max(1, *(len(whole.columns[g]) for g in GROUPS))
+    labels = whole.ids.size + n
+    cells, slots = (max([1, *(t.active.shape[k] for t in tables)]) for k in (1, 2))
+    shape = (n, groups, models)
+    return Pack(
         n_rows=np.array([f.tip_distance_um.size for f in features], np.int64),
-        n_features=np.array([[len(f.values[g]) for g in GROUPS] for f in features], np.int64),
-        n_labels=np.array([2 if t is None else t.ids.size + 1 for t in tables], np.int64),
-        n_cells=np.array([1 if t is None else t.active.shape[1] for t in tables], np.int64),
+        n_features=np.array([len(whole.columns[g]) for g in GROUPS], np.int64),
+        n_cells=np.array([1 if t is None else t.active.shape[1] for t in whole.tables], np.int64),
         centre=np.zeros((n, rows)),
         basis=np.zeros((n, rows, prior.dims)),
-        whitener=np.zeros((*shape, rows, rows), np.float32),
+        whitener=np.zeros((*shape, rows, BAND), np.float32),
         white_one=np.zeros((*shape, rows), np.float32),
-        white_data=np.zeros((*shape, wide, rows), np.float32),
-        square=np.zeros((*shape, wide)),
-        log_scale=np.zeros(shape),
-        power=np.zeros((n, g_count, wide)),
-        mean=np.zeros((n, g_count, wide, labels)),
-        precision=np.zeros((n, labels, labels)),
-        log_covariance=np.zeros(n),
-        log_null=np.zeros((*shape, wide)),
-        active=np.full((n, g_count, cells, slots), -1, np.int64),
-        weight=np.zeros((n, g_count, cells, slots)),
+        white_data=np.zeros((*shape, rows, wide), np.float32),
+        square=np.zeros((groups, models, wide)),
+        log_scale=np.zeros((groups, models, wide)),
+        counted=np.zeros((groups, wide)),
+        pattern=np.zeros((groups, wide), np.int64),
+        has=np.zeros((groups, max(1, wide), n), np.bool_),
+        power=np.zeros((groups, wide)),
+        mean=np.zeros((groups, labels, wide)),
+        precision=np.linalg.inv(whole.covariance),
+        log_covariance=float(np.linalg.slogdet(whole.covariance)[1]),
+        log_null=np.zeros((groups, models, wide)),
+        active=np.full((n, groups, cells, slots), -1, np.int64),
+        weight=np.zeros((n, groups, cells, slots), np.float32),
         start=np.zeros(n),
         cell_um=CELL_UM,
         shape=SHAPE,
@@ -125,55 +154,78 @@ def _pack(prior: DepthPrior, features: Sequence[FeatureSet], tables: Sequence[La
             ]
         ),
     )
-    for s, (feature, table) in enumerate(zip(features, tables, strict=True)):
+
+
+def _filled(pack: Any, whole: Packed, prior: DepthPrior) -> Any:
+    """The arrays with the evidence in them; rows run from the tip's first to the last."""
+    for s, (feature, table) in enumerate(zip(whole.features, whole.tables, strict=True)):
         if table is not None:
-            _fill_shank(pack, s, prior, feature, table)
+            r, cells = feature.tip_distance_um.size, table.active.shape[1]
+            at = prior.weights(s, feature.tip_distance_um)
+            pack.centre[s, :r] = at @ prior.mean_um[prior.slice(s)]
+            pack.basis[s, :r] = at @ prior.basis[prior.slice(s)]
+            place = np.append(np.searchsorted(whole.ids, table.ids), -1)
+            pack.active[s, :, :cells] = place[table.active]
+            pack.weight[s, :, :cells] = table.weight
+            pack.start[s] = table.start_um
+    for g, group in enumerate(GROUPS):
+        has = owners(whole, group)
+        if not len(has):
+            continue
+        patterns, which = np.unique(has, axis=0, return_inverse=True)
+        k = len(has)
+        pack.has[g, : len(patterns)] = patterns
+        pack.pattern[g, :k] = which.reshape(-1)
+        pack.counted[g, :k] = has @ pack.n_rows
+        pack.mean[g, :, :k] = whole.mean[group]
+        alone = [independence(f.values[group]) if f.informative else 0.0 for f in whole.features]
+        pack.power[g, :k] = has @ alone / has.sum(axis=1)
+        for c, model in enumerate(MODELS[group]):
+            for shank in np.flatnonzero(has.any(axis=0)).tolist():
+                _whiten(pack, whole, shank, g, c, has)
+            pack.log_null[g, c, :k] = _flat(whole, group, has, model)
     return pack
 
 
-def _fill_shank(pack: Any, s: int, prior: DepthPrior, feature: FeatureSet, table: LabelTable) -> None:
-    """Write one shank into the padded arrays; rows run from the surface side of the track to the tip's last."""
-    r, labels = feature.tip_distance_um.size, table.ids.size + 1
-    at = prior.weights(s, feature.tip_distance_um)
-    pack.centre[s, :r] = at @ prior.mean_um[prior.slice(s)]
-    pack.basis[s, :r] = at @ prior.basis[prior.slice(s)]
-    pack.precision[s, :labels, :labels] = np.linalg.inv(table.covariance)
-    pack.log_covariance[s] = np.linalg.slogdet(table.covariance)[1]
-    cells = table.active.shape[1]
-    pack.active[s, :, :cells] = table.active
-    pack.weight[s, :, :cells] = table.weight
-    pack.start[s] = table.start_um
-    for g, group in enumerate(GROUPS):
-        data = feature.values[group]
-        k = len(data)
-        pack.mean[s, g, :k, :labels] = table.mean[group].T
-        pack.power[s, g, :k] = independence(data)
-        for c, model in enumerate(MODELS[group]):
-            noise = correlation(feature.tip_distance_um, model)
-            white = whitener(noise)
-            pack.whitener[s, g, c, :r, :r] = white.T
-            pack.white_one[s, g, c, :r] = white.sum(axis=1)
-            pack.white_data[s, g, c, :k, :r] = data @ white.T
-            pack.square[s, g, c, :k] = ((data @ white.T) ** 2).sum(axis=1)
-            pack.log_scale[s, g, c] = np.log(np.diag(white)).sum()
-            pack.log_null[s, g, c, :k] = _flat_evidence(data, noise)
+def _whiten(pack: Any, whole: Packed, s: int, g: int, c: int, has: BoolArray) -> None:
+    """One shank's features whitened by one noise model."""
+    feature, group = whole.features[s], GROUPS[g]
+    white = whitener(correlation(feature.tip_distance_um, MODELS[group][c]))
+    r = len(white)
+    for k in range(min(BAND, r)):
+        pack.whitener[s, g, c, : r - k, k] = np.diag(white, -k)
+    pack.white_one[s, g, c, :r] = white.sum(axis=1)
+    own = np.flatnonzero(has[:, s])
+    data = _values(whole, group, s, own) @ white.T
+    pack.white_data[s, g, c, :r, own] = data
+    pack.square[g, c, own] += (data**2).sum(axis=1)
+    pack.log_scale[g, c, own] += np.log(np.diag(white)).sum()
 
 
-def _flat_evidence(data: FloatArray, noise: FloatArray) -> FloatArray:
-    """Log evidence of features that are an intercept and noise."""
-    one = np.ones((data.shape[1], 1))
-    return student_evidence(data, one, noise, np.array([[1 / 0.4]]), np.zeros((1, len(data))), SHAPE, RATE)
+def _values(whole: Packed, group: str, s: int, rows: IntArray) -> FloatArray:
+    """The features ``rows`` of the probe as one shank has them, ``(F, R)``."""
+    own = whole.features[s].columns[group]
+    return whole.features[s].values[group][[own.index(whole.columns[group][f]) for f in rows]]
 
 
-def _log_silent(features: Sequence[FeatureSet], power: FloatArray) -> float:
+def _flat(whole: Packed, group: str, has: BoolArray, model: NoiseModel) -> FloatArray:
+    """Log evidence ``(F,)`` of every feature of a group as an intercept and noise."""
+    out = np.zeros(len(has))
+    for pattern in np.unique(has, axis=0):
+        rows, shanks = np.flatnonzero((has == pattern).all(axis=1)), np.flatnonzero(pattern)
+        noise = [correlation(whole.features[s].tip_distance_um, model) for s in shanks]
+        data = [_values(whole, group, int(s), rows) for s in shanks]
+        out[rows] = flat_evidence(data, noise, intercepts(len(shanks)) / NOISE_VARIANCE, SHAPE, RATE)
+    return out
+
+
+def _log_silent(whole: Packed, power: FloatArray) -> float:
     """Log evidence that no feature knows of labels: smooth noise of unknown length, averaged over lengths."""
     total = 0.0
-    for s, feature in enumerate(features):
-        for g, group in enumerate(GROUPS):
-            data = feature.values[group]
-            if not len(data):
-                continue
-            each = [_flat_evidence(data, correlation(feature.tip_distance_um, m)) for m in SILENT_MODELS]
-            one = np.logaddexp.reduce(np.array(each), axis=0) - np.log(len(SILENT_MODELS))
-            total += float(power[s, g, : len(data)] @ one)
+    for g, group in enumerate(GROUPS):
+        has = owners(whole, group)
+        if len(has):
+            each = np.array([_flat(whole, group, has, m) for m in SILENT_MODELS])
+            one = np.logaddexp.reduce(each, axis=0) - np.log(len(SILENT_MODELS))
+            total += float(power[g, : len(has)] @ one)
     return total

@@ -16,6 +16,8 @@ from leadline.base.arrays import FloatArray, IntArray
 from leadline.base.progress import SILENT, Progress
 
 if TYPE_CHECKING:
+    from collections.abc import Callable
+
     from leadline.anchoring.depth_prior import DepthPrior
     from leadline.anchoring.pack import Packed
 
@@ -49,13 +51,15 @@ class Ensemble:
 @dataclass(frozen=True, slots=True, eq=False)
 class Drawn:
     """The outcome: draws ``z`` (N, J), log evidence of the tempered model, and how the run
-    went: tempering ``levels``, ``evaluations`` of the likelihood, ``effective`` number of independent draws."""
+    went: tempering ``levels``, ``evaluations`` of the likelihood, ``effective`` number of independent draws, the
+    ``share`` of the power at which they were drawn."""
 
     z: FloatArray
     log_evidence: float
     levels: int
     evaluations: int
     effective: float
+    share: float
 
 
 class Crew:
@@ -85,42 +89,74 @@ class Crew:
 
 
 def sample(
-    packed: Packed, prior: DepthPrior, rng: np.random.Generator, power: float, progress: Progress = SILENT
+    packed: Packed,
+    prior: DepthPrior,
+    rng: np.random.Generator,
+    power: float,
+    progress: Progress = SILENT,
+    settle: Callable[[float], float] = lambda _: 1.0,
 ) -> Drawn:
     """Draw depth maps from prior x likelihood^``power``: the particles as they stood after each of the last moves.
 
-    Adaptive tempering (Del Moral, Doucet & Jasra 2006, J. R. Stat. Soc. B 68, 411) from many prior draws; at each
-    level particles are resampled and moved by elliptical slices under the Gaussian fitted to them.
+    ``settle`` : from the log evidence at full power to the share of it at which the draws are wanted. Adaptive
+    tempering (Del Moral, Doucet & Jasra 2006, J. R. Stat. Soc. B 68, 411) from many prior draws; at each level
+    particles are resampled and moved by elliptical slices under the Gaussian fitted to them.
     """
     with Crew() as crew:
-        return _tempered(crew, packed, prior, rng, power, progress)
+        return _tempered(crew, packed, prior, rng, power, progress, settle)
 
 
 def _tempered(
-    crew: Crew, packed: Packed, prior: DepthPrior, rng: np.random.Generator, power: float, progress: Progress
+    crew: Crew,
+    packed: Packed,
+    prior: DepthPrior,
+    rng: np.random.Generator,
+    power: float,
+    progress: Progress,
+    settle: Callable[[float], float],
 ) -> Drawn:
     particles = _scouts(prior, rng, SCOUTS)
     _evaluate(crew, packed, particles)
-    beta, log_z, levels, spent = 0.0, 0.0, 0, len(particles.z)
+    beta, log_z, spent = 0.0, 0.0, len(particles.z)
+    levels = [(beta, particles)]
     progress.begin("depth posterior", 1.0)
-    while beta < 1.0 and levels < MAX_LEVELS:
+    while beta < 1.0 and len(levels) <= MAX_LEVELS:
         step = _next_step(particles.log_likelihood * power, 1.0 - beta)
-        gain = step * power * particles.log_likelihood
-        top = gain.max()
-        weight = np.exp(gain - top)
-        log_z += float(top + np.log(weight.mean()))
-        particles = particles.take(_resample(weight, particles.z @ prior.offset_basis, PARTICLES, rng))
-        beta += step
-        levels += 1
-        for _ in range(MOVES):
-            spent += move_all(crew, packed, particles, power * beta, rng)
+        particles, gained, more = _raised(crew, packed, prior, particles, power, beta, step, rng)
+        beta, log_z, spent = beta + step, log_z + gained, spent + more
+        levels.append((beta, particles))
         progress.step(step)
+    share = settle(log_z)
+    if share < beta:  # back to the last level below, and up to the share from there
+        start, particles = [level for level in levels if level[0] <= share][-1]
+        particles, _, more = _raised(crew, packed, prior, particles, power, start, share - start, rng)
+        spent += more
+    particles = particles.take(np.arange(len(particles.z)))
     stills = []
     for _ in range(LAST_MOVES):
-        spent += move_all(crew, packed, particles, power, rng)
+        spent += move_all(crew, packed, particles, power * share, rng)
         stills.append(particles.z.copy())
     last = np.array(stills[-SNAPSHOTS:])
-    return Drawn(np.concatenate(last), log_z, levels, spent, _effective(last))
+    return Drawn(np.concatenate(last), log_z, len(levels) - 1, spent, _effective(last), share)
+
+
+def _raised(
+    crew: Crew,
+    packed: Packed,
+    prior: DepthPrior,
+    particles: Ensemble,
+    power: float,
+    beta: float,
+    step: float,
+    rng: np.random.Generator,
+) -> tuple[Ensemble, float, int]:
+    """New particles at ``beta + step``, the log evidence gained, and evaluations spent."""
+    gain = step * power * particles.log_likelihood
+    top = gain.max()
+    weight = np.exp(gain - top)
+    raised = particles.take(_resample(weight, particles.z @ prior.offset_basis, PARTICLES, rng))
+    spent = sum(move_all(crew, packed, raised, power * (beta + step), rng) for _ in range(MOVES))
+    return raised, float(top + np.log(weight.mean())), spent
 
 
 def _effective(z: FloatArray) -> float:

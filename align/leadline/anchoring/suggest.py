@@ -214,17 +214,11 @@ def path_evidence(packed: Packed, depth_um: FloatArray, noise_model: int = 0) ->
     """Log evidence of each feature of a packed single shank for one label depth per row, by group."""
     from leadline.anchoring._kernels import group_evidence
 
-    pack = packed.pack
-    rows = pack.centre.shape[1]
-    white = np.empty((pack.mean.shape[3], rows), np.float32)
     out = {}
     for g, group in enumerate(GROUPS):
-        values = np.empty(max(1, pack.mean.shape[2]))
-        count = int(pack.n_features[0, g])
-        if count:
-            padded = np.concatenate([depth_um, np.zeros(rows - depth_um.size)])
-            group_evidence(pack, 0, g, noise_model, padded, white, values)
-        out[group] = values[:count].copy()
+        out[group] = np.empty(len(packed.columns[group]))
+        if out[group].size:
+            group_evidence(packed.pack, g, noise_model, np.ascontiguousarray(depth_um)[None], out[group])
     return out
 
 

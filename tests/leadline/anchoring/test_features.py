@@ -5,7 +5,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from leadline.anchoring.features import prepare
+from leadline.anchoring.features import prepare, prepare_probe
 from leadline.model.profile import Profile
 
 TIP = 175.0 + 20.0 * np.arange(60)
@@ -67,3 +67,14 @@ def test_gain_and_offset_of_a_feature_do_not_matter(gain, offset, seed):
     values = np.random.default_rng(seed).standard_normal(TIP.size)
     a, b = (prepare(profile(spike_rate_hz=v)).values["units"] for v in (values, values * gain + offset))
     assert a == pytest.approx(b, abs=1e-5)
+
+
+def test_shanks_of_one_probe_are_scaled_as_one_and_keep_what_most_of_them_have():
+    loud, soft = profile(gamma_power_db=np.sin(TIP / 150.0) + 3.0), profile(gamma_power_db=np.sin(TIP / 150.0))
+    a, b, nothing = prepare_probe([loud, soft, None])
+    assert not nothing.informative
+    gap = a.values["lfp"][0] - b.values["lfp"][0]
+    assert gap.min() > 1.0
+    assert np.ptp(gap) < 0.5 * np.ptp(a.values["lfp"][0])
+    lone = profile(gamma_power_db=np.sin(TIP / 150.0), delta_power_db=np.cos(TIP / 90.0))
+    assert all(f.names["lfp"] == ("gamma_power_db",) for f in prepare_probe([lone, soft, loud]))

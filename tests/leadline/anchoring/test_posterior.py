@@ -131,3 +131,22 @@ def test_the_work_can_be_cancelled():
 
     with pytest.raises(Cancelled):
         found(invented.shank(), progress=Stop())
+
+
+def test_a_recording_that_follows_the_labels_less_well_is_trusted_less(spoken):
+    """Gradients inside structures and a landmark that is not there: the answer must widen by itself."""
+    shank = invented.shank()
+    rng = np.random.default_rng(7)
+    true = invented.label(TRUE)
+    rough = {}
+    for name, values in shank.profile.features.items():
+        bent = values.copy()
+        for label in np.unique(true):
+            here = np.flatnonzero(true == label)
+            bent[here] += rng.normal(0, 0.9) * np.linspace(-1, 1, here.size)
+        bent[true == 5] = bent[true == 4].mean()
+        rough[name] = bent + 0.6 * np.convolve(rng.standard_normal(TRUE.size + 8), np.ones(9) / 3, "valid")
+    bent = found(replace(shank, profile=replace(shank.profile, features=rough)))[0]
+    assert spoken.diagnostics["trust"] > 0.9
+    assert bent.diagnostics["trust"] < 0.7
+    assert bent.sd_um.mean() > 1.2 * spoken.sd_um.mean()
