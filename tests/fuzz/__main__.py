@@ -13,6 +13,7 @@ import sys
 import time
 import traceback
 from pathlib import Path
+from tempfile import gettempdir
 
 import numpy as np
 from tests.fuzz.judge import Finding, Judge, bound_memory
@@ -30,7 +31,7 @@ class Tally:
         self.seen: set[str] = set()
         self.cases = 0
         kept.mkdir(parents=True, exist_ok=True)
-        self.current = kept / f"{reader}.current"
+        self.current = current_case(reader)
 
     def before(self, data: bytes) -> None:
         """Note the case at hand, so that it is known should the process die of it."""
@@ -47,6 +48,12 @@ class Tally:
             return
         self.seen.add(found.key)
         keep(self.kept, self.reader, data, found)
+
+
+def current_case(reader: str) -> Path:
+    """Where the case at hand is noted: in memory where there is such a place, for it is written for every case."""
+    memory = Path("/dev/shm")
+    return (memory if memory.is_dir() else Path(gettempdir())) / f"leadline-fuzz-{os.getuid()}-{reader}.current"
 
 
 def keep(kept: Path, reader: str, data: bytes, found: Finding) -> None:
@@ -132,16 +139,21 @@ def watched(reader: str, said: argparse.Namespace) -> int:
                 tally.note()
                 sys.stdout.flush()
                 os._exit(code)
-        status = wait(pid, said.kept / f"{reader}.current")
+        status = wait(pid, current_case(reader))
         read = int(count.read_text()) if count.is_file() else 0
         done += read
         if status:
-            case = said.kept / f"{reader}.current"
-            keep(said.kept, reader, case.read_bytes(), Finding(f"died of {status}", "ended by the system"))
+            keep(
+                said.kept,
+                reader,
+                current_case(reader).read_bytes(),
+                Finding(f"died of {status}", "ended by the system"),
+            )
             seed += 1000
             done += 1
         elif not said.guided or not read:
             break
+    current_case(reader).unlink(missing_ok=True)
     return done
 
 
