@@ -11,6 +11,7 @@ from leadline.demo import recipe as kinds
 from leadline.demo.anatomy import make_atlas
 from leadline.demo.recipe import Recipe
 from leadline.demo.sample import draw
+from leadline.demo.tracks import Shank, TruePenetration
 from leadline.demo.warp import random_spline
 from leadline.demo.write import invent
 from leadline.model.atlas import Atlas
@@ -28,12 +29,12 @@ SETTINGS = RegisterSettings(resolution_um=200.0, deformable=False)
 
 @dataclass(frozen=True)
 class Made:
-    """A stack laid out as PIR; where the tracks enter, in its um and in atlas um."""
+    """A stack laid out as PIR, the true shanks in its um, and the penetrations."""
 
     background: np.ndarray
     dye: np.ndarray
-    entries_pir_um: np.ndarray
-    entries_um: np.ndarray
+    shanks_pir_um: list[np.ndarray]
+    penetrations: tuple[TruePenetration, ...]
     voxel_um: np.ndarray
 
     def stored(self, code: str) -> tuple[Volume, Volume]:
@@ -43,9 +44,10 @@ class Made:
         background, dye = (Volume(i, voxel_um, code) for i in images)
         return background, dye
 
-    def entries_stack_um(self, code: str) -> np.ndarray:
-        """Where the tracks enter, in um along the axes of a stack stored as ``code``."""
-        return pir_to_stack(self.stored(code)[0])(self.entries_pir_um)
+    def shanks_stack_um(self, code: str) -> list[np.ndarray]:
+        """The true shanks, in um along the axes of a stack stored as ``code``."""
+        to_stack = pir_to_stack(self.stored(code)[0])
+        return [to_stack(points) for points in self.shanks_pir_um]
 
 
 @cache
@@ -60,8 +62,13 @@ def stack(seed: int) -> Made:
     recipe = kinds.hard(recipe) if seed % 2 else recipe
     brain = invent(recipe)
     background, dye = draw(recipe, brain.chart, brain.frame, brain.penetrations)
-    entries = np.array([pen.chord_um[0] for pen in brain.penetrations])
-    return Made(background, dye, brain.chart.inverse(entries), entries, np.asarray(PIR_VOXEL_UM))
+    shanks = [brain.chart.inverse(s.at(dyed(s))) for pen in brain.penetrations for s in pen.shanks]
+    return Made(background, dye, shanks, brain.penetrations, np.asarray(PIR_VOXEL_UM))
+
+
+def dyed(shank: Shank) -> np.ndarray:
+    """Depths from the entry to the end of the dye."""
+    return np.append(np.arange(0.0, shank.dye_end_um, 100.0), shank.dye_end_um)
 
 
 def registered(made: Made, code: str, *, called: str = "", voxel_um=None, goal: Atlas | None = None) -> Registration:

@@ -22,6 +22,7 @@ if TYPE_CHECKING:
     from leadline.model.track import Track
     from leadline.model.transform import Registration
     from leadline.pipeline.bench import Bench
+    from leadline.tracing.assign import TracedPath, Wanted
 
 # common practice, no source: no probe is that short or long, no insertion that shallow, in um
 PROBE_UM, INSERTED_UM = (60.0, 30000.0), (100.0, 30000.0)
@@ -103,10 +104,12 @@ def of_anchors(anchors: Iterable[Anchor], penetration: Penetration, probe: Probe
     )
 
 
-def of_tracks(bench: Bench, tracks: Sequence[Track], entries_um: Sequence[FloatArray]) -> tuple[str, ...]:
+def of_tracks(
+    bench: Bench, tracks: Sequence[Track], paths: Sequence[TracedPath], wanted: Sequence[Wanted]
+) -> tuple[str, ...]:
     """Tracks that run outside the brain; entries that fit the plans better in another reading.
 
-    ``entries_um`` : where all tracks enter, also those that belong to no penetration; atlas um.
+    ``paths`` : all that was found or drawn, also what belongs to no penetration. ``wanted`` : every penetration.
     """
     from leadline.tracing.plans import doubts
 
@@ -120,8 +123,7 @@ def of_tracks(bench: Bench, tracks: Sequence[Track], entries_um: Sequence[FloatA
                 f"penetration {track.penetration}, shank {track.shank}: {share:.0%} of its track lies outside the "
                 "brain; look at the registration, and at whether points are um along the stored axes, in their order"
             )
-    plans = {p.name: p.entry_near_um for p in bench.brain.penetrations if p.entry_near_um is not None}
-    return (*out, *doubts(plans, np.array(entries_um).reshape(-1, 3), _middle_um(atlas)))
+    return (*out, *doubts(wanted, paths, _middle_um(atlas)))
 
 
 def of_places(bench: Bench, evidence: Sequence[ShankEvidence]) -> tuple[str, ...]:

@@ -15,7 +15,6 @@ from leadline.pipeline import contradictions, products
 if TYPE_CHECKING:
     from collections.abc import Callable, Mapping, Sequence
 
-    from leadline.base.arrays import FloatArray
     from leadline.model.anchor import Anchor
     from leadline.model.atlas import Atlas
     from leadline.model.brain import Brain, Penetration
@@ -25,7 +24,7 @@ if TYPE_CHECKING:
     from leadline.model.transform import PointTransform, Registration
     from leadline.model.volume import Volume
     from leadline.pipeline.bench import Bench
-    from leadline.tracing.assign import Wanted
+    from leadline.tracing.assign import TracedPath, Wanted
 
 
 def register(bench: Bench, files: products.RegistrationFiles) -> tuple[str, ...]:
@@ -76,6 +75,8 @@ def _refined_by_pairs(brain: Brain, registration: Registration) -> Registration:
 
 def trace(bench: Bench) -> tuple[str, ...]:
     """Dye tracks, each given to a penetration; hand-traced points and edited tracks where there are any."""
+    from leadline.tracing.assign import TracedPath
+
     brain = bench.brain
     transform = products.RegistrationFiles(brain).read().stack_to_atlas
     grain = brain.settings.trace.resolution_um
@@ -83,13 +84,14 @@ def trace(bench: Bench) -> tuple[str, ...]:
     background = bench.reduced(bench.background, grain)
     hand = _hand_tracks(brain, background, dye, transform)
     wanted = [w for p in brain.penetrations if p.points is None and (w := _wanted(p, hand)) is not None]
-    found, missing, notes, entries = _dye_tracks(bench, wanted, background, dye, transform)
+    found, missing, notes, paths = _dye_tracks(bench, wanted, background, dye, transform)
     order = {p.name: i for i, p in enumerate(brain.penetrations)}
     tracks = sorted([*hand.values(), *found], key=lambda t: (order[t.penetration], t.shank))
     products.write_tracks(brain, tracks, missing)
-    entries += [t.atlas_um[0] for t in hand.values()]
-    doubts = (*contradictions.of_insertions(bench), *contradictions.of_tracks(bench, tracks, entries))
-    return (*missing, *notes, *doubts)
+    paths += [TracedPath(t.atlas_um) for t in hand.values()]
+    all_wanted = [w for p in brain.penetrations if (w := _wanted(p, {})) is not None]
+    doubts = contradictions.of_tracks(bench, tracks, paths, all_wanted)
+    return (*missing, *notes, *contradictions.of_insertions(bench), *doubts)
 
 
 def _hand_tracks(
@@ -136,8 +138,8 @@ def _wanted(penetration: Penetration, traced: Mapping[tuple[str, int], Track]) -
 
 def _dye_tracks(
     bench: Bench, wanted: Sequence[Wanted], background: Volume, dye: Volume | None, transform: PointTransform
-) -> tuple[list[Track], tuple[str, ...], tuple[str, ...], list[FloatArray]]:
-    """Tracks of penetrations, what is missing, notes, and where all traces enter the brain."""
+) -> tuple[list[Track], tuple[str, ...], tuple[str, ...], list[TracedPath]]:
+    """Tracks of penetrations, what is missing, notes, and all that was found."""
     from leadline.tracing.assign import TracedPath, assign
     from leadline.tracing.find import trace as find
 
@@ -150,7 +152,7 @@ def _dye_tracks(
     paths = [TracedPath(transform(t.points_um), t.contrast) for t in traces]
     result = assign(paths, wanted)
     tracks = [_track(name, shank, traces[i], transform, "dye") for (name, shank), i in result.matches.items()]
-    return tracks, result.missing, result.notes, [p.atlas_um[0] for p in paths]
+    return tracks, result.missing, result.notes, paths
 
 
 def _track(name: str, shank: int, traced: Trace, transform: PointTransform, source: str) -> Track:

@@ -122,6 +122,12 @@ def assign(tracks: Sequence[TracedPath], wanted: Sequence[Wanted]) -> Assignment
     )
 
 
+def least_cost(tracks: Sequence[TracedPath], wanted: Sequence[Wanted]) -> float:
+    """What the best assignment costs, in log likelihood: little where entries, shanks and lengths fit."""
+    choices = [choice for w in range(len(wanted)) for choice in _choices(w, wanted[w], tracks)]
+    return float(sum(choice.cost for choice in _cheapest(choices, len(tracks), len(wanted))))
+
+
 def _choices(w: int, wanted: Wanted, tracks: Sequence[TracedPath]) -> list[_Choice]:
     many = len(wanted.shanks)
     out = [_Choice(w, (None,) * many, MISSING_COST + MISSING_SHANK_COST * (many - 1))]
@@ -270,7 +276,8 @@ def _found(wanted: Wanted, tracks: Sequence[TracedPath], owner: Mapping[int, tup
         if i in owner:
             text += f", taken by '{owner[i][0]}' shank {owner[i][1]}"
         lines.append(text)
-    return f"Found {len(tracks)} track{'s' if len(tracks) > 1 else ''}, entries in atlas um (ap, dv, ml): " + "; ".join(lines)
+    many = "s" if len(tracks) > 1 else ""
+    return f"Found {len(tracks)} track{many}, entries in atlas um (ap, dv, ml): " + "; ".join(lines)
 
 
 def _place(point: FloatArray) -> str:

@@ -6,44 +6,57 @@ thing in hand that can.
 
 from __future__ import annotations
 
+from dataclasses import replace
 from itertools import permutations
 from typing import TYPE_CHECKING
 
 import numpy as np
 
-from leadline.tracing.assign import PLAN_SD_UM
+from leadline.tracing.assign import least_cost
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping, Sequence
+    from collections.abc import Sequence
 
     from leadline.base.arrays import FloatArray
+    from leadline.tracing.assign import TracedPath, Wanted
 
 AXES = ("ap", "dv", "ml")
-FAR_SD = 3.0  # of plans: nobody misses by more than that and means it
-BETTER = 8.0  # log likelihood by which another reading of the plans must be better
+BETTER = 7.0  # log likelihood by which another reading of the plans must be better
+ASTRAY_UM = 1000.0
 
 
-def doubts(plans_um: Mapping[str, Sequence[float]], entries_um: FloatArray, middle_um: float) -> tuple[str, ...]:
+def doubts(wanted: Sequence[Wanted], tracks: Sequence[TracedPath], middle_um: float) -> tuple[str, ...]:
     """At most one sentence: the reading of the plans that fits the tracks far better than the plain one.
 
     Parameters
     ----------
-    plans_um : planned entry (ap, dv, ml) of each penetration that states one, atlas um.
-    entries_um : (T, 3) where the tracks enter the brain, all that were found or drawn.
+    wanted : penetrations; those that state no plan do not count.
+    tracks : all that were found or drawn, whosever they are.
     middle_um : ml of the atlas's midline.
     """
-    if not plans_um or not len(entries_um):
+    # which way shanks grow was told for the plain reading, and says nothing of where the probe went
+    planned = [replace(w, shank_toward=None) for w in wanted if w.entry_near_um is not None]
+    if not planned or not tracks:
         return ()
-    plans = np.array(list(plans_um.values()), float)
-    plain, plain_um = _fit(plans, entries_um)
-    readings = _readings(plans, middle_um)
-    fits = {words: _fit(moved, entries_um) for words, moved in readings.items()}
-    words = max(fits, key=lambda w: fits[w][0])
-    best, best_um = fits[words]
-    if best - plain < BETTER or np.median(best_um) > FAR_SD * PLAN_SD_UM:
+    plans = np.array([w.entry_near_um for w in planned], float)
+    plain = least_cost(tracks, planned)
+    if plain < BETTER:
         return ()
-    misses = "; ".join(f"'{n}' {a:.0f} um, so {b:.0f}" for n, a, b in zip(plans_um, plain_um, best_um, strict=True))
-    return (f"the planned entries fit the tracks far better {words} (from plan to track: {misses}). {_mend(words)}",)
+    readings, cost = _readings(plans, middle_um), {}
+    for words, moved in readings.items():
+        cost[words] = least_cost(tracks, _moved(planned, moved))
+        if cost[words] < BETTER:  # nothing can fit far better than that
+            break
+    words = min(cost, key=lambda w: cost[w])
+    entries = np.array([t.atlas_um[0] for t in tracks])
+    before, after = _nearest(plans, entries), _nearest(readings[words], entries)
+    if plain - cost[words] < BETTER or np.median(after) > ASTRAY_UM:
+        return ()
+    misses = "; ".join(f"'{w.name}' {a:.0f} um, so {b:.0f}" for w, a, b in zip(planned, before, after, strict=True))
+    return (
+        f"the planned entries fit the tracks far better {words} (log likelihood higher by {plain - cost[words]:.0f}; "
+        f"from plan to nearest track: {misses}). {_mend(words)}",
+    )
 
 
 def _readings(plans: FloatArray, middle_um: float) -> dict[str, FloatArray]:
@@ -56,6 +69,15 @@ def _readings(plans: FloatArray, middle_um: float) -> dict[str, FloatArray]:
     return readings
 
 
+def _moved(planned: Sequence[Wanted], plans: FloatArray) -> list[Wanted]:
+    places = ((float(ap), float(dv), float(ml)) for ap, dv, ml in plans)
+    return [replace(w, entry_near_um=place) for w, place in zip(planned, places, strict=True)]
+
+
+def _nearest(plans: FloatArray, entries: FloatArray) -> FloatArray:
+    return np.asarray(np.linalg.norm(plans[:, None] - entries, axis=2).min(axis=1), np.float64)
+
+
 def _mend(words: str) -> str:
     if words.startswith("mirrored"):
         return (
@@ -63,16 +85,3 @@ def _mend(words: str) -> str:
             "in the wrong half of the brain, or ml of entry_near_um is given for the other side"
         )
     return "entry_near_um is ap, dv, ml in atlas um"
-
-
-def _fit(plans: FloatArray, entries_um: FloatArray) -> tuple[float, FloatArray]:
-    """Log likelihood of the best pairing of plans and tracks, no miss dearer than three sd, and the misses in um."""
-    from scipy.optimize import linear_sum_assignment
-
-    far_um = np.linalg.norm(plans[:, None] - entries_um, axis=2)
-    cost = 0.5 * np.minimum(far_um / PLAN_SD_UM, 2 * FAR_SD) ** 2
-    rows, columns = linear_sum_assignment(cost)
-    alone = np.setdiff1d(np.arange(len(plans)), rows)
-    miss = np.empty(len(plans))
-    miss[rows], miss[alone] = far_um[rows, columns], far_um[alone].min(axis=1) if alone.size else 0.0
-    return -float(cost[rows, columns].sum()), miss

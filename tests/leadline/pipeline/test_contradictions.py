@@ -14,6 +14,7 @@ from leadline.model.track import Track
 from leadline.pipeline import contradictions
 from leadline.pipeline.bench import Bench
 from leadline.pipeline.check import check
+from leadline.tracing.assign import TracedPath, Wanted
 
 PLANNED = 'points = "a_points.csv"\nentry_near_um = {}'
 
@@ -66,7 +67,7 @@ def test_a_probe_file_in_the_wrong_unit_is_said(folder):
     file = folder / "probe_a.json"
     probe = json.loads(file.read_text())
     sites = np.array(probe["probes"][0]["contact_positions"])
-    for factor in (1e-3, 50.0):
+    for factor in (1e-3, 25.0):
         probe["probes"][0]["contact_positions"] = (factor * sites).tolist()
         file.write_text(json.dumps(probe))
         assert "look at si_units" in noted(folder, planned(entry_um()), ('spikes = "a_spikes.csv"', ""))
@@ -100,9 +101,10 @@ def test_tracks_are_held_against_the_plan_and_the_brain(folder):
     noted(folder, planned(entry_um()))
     bench = Bench(read_brain(folder))
     ends = np.array([entry_um(), tip_um()])
-    assert contradictions.of_tracks(bench, [track(ends)], [ends[0]]) == ()
+    wanted = [Wanted("A", entry_near_um=tuple(entry_um()))]
+    assert contradictions.of_tracks(bench, [track(ends)], [TracedPath(ends)], wanted) == ()
     mirrored = ends * [1, 1, -1] + [0, 0, 2 * MIDLINE_UM]
-    (sentence,) = contradictions.of_tracks(bench, [track(mirrored)], [mirrored[0]])
+    (sentence,) = contradictions.of_tracks(bench, [track(mirrored)], [TracedPath(mirrored)], wanted)
     assert "mirrored left to right" in sentence
     away = ends - [0, 2000, 0]
-    assert "of its track lies outside the brain" in contradictions.of_tracks(bench, [track(away)], [])[0]
+    assert "of its track lies outside the brain" in contradictions.of_tracks(bench, [track(away)], [], wanted)[0]
