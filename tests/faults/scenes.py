@@ -9,7 +9,6 @@ from __future__ import annotations
 import importlib
 import json
 import os
-import re
 import resource
 import shutil
 import sys
@@ -35,9 +34,8 @@ if TYPE_CHECKING:
 
 PART = ".part-"
 GROWS = ("steps.json", "history.jsonl", "lock")
-MAY_DIFFER = ("history.jsonl", "lock", "steps.json")
-"""The way to the edits, of which a cut may make one step of two; a dead worker's lock, which stops nobody; marks of
-files that hold the same with other dates."""
+MAY_DIFFER = ("history.jsonl", "lock")
+"""The way to the edits, of which a cut may make one step of two; a dead worker's lock, which stops nobody."""
 Tree = dict[str, bytes]
 
 
@@ -159,15 +157,12 @@ def grown(name: str, data: bytes) -> bool:
 
 
 def tree(folder: Path) -> Tree:
-    """Every file below a folder; of HDF5 files, which keep the time of writing, what they hold."""
-    return {p.relative_to(folder).as_posix(): _content(p) for p in sorted(folder.rglob("*")) if p.is_file()}
-
-
-def _content(path: Path) -> bytes:
-    if {".nwb", ".h5"} & set(path.suffixes):
-        return _held(path)
-    data = path.read_bytes()
-    return re.sub(rb'\n *"[^"\n]*\.h5": .*', b"", data) if path.name == "provenance.json" else data
+    """Every file below a folder; of NWB files, whose objects never have the same names twice, what they hold."""
+    return {
+        p.relative_to(folder).as_posix(): _held(p) if ".nwb" in p.suffixes else p.read_bytes()
+        for p in sorted(folder.rglob("*"))
+        if p.is_file()
+    }
 
 
 def _held(path: Path) -> bytes:

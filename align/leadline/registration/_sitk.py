@@ -12,6 +12,7 @@ import numpy as np
 
 from leadline.base.atomic import whole_file
 from leadline.model.transform import Affine, Field, PointTransform
+from leadline.registration._undated import undated
 
 if TYPE_CHECKING:
     from pathlib import Path
@@ -29,6 +30,7 @@ def write_point_transform(path: Path, transform: PointTransform) -> None:
     composite.AddTransform(_affine(transform.first))
     with whole_file(path) as part:
         sitk.WriteTransform(composite, str(part))
+        part.write_bytes(undated(part.read_bytes()))
 
 
 def _affine(affine: Affine) -> Any:
