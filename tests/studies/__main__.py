@@ -4,7 +4,7 @@ import subprocess
 import sys
 from pathlib import Path
 
-STUDIES = ("registration", "tracing", "inference", "silence")
+STUDIES = ("registration", "tracing", "inference", "calibration", "silence")
 
 
 def main() -> int:
