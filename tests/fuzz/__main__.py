@@ -9,14 +9,14 @@ from __future__ import annotations
 import argparse
 import hashlib
 import os
+import shutil
 import sys
 import time
 import traceback
 from pathlib import Path
-from tempfile import gettempdir
 
 import numpy as np
-from tests.fuzz.judge import Finding, Judge, bound_memory
+from tests.fuzz.judge import Finding, Judge, bound_memory, in_memory
 from tests.fuzz.mutate import mutate
 from tests.fuzz.readers import READERS
 
@@ -51,9 +51,8 @@ class Tally:
 
 
 def current_case(reader: str) -> Path:
-    """Where the case at hand is noted: in memory where there is such a place, for it is written for every case."""
-    memory = Path("/dev/shm")
-    return (memory if memory.is_dir() else Path(gettempdir())) / f"leadline-fuzz-{os.getuid()}-{reader}.current"
+    """Where the case at hand is noted."""
+    return in_memory() / f"leadline-fuzz-{os.getuid()}-{reader}.current"
 
 
 def keep(kept: Path, reader: str, data: bytes, found: Finding) -> None:
@@ -140,6 +139,8 @@ def watched(reader: str, said: argparse.Namespace) -> int:
                 sys.stdout.flush()
                 os._exit(code)
         status = wait(pid, current_case(reader))
+        for left in in_memory().glob(f"leadline-fuzz-{pid}-*"):
+            shutil.rmtree(left)
         read = int(count.read_text()) if count.is_file() else 0
         done += read
         if status:

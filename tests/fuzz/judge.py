@@ -46,8 +46,7 @@ class Judge:
 
     def __init__(self, reader: Reader) -> None:
         self.reader = reader
-        memory = Path("/dev/shm")
-        self.folder = Path(tempfile.mkdtemp(prefix="leadline-fuzz-", dir=memory if memory.is_dir() else None))
+        self.folder = Path(tempfile.mkdtemp(prefix=f"leadline-fuzz-{os.getpid()}-", dir=in_memory()))
         self.good = reader.make(self.folder)
         self.file = self.folder / reader.file
         self.file.parent.mkdir(parents=True, exist_ok=True)
@@ -102,6 +101,12 @@ class Judge:
         real = os.path.realpath(path)
         if not real.startswith(self.allowed) and "__pycache__" not in real and "fontlist" not in real:
             raise Trespass(f"writes to {real}")
+
+
+def in_memory() -> Path:
+    """A folder that costs no disk, where the system has one."""
+    memory = Path("/dev/shm")
+    return memory if memory.is_dir() else Path(tempfile.gettempdir())
 
 
 def _is_numba(event: str) -> bool:
