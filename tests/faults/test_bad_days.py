@@ -71,7 +71,7 @@ def small_disk(scene):
         subprocess.run(["umount", home], check=True)
 
 
-@pytest.mark.parametrize("left_kib", [0, 60, 700])
+@pytest.mark.parametrize("left_kib", [60, 700])
 def test_a_full_disk_is_said_and_the_run_goes_on_when_there_is_room(scene, left_kib):
     with small_disk(scene) as home:
         if home is None:
@@ -130,8 +130,14 @@ def test_a_folder_that_may_not_be_written_is_said_and_nothing_is_changed(scene):
     assert tree(scene.stage) == scene.before
 
 
-@pytest.mark.parametrize(("file", "share"), [("a_lfp.bin", 0.5), ("dye.ome.tif", 0.1), ("atlas/labels.nrrd", 0.02)])
-@pytest.mark.parametrize("how", ["vanishes", "is replaced"])
+@pytest.mark.parametrize(
+    ("file", "share", "how"),
+    [
+        ("a_lfp.bin", 0.5, "is replaced"),
+        ("dye.ome.tif", 0.1, "vanishes"),
+        ("atlas/labels.nrrd", 0.02, "is replaced"),
+    ],
+)
 def test_an_input_that_changes_under_the_run_is_noticed(scene, file, share, how):
     scene.fresh()
     path = scene.stage / file
@@ -201,17 +207,13 @@ def test_of_two_runs_at_once_one_works_and_the_other_says_who_does(scene):
     require_same(scene)
 
 
-@pytest.mark.parametrize("when_s", [0.0, 4e9])
-def test_dates_of_files_do_not_matter(scene, when_s):
-    """1970 and 2096: the run is the same, and a second one has nothing to do."""
+def test_dates_of_files_do_not_matter(scene):
+    """Files of 2096 give the same tables; once they are of 1970, there is still nothing to do."""
     scene.fresh()
-    for path in scene.stage.rglob("*"):
-        os.utime(path, (when_s, when_s))
-    assert leadline("run", scene.stage, "-q")[0] == 0
-    require_same(scene)
-    for path in scene.stage.rglob("*"):
-        os.utime(path, (4e9 - when_s, 4e9 - when_s))
-    code, said = leadline("run", scene.stage)
-    assert code == 0
+    for when_s in (4e9, 0.0):
+        for path in scene.stage.rglob("*"):
+            os.utime(path, (when_s, when_s))
+        code, said = leadline("run", scene.stage)
+        assert code == 0
+        require_same(scene)
     assert "nothing has changed" in said
-    require_same(scene)

@@ -4,7 +4,7 @@ import pytest
 from tests.faults.__main__ import kill
 from tests.faults.scenes import SCENES
 
-SHARE = {"run": 3, "rerun": 3, "accept": 6, "edits": 6}
+SHARE = {"run": 2, "rerun": 3, "accept": 6, "edits": 6}
 
 
 @pytest.mark.slow

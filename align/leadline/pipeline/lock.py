@@ -11,6 +11,7 @@ import errno
 import fcntl
 import json
 import os
+import pwd
 import time
 from contextlib import contextmanager, suppress
 from dataclasses import asdict, dataclass
@@ -132,7 +133,11 @@ def _held(brain_file: Path, owner: Owner | None, more: str = "") -> LeadlineErro
 
 
 def _me() -> Owner:
-    return Owner(os.environ.get("USER") or f"user {os.getuid()}", os.uname().nodename, os.getpid(), time.time())
+    try:
+        user = pwd.getpwuid(os.getuid()).pw_name
+    except KeyError:  # a container's user without a name
+        user = f"user {os.getuid()}"
+    return Owner(user, os.uname().nodename, os.getpid(), time.time())
 
 
 def _owner(file: Path) -> Owner | None:
