@@ -65,6 +65,13 @@ def test_the_response_has_the_latency_it_was_given(made, found):
     assert sink["middle"] == pytest.approx(0.060, abs=0.004)
 
 
+def test_latencies_are_missing_row_by_row(made, found):
+    """Where there is no sink there is no latency of one, and rows beside it keep theirs."""
+    names, sink = np.array(made.layer_of_row), found[0].features["sink_latency_s"]
+    assert np.isfinite(sink[names == "middle"]).all()
+    assert np.isnan(sink[names == "hilus"]).mean() > 0.7
+
+
 def test_dead_and_noisy_contacts_are_left_out_and_leave_the_profile_as_it_was(made, found):
     rng = np.random.default_rng(3)
     samples = made.recording.traces.samples.copy()
