@@ -216,6 +216,7 @@ _BENCHES: dict[int, Workbench] = {}
 
 def workbench(viewer: napari.Viewer) -> Workbench:
     """The workbench of a viewer, made on first need."""
+    viewer = getattr(viewer, "__wrapped__", viewer)  # menu entries get a proxy that hides what is private
     key = id(viewer)
     if key not in _BENCHES:
         bench = _BENCHES[key] = Workbench(viewer)

@@ -91,6 +91,7 @@ def draw(brain: Path, folder: Path, scale: int) -> None:
         for theme in THEMES:
             viewer.theme = theme
             settle()
+            bench.brain.view.folder.setText(f"data/{bench.desk.brain.name}")  # no path of this machine in a picture
             window.grab()  # lays out what is new; the screenshot below includes the OpenGL canvas
             viewer.screenshot(str(folder / f"{name}-{theme}-{scale}00.png"), canvas_only=False, flash=False)
 

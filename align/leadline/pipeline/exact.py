@@ -61,6 +61,17 @@ def ground(bench: Bench, tracks: Sequence[Track]) -> tuple[ShankGround, ...]:
     return tuple(found)
 
 
+def posteriors(
+    bench: Bench, shanks: Sequence[ShankGround], anchors: Sequence[Anchor], progress: Progress = SILENT
+) -> tuple[DepthPosterior, ...]:
+    """Posteriors of the shanks of one penetration under ``anchors``, in the order given.
+
+    Raises LeadlineError when two anchors cross, Cancelled when ``progress`` says so.
+    """
+    evidence = [replace(s.evidence, anchors=_of(anchors, s)) for s in shanks]
+    return settled(bench, drawn(bench, evidence, progress), evidence)
+
+
 def answer(
     bench: Bench, shanks: Sequence[ShankGround], anchors: Sequence[Anchor], progress: Progress = SILENT
 ) -> tuple[ShankAnswer, ...]:
@@ -68,12 +79,8 @@ def answer(
 
     Raises LeadlineError when two anchors cross.
     """
-    evidence = [replace(s.evidence, anchors=_of(anchors, s)) for s in shanks]
-    posteriors = settled(bench, drawn(bench, evidence, progress), evidence)
-    return tuple(
-        ShankAnswer(posterior, located(bench, shank, posterior, e.anchors))
-        for shank, e, posterior in zip(shanks, evidence, posteriors, strict=True)
-    )
+    found = posteriors(bench, shanks, anchors, progress)
+    return tuple(ShankAnswer(p, located(bench, s, p, anchors)) for s, p in zip(shanks, found, strict=True))
 
 
 def located(bench: Bench, shank: ShankGround, posterior: DepthPosterior, anchors: Sequence[Anchor]) -> Located:

@@ -6,7 +6,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 from leadline.base.progress import Cancelled
-from leadline.pipeline.exact import answer
+from leadline.pipeline.exact import located, posteriors
 from leadline_napari.controllers.live import Live, live_of, quick, stored
 from leadline_napari.controllers.scene import Scene, make_scene
 
@@ -102,8 +102,8 @@ class Answers:
         mine = _of(anchors, (track.penetration, track.shank))
 
         def work() -> Live:
-            found = answer(bench, scene.shanks, anchors, stop)[scene.index]
-            return live_of(found.posterior, found.located, scene.shank, mine)
+            posterior = posteriors(bench, scene.shanks, anchors, stop)[scene.index]
+            return live_of(posterior, located(bench, scene.shank, posterior, mine), scene.shank, mine)
 
         def done(found: object) -> None:
             assert isinstance(found, Live)

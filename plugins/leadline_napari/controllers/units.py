@@ -6,6 +6,9 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from leadline.model.channels import STEREO_COLUMNS
+from leadline.pipeline.laminar import COLUMNS as LAMINAR_COLUMNS
+from leadline.pipeline.units import UNIT_COLUMNS
 from leadline_napari.controllers.canvas import NAMES, axis_names, contact_colours
 from leadline_napari.states import LayerSpec, Legend
 from leadline_napari.style import CATEGORIES, NO_VALUE, lookup, rgb_of
@@ -27,7 +30,7 @@ NO_MEASURE = ("brain", "penetration", "unit_id", "region_id", "region_name", "co
 
 def choices(units: pd.DataFrame) -> tuple[str, ...]:
     """Columns that units can be coloured by: the user's own first, then region, layer and measures."""
-    own = list(units.columns[list(units.columns).index("basis") + 1 :]) if "basis" in units else []
+    own = [c for c in units.columns if c not in (*UNIT_COLUMNS, *STEREO_COLUMNS, *LAMINAR_COLUMNS)]
     names = dict.fromkeys([*own, REGION, *units.columns])
     return tuple(c for c in names if c not in NO_MEASURE and units[c].notna().any())
 

@@ -198,6 +198,9 @@ class CanvasDesk:
     def _units_ready(self, table: Any) -> None:
         self.units = table
         self.colour_units(units.choices(table)[0])
+        points = self.host.viewer.layers[NAMES["units"]].data
+        if len(points) and self.host.viewer.dims.ndisplay == 2:
+            self.host.canvas.go_to(points[len(points) // 2])
 
     def colour_units(self, column: str) -> None:
         """Colour the units by one of their columns."""

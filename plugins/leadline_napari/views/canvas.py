@@ -43,10 +43,13 @@ class Canvas:
             if spec.kind == "points" and len(layer.data) == len(spec.data) and "features" in spec.options:
                 return self._refresh_points(layer, spec)
             index, visible = self.viewer.layers.index(layer), layer.visible
+            active = self.viewer.layers.selection.active
             self.viewer.layers.remove(layer)
             fresh = self._add(spec)
             fresh.visible = visible
             self.viewer.layers.move(self.viewer.layers.index(fresh), index)
+            # whoever is at work on another layer goes on there
+            self.viewer.layers.selection.active = fresh if active is layer else active
             return fresh
         return self._add(spec)
 
@@ -142,6 +145,7 @@ class Canvas:
         camera = self.viewer.scene.camera
         camera.center = tuple(float(v) for v in np.asarray(point_um, float)[order])
         camera.set_view_direction(tuple(normal[order]), tuple(-way[order]))
+        camera.zoom *= 0.8
 
     def look_in(self) -> None:
         """In 3-D, look at the brain from behind, from the left and from above."""
@@ -157,12 +161,14 @@ class Canvas:
 
     def picture(self, times: float) -> Any:
         """What the canvas shows, ``(h, w, 4)`` uint8, ``times`` as fine as the screen; without napari's scale bar."""
-        bar = self.viewer.canvas.overlays["scale_bar"]
-        bar.visible = False
+        bar, camera = self.viewer.canvas.overlays["scale_bar"], self.viewer.scene.camera
+        size = tuple(round(n * times) for n in self.size)
+        zoom, bar.visible = camera.zoom, False
         try:
-            return self.viewer.screenshot(scale=times, canvas_only=True, flash=False)
+            camera.zoom = zoom * times  # a larger canvas alone would show more, not finer
+            return self.viewer.screenshot(size=size, canvas_only=True, flash=False)
         finally:
-            bar.visible = True
+            camera.zoom, bar.visible = zoom, True
 
     def on_pick(self, name: str, chosen: Callable[[int], None]) -> None:
         """Call ``chosen`` with the row of a point that is clicked."""

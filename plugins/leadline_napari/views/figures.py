@@ -2,10 +2,11 @@
 
 from __future__ import annotations
 
+import re
 from typing import TYPE_CHECKING
 
 from qtpy.QtCore import QLineF, QMarginsF, QRectF, QSize, QSizeF, Qt
-from qtpy.QtGui import QColor, QImage, QPageLayout, QPageSize, QPainter, QPdfWriter, QPen
+from qtpy.QtGui import QColor, QFontMetricsF, QImage, QPageLayout, QPageSize, QPainter, QPdfWriter, QPen
 from qtpy.QtSvg import QSvgGenerator
 
 from leadline.base.atomic import whole_file
@@ -25,6 +26,8 @@ FILTER = "Figures (*.png *.svg *.pdf)"
 PRINT_DPI = 300
 POINTS_PER_INCH = 72.0
 BAR_SHARE = 0.25
+FONT = re.compile(r'font-family="[^"]*"')
+FONTS = "DejaVu Sans, Arial, Helvetica, sans-serif"
 ROUND_UM = tuple(m * 10**e for e in range(6) for m in (1, 2, 5))
 
 
@@ -63,17 +66,15 @@ def _scale_bar(painter: QPainter, size: QSize, um_per_pixel: float, theme: Theme
     right, y = size.width() - 16.0, size.height() - 16.0
     words = f"{length_um:g} um" if length_um < 1000 else f"{length_um / 1000:g} mm"
     font = painter.font()
-    font.setPointSizeF(9.0)
+    font.setPixelSize(14)  # points would be counted in the resolution of the figure
     painter.setFont(font)
-    box = QRectF(right - max(length, 90), y - 24, max(length, 90), 20)
     paper = QColor(theme.paper)
     paper.setAlpha(170)
-    painter.fillRect(QRectF(right - length - 6, y - 26, length + 12, 32), paper)
+    wide = max(length, QFontMetricsF(font).horizontalAdvance(words))
+    painter.fillRect(QRectF(right - wide - 6, y - 26, wide + 12, 32), paper)
     painter.setPen(QPen(QColor(theme.ink), 2.5))
-    painter.drawLine(QLineF(right - length, y, right, y))
-    painter.drawText(
-        QRectF(right - length, box.y(), length, 20), Qt.AlignmentFlag.AlignCenter | Qt.TextFlag.TextDontClip, words
-    )
+    painter.drawLine(QLineF(right - (wide + length) / 2, y, right - (wide - length) / 2, y))
+    painter.drawText(QRectF(right - wide, y - 24, wide, 20), Qt.AlignmentFlag.AlignCenter, words)
 
 
 def _save(path: Path, size: QSize, dpi: int, title: str, paint: Paint) -> None:
@@ -98,7 +99,8 @@ def _png(path: Path, size: QSize, dpi: int, title: str, paint: Paint) -> None:
 
 
 def _svg(path: Path, size: QSize, dpi: int, title: str, paint: Paint) -> None:
-    """Without the screen's resolution Qt writes axes at another scale than what they measure."""
+    """Without the screen's resolution Qt writes axes at another scale than what they measure; and it names fonts in
+    words that only Qt knows."""
     generator = QSvgGenerator()
     generator.setFileName(str(path))
     generator.setSize(size)
@@ -108,6 +110,8 @@ def _svg(path: Path, size: QSize, dpi: int, title: str, paint: Paint) -> None:
     painter = QPainter(generator)
     paint(painter)
     painter.end()
+    text = path.read_text(encoding="utf-8")
+    path.write_text(FONT.sub(f'font-family="{FONTS}"', text), encoding="utf-8")
 
 
 def _pdf(path: Path, size: QSize, dpi: int, title: str, paint: Paint) -> None:

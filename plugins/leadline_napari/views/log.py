@@ -11,6 +11,7 @@ from qtpy.QtGui import QColor, QFontMetricsF
 
 from leadline_napari.views.marks.anatomy import StrataMark, TissueMark
 from leadline_napari.views.marks.band import BandMark
+from leadline_napari.views.marks.mark import NARROW
 from leadline_napari.views.marks.probe import LaneMark, RibbonMark, SitesMark
 
 if TYPE_CHECKING:
@@ -27,7 +28,6 @@ WIDTHS = {"tissue": 96, "strata": 70, "band": 150, "sites": 46, "odds": 76, "lan
 LEFT = ("tissue", "strata")
 ODDS_COLUMN = 60
 MIN_PX = 34
-NARROW = 75  # per cent of the usual width of letters, where there is little room
 
 
 TIPS = {

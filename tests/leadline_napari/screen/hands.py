@@ -1,5 +1,6 @@
 """Mouse and key events as a person makes them, on a workbench."""
 
+import numpy as np
 from qtpy.QtCore import QEvent, QPoint, QPointF, Qt
 from qtpy.QtGui import QMouseEvent
 from qtpy.QtTest import QTest
@@ -68,3 +69,40 @@ def tie_end(bench, anchor, end):
 def anchors(bench):
     """Anchors of the session."""
     return bench.desk.session.edits.anchors
+
+
+def canvas_place(bench, point_um):
+    """Where on the canvas widget a place of the world is, in 2-D or 3-D: found by asking napari the way back."""
+    canvas = bench.viewer.window._qt_viewer.canvas
+    height, width = canvas.size
+    order = list(bench.viewer.dims.displayed)
+    wanted = np.asarray(point_um, float)[order]
+
+    def away(at):
+        here = np.array(canvas._map_canvas2world(tuple(at), canvas.view), float)[order]
+        gap = here - wanted
+        if len(order) == 3:
+            view = np.array(bench.viewer.scene.camera.view_direction)
+            gap = gap - (gap @ view) * view
+        return gap
+
+    at, step = np.array([width / 2, height / 2]), 20.0
+    for _ in range(4):  # the way there is linear: a few Newton steps settle rounding
+        start = away(at)
+        slope = np.column_stack([(away(at + np.array(d) * step) - start) / step for d in ((1, 0), (0, 1))])
+        at = at - np.linalg.lstsq(slope, start, rcond=None)[0]
+    return QPoint(round(at[0]), round(at[1]))
+
+
+def mouse(bench, *places):
+    """Press at the first place on the canvas, move along the others, let go."""
+    widget = bench.viewer.window._qt_viewer.canvas.native
+    QTest.mouseMove(widget, places[0])
+    QApplication.processEvents()
+    QTest.mousePress(widget, LEFT, NONE, places[0])
+    for at in places[1:]:
+        to = QPointF(widget.mapToGlobal(at))
+        QApplication.sendEvent(widget, QMouseEvent(QEvent.Type.MouseMove, QPointF(at), to, LEFT, LEFT, NONE))
+        QApplication.processEvents()
+    QTest.mouseRelease(widget, LEFT, NONE, places[-1])
+    QApplication.processEvents()

@@ -22,22 +22,8 @@ from leadline.io.tables import suggestions_text
 from leadline.model.anchor import Anchor, Suggestion
 from leadline.pipeline.products import read_posteriors
 from leadline.pipeline.run import run
-from leadline_napari.workbench import close_workbench, workbench
 
 CONTROL, SHIFT = Qt.KeyboardModifier.ControlModifier, Qt.KeyboardModifier.ShiftModifier
-
-
-@pytest.fixture
-def window():
-    viewer = napari.Viewer(show=True)
-    viewer.window._qt_window.resize(1280, 800)
-    bench = workbench(viewer)
-    bench.told = []
-    bench.failed.connect(bench.told.append)
-    bench.show_docks()
-    yield bench
-    close_workbench(viewer)
-    viewer.close()
 
 
 def suggest_at(brain, tip_um):
@@ -49,49 +35,49 @@ def suggest_at(brain, tip_um):
 
 
 @pytest.mark.slow
-def test_a_whole_session_leaves_the_table_that_the_command_line_makes_of_its_anchors(window, qtbot, tmp_path):
+def test_a_whole_session_leaves_the_table_that_the_command_line_makes_of_its_anchors(bench, qtbot, tmp_path):
     file = write_good_brain(tmp_path / "mine")
     text = file.read_text()
     file.write_text(text[: text.index("[[anchor]]")])
     run(read_brain(file))
     suggest_at(read_brain(file), 800.0)
-    opened(window, qtbot, file.parent)
-    log = window.section.view.log
+    opened(bench, qtbot, file.parent)
+    log = bench.section.view.log
 
-    window.corrections.view.edit_button.click()
-    layer = window.viewer.layers["Track points"]
+    bench.corrections.view.edit_button.click()
+    layer = bench.viewer.layers["Track points"]
     points = layer.data.copy()
     points[2] += [0.0, 15.0, -20.0]
     layer.data = points
-    settle(window, qtbot)
-    window.corrections.view.edit_button.click()
-    window.docks["section"].raise_()
+    settle(bench, qtbot)
+    bench.corrections.view.edit_button.click()
+    bench.docks["section"].raise_()
 
-    border = next(r for r in window.section.controller.scene.strata.runs if r.acronym == "CCB")
-    double_click(window, "strata", 0.5, border.top_um + 5.0)
-    double_click(window, "lane", 0.5, log.end_um - 300.0)
-    settle(window, qtbot)
-    lower = anchors(window)[1]
-    drag(window, tie_end(window, lower, "depth"), place(window, "band", 0.0, lower.track_depth_um + 60.0))
+    border = next(r for r in bench.section.controller.scene.strata.runs if r.acronym == "CCB")
+    double_click(bench, "strata", 0.5, border.top_um + 5.0)
+    double_click(bench, "lane", 0.5, log.end_um - 300.0)
+    settle(bench, qtbot)
+    lower = anchors(bench)[1]
+    drag(bench, tie_end(bench, lower, "depth"), place(bench, "band", 0.0, lower.track_depth_um + 60.0))
     log.setFocus()
     QTest.keyClick(log, Qt.Key.Key_Z, CONTROL)
-    assert anchors(window)[1] == lower
+    assert anchors(bench)[1] == lower
     QTest.keyClick(log, Qt.Key.Key_Z, CONTROL | SHIFT)
-    assert anchors(window)[1] != lower
-    (suggested,) = [t for t in window.section.view._state.band.ties if t.kind == "suggested"]
-    click(window, tie_end(window, suggested.anchor, "depth"))
+    assert anchors(bench)[1] != lower
+    (suggested,) = [t for t in bench.section.view._state.band.ties if t.kind == "suggested"]
+    click(bench, tie_end(bench, suggested.anchor, "depth"))
     QTest.keyClick(log, Qt.Key.Key_Return)
-    settle(window, qtbot)
-    kept = anchors(window)
+    settle(bench, qtbot)
+    kept = anchors(bench)
     assert sorted(a.source for a in kept) == ["auto", "user", "user"]
-    with qtbot.waitSignal(window.opened, timeout=300_000):
+    with qtbot.waitSignal(bench.opened, timeout=300_000):
         QTest.keyClick(log, Qt.Key.Key_S, CONTROL)
-    settle(window, qtbot)
-    assert window.told == []
+    settle(bench, qtbot)
+    assert bench.told == []
 
-    opened(window, qtbot, file.parent)
-    assert anchors(window) == kept
-    assert window.desk.can_undo
+    opened(bench, qtbot, file.parent)
+    assert anchors(bench) == kept
+    assert bench.desk.can_undo
 
     fresh = tmp_path / "theirs"
     shutil.copytree(file.parent, fresh, ignore=shutil.ignore_patterns("out", ".leadline"))

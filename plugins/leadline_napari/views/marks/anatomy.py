@@ -45,6 +45,8 @@ class StrataMark(Mark):
         measures = self.font_of(painter)
         for run in self.strata.runs:
             top, bottom = max(run.top_um, low), min(run.bottom_um, high)
+            if bottom <= top:
+                continue
             box = transform.mapRect(QRectF(0, top, 1, bottom - top))
             if box.height() > measures.height() * 0.92:
                 painter.setPen(QColor(ink_on(run.colour)))

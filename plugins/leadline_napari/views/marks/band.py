@@ -95,7 +95,7 @@ class BandMark(Mark):
             painter.drawEllipse(end, HANDLE_PX, HANDLE_PX)
 
     def _label(self, painter: QPainter, tie: Tie, ends: QLineF, taken: list[QRectF]) -> None:
-        text = self.fitted(painter, tie.label, abs(ends.dx()) - 12, bold=tie.held)
+        text = self.fitted(painter, tie.label, abs(ends.dx()) - 12)
         measures = QFontMetricsF(painter.font())
         middle = ends.pointAt(0.5)
         box = QRectF(0, 0, measures.horizontalAdvance(text) + 8, measures.height() + 2)

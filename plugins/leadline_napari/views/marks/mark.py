@@ -6,7 +6,7 @@ from typing import TYPE_CHECKING
 
 import pyqtgraph as pg
 from qtpy.QtCore import QRectF, Qt
-from qtpy.QtGui import QFont, QFontMetricsF
+from qtpy.QtGui import QFontMetricsF, QPaintEngine
 
 if TYPE_CHECKING:
     from qtpy.QtGui import QPainter
@@ -15,6 +15,7 @@ if TYPE_CHECKING:
 
 LABEL_PT = 8.0
 SMALLEST_PT = 6.0
+NARROW = 75  # per cent of the usual width of letters, where there is little room
 
 
 class Mark(pg.GraphicsObject):
@@ -49,14 +50,15 @@ class Mark(pg.GraphicsObject):
         """The whole lane."""
         return QRectF(0.0, self._top, 1.0, self._bottom - self._top)
 
-    def fitted(self, painter: QPainter, text: str, width: float, *, bold: bool = False) -> str:
+    def fitted(self, painter: QPainter, text: str, width: float) -> str:
         """Set the largest font, down to 6 pt and condensed, in which ``text`` fits ``width``; the text, cut only where
         even that is too wide."""
         font = painter.font()
-        font.setBold(bold)
-        for points, stretch in ((LABEL_PT, 100), (LABEL_PT, QFont.Stretch.Condensed), (SMALLEST_PT, 75)):
+        # SVG knows no narrow letters: what is written there is smaller instead.
+        narrow = 100 if painter.paintEngine().type() == QPaintEngine.Type.SVG else NARROW
+        for points, stretch in ((LABEL_PT, 100), (LABEL_PT, narrow), (SMALLEST_PT, narrow)):
             font.setPointSizeF(points)
-            font.setStretch(int(stretch))
+            font.setStretch(stretch)
             measures = QFontMetricsF(font)
             if measures.horizontalAdvance(text) <= width:
                 break

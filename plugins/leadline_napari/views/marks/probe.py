@@ -5,8 +5,9 @@ from __future__ import annotations
 from itertools import pairwise
 from typing import TYPE_CHECKING
 
+import numpy as np
 from qtpy.QtCore import QPointF, QRectF, Qt
-from qtpy.QtGui import QColor, QImage, QPainterPath, QPen, QPolygonF
+from qtpy.QtGui import QColor, QImage, QPaintEngine, QPainterPath, QPen, QPolygonF
 
 from leadline_napari.views.marks.mark import Mark
 
@@ -16,6 +17,7 @@ if TYPE_CHECKING:
     from leadline_napari.states import Lane, Ribbon, Sites
     from leadline_napari.style import Theme
 
+ODDS_COLUMNS = 128
 SEEN_PX = 5.0  # gaps between contacts are drawn from this height of a contact on; below it they are only noise
 
 
@@ -80,19 +82,34 @@ class RibbonMark(Mark):
     def __init__(self, theme: Theme) -> None:
         super().__init__(theme)
         self.ribbon: Ribbon | None = None
+        self._image: QImage | None = None
 
     def set_ribbon(self, ribbon: Ribbon) -> None:
         """Draw these odds."""
-        self.ribbon = ribbon
+        self.ribbon, self._image = ribbon, None
         self.update()
 
     def paint(self, painter: QPainter, *_: object) -> None:
-        """Fill the shares of every row; a preview is drawn a little lighter."""
+        """Fill the shares of every row, on the screen as one picture; a preview is drawn a little lighter."""
         ribbon = self.ribbon
         if ribbon is None:
             return
-        colours = [QColor(*rgb) for rgb in ribbon.rgb.tolist()]
         painter.setOpacity(1.0 if ribbon.exact else 0.82)
+        steps = np.diff(ribbon.tip_um)
+        even = steps.size > 0 and float(np.ptp(steps)) < 0.01
+        if even and painter.paintEngine().type() == QPaintEngine.Type.Raster:
+            if self._image is None:
+                self._image = _picture(ribbon)
+            half = float(steps[0]) / 2
+            top, bottom = float(ribbon.tip_um[-1]) + half, float(ribbon.tip_um[0]) - half
+            painter.drawImage(QRectF(0.0, self.end_um - top, 1.0, top - bottom), self._image)
+        else:
+            self._rows(painter, ribbon)
+        painter.setOpacity(1.0)
+
+    def _rows(self, painter: QPainter, ribbon: Ribbon) -> None:
+        """The same as vectors, for figures."""
+        colours = [QColor(*rgb) for rgb in ribbon.rgb.tolist()]
         tips = ribbon.tip_um.tolist()
         edges = [tips[0] - 10.0, *((a + b) / 2 for a, b in pairwise(tips)), tips[-1] + 10.0]
         for row, shares in enumerate(ribbon.share.tolist()):
@@ -103,7 +120,17 @@ class RibbonMark(Mark):
                 if share > 0.0:
                     painter.fillRect(QRectF(left, top, share, height), colour)
                     left += share
-        painter.setOpacity(1.0)
+
+
+def _picture(ribbon: Ribbon) -> QImage:
+    """The odds as a picture: a row for every row, the uppermost first; as many columns as can be told apart."""
+    place = (np.arange(ODDS_COLUMNS, dtype=np.float32) + 0.5) / ODDS_COLUMNS
+    ends = np.cumsum(ribbon.share, axis=1)[::-1]
+    code = np.zeros((len(ends), ODDS_COLUMNS), np.intp)
+    for k in range(ends.shape[1] - 1):
+        code += ends[:, k, None] < place
+    rgb = np.ascontiguousarray(ribbon.rgb[code])
+    return QImage(rgb.tobytes(), ODDS_COLUMNS, len(rgb), 3 * ODDS_COLUMNS, QImage.Format.Format_RGB888).copy()
 
 
 class LaneMark(Mark):
