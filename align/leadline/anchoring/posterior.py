@@ -10,7 +10,6 @@ import numpy as np
 from leadline.anchoring.depth_prior import DepthPrior, build
 from leadline.anchoring.doubts import doubts
 from leadline.anchoring.pack import Packed, assemble
-from leadline.anchoring.preview import preview
 from leadline.anchoring.sampler import Drawn, sample
 from leadline.base.arrays import FloatArray, IntArray
 from leadline.base.progress import SILENT, Progress
@@ -23,8 +22,6 @@ if TYPE_CHECKING:
     from leadline.anchoring.evidence import ShankEvidence
     from leadline.anchoring.knowledge import Knowledge
     from leadline.model.atlas import Structures
-
-__all__ = ["infer", "preview"]
 
 # power of the likelihood: features and rows are less independent than the model says. Chosen for calibration on
 # invented tracks and brains, kind and rough, of other seeds than the study's; 0.25 to 0.4 do nearly as well

@@ -12,7 +12,7 @@ sys.path.insert(0, str(Path(__file__).parent))
 import invented
 
 from leadline.anchoring.knowledge import builtin
-from leadline.anchoring.posterior import infer, preview
+from leadline.anchoring.posterior import infer
 from leadline.base.errors import LeadlineError
 from leadline.base.progress import Cancelled
 from leadline.model.anchor import Anchor
@@ -96,17 +96,6 @@ def test_crossing_anchors_are_refused():
     anchors = (Anchor("A", 0, 500.0, 900.0), Anchor("A", 0, 900.0, 1000.0))
     with pytest.raises(LeadlineError, match="anchors cross"):
         found(invented.shank(anchors=anchors))
-
-
-def test_a_preview_of_an_edit_is_near_the_exact_answer_and_undoes_exactly(spoken):
-    shank = invented.shank()
-    anchor = Anchor("A", 0, 1000.0, float(np.interp(1000.0, invented.TIP, spoken.median_um)) + 50.0, 30.0)
-    quick = preview(spoken, shank, (anchor,))
-    exact = found(replace(shank, anchors=(anchor,)))[0]
-    assert np.median(np.abs(quick.median_um - exact.median_um)) < 15
-    assert (np.diff(quick.depth_um, axis=1) < 0).all()
-    back = preview(quick, replace(shank, anchors=(anchor,)), ())
-    assert np.abs(back.depth_um - spoken.depth_um).max() < 2
 
 
 def test_sister_shanks_place_one_that_says_nothing():
