@@ -22,6 +22,7 @@ NEAR_UM, FAR_UM, WINDOW_UM, WINDOW_ROWS = 60.0, 400.0, 300.0, 8
 FALLS = -0.6  # rank correlation of likeness with distance, of a right map about -0.95
 BROKEN = 0.6  # likeness across two neighbouring rows, as a share of the usual one
 JOINED = 0.85
+LEAST_SHARED = 0.2  # rows that share less with every other are noise
 PAIRS = 2  # one pair alike may share a fault
 PARTNER = 0.25  # by how much likeness with the most similar row stands out from that with any
 NOTHING = 0.15  # likeness of neighbours in a slow band; in tissue it is above 0.8
@@ -36,7 +37,7 @@ def order_doubts(cross: AnyArray, rows: Rows, x_um: FloatArray, good: BoolArray)
     """
     if good.sum() < MIN_ROWS:
         return ()
-    alike = np.nan_to_num(coherency_size(cross[np.ix_(good, good)]))
+    alike = _of_signals(np.nan_to_num(coherency_size(cross[np.ix_(good, good)])))
     tip, shank = rows.tip_distance_um[good], rows.shank[good]
     place = np.column_stack([x_um[good], tip])
     shanks = [m for s in np.unique(shank) if len(m := np.flatnonzero(shank == s)) >= MIN_ROWS]
@@ -44,6 +45,13 @@ def order_doubts(cross: AnyArray, rows: Rows, x_um: FloatArray, good: BoolArray)
     if scrambled:
         return tuple(scrambled[:1])
     return (*[s for m in shanks for s in _broken(alike[np.ix_(m, m)], tip[m])][:1], *_joined(alike, place, shank))
+
+
+def _of_signals(alike: FloatArray) -> FloatArray:
+    """Likeness of the signals without each row's own noise: over the geometric mean of what either row shares with its
+    most similar one (Spearman 1904, Am. J. Psychol. 15, 72: correction for attenuation)."""
+    shared = np.sqrt(np.maximum(alike.max(axis=1), LEAST_SHARED))
+    return np.asarray(np.minimum(alike / shared[:, None] / shared, 1.0), np.float64)
 
 
 def deaf(slow_cross: AnyArray, rows: Rows, good: BoolArray) -> tuple[str, ...]:

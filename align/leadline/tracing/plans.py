@@ -34,8 +34,8 @@ def doubts(wanted: Sequence[Wanted], tracks: Sequence[TracedPath], middle_um: fl
     tracks : all that were found or drawn, whosever they are.
     middle_um : ml of the atlas's midline.
     """
-    # which way shanks grow was told for the plain reading, and says nothing of where the probe went
-    planned = [replace(w, shank_toward=None) for w in wanted if w.entry_near_um is not None]
+    # which way shanks grow and how deep they went says nothing of which side they went in
+    planned = [replace(w, shank_toward=None, inserted_um=None) for w in wanted if w.entry_near_um is not None]
     if not planned or not tracks:
         return ()
     plans = np.array([w.entry_near_um for w in planned], float)

@@ -92,6 +92,15 @@ def test_fields_that_know_no_distance_are_not_judged():
     assert said(fields(true, common=0.99), np.random.default_rng(1).permutation(true)) == ()
 
 
+def test_one_source_heard_through_uneven_noise_is_not_judged():
+    """Where a row hears less of it, likeness drops without any distance."""
+    rng = np.random.default_rng(4)
+    gain = 20.0 + 60.0 * np.exp(-0.5 * ((np.arange(60) - 20) / 5.0) ** 2)
+    wave = gain[:, None] * (rng.normal(size=400) + 1j * rng.normal(size=400))
+    wave += 25.0 * (rng.normal(size=(60, 400)) + 1j * rng.normal(size=(60, 400)))
+    assert said(wave @ wave.conj().T, 20.0 * np.arange(60)) == ()
+
+
 def test_noise_in_place_of_fields_is_said():
     rng = np.random.default_rng(2)
     probe = line_probe(24)
