@@ -19,6 +19,7 @@ if TYPE_CHECKING:
 _UNIT_UM = {"um": 1.0, "mm": 1000.0}
 _LONGEST_UM = 100_000.0
 _TIP_SLACK_UM = 1.0
+_MOST_TRACES = 2**31
 
 
 def read_probe(
@@ -318,7 +319,7 @@ def _channels(probe: Any, n: int, where: str, connected: bool) -> IntArray:
     values = _column(probe, "device_channel_indices", n, where)
     if values is None:
         return np.full(n, NOT_RECORDED)
-    bad = [v for v in values if not isinstance(v, int) or isinstance(v, bool) or v < NOT_RECORDED]
+    bad = [v for v in values if not isinstance(v, int) or isinstance(v, bool) or not NOT_RECORDED <= v < _MOST_TRACES]
     if bad:
         raise LeadlineError(
             f"device_channel_indices hold {bad[0]!r}",
