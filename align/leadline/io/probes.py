@@ -19,7 +19,7 @@ if TYPE_CHECKING:
 _UNIT_UM = {"um": 1.0, "mm": 1000.0}
 _LONGEST_UM = 100_000.0
 _TIP_SLACK_UM = 1.0
-_MOST_TRACES = 2**31
+_MOST_TRACES = 2**20
 
 
 def read_probe(
