@@ -3,7 +3,7 @@ PYTHON ?= $(shell for p in python3 python3.13 python3.12 python3.11; do $$p -c "
 BIN := .venv/bin
 ONE_THREAD := OMP_NUM_THREADS=1 OPENBLAS_NUM_THREADS=1 MKL_NUM_THREADS=1 NUMBA_NUM_THREADS=1
 
-.PHONY: demo test bench lint study faults fuzz clean docs screenshots
+.PHONY: demo test bench lint study faults fuzz clean docs screenshots wheel
 demo: .venv/.core
 	$(BIN)/leadline demo leadline-demo
 
@@ -39,6 +39,16 @@ docs: .venv/.dev
 screenshots: demo .venv/.dev
 	$(BIN)/python -m tests.pictures leadline-demo docs/pictures
 	xvfb-run -a -s "-screen 0 2600x1700x24" $(BIN)/python -m tests.leadline_napari.screenshots docs/pictures --brain leadline-demo
+
+# The wheel in an environment that has nothing else: what it needs is declared, and its data files are in it.
+wheel: .venv/bin/python
+	rm -rf .venv/wheel && mkdir -p .venv/wheel
+	$(BIN)/python -m pip wheel -q --disable-pip-version-check --no-deps -w .venv/wheel .
+	$(PYTHON) -m venv .venv/wheel/clean
+	.venv/wheel/clean/bin/python -m pip install -q --disable-pip-version-check --no-compile -c constraints.txt .venv/wheel/*.whl
+	cd .venv/wheel && clean/bin/python -m leadline.demo.write brain --small && clean/bin/leadline check brain
+	cd .venv/wheel && clean/bin/python -c "import leadline_napari; from importlib.resources import files as f; assert all((f(p) / n).is_file() for p, n in (('leadline_napari', 'napari.yaml'), ('leadline.anchoring', 'knowledge.toml'), ('leadline.report', 'page.css')))"
+	rm -rf .venv/wheel
 
 clean:
 	rm -rf .venv leadline-demo
