@@ -28,7 +28,8 @@ def fingerprint_path(path: Path) -> str:
 
     Files up to 32 MiB are read whole. Of a larger file, its length, its modification time and 64 blocks spread
     evenly over it are read: a stack of 150 GB costs 8 MiB of reading. A folder is the fingerprint of the names and
-    lengths of all its files and of the content of at most 64 of them.
+    lengths of all its files and of the content of at most 64 of them; of more, or of more than 32 MiB, also of their
+    dates.
     """
     path = Path(path)
     digest = hashlib.blake2b(digest_size=16)
@@ -43,9 +44,11 @@ def _feed_folder(digest: Any, path: Path) -> None:
     files = sorted(
         (Path(root) / name for root, _, names in os.walk(path) for name in names), key=lambda p: p.as_posix()
     )
-    for file in files:
-        stat = file.stat()
-        digest.update(f"{file.relative_to(path).as_posix()}\0{stat.st_size}\0{stat.st_mtime_ns}\n".encode())
+    stats = [file.stat() for file in files]
+    read_whole = len(files) <= SAMPLES and sum(s.st_size for s in stats) <= WHOLE_BELOW_BYTES
+    for file, stat in zip(files, stats, strict=True):
+        date = "" if read_whole else stat.st_mtime_ns  # where all content is read, dates say nothing more
+        digest.update(f"{file.relative_to(path).as_posix()}\0{stat.st_size}\0{date}\n".encode())
     for file in files[:: max(1, len(files) // SAMPLES)]:
         _feed_file(digest, file)
 

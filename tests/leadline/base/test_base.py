@@ -116,6 +116,16 @@ def test_a_folder_fingerprint_sees_a_new_name(tmp_path):
     assert fingerprint_path(tmp_path / "f") != before
 
 
+def test_the_date_of_a_small_folder_does_not_matter(tmp_path):
+    (tmp_path / "f").mkdir()
+    (tmp_path / "f" / "a").write_text("a")
+    before = fingerprint_path(tmp_path / "f")
+    os.utime(tmp_path / "f" / "a", (0, 0))
+    assert fingerprint_path(tmp_path / "f") == before
+    (tmp_path / "f" / "a").write_text("b")
+    assert fingerprint_path(tmp_path / "f") != before
+
+
 def test_value_fingerprints_tell_nested_values_apart():
     values = [[1, [2]], [[1], 2], {"a": 1}, {"a": "1"}, np.arange(3), np.arange(3.0), None, "None"]
     assert len({fingerprint_value(v) for v in values}) == len(values)
