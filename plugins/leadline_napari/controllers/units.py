@@ -46,7 +46,7 @@ def unit_spec(
         points[rows] = track.stack_at(table["track_depth_um"].to_numpy(float)[rows])
     colours, legend = coloured(table, column, structures)
     options: dict[str, object] = {
-        "features": table, "size": UNIT_SIZE_UM, "face_color": colours, "border_color": "white", "border_width": 0.1,
+        "features": table, "size": UNIT_SIZE_UM, "face_color": colours, "border_color": colours, "border_width": 0.0,
         "symbol": "disc", "opacity": 1.0, "blending": "translucent_no_depth", "projection_mode": "all",
         "axis_labels": axis_names(code),
     }  # fmt: skip
