@@ -211,8 +211,12 @@ class Planes:
         rows, columns = (slice(*s.indices(n)) for s, n in zip((rows, columns), self.shape[2:], strict=True))
         lines, places = (len(range(s.start, s.stop, s.step)) for s in (rows, columns))
         out = np.empty((len(numbers), lines, places), self.dtype)
+        whole = (lines, places) == self.shape[2:]
         for k, number in enumerate(numbers):
-            out[k] = _read_plane(self._files[number], channel)[rows, columns]
+            here = out[k]
+            plane = _read_plane(self._files[number], channel, here if whole else None)
+            if not np.may_share_memory(plane, here):
+                here[...] = plane[rows, columns]
         return out
 
     def pieces(self, key: Any) -> Any:
@@ -246,14 +250,17 @@ def _fetch_ahead(files: list[Path]) -> None:
                 os.posix_fadvise(handle.fileno(), 0, 0, os.POSIX_FADV_WILLNEED)
 
 
-def _read_plane(file: Path, channel: int) -> Any:
+def _read_plane(file: Path, channel: int, out: Any = None) -> Any:
+    """One channel of a plane, into ``out`` where that can be done without a copy."""
     import tifffile
 
     try:
         with tifffile.TiffFile(file) as tiff:
             page = tiff.pages[0]
             if page.samplesperpixel == 1:
-                return tiff.pages[channel].asarray(maxworkers=1)
+                page = tiff.pages[channel]
+                fits = out is not None and page.shape == out.shape and page.dtype == out.dtype
+                return page.asarray(out=out if fits else None, maxworkers=1)
             samples = page.asarray(maxworkers=1)
             return samples[channel] if page.planarconfig == 2 else samples[..., channel]
     except (tifffile.TiffFileError, *READ_FAULTS) as error:

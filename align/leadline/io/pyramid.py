@@ -96,7 +96,7 @@ def write_pyramid(
 
     Levels of 16 bit stacks are 16 bit (means rounded to the nearest), all others float32. What is finished of a
     pyramid that was stopped or killed is kept and gone on from; one of another ``key`` makes way. Memory: a few blocks
-    of 64 MiB and a slab of each level.
+    of 16 MiB and a slab of each level.
 
     Parameters
     ----------

@@ -22,9 +22,9 @@ T = TypeVar("T")
 A = TypeVar("A")
 Block = tuple[slice, slice, slice]
 
-BLOCK_BYTES = 64 * 2**20
+BLOCK_BYTES = 16 * 2**20
 """Voxels read at once; a chunk that is larger is still read whole."""
-READERS = 2
+READERS = 1
 """Threads that read and unpack the next blocks while one is summed."""
 _KERNEL_TYPES = tuple(np.dtype(name) for name in ("uint8", "uint16", "int16", "float32", "float64"))
 
@@ -65,7 +65,7 @@ def reduce_to(volume: Volume, target_um: float, progress: Progress = SILENT) -> 
     """Average a volume down to voxels of ``target_um``, each axis by itself, never up.
 
     Every output voxel is the mean of the input over its own box; factors may be fractional, then input voxels on the
-    border count by the part that lies inside. Memory: the result and a few blocks of 64 MiB.
+    border count by the part that lies inside. Memory: the result and a few blocks of 16 MiB.
 
     Parameters
     ----------
