@@ -1,7 +1,8 @@
 """Write a Leadline recording folder from any recording and sorting that SpikeInterface can open.
 
-Run it in the environment where SpikeInterface lives: it needs only numpy and SpikeInterface, not Leadline. Copy the
-file there, or print where it is with::
+Run it in the environment where SpikeInterface lives: it needs only numpy, SpikeInterface and, for recordings faster
+than LFP, scipy (which SpikeInterface does not bring by itself); not Leadline. Copy the file there, or print where it is
+with::
 
     python -c "import leadline.contrib.from_spikeinterface as m; print(m.__file__)"
 
@@ -70,8 +71,9 @@ def write_recording_folder(
         raise ValueError("the recording has no probe; set it with recording.set_probe(...)")
     if not recording.has_scaleable_traces():
         raise ValueError("the recording has no gains to microvolts; set them with recording.set_channel_gains(...)")
+    slow = _resampled(recording, lfp_hz)
     folder.mkdir(parents=True, exist_ok=True)
-    sampling_hz = _write_traces(recording, folder / "lfp.bin", lfp_hz)
+    sampling_hz = _write_traces(slow, folder / "lfp.bin")
     positions = _write_probe(recording, folder / "probe.json")
     if sorting is not None:
         homes = _home_channels(recording, sorting)
@@ -81,14 +83,21 @@ def write_recording_folder(
     return folder
 
 
-def _write_traces(recording: Any, path: Path, lfp_hz: float) -> float:
+def _resampled(recording: Any, lfp_hz: float) -> Any:
+    """The recording at about ``lfp_hz`` where it is faster by a half and more, lazily."""
+    if float(recording.get_sampling_frequency()) < 1.5 * lfp_hz:
+        return recording
+    from spikeinterface.preprocessing import resample
+
+    try:
+        return resample(recording, round(lfp_hz))  # filters against aliasing by itself
+    except ModuleNotFoundError as error:
+        raise ValueError(f"SpikeInterface cannot resample without {error.name}; pip install {error.name}") from error
+
+
+def _write_traces(recording: Any, path: Path) -> float:
     """Write float32 microvolts, time-major, chunk by chunk; returns their rate."""
     sampling_hz = float(recording.get_sampling_frequency())
-    if sampling_hz >= 1.5 * lfp_hz:
-        from spikeinterface.preprocessing import resample
-
-        recording = resample(recording, round(lfp_hz))  # filters against aliasing by itself
-        sampling_hz = float(recording.get_sampling_frequency())
     step = max(1, round(CHUNK_S * sampling_hz))
     with path.open("wb") as handle:
         for start in range(0, recording.get_num_samples(), step):
