@@ -34,7 +34,9 @@ def rows() -> Iterator[Row]:
             reference="skimage.filters.sato", holds=a["agree"] > 0.95, note=f"{a['agree']:.3f} of the points agree",
         )  # fmt: skip
     for part in (0.25, 0.5, 1.0):
-        a = in_child(whole, mvox=LARGEST_MVOX * part).answer
+        with TemporaryDirectory() as folder:
+            in_child(write, folder=folder, mvox=LARGEST_MVOX * part)
+            a = in_child(whole, folder=folder, mvox=LARGEST_MVOX * part).answer
         yield Row(
             "tracing, whole stack", a["mvox"], "Mvox", a["ours_s"], a["theirs_s"], bar=12,
             reference="a Gaussian over both channels", peak_mb=a["peak_mb"], peak_bar_mb=2000, holds=a["same"],
@@ -67,19 +69,23 @@ def tubes(side: int) -> dict[str, float]:
     return {"ours_s": ours_s, "theirs_s": theirs_s, "agree": float((at > np.quantile(answer, 0.97)).mean())}
 
 
-def whole(mvox: float) -> dict[str, Any]:
+def write(folder: str, mvox: float) -> None:
+    """Write the stack of :func:`whole`, in a process of its own whose memory is not looked at."""
+    Made.of(Path(folder), mvox).write()
+
+
+def whole(folder: str, mvox: float) -> dict[str, Any]:
     """Trace an invented stack on disk, twice with different blocks; the reference reads it once and smooths it."""
     from leadline.tracing import grid, ridge
     from leadline.tracing.find import trace
 
-    with TemporaryDirectory() as folder:
-        made = Made.of(Path(folder), mvox)
-        trace(*(_corner(volume) for volume in made.channels()))  # compiles
-        ours_s, found = timed(lambda: trace(*made.channels()))
-        peak = peak_mb()
-        theirs_s, _ = timed(lambda: [_smooth(volume) for volume in made.channels()])
-        ridge.BLOCK, grid.SLAB_VOXELS = 61, 3_000_000
-        again = trace(*made.channels())
+    made = Made.of(Path(folder), mvox)
+    trace(*(_corner(volume) for volume in made.channels()))  # compiles
+    ours_s, found = timed(lambda: trace(*made.channels()))
+    peak = peak_mb()
+    theirs_s, _ = timed(lambda: [_smooth(volume) for volume in made.channels()])
+    ridge.BLOCK, grid.SLAB_VOXELS = 61, 3_000_000
+    again = trace(*made.channels())
     same = len(found) == len(again) and all(
         np.array_equal(a.points_um, b.points_um) for a, b in zip(found, again, strict=False)
     )
@@ -123,7 +129,7 @@ class Made:
 
     @classmethod
     def of(cls, folder: Path, mvox: float) -> Made:
-        """Write both channels."""
+        """Its size and its tracks."""
         scale = (mvox * 1e6 / (np.prod(BRAIN_UM) / VOXEL_UM**3)) ** (1 / 3)
         shape = tuple(round(um * scale / VOXEL_UM) for um in BRAIN_UM)
         size = np.array(shape) * VOXEL_UM
@@ -132,9 +138,7 @@ class Made:
             top = np.array([a, 0.0, c]) * size
             depth = np.arange(0.0, 0.65 * size[1], 5.0)
             tracks.append(top + depth[:, None] * np.array([0.1, 1.0, -0.05]))
-        made = cls(folder, shape, tracks)
-        made._write()
-        return made
+        return cls(folder, shape, tracks)
 
     def channels(self) -> tuple[Any, Any]:
         """Dye and background, opened."""
@@ -144,15 +148,15 @@ class Made:
         dye, background = (open_stack(self.folder / n, voxel_um=um, code="PIR").finest for n in ("dye", "background"))
         return dye, background
 
-    def _write(self) -> None:
+    def write(self) -> None:
+        """Write both channels."""
         import zarr
 
         rng = np.random.default_rng(3)
         thick = CHUNK[0]
         noise = rng.normal(0, 12, (thick + 16, *self.shape[1:])).astype(np.float32)
-        y, x = (
-            np.linspace(-1, 1, n)[:, None] if k == 0 else np.linspace(-1, 1, n) for k, n in enumerate(self.shape[1:])
-        )
+        z_all, y, x = (np.linspace(-1, 1, n, dtype=np.float32) for n in self.shape)
+        y = y[:, None]
         dye, background = (
             zarr.create_array(
                 self.folder / name, shape=self.shape, chunks=CHUNK, dtype=np.uint16,
@@ -162,9 +166,9 @@ class Made:
         )  # fmt: skip
         for start in range(0, self.shape[0], thick):
             stop = min(start + thick, self.shape[0])
-            z = np.linspace(-1, 1, self.shape[0])[start:stop, None, None]
+            z = z_all[start:stop, None, None]
             depth = 1.0 - np.sqrt((z / 0.95) ** 2 + (y / 0.9) ** 2 + (x / 0.95) ** 2)
-            auto = 60 + 400 / (1 + np.exp(-depth.astype(np.float32) * 60)) * (1 + 0.2 * np.sin(9 * x + 7 * z))
+            auto = 60 + 400 / (1 + np.exp(-depth * 60)) * (1 + 0.2 * np.sin(9 * x + 7 * z))
             shift = int(rng.integers(16))
             background[start:stop] = auto + noise[shift : shift + stop - start]
             glow = 100 + 0.3 * auto + noise[16 - shift : 16 - shift + stop - start, ::-1, ::-1]
