@@ -28,6 +28,7 @@ LINES = {
     "atlas import": ["atlas import labels.nrrd template.nrrd structures.csv new-atlas --name 'my atlas' --licence CC0"],
     "atlas check": ["atlas check kestrel-07/atlas"],
     "check": ["check kestrel-07 --json"],
+    "ingest": ["ingest kestrel-07 --keep-full"],
     "run": ["run kestrel-07", "run kestrel-07 -q"],
     "register": ["register kestrel-07"],
     "trace": ["trace kestrel-07"],

@@ -19,7 +19,7 @@ PLACE = np.array([[2000.0, 2500.0, 2600.0]])
 @pytest.fixture
 def brain(tmp_path, monkeypatch):
     shift = Affine(np.eye(3), np.full(3, 100.0))
-    plain = Registration(PointTransform(shift), PointTransform(shift.inverse()), 30.0, {})
+    plain = Registration(PointTransform(shift), PointTransform(shift.inverse()), 30.0, {"local_correlation": 0.6})
     monkeypatch.setattr(stage, "register", lambda *_, **__: plain)
     return read_brain(write_good_brain(tmp_path))
 

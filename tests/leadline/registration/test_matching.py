@@ -30,7 +30,7 @@ def texture(seed: int = 0) -> np.ndarray:
 def test_the_step_finds_a_small_shift_whatever_the_brightness(
     move: tuple[float, float, float], gain: float, offset: float, turned: bool
 ) -> None:
-    """One Gauss-Newton step over the whole image finds a shift of under half a voxel to a fifth of a voxel, also
+    """One Gauss-Newton step over the whole image finds a shift of under half a voxel to a quarter of a voxel, also
     where the contrast is reversed."""
     fixed = texture()
     moved = shift(fixed, np.array(move) / STEP_UM, order=3, mode="nearest")
@@ -38,7 +38,7 @@ def test_the_step_finds_a_small_shift_whatever_the_brightness(
     weight = np.zeros(fixed.shape, np.float32)
     weight[4:-4, 4:-4, 4:-4] = 1
     evidence = compare(fixed, moved, weight, step_um=STEP_UM)
-    assert whole_step_um(evidence) == pytest.approx(np.array(move), abs=0.2 * STEP_UM)
+    assert whole_step_um(evidence) == pytest.approx(np.array(move), abs=0.25 * STEP_UM)
     assert evidence.agreement * (-1 if turned else 1) > 0.4
 
 
