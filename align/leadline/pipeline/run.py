@@ -95,7 +95,8 @@ def _key(step: Step, inputs: dict[str, str], record: Record) -> str:
     from leadline import __version__
 
     needs = {name: record.steps[name].product for name in step.needs}
-    return fingerprint_value([__version__, step.name, step.key, inputs, needs])
+    gives = sorted(path.name for path in step.gives)  # a program that writes one file more has to run again
+    return fingerprint_value([__version__, step.name, step.key, inputs, needs, gives])
 
 
 def _check(bench: Bench) -> None:
