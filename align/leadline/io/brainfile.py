@@ -4,13 +4,29 @@ from __future__ import annotations
 
 import dataclasses
 import os
-import re
 import tomllib
-from math import isfinite
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, TypeVar, get_type_hints
 
 from leadline.base.errors import MALFORMED, Faults, LeadlineError, nearest
+from leadline.io.brain_values import (
+    as_boolean,
+    as_count,
+    as_dtype,
+    as_increasing_pair,
+    as_integer,
+    as_name,
+    as_not_negative,
+    as_number,
+    as_positive,
+    as_text,
+    as_toward,
+    as_triple,
+    as_triple_positive,
+    as_whole,
+    as_whole_list,
+    as_word_pairs,
+)
 from leadline.model.anchor import Anchor
 from leadline.model.brain import Brain, Penetration, RecordingSource, StackSource
 from leadline.model.frames import orientation
@@ -21,7 +37,6 @@ if TYPE_CHECKING:
 
 T = TypeVar("T")
 FORMAT = 1
-_NAME = re.compile(r"[\w][\w .+-]{0,79}")
 _MISSING: Any = object()
 
 
@@ -119,7 +134,7 @@ class _Table:
         return self.get(key, lambda value: self._existing(value, folder_ok), '"the path of a file"', default)
 
     def _existing(self, value: object, folder_ok: bool) -> Path:
-        path = self.folder / _text(value)
+        path = self.folder / as_text(value)
         if not os.path.exists(path):  # unlike Path.exists it takes any text for a name
             raise LeadlineError(f"{path} does not exist", mend=_neighbours(path))
         if path.is_dir() and not folder_ok:
@@ -136,11 +151,11 @@ class _Table:
 
 
 def _brain(top: _Table, file: Path) -> Brain:
-    version = top.get("format", _integer, "1", default=FORMAT)
+    version = top.get("format", as_integer, "1", default=FORMAT)
     if version != FORMAT:
         top.fault(f"format = {version} is not known", f"This Leadline reads format = {FORMAT}", "format")
     head = top.table("brain", needed=True)
-    name = head.get("name", _name, '"a name"')
+    name = head.get("name", as_name, '"a name"')
     atlas = top.table("atlas", needed=True)
     atlas_path = atlas.path("path")
     stack = _stack(top.table("stack", needed=True))
@@ -161,9 +176,9 @@ def _stack(table: _Table) -> StackSource:
     source = StackSource(
         background=table.path("background") or Path(),
         dye=table.path("dye", None),
-        background_channel=table.get("background_channel", _whole, "0, 1, 2 …", 0),
-        dye_channel=table.get("dye_channel", _whole, "0, 1, 2 …", 0),
-        voxel_um=table.get("voxel_um", _triple_positive, "three sizes in um, such as [8.0, 4.0, 4.0]", None),
+        background_channel=table.get("background_channel", as_whole, "0, 1, 2 …", 0),
+        dye_channel=table.get("dye_channel", as_whole, "0, 1, 2 …", 0),
+        voxel_um=table.get("voxel_um", as_triple_positive, "three sizes in um, such as [8.0, 4.0, 4.0]", None),
         code=table.get("orientation", orientation, 'a three-letter code such as "PIR"', None),
     )
     table.finish()
@@ -171,21 +186,21 @@ def _stack(table: _Table) -> StackSource:
 
 
 def _penetration(table: _Table) -> Penetration:
-    name = table.get("name", _name, '"a name"')
+    name = table.get("name", as_name, '"a name"')
     if name:
         table.where = f"{table.where.rpartition(',')[0]}, penetration {name}"
     recordings = tuple(_recording(t) for t in table.tables("recording", "recording"))
     penetration = Penetration(
         name=name or "",
         probe=table.path("probe", folder_ok=False) or Path(),
-        tip_offset_um=table.get("tip_offset_um", _number, "a number of um", 0.0),
-        entry_near_um=table.get("entry_near_um", _triple, "[ap, dv, ml] in atlas um", None),
+        tip_offset_um=table.get("tip_offset_um", as_number, "a number of um", 0.0),
+        entry_near_um=table.get("entry_near_um", as_triple, "[ap, dv, ml] in atlas um", None),
         points=table.path("points", None, folder_ok=False),
-        inserted_um=table.get("inserted_um", _positive, "a positive number of um", None),
-        shank_toward=table.get("shank_toward", _toward, 'one of "A", "P", "S", "I", "R", "L"', None),
+        inserted_um=table.get("inserted_um", as_positive, "a positive number of um", None),
+        shank_toward=table.get("shank_toward", as_toward, 'one of "A", "P", "S", "I", "R", "L"', None),
         unit_table=table.path("unit_table", None, folder_ok=False),
         recordings=recordings,
-        probe_index=table.get("probe_index", _whole, "0, 1, 2 …: which probe of the probe file", None),
+        probe_index=table.get("probe_index", as_whole, "0, 1, 2 …: which probe of the probe file", None),
     )
     table.finish()
     return penetration
@@ -194,17 +209,17 @@ def _penetration(table: _Table) -> Penetration:
 def _recording(table: _Table) -> RecordingSource:
     source = RecordingSource(
         lfp=table.path("lfp", None, folder_ok=False),
-        sampling_hz=table.get("sampling_hz", _positive, "samples a second, such as 2500.0", None),
-        n_channels=table.get("n_channels", _count, "the number of traces, such as 384", None),
-        dtype=table.get("dtype", _dtype, '"int16" or "float32"', None),
-        uv_per_bit=table.get("uv_per_bit", _positive, "microvolts a bit, such as 4.69", None),
+        sampling_hz=table.get("sampling_hz", as_positive, "samples a second, such as 2500.0", None),
+        n_channels=table.get("n_channels", as_count, "the number of traces, such as 384", None),
+        dtype=table.get("dtype", as_dtype, '"int16" or "float32"', None),
+        uv_per_bit=table.get("uv_per_bit", as_positive, "microvolts a bit, such as 4.69", None),
         spikes=table.path("spikes", None, folder_ok=False),
         events=table.path("events", None, folder_ok=False),
         exclude=table.path("exclude", None, folder_ok=False),
-        skip_channels=table.get("skip_channels", _whole_list, "a list of trace numbers, such as [384]", ()),
-        lfp_series=table.get("lfp_series", _text, '"the name of an electrical series of the NWB file"', None),
+        skip_channels=table.get("skip_channels", as_whole_list, "a list of trace numbers, such as [384]", ()),
+        lfp_series=table.get("lfp_series", as_text, '"the name of an electrical series of the NWB file"', None),
         probe=table.path("probe", None, folder_ok=False),
-        probe_index=table.get("probe_index", _whole, "0, 1, 2 …: which probe of the recording's probe file", None),
+        probe_index=table.get("probe_index", as_whole, "0, 1, 2 …: which probe of the recording's probe file", None),
     )
     table.finish()
     if source.lfp is None and source.spikes is None:
@@ -227,13 +242,13 @@ def _recording(table: _Table) -> RecordingSource:
 
 def _anchor(table: _Table, penetrations: tuple[Penetration, ...]) -> Anchor | None:
     values = {
-        "penetration": table.get("penetration", _text, '"the name of a penetration"'),
-        "shank": table.get("shank", _whole, "0, 1, 2 …", 0),
-        "tip_distance_um": table.get("tip_distance_um", _number, "a number of um"),
-        "track_depth_um": table.get("track_depth_um", _number, "a number of um"),
-        "sd_um": table.get("sd_um", _positive, "a positive number of um", 40.0),
-        "landmark": table.get("landmark", _text, '"the name of a landmark"', ""),
-        "note": table.get("note", _text, '"any text"', ""),
+        "penetration": table.get("penetration", as_text, '"the name of a penetration"'),
+        "shank": table.get("shank", as_whole, "0, 1, 2 …", 0),
+        "tip_distance_um": table.get("tip_distance_um", as_number, "a number of um"),
+        "track_depth_um": table.get("track_depth_um", as_number, "a number of um"),
+        "sd_um": table.get("sd_um", as_positive, "a positive number of um", 40.0),
+        "landmark": table.get("landmark", as_text, '"the name of a landmark"', ""),
+        "note": table.get("note", as_text, '"any text"', ""),
     }
     table.finish()
     names = [p.name for p in penetrations]
@@ -265,16 +280,16 @@ def _settings(table: _Table) -> Settings:
 def _like(default: object) -> Callable[[Any], Any]:
     """The check that keeps a setting of the kind that its default is."""
     if isinstance(default, bool):
-        return _boolean
+        return as_boolean
     if isinstance(default, int):
-        return _whole
+        return as_whole
     if isinstance(default, float):
-        return _not_negative
+        return as_not_negative
     if default == ():
-        return _word_pairs
+        return as_word_pairs
     if isinstance(default, tuple):
-        return _increasing_pair
-    return _text
+        return as_increasing_pair
+    return as_text
 
 
 def _like_words(kind: object) -> str:
@@ -300,113 +315,3 @@ def _neighbours(path: Path) -> str:
     if not os.path.isdir(path.parent):
         return f"There is no folder {path.parent} either; paths are relative to brain.toml"
     return f"Paths are relative to brain.toml. {nearest(path.name, [p.name for p in path.parent.iterdir()])}"
-
-
-def _text(value: object) -> str:
-    if not isinstance(value, str) or "\0" in value:
-        raise TypeError
-    return value
-
-
-def _name(value: object) -> str:
-    text = _text(value)
-    if not _NAME.fullmatch(text):
-        raise LeadlineError(
-            f"{text!r} cannot be a name",
-            mend="It names files: use letters, digits, spaces, . _ + -, at most 80, a letter or digit first",
-        )
-    return text
-
-
-def _integer(value: object) -> int:
-    if isinstance(value, bool) or not isinstance(value, int):
-        raise TypeError
-    return value
-
-
-def _whole(value: object) -> int:
-    number = _integer(value)
-    if number < 0:
-        raise ValueError
-    return number
-
-
-def _count(value: object) -> int:
-    number = _whole(value)
-    if number == 0:
-        raise ValueError
-    return number
-
-
-def _whole_list(value: object) -> tuple[int, ...]:
-    if not isinstance(value, list):
-        raise TypeError
-    return tuple(_whole(item) for item in value)
-
-
-def _boolean(value: object) -> bool:
-    if not isinstance(value, bool):
-        raise TypeError
-    return value
-
-
-def _number(value: object) -> float:
-    if isinstance(value, bool) or not isinstance(value, int | float) or not isfinite(value):
-        raise TypeError
-    return float(value)
-
-
-def _positive(value: object) -> float:
-    number = _number(value)
-    if number <= 0:
-        raise ValueError
-    return number
-
-
-def _not_negative(value: object) -> float:
-    number = _number(value)
-    if number < 0:
-        raise ValueError
-    return number
-
-
-def _triple(value: object) -> tuple[float, float, float]:
-    if not isinstance(value, list):
-        raise TypeError
-    a, b, c = (_number(item) for item in value)
-    return a, b, c
-
-
-def _triple_positive(value: object) -> tuple[float, float, float]:
-    if not isinstance(value, list):
-        raise TypeError
-    a, b, c = (_positive(item) for item in value)
-    return a, b, c
-
-
-def _increasing_pair(value: object) -> tuple[float, float]:
-    if not isinstance(value, list):
-        raise TypeError
-    low, high = (_number(item) for item in value)
-    if low >= high:
-        raise ValueError
-    return low, high
-
-
-def _word_pairs(value: object) -> tuple[tuple[str, str], ...]:
-    if not isinstance(value, dict):
-        raise TypeError
-    return tuple((str(key), _text(word)) for key, word in value.items())
-
-
-def _toward(value: object) -> str:
-    text = _text(value).strip().upper()
-    if text not in tuple("APSIRL"):
-        raise ValueError
-    return text
-
-
-def _dtype(value: object) -> str:
-    if value not in ("int16", "float32"):
-        raise ValueError
-    return str(value)

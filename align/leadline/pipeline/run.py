@@ -67,10 +67,8 @@ def _run(bench: Bench, until: str) -> Summary:
             if step.stage in READ_THE_STACK:
                 ingest(bench)
             warnings = step.run(bench)
-        except Exception:
-            _require_unchanged(step, marks, record, brain)  # what went wrong is then the change
-            raise
-        _require_unchanged(step, marks, record, brain)
+        finally:
+            _require_unchanged(step, marks, record, brain)  # whatever else went wrong, a change is why
         outputs = {str(p.relative_to(brain.folder)): fingerprint_path(p) for p in step.gives}
         record.keep(step.name, Done(key, outputs, tuple(warnings), inputs, step.extra))
         done.append(step.name)
