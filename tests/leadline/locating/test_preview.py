@@ -38,7 +38,7 @@ def gaussian(seed=3, draws=4000):
 
 def conditioned(start, held):
     """Mean and sd of the depth of every row given one anchor, by the textbook formula for Gaussians."""
-    row = int(np.flatnonzero(TIP == held.tip_distance_um)[0])
+    row = int(np.flatnonzero(held.tip_distance_um == TIP)[0])
     cov = np.cov(start.depth_um.T, ddof=0)
     gain = cov[:, row] / (cov[row, row] + held.sd_um**2)
     mean = start.depth_um.mean(axis=0)
