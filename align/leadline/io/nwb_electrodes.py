@@ -147,7 +147,7 @@ def _by_place(probe: Probe, electrodes: Electrodes, here: IntArray, where: str) 
                 f"contact {probe.contact_id[contact]} at ({probe.x_um[contact]:g}, {probe.y_um[contact]:g}) um fits "
                 f"{len(found)} electrodes (ids {', '.join(str(i) for i in electrodes.id[here[found]][:4])})",
                 where=where,
-                mend="Give each probe its group, or places of their own to its shanks",
+                mend="Write rel_x, rel_y in um; give each probe its group, or places of their own to its shanks",
             )
         if found:
             row[contact] = here[found[0]]
