@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from leadline.report import style
+from leadline.report.lanes import GAP_STEPS
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -15,7 +16,6 @@ if TYPE_CHECKING:
     from leadline.model.atlas import Structures
     from leadline.pipeline.compare import Comparison
 
-SHANK_GAP = 0.5
 FEWEST_FOR_NAME = 0.02
 
 
@@ -61,18 +61,18 @@ def _colours(found: Comparison, structures: Structures | None) -> dict[str, str]
 def _strip(axis: Any, rows: pd.DataFrame, column: str, colour: dict[str, str], title: str) -> None:
     tip = rows[_tip(rows)].to_numpy(float)
     if column in rows.columns:
-        edges = _edges(np.unique(tip))
         heights = np.unique(tip)
-        span = edges[-1] - edges[0]
-        names = rows.groupby(_tip(rows))[column].first().loc[heights].to_numpy(object)
-        start = 0
-        for stop in [*(np.flatnonzero(names[1:] != names[:-1]) + 1), len(names)]:
-            name, low, high = str(names[start]), edges[start], edges[stop]
-            axis.axhspan(low, high, color=colour[name], lw=0)
-            if high - low > FEWEST_FOR_NAME * span:
-                axis.text(0.5, (low + high) / 2, name, ha="center", va="center", fontsize=7, fontweight="bold",
-                          color=style.readable_on(colour[name]), clip_on=True)  # fmt: skip
-            start = stop
+        named = rows.groupby(_tip(rows))[column].first()
+        for bank in _banks(heights):
+            names, edges = named.loc[bank].to_numpy(object), _edges(bank)
+            start = 0
+            for stop in [*(np.flatnonzero(names[1:] != names[:-1]) + 1), len(names)]:
+                name, low, high = str(names[start]), edges[start], edges[stop]
+                axis.axhspan(low, high, color=colour[name], lw=0)
+                if high - low > FEWEST_FOR_NAME * np.ptp(heights):
+                    axis.text(0.5, (low + high) / 2, name, ha="center", va="center", fontsize=7, fontweight="bold",
+                              color=style.readable_on(colour[name]), clip_on=True)  # fmt: skip
+                start = stop
     axis.set(xlim=(0, 1), xticks=[])
     axis.set_title(title if len(title) < 13 else title[:12] + "…", fontsize=7.5)
 
@@ -94,6 +94,13 @@ def _between(axis: Any, rows: pd.DataFrame) -> None:
     axis.locator_params(axis="x", nbins=3)
     if not same.all():
         axis.legend(loc="upper center", bbox_to_anchor=(0.5, -0.07), handletextpad=0)
+
+
+def _banks(heights: FloatArray) -> list[FloatArray]:
+    """Heights in blocks without wide gaps: between two banks of sites nothing was recorded."""
+    step = np.diff(heights)
+    cuts = np.flatnonzero(step > GAP_STEPS * np.median(step)) + 1 if step.size else []
+    return list(np.split(heights, cuts))
 
 
 def _edges(heights: FloatArray) -> FloatArray:
