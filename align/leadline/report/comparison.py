@@ -64,7 +64,7 @@ def _strip(axis: Any, rows: pd.DataFrame, column: str, colour: dict[str, str], t
         heights = np.unique(tip)
         named = rows.groupby(_tip(rows))[column].first()
         for bank in _banks(heights):
-            names, edges = named.loc[bank].to_numpy(object), _edges(bank)
+            names, edges = named.loc[bank.tolist()].to_numpy(object), _edges(bank)
             start = 0
             for stop in [*(np.flatnonzero(names[1:] != names[:-1]) + 1), len(names)]:
                 name, low, high = str(names[start]), edges[start], edges[stop]
@@ -99,8 +99,8 @@ def _between(axis: Any, rows: pd.DataFrame) -> None:
 def _banks(heights: FloatArray) -> list[FloatArray]:
     """Heights in blocks without wide gaps: between two banks of sites nothing was recorded."""
     step = np.diff(heights)
-    cuts = np.flatnonzero(step > GAP_STEPS * np.median(step)) + 1 if step.size else []
-    return list(np.split(heights, cuts))
+    wide = step > GAP_STEPS * (np.median(step) if step.size else 1.0)
+    return list(np.split(heights, np.flatnonzero(wide) + 1))
 
 
 def _edges(heights: FloatArray) -> FloatArray:
