@@ -15,6 +15,7 @@ import pytest
 import zarr
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from tests.leadline.io.test_reduce import by_matrix
 
 from leadline.base.errors import LeadlineError
 from leadline.base.progress import Cancelled
@@ -27,17 +28,9 @@ Usage = namedtuple("Usage", "total used free")
 
 
 def boxes(voxels, factor):
-    """Means over boxes as one weight matrix for each axis, and the place of each box's middle, in input voxels."""
-    out, middles = voxels.astype(float), []
-    for axis, f in enumerate(factor):
-        n = out.shape[axis]
-        m = max(1, int(np.rint(n / f - 1e-9)))
-        low, high = np.arange(m)[:, None] * f, (np.arange(m)[:, None] + 1) * f
-        weight = np.clip(np.minimum(np.arange(n) + 1.0, high) - np.maximum(np.arange(n), low), 0, None)
-        weight /= weight.sum(axis=1, keepdims=True)
-        out = np.moveaxis(np.tensordot(weight, out, (1, axis)), 0, axis)
-        middles.append((np.arange(m) + 0.5) * f - 0.5)
-    return out, middles
+    """Means over boxes, and the place of each box's middle, in input voxels."""
+    out = by_matrix(voxels, factor)
+    return out, [(np.arange(m) + 0.5) * f - 0.5 for m, f in zip(out.shape, factor, strict=True)]
 
 
 def noisy(shape, dtype=np.uint16, seed=0):
