@@ -19,6 +19,7 @@ INSERTED_SD_SHARE = 0.15
 ROBUST_AT_SD = 3.0
 MISSING_COST = 10.0
 MISSING_SHANK_COST = 4.0
+LEFT_OUT_COST = 6.0  # a track of another insertion hardly stands by chance where a shank of this probe would
 CLEAR_COST = 2.0  # a second answer less than this behind the best, in log likelihood, is nearly as good
 
 
@@ -135,11 +136,13 @@ def _choices(w: int, wanted: Wanted, tracks: Sequence[TracedPath]) -> list[_Choi
         if many == 1:
             out.append(_Choice(w, (i,), _fit(wanted, [track])))
     if many > 1:
-        for group in shank_groups([t.atlas_um for t in tracks], wanted.shank_x_um, wanted.shank_toward):
-            used = [tracks[i] for i in group.slots if i is not None]
-            absent = many - len(used)
-            cost = group.cost + _fit(wanted, used) + MISSING_SHANK_COST * absent
-            out.append(_Choice(w, group.slots, cost, group))
+        groups = shank_groups([t.atlas_um for t in tracks], wanted.shank_x_um, wanted.shank_toward)
+        sets = [frozenset(i for i in group.slots if i is not None) for group in groups]
+        alone = [g.cost + MISSING_SHANK_COST * (many - len(s)) for g, s in zip(groups, sets, strict=True)]
+        for group, members, cost in zip(groups, sets, alone, strict=True):
+            left_out = any(members < s and c < cost + CLEAR_COST for s, c in zip(sets, alone, strict=True))
+            fit = _fit(wanted, [tracks[i] for i in sorted(members)])
+            out.append(_Choice(w, group.slots, cost + fit + LEFT_OUT_COST * left_out, group))
     return out
 
 

@@ -21,7 +21,7 @@ if TYPE_CHECKING:
     from leadline.tracing.assign import TracedPath, Wanted
 
 AXES = ("ap", "dv", "ml")
-BETTER = 7.0  # log likelihood by which another reading of the plans must be better
+BETTER = 6.0  # log likelihood by which another reading of the plans must be better
 ASTRAY_UM = 1000.0
 
 
@@ -30,21 +30,22 @@ def doubts(wanted: Sequence[Wanted], tracks: Sequence[TracedPath], middle_um: fl
 
     Parameters
     ----------
-    wanted : penetrations; those that state no plan do not count.
+    wanted : every penetration; those that state no plan take up tracks of their own number of shanks and length.
     tracks : all that were found or drawn, whosever they are.
     middle_um : ml of the atlas's midline.
     """
-    # which way shanks grow and how deep they went says nothing of which side they went in
-    planned = [replace(w, shank_toward=None, inserted_um=None) for w in wanted if w.entry_near_um is not None]
+    planned = [w for w in wanted if w.entry_near_um is not None]
     if not planned or not tracks:
         return ()
+    # which way shanks grow says nothing of which side they went in
+    others = [replace(w, shank_toward=None) for w in wanted if w.entry_near_um is None]
     plans = np.array([w.entry_near_um for w in planned], float)
-    plain = least_cost(tracks, planned)
+    plain = least_cost(tracks, [*_moved(planned, plans), *others])
     if plain < BETTER:
         return ()
     readings, cost = _readings(plans, middle_um), {}
     for words, moved in readings.items():
-        cost[words] = least_cost(tracks, _moved(planned, moved))
+        cost[words] = least_cost(tracks, [*_moved(planned, moved), *others])
         if cost[words] < BETTER:  # nothing can fit far better than that
             break
     words = min(cost, key=lambda w: cost[w])
@@ -71,7 +72,7 @@ def _readings(plans: FloatArray, middle_um: float) -> dict[str, FloatArray]:
 
 def _moved(planned: Sequence[Wanted], plans: FloatArray) -> list[Wanted]:
     places = ((float(ap), float(dv), float(ml)) for ap, dv, ml in plans)
-    return [replace(w, entry_near_um=place) for w, place in zip(planned, places, strict=True)]
+    return [replace(w, shank_toward=None, entry_near_um=place) for w, place in zip(planned, places, strict=True)]
 
 
 def _nearest(plans: FloatArray, entries: FloatArray) -> FloatArray:

@@ -115,6 +115,17 @@ def test_a_missing_shank_is_named_and_the_others_keep_their_places():
     assert "shank 1" in got.missing[0]
 
 
+def test_a_probe_of_one_shank_does_not_take_a_shank_of_a_comb():
+    """Nothing by chance stands parallel at just the spacing of four others: the single shank left no track."""
+    tracks = comb(5000, 7000)
+    wanted = [Wanted("A", entry_near_um=(4700, 300, 7000)), Wanted("B", FOUR, shank_toward="P")]
+    got = assign(tracks, wanted)
+    assert got.matches == {("B", k): k for k in range(4)}
+    assert "'A'" in got.missing[0]
+    stray = [*tracks, track(4700, 7000, lean=0.3)]
+    assert assign(stray, wanted).matches[("A", 0)] == 4
+
+
 def test_parallel_tracks_at_another_spacing_are_no_comb():
     got = assign(comb(4000, 7000, pitch=1500), [Wanted("M", FOUR)])
     assert not got.matches

@@ -53,6 +53,9 @@ def test_shanks_tell_two_penetrations_of_mirrored_aims_apart():
     ]
     assert doubts(wanted, tracks(both), MIDDLE_UM) == ()
     assert "mirrored left to right" in doubts(wanted, tracks(mirrored(both)), MIDDLE_UM)[0]
+    one = [wanted[0], Wanted("B", wanted[1].shank_x_um)]  # B claims its four shanks without a plan
+    assert doubts(one, tracks(both), MIDDLE_UM) == ()
+    assert "mirrored left to right" in doubts(one, tracks(mirrored(both)), MIDDLE_UM)[0]
 
 
 def test_one_lateral_plan_is_enough_and_one_near_the_midline_is_not():
