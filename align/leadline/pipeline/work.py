@@ -140,6 +140,7 @@ def _dye_tracks(
     bench: Bench, wanted: Sequence[Wanted], background: Volume, dye: Volume | None, transform: PointTransform
 ) -> tuple[list[Track], tuple[str, ...], tuple[str, ...], list[TracedPath]]:
     """Tracks of penetrations, what is missing, notes, and all that was found."""
+    from leadline.tracing import channels
     from leadline.tracing.assign import TracedPath, assign
     from leadline.tracing.find import trace as find
 
@@ -148,11 +149,13 @@ def _dye_tracks(
     if dye is None:
         why = "the brain has no dye channel, and the penetration no hand-traced points"
         return [], tuple(f"penetration '{w.name}' has no track: {why}" for w in wanted), (), []
-    traces = find(dye, background, settings=bench.brain.settings.trace, progress=bench.progress)
+    settings, progress = bench.brain.settings.trace, bench.progress
+    traces = find(dye, background, settings=settings, progress=progress)
+    exchanged = () if traces else channels.doubts(dye, background, settings=settings, progress=progress)
     paths = [TracedPath(transform(t.points_um), t.contrast) for t in traces]
     result = assign(paths, wanted)
     tracks = [_track(name, shank, traces[i], transform, "dye") for (name, shank), i in result.matches.items()]
-    return tracks, result.missing, result.notes, paths
+    return tracks, result.missing, (*result.notes, *exchanged), paths
 
 
 def _track(name: str, shank: int, traced: Trace, transform: PointTransform, source: str) -> Track:
