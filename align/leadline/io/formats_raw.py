@@ -12,7 +12,8 @@ from typing import Any
 import numpy as np
 
 from leadline.base.errors import LeadlineError
-from leadline.io.images import READ_FAULTS, UNIT_UM, Image, Mapped, Picked, letters_of, pick, unreadable, whole_level
+from leadline.io.images import READ_FAULTS, UNIT_UM, Image, Picked, letters_of, pick, unreadable, whole_level
+from leadline.io.one_piece import OnePiece
 
 NIFTI_SUFFIXES = (".nii", ".nii.gz")
 NRRD_SUFFIXES = (".nrrd", ".nhdr")
@@ -32,7 +33,7 @@ _SPACES = {"r": (0, 1), "l": (0, -1), "a": (1, 1), "p": (1, -1), "s": (2, 1), "i
 
 
 class Block:
-    """Voxels of one file in Fortran order, mapped on reading.
+    """Voxels of one file in Fortran order, read on slicing.
 
     ``offset`` : bytes before the first voxel. ``packed_at`` : where in the file a packed stream begins that ``opener``
     unpacks and of which ``offset`` then counts; None where nothing is packed. Packed voxels are unpacked into an
@@ -57,18 +58,24 @@ class Block:
         self._scaled = (slope, shift) != (1.0, 0.0)
         self.dtype = np.dtype(np.float32) if self._scaled else self._stored
         self._end = offset + int(np.prod(shape, dtype=np.int64)) * self._stored.itemsize
-        self._map: Mapped | None = None
+        self._piece: OnePiece | None = None
         self._require_whole()
 
     def __getitem__(self, key: Any) -> Any:
-        block = self._mapped()[key]
+        block = self._unpacked()[key]
         return block * np.float32(self._slope) + np.float32(self._shift) if self._scaled else block
 
-    def _mapped(self) -> Any:
-        if self._map is None:
+    def pieces(self, key: Any) -> Any:
+        """As those of :class:`OnePiece`; None for voxels that have to be scaled."""
+        if self._scaled:
+            return None
+        return True if key is None else self._unpacked().pieces(key)
+
+    def _unpacked(self) -> OnePiece:
+        if self._piece is None:
             file: Any = self.path if self._packed_at is None else self._inflated(self._packed_at)
-            self._map = Mapped(file, self._stored, self._offset, self.shape, "F")
-        return self._map
+            self._piece = OnePiece(file, self._stored, self._offset, self.shape, "F")
+        return self._piece
 
     def _inflated(self, packed_at: int) -> Any:
         file = tempfile.TemporaryFile()  # noqa: SIM115 - lives as long as this object
@@ -95,7 +102,7 @@ class Block:
             length = int.from_bytes(packed.read(4), "little")
         if self._opener is not gzip.open or length != self._end % 2**32:
             try:  # several gzip members, or cut short: only inflating tells
-                self._mapped()
+                self._unpacked()
             except LeadlineError:
                 raise
             except READ_FAULTS as error:

@@ -14,16 +14,15 @@ from xml.etree import ElementTree
 import numpy as np
 
 from leadline.base.errors import LeadlineError
-from leadline.io.images import READ_FAULTS, UNIT_UM, Image, Level, Mapped, pick, unreadable, whole_level
+from leadline.io.images import READ_FAULTS, UNIT_UM, Image, Level, pick, unreadable, whole_level
 from leadline.io.levels import placed
+from leadline.io.one_piece import PIECE_BYTES, OnePiece
 
 if TYPE_CHECKING:
     from collections.abc import Iterator
     from pathlib import Path
 
 TIFF_SUFFIXES = (".tif", ".tiff", ".btf", ".tf8", ".tf2")
-PIECE_BYTES = 2**20
-"""Read at once of planes that lie unpacked: what fits into a processor's cache beside the sums."""
 _PHOTOMETRIC_RGB = 2
 _NATIVE = "<" if sys.byteorder == "little" else ">"
 
@@ -94,7 +93,7 @@ def _require_grey(page: Any, path: Path) -> None:
 
 
 def _source(file: Any, level: Any, series: Any, k: int) -> Any:
-    """A lazy array of one level: a memory map where the voxels lie in one piece, else chunks by zarr."""
+    """A lazy array of one level: read in one piece where the voxels lie so, else chunks by zarr."""
     import zarr
 
     if level.dataoffset is not None:
@@ -102,7 +101,7 @@ def _source(file: Any, level: Any, series: Any, k: int) -> Any:
         if level.dataoffset + level.nbytes > size:
             raise EOFError(f"{level.nbytes} bytes of voxels promised, {size - level.dataoffset} there")
         dtype = level.dtype.newbyteorder(file.byteorder)
-        return Mapped(file.filehandle.path, dtype, level.dataoffset, tuple(level.shape), "C")
+        return OnePiece(file.filehandle.path, dtype, level.dataoffset, tuple(level.shape), "C")
     pages = list(series.pages) if k == 0 else []
     if any(page is None for page in pages):
         raise EOFError(f"plane {[p is None for p in pages].index(True)} of {len(pages)} is missing")

@@ -5,7 +5,7 @@ from __future__ import annotations
 import struct
 import zlib
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, Any, Literal
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -70,29 +70,15 @@ class Picked:
         return True if block is None else self._pieces(offered, iter(block))
 
     def _pieces(self, offered: Any, keys: Any) -> Any:
-        for start, piece in offered(tuple(next(keys) if at is None else at for at in self._fixed)):
-            place = tuple(a for a, at in zip(start, self._fixed, strict=True) if at is None)
-            voxels = piece.reshape([n for n, at in zip(piece.shape, self._fixed, strict=True) if at is None])
-            yield place, voxels.astype(self.dtype, copy=False)
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class Mapped:
-    """Voxels that lie in one piece in a file. Every read maps it anew, so that what has been read is let go of and
-    memory does not grow with the file.
-
-    ``file`` : a path or an open file. ``offset`` : bytes before the first voxel. ``order`` : 'C' where the last axis
-    runs fastest, 'F' where the first does.
-    """
-
-    file: Any
-    dtype: np.dtype[Any]
-    offset: int
-    shape: tuple[int, ...]
-    order: Literal["C", "F"]
-
-    def __getitem__(self, key: Any) -> Any:
-        return np.memmap(self.file, self.dtype, "r", self.offset, self.shape, self.order)[key]
+        try:
+            for start, piece in offered(tuple(next(keys) if at is None else at for at in self._fixed)):
+                place = tuple(a for a, at in zip(start, self._fixed, strict=True) if at is None)
+                voxels = piece.reshape([n for n, at in zip(piece.shape, self._fixed, strict=True) if at is None])
+                yield place, voxels.astype(self.dtype, copy=False)
+        except LeadlineError:
+            raise
+        except READ_FAULTS as error:
+            raise unreadable(self._where, error) from error
 
 
 @dataclass(frozen=True, slots=True, eq=False)
