@@ -1,22 +1,20 @@
-"""TIFF: one file (OME, ImageJ or plain, with or without a pyramid) or a folder of planes."""
+"""TIFF in one file: OME, ImageJ or plain, with or without a pyramid."""
 
 from __future__ import annotations
 
 import logging
-import os
 import re
 import sys
 from contextlib import contextmanager
-from itertools import pairwise
 from typing import TYPE_CHECKING, Any
 from xml.etree import ElementTree
 
 import numpy as np
 
 from leadline.base.errors import LeadlineError
-from leadline.io.images import READ_FAULTS, UNIT_UM, Image, Level, pick, unreadable, whole_level
+from leadline.io.images import READ_FAULTS, UNIT_UM, Image, Level, pick, unreadable
 from leadline.io.levels import placed
-from leadline.io.one_piece import PIECE_BYTES, OnePiece
+from leadline.io.one_piece import OnePiece
 
 if TYPE_CHECKING:
     from collections.abc import Iterator
@@ -24,7 +22,7 @@ if TYPE_CHECKING:
 
 TIFF_SUFFIXES = (".tif", ".tiff", ".btf", ".tf8", ".tf2")
 _PHOTOMETRIC_RGB = 2
-_NATIVE = "<" if sys.byteorder == "little" else ">"
+NATIVE = "<" if sys.byteorder == "little" else ">"
 
 
 def open_tiff(path: Path, channel: int) -> Image:
@@ -35,14 +33,14 @@ def open_tiff(path: Path, channel: int) -> Image:
     """
     import tifffile
 
-    with _damage_is_an_error(path):
+    with damage_is_an_error(path):
         file = tifffile.TiffFile(path)
         if not (file.is_ome or file.is_imagej) and len(file.series) > 1:
             file = tifffile.TiffFile(path, is_shaped=False)
         series = _only_series(file, path)
         axes = _axis_names(series.axes, path)
-        _require_grey(series.keyframe, path)
-        sizes = dict(zip("xyz", _sizes(file), strict=True))
+        require_grey(series.keyframe, path)
+        sizes = dict(zip("xyz", told_sizes(file), strict=True))
         sources = [_source(file, level, series, k) for k, level in enumerate(series.levels)]
     finest = pick(sources[0], axes, channel, path)
     coarser = [source for source in sources[1:] if min(_spatial(source.shape, axes)) > 1]
@@ -83,7 +81,8 @@ def _axis_names(axes: str, path: Path) -> str:
     return names
 
 
-def _require_grey(page: Any, path: Path) -> None:
+def require_grey(page: Any, path: Path) -> None:
+    """Raise LeadlineError for a page of colour pictures."""
     if int(page.photometric) == _PHOTOMETRIC_RGB:
         raise LeadlineError(
             "holds colour (RGB) pictures, not measured channels",
@@ -128,7 +127,7 @@ def _level(data: Any, finest: tuple[int, ...], chunk: tuple[int, ...]) -> Level:
     return Level(data, np.where(fits, whole, ratio), np.zeros(3), (a, b, c))
 
 
-def _sizes(file: Any) -> tuple[float | None, float | None, float | None]:
+def told_sizes(file: Any) -> tuple[float | None, float | None, float | None]:
     """Voxel size in um along x, y, z, None where the file does not tell."""
     if file.is_ome:
         return _ome_sizes(file.ome_metadata)
@@ -189,181 +188,6 @@ def _imagej_sizes(file: Any) -> tuple[float | None, float | None, float | None]:
     )
 
 
-class Planes:
-    """A folder of TIFF planes as one array ``(planes, channels, rows, columns)``; reads the planes asked for.
-
-    ``offsets`` : where the voxels of each file begin, when all of them lie there in one piece, unpacked; else None.
-    """
-
-    def __init__(
-        self, files: list[Path], channels: int, shape: tuple[int, int], dtype: Any, offsets: list[int] | None = None
-    ) -> None:
-        self._files, self._offsets = files, offsets
-        self.shape = (len(files), channels, *shape)
-        self.dtype = np.dtype(dtype)
-
-    def __getitem__(self, key: Any) -> Any:
-        planes, channel, rows, columns = key
-        if not isinstance(planes, slice):
-            return _read_plane(self._files[planes], channel)[rows, columns]
-        numbers = range(*planes.indices(len(self._files)))
-        rows, columns = (slice(*s.indices(n)) for s, n in zip((rows, columns), self.shape[2:], strict=True))
-        lines, places = (len(range(s.start, s.stop, s.step)) for s in (rows, columns))
-        out = np.empty((len(numbers), lines, places), self.dtype)
-        whole = (lines, places) == self.shape[2:]
-        for k, number in enumerate(numbers):
-            here = out[k]
-            plane = _read_plane(self._files[number], channel, here if whole else None)
-            if not np.may_share_memory(plane, here):
-                here[...] = plane[rows, columns]
-        return out
-
-    def pieces(self, key: Any) -> Any:
-        """Whole rows of a run of planes, about 1 MiB at a time into one buffer; of None: whether this can be done."""
-        if key is None:
-            return self._offsets is not None
-        return self._rows(key[0], key[2])
-
-    def _rows(self, planes: slice, rows: slice) -> Iterator[Any]:
-        assert self._offsets is not None
-        columns, size = self.shape[3], self.shape[3] * self.dtype.itemsize
-        at_once = max(1, min(rows.stop - rows.start, PIECE_BYTES // size))
-        buffer = np.empty((at_once, columns), self.dtype)
-        for number in range(planes.start, planes.stop):
-            file = self._files[number]
-            with file.open("rb", buffering=0) as handle:
-                _fetch_ahead(self._files[number + 1 : number + 2])
-                handle.seek(self._offsets[number] + rows.start * size)
-                for row in range(rows.start, rows.stop, at_once):
-                    piece = buffer[: min(at_once, rows.stop - row)]
-                    if handle.readinto(piece.data.cast("B")) != piece.nbytes:
-                        raise unreadable(file, EOFError("the plane is cut short"))
-                    yield (number, 0, row, 0), piece[None, None]
-
-
-def _fetch_ahead(files: list[Path]) -> None:
-    """Ask the system to read files into memory while we are busy with another, where it can be asked."""
-    if hasattr(os, "posix_fadvise"):
-        for file in files:
-            with file.open("rb", buffering=0) as handle:
-                os.posix_fadvise(handle.fileno(), 0, 0, os.POSIX_FADV_WILLNEED)
-
-
-def _read_plane(file: Path, channel: int, out: Any = None) -> Any:
-    """One channel of a plane, into ``out`` where that can be done without a copy."""
-    import tifffile
-
-    try:
-        with tifffile.TiffFile(file) as tiff:
-            page = tiff.pages[0]
-            if page.samplesperpixel == 1:
-                page = tiff.pages[channel]
-                fits = out is not None and page.shape == out.shape and page.dtype == out.dtype
-                return page.asarray(out=out if fits else None, maxworkers=1)
-            samples = page.asarray(maxworkers=1)
-            return samples[channel] if page.planarconfig == 2 else samples[..., channel]
-    except (tifffile.TiffFileError, *READ_FAULTS) as error:
-        raise unreadable(file, error) from error
-
-
-def open_planes(folder: Path, channel: int) -> Image:
-    """Read the headers of a folder of TIFF planes, in the natural order of their numbers.
-
-    The size of a pixel is told where the planes carry it; the distance of the planes only where their metadata do.
-    Raises LeadlineError when a number is missing, or planes differ in shape or type.
-    """
-    files = in_order(
-        [f for f in folder.iterdir() if f.suffix.lower() in TIFF_SUFFIXES and not f.name.startswith(".")], folder
-    )
-    first = _header(files[0])
-    offsets = [first[5]]
-    for file in files[1:]:
-        here = _header(file)
-        offsets.append(here[5])
-        if here[:4] != first[:4]:
-            raise LeadlineError(
-                f"is {_words(here)}, the plane {files[0].name} is {_words(first)}",
-                where=str(file),
-                mend="Give planes of one shape and type",
-            )
-    channels, rows, columns, dtype, (x, y, z), _ = first
-    planes = Planes(files, channels, (rows, columns), dtype, None if None in offsets else offsets)
-    data = pick(planes, "zcyx", channel, folder)
-    return Image(folder, (whole_level(data, (1, rows, columns)),), (z, y, x))
-
-
-def _words(header: Any) -> str:
-    return f"{header[1]} x {header[2]} of {header[3]}, {header[0]} channel{'s' if header[0] > 1 else ''}"
-
-
-def _header(file: Path) -> Any:
-    import tifffile
-
-    with _damage_is_an_error(file), tifffile.TiffFile(file) as tiff:
-        page = tiff.pages[0]
-        _require_grey(page, file)
-        pages = len(tiff.pages)
-        samples = int(page.samplesperpixel)
-        if pages > 1 and samples > 1:
-            raise LeadlineError("has several pages of several samples", where=str(file), mend="Export grey planes")
-        end = max((o + n for o, n in zip(page.dataoffsets, page.databytecounts, strict=True)), default=0)
-        if end > tiff.filehandle.size:
-            raise EOFError("the plane is cut short")
-        dtype = np.dtype(page.dtype if page.dtype is not None else "V1").newbyteorder("=")
-        plain = pages == samples == 1 and page.is_contiguous and tiff.byteorder == _NATIVE
-        offset = int(page.dataoffsets[0]) if plain else None
-        return max(pages, samples), int(page.imagelength), int(page.imagewidth), dtype, _sizes(tiff), offset
-
-
-def in_order(files: list[Path], folder: Path) -> list[Path]:
-    """Planes by number: plane_2 before plane_10.
-
-    Raises LeadlineError when there are none, when the names follow two patterns, or when a number is missing.
-
-    Examples
-    --------
-    >>> from pathlib import Path
-    >>> [f.name for f in in_order([Path("p_10.tif"), Path("p_9.tif")], Path("."))]
-    ['p_9.tif', 'p_10.tif']
-    """
-    if not files:
-        raise LeadlineError(
-            "holds no TIFF planes and no OME-Zarr metadata",
-            where=str(folder),
-            mend="Give a folder of .tif planes or an .ome.zarr folder",
-        )
-    names = {file: re.split(r"(\d+)", file.stem) for file in files}
-    patterns = sorted({re.sub(r"\d+", "#", file.stem) for file in files})
-    if len(patterns) > 1:
-        raise LeadlineError(
-            f"its files are named by more than one pattern: {', '.join(patterns[:4])}",
-            where=str(folder),
-            mend="Keep one channel's planes to a folder",
-        )
-    ordered = sorted(files, key=lambda f: [int(part) for part in names[f][1::2]])
-    columns = list(zip(*([int(part) for part in names[f][1::2]] for f in ordered), strict=True))
-    number = next((column for column in columns if len(set(column)) == len(files)), None)
-    if number is None:
-        raise LeadlineError(
-            "no number in the file names tells all planes apart",
-            where=str(folder),
-            mend="Keep one channel's planes to a folder, numbered from top to bottom",
-        )
-    _require_all(sorted(number), folder)
-    return sorted(files, key=lambda f: int(names[f][1::2][columns.index(number)]))
-
-
-def _require_all(number: list[int], folder: Path) -> None:
-    steps = np.diff(number)
-    if len(steps) and (steps > 1.5 * np.median(steps)).any():
-        gap = next((a, b) for a, b in pairwise(number) if b - a > 1.5 * np.median(steps))
-        raise LeadlineError(
-            f"planes are missing between number {gap[0]} and number {gap[1]}",
-            where=str(folder),
-            mend="Copy the missing planes, or renumber if none is missing",
-        )
-
-
 class _Listener(logging.Handler):
     def __init__(self) -> None:
         super().__init__(logging.ERROR)
@@ -374,7 +198,7 @@ class _Listener(logging.Handler):
 
 
 @contextmanager
-def _damage_is_an_error(path: Path) -> Iterator[None]:
+def damage_is_an_error(path: Path) -> Iterator[None]:
     """tifffile logs damage and reads on with what is left: here it is an error."""
     import tifffile
 

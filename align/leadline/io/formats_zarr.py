@@ -15,6 +15,7 @@ import numpy as np
 from leadline.base.errors import LeadlineError
 from leadline.io.images import READ_FAULTS, UNIT_UM, Image, Level, pick, unreadable
 from leadline.io.levels import placed
+from leadline.io.zarr_chunks import chunked
 
 if TYPE_CHECKING:
     from pathlib import Path
@@ -43,7 +44,7 @@ def open_zarr(path: Path, channel: int) -> Image:
     except (zarr.errors.BaseZarrError, *READ_FAULTS) as error:
         raise unreadable(path, error) from error
     if isinstance(node, zarr.Array):
-        data = pick(node, "zyx" if node.ndim == 3 else "?" * node.ndim, channel, path)
+        data = pick(chunked(node), "zyx" if node.ndim == 3 else "?" * node.ndim, channel, path)
         return Image(path, (Level(data, np.ones(3), np.zeros(3), _three(node.chunks)),))
     try:
         return _image(path, node, channel)
@@ -72,8 +73,11 @@ def _image(path: Path, group: Any, channel: int) -> Image:
         if levels and min(array.shape[k] for k in keep) < 2:
             continue  # the tip of a pyramid is no stack
         factor, offset = scale / scaled[0][0], (shift - scaled[0][1]) / scaled[0][0]
-        chunk = _three([(array.shards or array.chunks)[k] for k in keep])
-        levels.append(Level(pick(array, names, channel, path), factor[keep], offset[keep], chunk))
+        source = chunked(array)
+        # shards that can be read chunk by chunk are
+        chunks = array.chunks if source is not array else array.shards or array.chunks
+        chunk = _three([chunks[k] for k in keep])
+        levels.append(Level(pick(source, names, channel, path), factor[keep], offset[keep], chunk))
     order = sorted(range(len(levels)), key=lambda k: float(levels[k].factor.prod()))
     if order[0] != 0:
         raise LeadlineError("its first dataset is not the finest", where=str(path), mend="List datasets finest first")

@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import os
 import struct
 import zlib
+from contextlib import suppress
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -15,7 +17,7 @@ from leadline.model.frames import orientation
 from leadline.model.volume import Volume, Voxels
 
 if TYPE_CHECKING:
-    from collections.abc import Sequence
+    from collections.abc import Iterable, Sequence
     from pathlib import Path
 
 SAME_WITHIN = 0.01
@@ -105,6 +107,14 @@ class Image:
     letters: tuple[str | None, str | None, str | None] = (None, None, None)
     unitless: tuple[float, float, float] | None = None
     notes: tuple[str, ...] = ()
+
+
+def fetch_ahead(files: Iterable[Path]) -> None:
+    """Ask the system to read files into memory while we are busy with another, where it can be asked."""
+    if hasattr(os, "posix_fadvise"):
+        for file in files:
+            with suppress(OSError), file.open("rb", buffering=0) as handle:
+                os.posix_fadvise(handle.fileno(), 0, 0, os.POSIX_FADV_WILLNEED)
 
 
 def unreadable(path: Path, error: BaseException) -> LeadlineError:

@@ -33,6 +33,8 @@ FULL_CHUNK = (4, 512, 512)
 NESTED_VOXELS = 100e6
 """A level that is a whole multiple of another and not larger than this is made from that one, in memory."""
 SLACK_BYTES = 64 * 2**20
+_WRITTEN = {"write_empty_chunks": True}
+"""Looking for empty chunks costs more than writing those that there are."""
 _AGAINST = {
     "R": "left-to-right", "L": "right-to-left", "P": "anterior-to-posterior", "A": "posterior-to-anterior",
     "S": "inferior-to-superior", "I": "superior-to-inferior",
@@ -189,7 +191,7 @@ def _array(folder: Path, level: Level) -> Any:
     import zarr
 
     if (folder / level.name / "zarr.json").is_file():
-        return zarr.open_array(folder / level.name, mode="r+")
+        return zarr.open_array(folder / level.name, mode="r+", config=_WRITTEN)
     return zarr.create_array(
         folder / level.name,
         shape=level.grid.shape,
@@ -199,6 +201,7 @@ def _array(folder: Path, level: Level) -> Any:
         compressors=zarr.codecs.BloscCodec(cname="lz4", clevel=5, shuffle="bitshuffle"),
         dimension_names=("z", "y", "x"),
         zarr_format=3,
+        config=_WRITTEN,
     )
 
 

@@ -23,8 +23,9 @@ def open_image(path: Path, channel: int = 0) -> Image:
 
     Raises LeadlineError when it is missing, damaged, of an unknown format or lacks the channel.
     """
+    from leadline.io.formats_planes import open_planes
     from leadline.io.formats_raw import NIFTI_SUFFIXES, NRRD_SUFFIXES, open_nifti, open_nrrd
-    from leadline.io.formats_tiff import TIFF_SUFFIXES, open_planes, open_tiff
+    from leadline.io.formats_tiff import TIFF_SUFFIXES, open_tiff
     from leadline.io.formats_zarr import is_zarr, open_zarr
 
     name = path.name.lower()

@@ -11,7 +11,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from leadline.base.errors import LeadlineError
-from leadline.io.formats_tiff import in_order
+from leadline.io.formats_planes import in_order
 from leadline.io.stacks import open_stack
 
 VOXELS = np.random.default_rng(0).integers(0, 4000, (6, 20, 24)).astype(np.uint16)
