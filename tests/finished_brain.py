@@ -126,7 +126,7 @@ def seal(brain: Brain) -> None:
     for step in steps:
         inputs = {str(_short(p, brain)): fingerprint_path(p) for p in step.reads}
         outputs = {str(p.relative_to(brain.folder)): fingerprint_path(p) for p in step.gives}
-        record.keep(step.name, Done(_key(step, inputs, record), outputs, (), inputs, step.extra))
+        record.keep(step.name, Done(_key(step, inputs, record), outputs, (), inputs))
     write_provenance(brain, record, [s.name for s in steps])
 
 

@@ -16,11 +16,10 @@ import numpy as np
 from leadline.base.atomic import write_text
 from leadline.base.errors import MALFORMED, LeadlineError
 from leadline.io.points import pairs_text, read_pairs, read_track_edits, track_edits_text
-from leadline.io.tables import anchors_text
 from leadline.model.track import HandTrack
+from leadline.pipeline.in_force import anchors_in_force, write_in_force
 from leadline.pipeline.lock import sole_worker
 from leadline.pipeline.record import Record
-from leadline.pipeline.stages import anchors_in_force
 from leadline_napari.history import History, line_of, replay
 from leadline_napari.session import Edits, Pair, TrackEdit
 
@@ -101,7 +100,7 @@ class Store:
                     where=str(self.brain.folder),
                     mend="They were read again; your last edit was not made",
                 )
-            write_text(self.anchors, anchors_text(edits.anchors))
+            write_in_force(self.brain, Record(self.brain.folder, self.brain.cache), edits.anchors)
             tracks = {(t.penetration, t.shank): HandTrack(np.array(t.points_um), t.entry_set) for t in edits.tracks}
             _write_or_drop(self.tracks, bool(tracks), track_edits_text(tracks))
             stack_um = np.array([p.stack_um for p in edits.pairs])

@@ -5,12 +5,11 @@ from __future__ import annotations
 from dataclasses import replace
 from typing import TYPE_CHECKING
 
-from leadline.base.atomic import write_text
 from leadline.base.errors import LeadlineError
 from leadline.model.anchor import Anchor, in_order
+from leadline.pipeline.in_force import anchors_in_force, write_in_force
 from leadline.pipeline.lock import sole_worker
 from leadline.pipeline.record import Record
-from leadline.pipeline.stages import anchors_in_force
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -24,7 +23,7 @@ def accept(brain: Brain, choices: Sequence[str]) -> tuple[Anchor, ...]:
 
     Raises LeadlineError when a choice names no suggestion, or an accepted one would cross an anchor in force.
     """
-    from leadline.io.tables import anchors_text, read_suggestions
+    from leadline.io.tables import read_suggestions
 
     suggestions = read_suggestions(brain.out / "suggestions.csv")
     if not suggestions:
@@ -33,11 +32,12 @@ def accept(brain: Brain, choices: Sequence[str]) -> tuple[Anchor, ...]:
     chosen = dict.fromkeys(s for choice in choices for s in _named(suggestions, choice))
     new = tuple(replace(s.anchor, source="auto") for s in chosen)
     with sole_worker(brain.file):
-        before = anchors_in_force(brain, Record(brain.folder, brain.cache))
+        record = Record(brain.folder, brain.cache)
+        before = anchors_in_force(brain, record)
         in_force = (*before, *(a for a in new if a not in before))  # again after a crash: it is there already
         for p, shank in sorted({(a.penetration, a.shank) for a in new}):
             in_order(a for a in in_force if (a.penetration, a.shank) == (p, shank))
-        write_text(brain.out / "anchors.csv", anchors_text(in_force))
+        write_in_force(brain, record, in_force)
     return new
 
 

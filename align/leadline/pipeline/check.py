@@ -140,8 +140,8 @@ class _Look:
 
     def anchors(self) -> None:
         from leadline.model.anchor import in_order
+        from leadline.pipeline.in_force import anchors_in_force
         from leadline.pipeline.record import Record
-        from leadline.pipeline.stages import anchors_in_force
 
         record = self.hear(lambda: Record(self.brain.folder, self.brain.cache))
         anchors = self.hear(lambda: anchors_in_force(self.brain, record)) if record is not None else None

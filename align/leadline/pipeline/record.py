@@ -4,16 +4,18 @@ from __future__ import annotations
 
 import json
 import os
-from dataclasses import dataclass, field
+from dataclasses import asdict, dataclass, field
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING
 
 from leadline.base.atomic import write_text
 from leadline.base.errors import MALFORMED, LeadlineError
 from leadline.base.fingerprint import fingerprint_path, fingerprint_value
+from leadline.model.anchor import Anchor
 
 if TYPE_CHECKING:
     from collections.abc import Mapping
+    from collections.abc import Set as AbstractSet
 
 RECORD_FORMAT = 1
 
@@ -26,7 +28,6 @@ class Done:
     outputs: Mapping[str, str]
     warnings: tuple[str, ...] = ()
     inputs: Mapping[str, str] = field(default_factory=dict)
-    extra: Mapping[str, Any] = field(default_factory=dict)
 
     def intact(self, folder: Path) -> bool:
         """Whether every output is there as it was left."""
@@ -42,11 +43,15 @@ class Done:
 
 
 class Record:
-    """The steps done so far, kept in ``.leadline/steps.json`` and saved after every step."""
+    """The steps done so far, kept in ``.leadline/steps.json`` and saved after every step.
+
+    ``repeated_anchors`` : those of ``out/anchors.csv`` that stood in brain.toml when it was written.
+    """
 
     def __init__(self, folder: Path, cache: Path) -> None:
         self.folder, self.file = folder, cache / "steps.json"
         self.steps: dict[str, Done] = {}
+        self.repeated_anchors: frozenset[Anchor] = frozenset()
         if self.file.is_file():
             self._read()
 
@@ -55,11 +60,10 @@ class Record:
             content = json.loads(self.file.read_text(encoding="utf-8"))
             if content["format"] == RECORD_FORMAT:
                 self.steps = {
-                    name: Done(
-                        str(s["key"]), dict(s["outputs"]), tuple(s["warnings"]), dict(s["inputs"]), dict(s["extra"])
-                    )
+                    name: Done(str(s["key"]), dict(s["outputs"]), tuple(s["warnings"]), dict(s["inputs"]))
                     for name, s in content["steps"].items()
                 }
+                self.repeated_anchors = frozenset(Anchor(**row) for row in content.get("repeated_anchors", ()))
         except (*MALFORMED, KeyError, TypeError, AttributeError) as error:
             raise LeadlineError(
                 f"is damaged ({error!r})", where=str(self.file), mend="Delete it; the stages will run again"
@@ -68,17 +72,27 @@ class Record:
     def keep(self, name: str, done: Done) -> None:
         """Remember a finished step, on disk."""
         self.steps[name] = done
+        self._save()
+
+    def remember_repeated(self, anchors: AbstractSet[Anchor]) -> None:
+        """Remember which anchors of the file are those of brain.toml, on disk."""
+        if anchors != self.repeated_anchors:
+            self.repeated_anchors = frozenset(anchors)
+            self._save()
+
+    def _save(self) -> None:
         steps = {
             name: {
                 "key": d.key,
                 "outputs": dict(d.outputs),
                 "warnings": list(d.warnings),
                 "inputs": dict(d.inputs),
-                "extra": dict(d.extra),
             }
             for name, d in self.steps.items()
         }
-        write_text(self.file, json.dumps({"format": RECORD_FORMAT, "steps": steps}, indent=1) + "\n")
+        repeated = [asdict(a) for a in sorted(self.repeated_anchors, key=repr)]
+        content = {"format": RECORD_FORMAT, "steps": steps, "repeated_anchors": repeated}
+        write_text(self.file, json.dumps(content, indent=1) + "\n")
 
 
 def _inside(path: Path, folder: Path) -> bool:

@@ -70,7 +70,7 @@ def _run(bench: Bench, until: str) -> Summary:
         finally:
             _require_unchanged(step, marks, record, brain)  # whatever else went wrong, a change is why
         outputs = {str(p.relative_to(brain.folder)): fingerprint_path(p) for p in step.gives}
-        record.keep(step.name, Done(key, outputs, tuple(warnings), inputs, step.extra))
+        record.keep(step.name, Done(key, outputs, tuple(warnings), inputs))
         done.append(step.name)
     if until == "locate":
         write_provenance(brain, record, [s.name for s in steps])

@@ -3,12 +3,12 @@
 from __future__ import annotations
 
 import dataclasses
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, TypeVar
 
-from leadline.model.anchor import Anchor
 from leadline.pipeline import products, work
+from leadline.pipeline.in_force import anchors_in_force, write_in_force
 
 if TYPE_CHECKING:
     from collections.abc import Callable
@@ -26,8 +26,7 @@ class Step:
     """One piece of work that is done as a whole or not at all.
 
     ``key`` : settings and other values that the result depends on, beside ``reads`` (files) and ``needs`` (other
-    steps). ``gives`` : files written. ``run`` : does it and returns sentences for the user. ``extra`` : what the
-    record keeps beside fingerprints.
+    steps). ``gives`` : files written. ``run`` : does it and returns sentences for the user.
     """
 
     name: str
@@ -37,7 +36,6 @@ class Step:
     reads: tuple[Path, ...]
     gives: tuple[Path, ...]
     run: Callable[[Bench], tuple[str, ...]]
-    extra: dict[str, Any] = field(default_factory=dict)
 
 
 def plan(brain: Brain, record: Record) -> tuple[Step, ...]:
@@ -50,20 +48,6 @@ def plan(brain: Brain, record: Record) -> tuple[Step, ...]:
         _anchor(brain, record, tuple(step.name for step in profiles)),
         _locate(brain),
     )
-
-
-def anchors_in_force(brain: Brain, record: Record) -> tuple[Anchor, ...]:
-    """Anchors of brain.toml and of ``out/anchors.csv``.
-
-    The file also repeats those that brain.toml held at the last run; one that has since left brain.toml is gone.
-    """
-    from leadline.io.tables import read_anchors
-
-    done = record.steps.get("anchor")
-    mirrored = {Anchor(**row) for row in done.extra.get("from_brain_toml", ())} if done else set()
-    kept = [a for a in read_anchors(brain.out / "anchors.csv") if a not in mirrored or a in brain.anchors]
-    new = [a for a in brain.anchors if a not in kept]
-    return tuple(sorted({*kept, *new}, key=lambda a: (a.penetration, a.shank, -a.tip_distance_um)))
 
 
 def _register(brain: Brain) -> Step:
@@ -133,8 +117,12 @@ def _anchor(brain: Brain, record: Record, profiles: tuple[str, ...]) -> Step:
         key=(brain.settings.anchor, anchors, [p.inserted_um for p in brain.penetrations]),
         reads=_present(brain.atlas, brain.knowledge, *_probe_files(brain)),
         gives=(brain.out / "anchors.csv", brain.out / "suggestions.csv", brain.cache / "posterior.npz"),
-        run=lambda bench: work.anchor(bench, anchors, lambda: anchors_in_force(brain, record)),
-        extra={"from_brain_toml": [dataclasses.asdict(a) for a in brain.anchors]},
+        run=lambda bench: work.anchor(
+            bench,
+            anchors,
+            in_force=lambda: anchors_in_force(brain, record),
+            write=lambda: write_in_force(brain, record, anchors),
+        ),
     )
 
 

@@ -185,13 +185,20 @@ def profile(bench: Bench, penetration: Penetration, files: products.ProfileFiles
     return (*found.warnings, *contradictions.of_recordings(bench.brain, penetration))
 
 
-def anchor(bench: Bench, anchors: tuple[Anchor, ...], in_force: Callable[[], tuple[Anchor, ...]]) -> tuple[str, ...]:
+def anchor(
+    bench: Bench,
+    anchors: tuple[Anchor, ...],
+    *,
+    in_force: Callable[[], tuple[Anchor, ...]],
+    write: Callable[[], None],
+) -> tuple[str, ...]:
     """The posterior over depth maps of every shank, and the anchors that it suggests.
 
-    ``in_force`` : the anchors as they stand when it is called; an edit made meanwhile is not written over.
+    ``in_force`` : the anchors as they stand when it is called; an edit made meanwhile is not written over. ``write`` :
+    writes ``anchors`` to their file.
     """
     from leadline.anchoring.suggest import suggest
-    from leadline.io.tables import anchors_text, suggestions_text
+    from leadline.io.tables import suggestions_text
     from leadline.model.anchor import in_order
     from leadline.pipeline.evidence import drawn, settled, shank_evidence
 
@@ -211,7 +218,7 @@ def anchor(bench: Bench, anchors: tuple[Anchor, ...], in_force: Callable[[], tup
             "changed while 'anchor' was at work; the edit is kept", where=str(brain.out / "anchors.csv"),
             mend="Run again: it goes on from what the file says now",
         )  # fmt: skip
-    write_text(brain.out / "anchors.csv", anchors_text(anchors))
+    write()
     write_text(brain.out / "suggestions.csv", suggestions_text(open_ones))
     told = (f"penetration {p.penetration}, shank {p.shank}: {w}" for p in posteriors for w in p.warnings)
     return (*told, *contradictions.of_places(bench, evidence))
