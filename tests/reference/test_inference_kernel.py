@@ -86,8 +86,9 @@ def test_the_compiled_evidence_is_that_of_dense_algebra(make):
     rng = np.random.default_rng(0)
     z = prior.draw(rng, 12)
     c = rng.integers(0, 4, (12, 2))
-    out = np.empty(12)
-    evaluate(packed.pack, z, c, out)
+    by_group = np.empty((12, 2))
+    evaluate(packed.pack, z, c, by_group)
+    out = by_group.sum(axis=1)
     seen = 0
     for i in range(12):
         label = prior.mean_um + prior.basis @ z[i]
@@ -98,30 +99,39 @@ def test_the_compiled_evidence_is_that_of_dense_algebra(make):
     assert seen > 6
 
 
+def _middle(value, weight):
+    """Half of the width of the central 68 % of weighted values."""
+    order = np.argsort(value)
+    share = weight[order].cumsum() / weight.sum()
+    low, high = value[order][np.searchsorted(share, [0.16, 0.84])]
+    return (high - low) / 2
+
+
 def test_the_sampler_finds_the_mean_spread_and_evidence_of_brute_force():
     from leadline.anchoring._kernels import evaluate
 
     power = 0.35
     prior, packed = _probe(law=TIGHT)
     assert prior.dims == 2
-    side = np.linspace(-4.0, 4.0, 121)
-    grid = np.array(list(product(side, side)))
+    # the first coordinate is known to 0.05 and needs a fine grid
+    grid = np.array(list(product(np.linspace(-4.0, 4.0, 401), np.linspace(-4.0, 4.0, 41))))
     n = len(grid)
     log_prior = prior.log_ratio(prior.offset_mean_um + grid @ prior.offset_basis) - 0.5 * (grid**2).sum(axis=1)
     log_prior -= np.logaddexp.reduce(log_prior)
-    parts, out = [], np.empty(n)
+    parts, by_group = [], np.empty((n, 2))
     models = list(product(range(4), range(4)))
     for c in models:
-        evaluate(packed.pack, grid, np.tile(c, (n, 1)), out)
-        parts.append(power * out + log_prior - np.log(len(models)))
+        evaluate(packed.pack, grid, np.tile(c, (n, 1)), by_group)
+        parts.append(power * by_group.sum(axis=1) + log_prior - np.log(len(models)))
     joint = np.logaddexp.reduce(parts, axis=0)
     log_z = float(np.logaddexp.reduce(joint))
     weight = np.exp(joint - log_z)
     depth = grid @ prior.basis.T + prior.mean_um
     mean = weight @ depth
-    sd = np.sqrt(weight @ (depth - mean) ** 2)
+    # 0.2 % of the mass lies far away, less than one particle: spread is that of the middle
+    spread = np.array([_middle(d, weight) for d in depth.T])
     runs = [sample(packed, prior, np.random.default_rng(s), power) for s in range(3)]
     ours = np.concatenate([r.z @ prior.basis.T + prior.mean_um for r in runs])
     assert np.mean([r.log_evidence for r in runs]) == pytest.approx(log_z, abs=0.25)
-    assert ours.mean(axis=0) == pytest.approx(mean, abs=0.25 * sd.max())
-    assert ours.std(axis=0) == pytest.approx(sd, rel=0.2)
+    assert ours.mean(axis=0) == pytest.approx(mean, abs=0.15 * spread.max())
+    assert [_middle(d, np.ones(len(d))) for d in ours.T] == pytest.approx(spread, rel=0.1)

@@ -8,6 +8,8 @@ import numpy as np
 from numba import njit
 
 LOG_REFUSED = -1e18
+# features are padded to whole registers of the processor
+LANES = 8
 
 
 class Pack(NamedTuple):
@@ -56,20 +58,24 @@ class Pack(NamedTuple):
 
 @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
 def _cholesky(a, n):  # type: ignore[no-untyped-def]  # pragma: no cover
-    """In place, lower; returns the log determinant."""
-    total = 0.0
-    for i in range(n):
-        for j in range(i + 1):
-            s = a[i, j]
-            for k in range(j):
-                s -= a[i, k] * a[j, k]
-            if i == j:
-                s = np.sqrt(max(s, 1e-12))
-                a[i, i] = s
-                total += 2 * np.log(s)
-            else:
-                a[i, j] = s / a[j, j]
-    return total
+    """In place, upper: ``U' U``, passing over what is zero; returns the log determinant."""
+    total = 1.0
+    log = 0.0
+    for k in range(n):
+        root = np.sqrt(max(a[k, k], 1e-12))
+        total *= root
+        if total > 1e100 or total < 1e-100:
+            log += np.log(total)
+            total = 1.0
+        share = 1 / root
+        for j in range(k, n):
+            a[k, j] *= share
+        for i in range(k + 1, n):
+            f = a[k, i]
+            if f != 0:
+                for j in range(i, n):
+                    a[i, j] -= f * a[k, j]
+    return 2 * (log + np.log(total))
 
 
 @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
@@ -107,6 +113,7 @@ def _design(p, s, g, c, depth, white, first, last):  # type: ignore[no-untyped-d
 def _add_products(p, s, g, c, white, first, last, gram, cross):  # type: ignore[no-untyped-def]  # pragma: no cover
     """Add one shank's products of whitened labels with each other, ``gram`` (P, L, L), and with the data, ``cross``
     (L, F)."""
+    wide = (p.n_features[g] + LANES - 1) // LANES * LANES
     for i in range(first.size):
         if last[i] == 0:
             continue
@@ -122,7 +129,7 @@ def _add_products(p, s, g, c, white, first, last, gram, cross):  # type: ignore[
                             gram[pattern, j, i] += total
         for t in range(first[i], last[i]):
             w = white[i, t]
-            for f in range(p.n_features[g]):
+            for f in range(wide):
                 cross[i, f] += w * p.white_data[s, g, c, t, f]
 
 
@@ -141,15 +148,15 @@ def _left(mean, gram, cross, factor, used, b, rss):  # type: ignore[no-untyped-d
         for f in range(features):
             rss[f] += mean[i, f] * (b[i, f] - 2 * cross[i, f])
             b[i, f] = cross[i, f] - b[i, f]
-    for i in range(labels):
-        for k in range(i):
-            share = factor[i, k]
+    for k in range(labels):
+        for f in range(features):
+            b[k, f] /= factor[k, k]
+            rss[f] -= b[k, f] * b[k, f]
+        for i in range(k + 1, labels):
+            share = factor[k, i]
             if share != 0:
                 for f in range(features):
                     b[i, f] -= share * b[k, f]
-        for f in range(features):
-            b[i, f] /= factor[i, i]
-            rss[f] -= b[i, f] * b[i, f]
 
 
 @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
@@ -163,7 +170,8 @@ def group_evidence(p, g, c, depth, out):  # type: ignore[no-untyped-def]  # prag
     patterns = 1
     for f in range(features):
         patterns = max(patterns, p.pattern[g, f] + 1)
-    gram, cross = np.zeros((patterns, labels, labels)), np.zeros((labels, features), np.float32)
+    gram = np.zeros((patterns, labels, labels))
+    cross = np.zeros((labels, p.white_data.shape[4]), np.float32)
     white = np.empty((labels, p.centre.shape[1]), np.float32)
     first, last = np.empty(labels, np.int64), np.empty(labels, np.int64)
     touched = np.zeros(labels, np.bool_)
@@ -188,8 +196,8 @@ def group_evidence(p, g, c, depth, out):  # type: ignore[no-untyped-def]  # prag
 
 
 @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
-def log_likelihood(p, z, c, depth, out):  # type: ignore[no-untyped-def]  # pragma: no cover
-    """Log evidence of all shanks for one path, each feature mixed with one that says nothing."""
+def follow(p, z, depth):  # type: ignore[no-untyped-def]  # pragma: no cover
+    """Label depths (S, R) of one path into ``depth``; whether they fall all along each shank."""
     for s in range(p.n_rows.size):
         for r in range(p.n_rows[s]):
             d = p.centre[s, r]
@@ -197,20 +205,25 @@ def log_likelihood(p, z, c, depth, out):  # type: ignore[no-untyped-def]  # prag
                 d += p.basis[s, r, j] * z[j]
             depth[s, r] = d
             if r > 0 and depth[s, r - 1] - d < p.min_step:
-                return LOG_REFUSED
+                return False
+    return True
+
+
+@njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
+def log_likelihood(p, g, c, depth, out):  # type: ignore[no-untyped-def]  # pragma: no cover
+    """Log evidence of a group of features at label depths, each feature mixed with one that says nothing."""
+    if p.n_features[g] == 0:
+        return 0.0
+    group_evidence(p, g, c, depth, out)
     total = 0.0
-    for g in range(p.n_features.size):
-        if p.n_features[g] == 0:
-            continue
-        group_evidence(p, g, c[g], depth, out)
-        for f in range(p.n_features[g]):
-            null = p.log_null[g, c[g], f]
-            gain = out[f] - null
-            if gain > 0:
-                mixed = gain + np.log((1 - p.null_share) + p.null_share * np.exp(-gain))
-            else:
-                mixed = np.log(p.null_share + (1 - p.null_share) * np.exp(gain))
-            total += p.power[g, f] * (mixed + null)
+    for f in range(p.n_features[g]):
+        null = p.log_null[g, c, f]
+        gain = out[f] - null
+        if gain > 0:
+            mixed = gain + np.log((1 - p.null_share) + p.null_share * np.exp(-gain))
+        else:
+            mixed = np.log(p.null_share + (1 - p.null_share) * np.exp(gain))
+        total += p.power[g, f] * (mixed + null)
     return total
 
 
@@ -227,51 +240,67 @@ def log_offset_ratio(p, z):  # type: ignore[no-untyped-def]  # pragma: no cover
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def evaluate(p, z, c, out):  # type: ignore[no-untyped-def]  # pragma: no cover
-    """Log likelihood of paths ``z`` (N, J) into ``out`` (N,)."""
+def evaluate(p, z, c, ll):  # type: ignore[no-untyped-def]  # pragma: no cover
+    """Log likelihood of each group of features for paths ``z`` (N, J) into ``ll`` (N, G)."""
     depth, scratch = np.empty(p.centre.shape), np.empty(p.mean.shape[2])
     for i in range(z.shape[0]):
-        out[i] = log_likelihood(p, z[i], c[i], depth, scratch)
+        falls = follow(p, z[i], depth)
+        for g in range(ll.shape[1]):
+            ll[i, g] = log_likelihood(p, g, c[i, g], depth, scratch) if falls else LOG_REFUSED
+
+
+@njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
+def _height(p, power, z, a, ll):  # type: ignore[no-untyped-def]  # pragma: no cover
+    """Log posterior of a path over the density of the fitted Gaussian, up to a constant."""
+    total = power * ll.sum() + log_offset_ratio(p, z)
+    for j in range(z.size):
+        total += 0.5 * (a[j] ** 2 - z[j] ** 2)
+    return total
+
+
+@njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
+def _on_ellipse(centre, root, a, nu, theta, new_a, new_z):  # type: ignore[no-untyped-def]  # pragma: no cover
+    """The point of the ellipse through ``a`` and ``nu`` at an angle, and its path ``new_z``."""
+    cos, sin = np.cos(theta), np.sin(theta)
+    for j in range(a.size):
+        new_a[j] = a[j] * cos + nu[j] * sin
+    for j in range(a.size):
+        total = centre[j]
+        for k in range(j + 1):
+            total += root[j, k] * new_a[k]
+        new_z[j] = total
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
 def slice_move(  # type: ignore[no-untyped-def]  # pragma: no cover
-    p, power, centre, root, z, ll, c, a, nu, log_u, angle, evaluations
+    p, power, centre, root, z, ll, c, a, nu, log_u, angle, group, model, log_v, evaluations
 ):
     """One elliptical slice move of every path under the Gaussian ``centre + root @ a`` (Murray et al. 2010, AISTATS;
-    generalised to a fitted Gaussian as in Nishihara et al. 2014, JMLR 15, 2087). Changes ``z``, ``ll``, ``a``."""
+    generalised to a fitted Gaussian as in Nishihara et al. 2014, JMLR 15, 2087), and one Metropolis step to the noise
+    ``model`` of one ``group``. Changes ``z``, ``ll``, ``c``, ``a``."""
     dims = z.shape[1]
     depth, scratch = np.empty(p.centre.shape), np.empty(p.mean.shape[2])
-    new_a, new_z = np.empty(dims), np.empty(dims)
+    new_a, new_z, new_ll = np.empty(dims), np.empty(dims), np.empty(ll.shape[1])
     for i in range(z.shape[0]):
-        level = power * ll[i] + log_offset_ratio(p, z[i]) + log_u[i]
-        for j in range(dims):
-            level += 0.5 * (a[i, j] ** 2 - z[i, j] ** 2)
+        level = _height(p, power, z[i], a[i], ll[i]) + log_u[i]
         theta = angle[i, 0] * 2 * np.pi
         low, high = theta - 2 * np.pi, theta
-        for shrink in range(1, angle.shape[1] + 1):
-            cos, sin = np.cos(theta), np.sin(theta)
-            for j in range(dims):
-                new_a[j] = a[i, j] * cos + nu[i, j] * sin
-            for j in range(dims):
-                total = centre[j]
-                for k in range(j + 1):
-                    total += root[j, k] * new_a[k]
-                new_z[j] = total
-            value = log_likelihood(p, new_z, c[i], depth, scratch)
+        for shrink in range(1, angle.shape[1]):
+            _on_ellipse(centre, root, a[i], nu[i], theta, new_a, new_z)
             evaluations[i] += 1
-            here = power * value + log_offset_ratio(p, new_z)
-            for j in range(dims):
-                here += 0.5 * (new_a[j] ** 2 - new_z[j] ** 2)
-            if here > level:
-                z[i] = new_z
-                a[i] = new_a
-                ll[i] = value
-                break
-            if shrink == angle.shape[1]:
-                break
+            if follow(p, new_z, depth):
+                for g in range(new_ll.size):
+                    new_ll[g] = log_likelihood(p, g, c[i, g], depth, scratch)
+                if _height(p, power, new_z, new_a, new_ll) > level:
+                    z[i], a[i], ll[i] = new_z, new_a, new_ll
+                    break
             if theta < 0:
                 low = theta
             else:
                 high = theta
             theta = low + (high - low) * angle[i, shrink]
+        if follow(p, z[i], depth):
+            g = group[i]
+            other = log_likelihood(p, g, model[i], depth, scratch)
+            if log_v[i] < power * (other - ll[i, g]):
+                c[i, g], ll[i, g] = model[i], other

@@ -55,8 +55,9 @@ class Listener:
             return None
         rng = np.random.default_rng(SEED)
         z, noise = prior.draw(rng, DRAWS), rng.integers(0, len(MODELS["lfp"]), (DRAWS, len(GROUPS)))
-        likelihood = np.empty(DRAWS)
-        evaluate(packed.pack, z, noise, likelihood)
+        by_group = np.empty((DRAWS, len(GROUPS)))
+        evaluate(packed.pack, z, noise, by_group)
+        likelihood = by_group.sum(axis=1)
         top = likelihood.max()
         mean = POWER * top + np.log(np.exp(POWER * (likelihood - top)).mean())
         return float(mean - POWER * packed.log_silent)

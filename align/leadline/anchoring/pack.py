@@ -49,9 +49,14 @@ class Packed:
         return float((self.pack.power * self.pack.counted).sum())
 
     @property
+    def speaking(self) -> int:
+        """Number of shanks that have features."""
+        return sum(f.informative for f in self.features)
+
+    @property
     def informative(self) -> bool:
         """Whether any shank has features."""
-        return any(f.informative for f in self.features)
+        return self.speaking > 0
 
 
 def assemble(
@@ -107,7 +112,7 @@ def owners(whole: Packed, group: str) -> BoolArray:
 
 def _empty(whole: Packed, prior: DepthPrior) -> Any:
     """The kernel's arrays, padded to the largest shank and group."""
-    from leadline.anchoring._kernels import Pack
+    from leadline.anchoring._kernels import LANES, Pack
 
     features, tables, law = whole.features, [t for t in whole.tables if t is not None], prior.law
     n, groups, models = len(features), len(GROUPS), len(MODELS["lfp"])
@@ -124,7 +129,7 @@ def _empty(whole: Packed, prior: DepthPrior) -> Any:
         basis=np.zeros((n, rows, prior.dims)),
         whitener=np.zeros((*shape, rows, BAND), np.float32),
         white_one=np.zeros((*shape, rows), np.float32),
-        white_data=np.zeros((*shape, rows, wide), np.float32),
+        white_data=np.zeros((*shape, rows, -(-wide // LANES) * LANES), np.float32),
         square=np.zeros((groups, models, wide)),
         log_scale=np.zeros((groups, models, wide)),
         counted=np.zeros((groups, wide)),

@@ -16,34 +16,49 @@ from leadline.base.arrays import FloatArray, IntArray
 from leadline.base.progress import SILENT, Progress
 
 if TYPE_CHECKING:
-    from collections.abc import Callable
+    from collections.abc import Callable, Sequence
 
     from leadline.anchoring.depth_prior import DepthPrior
     from leadline.anchoring.pack import Packed
 
-PARTICLES = 320
+# few particles that walk far find better modes, and hold them steadier between seeds, than many that walk little
+PARTICLES = 80
+MOVES = 8
+LAST_MOVES = 12
 SCOUTS = 2048
-KEEP_ESS = 0.5
-MOVES = 2
-LAST_MOVES = 8
-SNAPSHOTS = 6
+KEEP_ESS = 0.4
 MAX_SHRINK = 24
 MAX_LEVELS = 60
+SHRINK = 0.7
 
 
 @dataclass
 class Ensemble:
-    """Particles in motion: ``z`` (N, J), log likelihood (N,), noise models ``c`` (N, G)."""
+    """Particles in motion: ``z`` (N, J), log likelihood of each group of features (N, G), noise models ``c`` (N, G)."""
 
     z: FloatArray
-    log_likelihood: FloatArray
+    by_group: FloatArray
     c: IntArray
+
+    @property
+    def log_likelihood(self) -> FloatArray:
+        """Log likelihood (N,)."""
+        return np.asarray(self.by_group.sum(axis=1), np.float64)
+
+    @classmethod
+    def of(cls, parts: Sequence[Ensemble]) -> Ensemble:
+        """All particles of several ensembles."""
+        return cls(
+            np.concatenate([p.z for p in parts]),
+            np.concatenate([p.by_group for p in parts]),
+            np.concatenate([p.c for p in parts]),
+        )
 
     def take(self, rows: IntArray) -> Ensemble:
         """Copies of the particles ``rows``."""
         return Ensemble(
             self.z[rows].copy(),
-            self.log_likelihood[rows].copy(),
+            self.by_group[rows].copy(),
             self.c[rows].copy(),
         )
 
@@ -99,8 +114,9 @@ def sample(
     """Draw depth maps from prior x likelihood^``power``: the particles as they stood after each of the last moves.
 
     ``settle`` : from the log evidence at full power to the share of it at which the draws are wanted. Adaptive
-    tempering (Del Moral, Doucet & Jasra 2006, J. R. Stat. Soc. B 68, 411) from many prior draws; at each level
-    particles are resampled and moved by elliptical slices under the Gaussian fitted to them.
+    tempering (Del Moral, Doucet & Jasra 2006, J. R. Stat. Soc. B 68, 411) from many prior draws; at each level few
+    particles are resampled and walk far, by elliptical slices under the Gaussian fitted to the level below, and all
+    places on their way are particles of the level (waste-free, Dau & Chopin 2022, J. R. Stat. Soc. B 84, 114).
     """
     with Crew() as crew:
         return _tempered(crew, packed, prior, rng, power, progress, settle)
@@ -131,13 +147,11 @@ def _tempered(
         start, particles = [level for level in levels if level[0] <= share][-1]
         particles, _, more = _raised(crew, packed, prior, particles, power, start, share - start, rng)
         spent += more
-    particles = particles.take(np.arange(len(particles.z)))
-    stills = []
-    for _ in range(LAST_MOVES):
-        spent += move_all(crew, packed, particles, power * share, rng)
-        stills.append(particles.z.copy())
-    last = np.array(stills[-SNAPSHOTS:])
-    return Drawn(np.concatenate(last), log_z, len(levels) - 1, spent, _effective(last), share)
+    shape = fit(particles.z, np.ones(len(particles.z)))
+    last = particles.take(np.arange(len(particles.z))[-PARTICLES:])
+    draws, more = _walked(crew, packed, last, shape, power * share, rng, LAST_MOVES)
+    effective = _effective(draws.z.reshape(LAST_MOVES, PARTICLES, -1) @ prior.basis.T)
+    return Drawn(draws.z, log_z, len(levels) - 1, spent + more, effective, share)
 
 
 def _raised(
@@ -155,60 +169,77 @@ def _raised(
     top = gain.max()
     weight = np.exp(gain - top)
     raised = particles.take(_resample(weight, particles.z @ prior.offset_basis, PARTICLES, rng))
-    spent = sum(move_all(crew, packed, raised, power * (beta + step), rng) for _ in range(MOVES))
-    return raised, float(top + np.log(weight.mean())), spent
+    shape = fit(particles.z, weight)
+    along, spent = _walked(crew, packed, raised, shape, power * (beta + step), rng, MOVES)
+    return along, float(top + np.log(weight.mean())), spent
 
 
-def _effective(z: FloatArray) -> float:
-    """Independent draws in the last moves ``(moves, N, J)``: particles, times how well the last moves forget."""
-    first, last = z[0] - z[0].mean(axis=0), z[-1] - z[-1].mean(axis=0)
-    kept = float((first * last).sum() / np.sqrt((first**2).sum() * (last**2).sum()))
-    return float(z.shape[1] * np.clip(1 - kept, 0.05, 1.0))
+def _walked(
+    crew: Crew,
+    packed: Packed,
+    particles: Ensemble,
+    shape: tuple[FloatArray, FloatArray],
+    power: float,
+    rng: np.random.Generator,
+    moves: int,
+) -> tuple[Ensemble, int]:
+    """The particles as they stood after each of some moves, all together (moves x N), and evaluations spent."""
+    spent, along = 0, []
+    for _ in range(moves):
+        spent += move_all(crew, packed, particles, shape, power, rng)
+        along.append(particles.take(np.arange(len(particles.z))))
+    return Ensemble.of(along), spent
 
 
-def move_all(crew: Crew, packed: Packed, particles: Ensemble, power: float, rng: np.random.Generator) -> int:
+def _effective(depth: FloatArray) -> float:
+    """Independent draws among the label depths (moves, N, nodes) of N paths: N, times the variance of all draws over
+    that of the means of the paths (Gelman & Rubin 1992, Stat. Sci. 7, 457)."""
+    moves, n = depth.shape[:2]
+    within = ((depth - depth.mean(axis=(0, 1))) ** 2).mean(axis=(0, 1)).sum()
+    between = depth.mean(axis=0).var(axis=0).sum()
+    return float(n * np.clip(within / max(between, 1e-12), 1.0, moves))
+
+
+def move_all(
+    crew: Crew,
+    packed: Packed,
+    particles: Ensemble,
+    shape: tuple[FloatArray, FloatArray],
+    power: float,
+    rng: np.random.Generator,
+) -> int:
     """One slice move and one switch of noise model for every particle; returns evaluations."""
     from leadline.anchoring._kernels import slice_move
 
     n, dims = particles.z.shape
-    centre, root = fit(particles.z)
+    centre, root = shape
     a = np.linalg.solve(root, (particles.z - centre).T).T.copy()
+    group = rng.integers(0, len(GROUPS), n)
+    model = (particles.c[np.arange(n), group] + rng.integers(1, len(MODELS["lfp"]), n)) % len(MODELS["lfp"])
     count = np.zeros(n, np.int64)
-    state = (particles.z, particles.log_likelihood, particles.c)
-    random = (a, rng.standard_normal((n, dims)), np.log(rng.random(n)), rng.random((n, MAX_SHRINK)), count)
-    crew.run(slice_move, (packed.pack, power, centre, root), state + random)
-    return int(count.sum()) + _switch(crew, packed, particles, power, rng)
+    state = (particles.z, particles.by_group, particles.c, a)
+    slices = (rng.standard_normal((n, dims)), np.log(rng.random(n)), rng.random((n, MAX_SHRINK)))
+    switches = (group, model, np.log(rng.random(n)))
+    crew.run(slice_move, (packed.pack, power, centre, root), (*state, *slices, *switches, count))
+    return int(count.sum())
 
 
-def fit(z: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """Centre and lower Cholesky root of a Gaussian fitted to particles, shrunk towards its diagonal and widened."""
-    n, dims = z.shape
-    covariance = np.cov(z.T).reshape(dims, dims)
-    share = min(0.6, 1.5 * dims / n)
+def fit(z: FloatArray, weight: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Centre and lower Cholesky root of a Gaussian fitted to weighted particles, shrunk towards its diagonal and
+    widened."""
+    dims = z.shape[1]
+    n = weight.sum() ** 2 / (weight**2).sum()
+    covariance = np.cov(z.T, aweights=weight).reshape(dims, dims)
+    share = min(0.6, SHRINK * dims / n)
     covariance = (1 - share) * covariance + share * np.diag(np.diag(covariance))
-    return z.mean(axis=0), np.linalg.cholesky(1.15 * covariance + 1e-3 * np.eye(dims))
-
-
-def _switch(crew: Crew, packed: Packed, particles: Ensemble, power: float, rng: np.random.Generator) -> int:
-    """Metropolis step on the noise model of one group."""
-    n = len(particles.z)
-    proposal = particles.take(np.arange(n))
-    which = rng.integers(0, len(GROUPS), n)
-    models = len(MODELS["lfp"])
-    for g in range(len(GROUPS)):
-        rows = np.flatnonzero(which == g)
-        proposal.c[rows, g] = (proposal.c[rows, g] + rng.integers(1, models, rows.size)) % models
-    _evaluate(crew, packed, proposal)
-    accept = np.log(rng.random(n)) < power * (proposal.log_likelihood - particles.log_likelihood)
-    particles.c[accept] = proposal.c[accept]
-    particles.log_likelihood[accept] = proposal.log_likelihood[accept]
-    return n
+    centre = np.average(z, axis=0, weights=weight)
+    return centre, np.linalg.cholesky(1.15 * covariance + 1e-3 * np.eye(dims))
 
 
 def _scouts(prior: DepthPrior, rng: np.random.Generator, n: int) -> Ensemble:
     return Ensemble(
         prior.draw(rng, n),
-        np.empty(n),
+        np.empty((n, len(GROUPS))),
         rng.integers(0, len(MODELS["lfp"]), (n, len(GROUPS))),
     )
 
@@ -216,7 +247,7 @@ def _scouts(prior: DepthPrior, rng: np.random.Generator, n: int) -> Ensemble:
 def _evaluate(crew: Crew, packed: Packed, p: Ensemble) -> None:
     from leadline.anchoring._kernels import evaluate
 
-    arrays = (p.z, p.c, p.log_likelihood)
+    arrays = (p.z, p.c, p.by_group)
     crew.run(evaluate, (packed.pack,), arrays)
 
 
