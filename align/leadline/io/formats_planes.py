@@ -12,6 +12,7 @@ from leadline.base.errors import LeadlineError
 from leadline.io.formats_tiff import NATIVE, TIFF_SUFFIXES, damage_is_an_error, require_grey, told_sizes
 from leadline.io.images import READ_FAULTS, Image, fetch_ahead, pick, unreadable, whole_level
 from leadline.io.one_piece import PIECE_BYTES
+from leadline.io.plausible import require_small_pieces
 
 if TYPE_CHECKING:
     from collections.abc import Iterator
@@ -169,6 +170,8 @@ def _header(file: Path) -> Any:
         dtype = np.dtype(page.dtype if page.dtype is not None else "V1").newbyteorder("=")
         plain = pages == samples == 1 and page.is_contiguous and tiff.byteorder == NATIVE
         offset = int(page.dataoffsets[0]) if plain else None
+        if not page.is_contiguous:
+            require_small_pieces(file, page.chunks, dtype)
         return max(pages, samples), int(page.imagelength), int(page.imagewidth), dtype, told_sizes(tiff), offset
 
 

@@ -15,6 +15,7 @@ from leadline.base.errors import LeadlineError
 from leadline.io.images import READ_FAULTS, UNIT_UM, Image, Level, pick, unreadable
 from leadline.io.levels import placed
 from leadline.io.one_piece import OnePiece
+from leadline.io.plausible import require_small_pieces
 
 if TYPE_CHECKING:
     from collections.abc import Iterator
@@ -41,7 +42,7 @@ def open_tiff(path: Path, channel: int) -> Image:
         axes = _axis_names(series.axes, path)
         require_grey(series.keyframe, path)
         sizes = dict(zip("xyz", told_sizes(file), strict=True))
-        sources = [_source(file, level, series, k) for k, level in enumerate(series.levels)]
+        sources = [_source(path, file, level, series, k) for k, level in enumerate(series.levels)]
     finest = pick(sources[0], axes, channel, path)
     coarser = [source for source in sources[1:] if min(_spatial(source.shape, axes)) > 1]
     levels = tuple(
@@ -91,7 +92,7 @@ def require_grey(page: Any, path: Path) -> None:
         )
 
 
-def _source(file: Any, level: Any, series: Any, k: int) -> Any:
+def _source(path: Path, file: Any, level: Any, series: Any, k: int) -> Any:
     """A lazy array of one level: read in one piece where the voxels lie so, else chunks by zarr."""
     import zarr
 
@@ -108,7 +109,9 @@ def _source(file: Any, level: Any, series: Any, k: int) -> Any:
         last = max((o + n for o, n in zip(page.dataoffsets, page.databytecounts, strict=True)), default=0)
         if last > file.filehandle.size:
             raise EOFError("its last plane is cut short")
-    return zarr.open_array(series.aszarr(level=k), mode="r")
+    array = zarr.open_array(series.aszarr(level=k), mode="r")
+    require_small_pieces(path, array.chunks, array.dtype)
+    return array
 
 
 def _chunk(source: Any, axes: str) -> tuple[int, ...]:

@@ -15,6 +15,7 @@ import numpy as np
 from leadline.base.errors import LeadlineError
 from leadline.io.images import READ_FAULTS, UNIT_UM, Image, Level, pick, unreadable
 from leadline.io.levels import placed
+from leadline.io.plausible import require_small_pieces
 from leadline.io.zarr_chunks import chunked
 
 if TYPE_CHECKING:
@@ -44,6 +45,7 @@ def open_zarr(path: Path, channel: int) -> Image:
     except (zarr.errors.BaseZarrError, *READ_FAULTS) as error:
         raise unreadable(path, error) from error
     if isinstance(node, zarr.Array):
+        require_small_pieces(path, node.shards or node.chunks, node.dtype)
         data = pick(chunked(node), "zyx" if node.ndim == 3 else "?" * node.ndim, channel, path)
         return Image(path, (Level(data, np.ones(3), np.zeros(3), _three(node.chunks)),))
     try:
@@ -146,6 +148,7 @@ def _array(path: Path, group: Any, name: str) -> Any:
         ) from error
     if not isinstance(array, zarr.Array):
         raise LeadlineError(f"dataset {name!r} is a group, not an array", where=str(path), mend="Correct 'datasets'")
+    require_small_pieces(path, array.shards or array.chunks, array.dtype)
     return array
 
 

@@ -35,7 +35,7 @@ UNIT_UM = {
 }
 READ_FAULTS = (
     OSError, EOFError, ValueError, LookupError, ArithmeticError, RuntimeError, TypeError, AssertionError, SystemError,
-    struct.error, zlib.error,
+    MemoryError, struct.error, zlib.error,
 )  # fmt: skip
 """What the format libraries raise on a damaged file."""
 

@@ -12,12 +12,16 @@ import numpy as np
 from leadline.base.errors import LeadlineError
 
 if TYPE_CHECKING:
+    from collections.abc import Sequence
+
     from leadline.io.images import Image
 
 BELOW_BYTES = 2**30
 PACKED_AT_MOST = 2000.0
 """Bytes of voxels for each byte on disk; deflate reaches 1032 on a file of one value, a brain with much empty space
 about 10."""
+PIECE_BELOW_BYTES, PIECE_AT_MOST = 2**28, 50.0
+"""A chunk, tile or strip is unpacked whole, so what it may hold for each byte of the whole file is bounded more."""
 
 
 def require_plausible(image: Image) -> None:
@@ -33,6 +37,21 @@ def require_plausible(image: Image) -> None:
             f"{_bytes(image.path, promised) / 1e6:.3g} MB can hold",
             where=str(image.path),
             mend="Its header is damaged, or parts of it are missing: copy or export it again",
+        )
+
+
+def require_small_pieces(path: Path, piece: Sequence[int], dtype: np.dtype) -> None:
+    """Raise LeadlineError when the voxels of a small file are packed in chunks, tiles or strips that would fill the
+    memory; ``piece`` : the shape of one."""
+    promised = np.dtype(dtype).itemsize
+    for n in piece:
+        promised *= int(n)
+    if promised > PIECE_BELOW_BYTES and promised > PIECE_AT_MOST * _bytes(path, promised / PIECE_AT_MOST):
+        raise LeadlineError(
+            f"packs its voxels in pieces of {' x '.join(map(str, piece))} ({promised / 1e9:.3g} GB), which its "
+            f"{_bytes(path, promised) / 1e6:.3g} MB cannot fill",
+            where=str(path),
+            mend="Its header is damaged; copy it again, or export it with smaller chunks or tiles",
         )
 
 
@@ -57,6 +76,7 @@ def require_chain(path: Path) -> None:
         big = head[2:4] in (b"\x2b\0", b"\0\x2b")
         count, entry, link = ("Q", 20, "Q") if big else ("H", 12, "I")
         seen: set[int] = set()
+        end = path.stat().st_size
         try:
             (at,) = struct.unpack_from(order + link, head, 8 if big else 4)
             while at:
@@ -69,6 +89,8 @@ def require_chain(path: Path) -> None:
                 seen.add(at)
                 handle.seek(at)
                 (n,) = struct.unpack(order + count, handle.read(struct.calcsize(order + count)))
+                if n * entry > end:
+                    return
                 handle.seek(n * entry, os.SEEK_CUR)
                 (at,) = struct.unpack(order + link, handle.read(struct.calcsize(order + link)))
         except (struct.error, OSError, OverflowError):  # cut short: its reader will say so
