@@ -17,10 +17,10 @@ class Pack(NamedTuple):
     which the last S are an intercept of each shank.
 
     ``centre`` (S, R), ``basis`` (S, R, J) : label depth of the rows, ``centre + basis @ z``. ``whitener`` (S, G, C,
-    R, B) : entry [r, k] carries row r into whitened row r + k. ``white_one`` (S, G, C, R), ``white_data``
+    R, B) : entry [r, k] carries row r into whitened row r + k < r + ``band`` (S, G, C). ``white_one`` (S, G, C, R), ``white_data``
     (S, G, C, R, F). ``square``, ``log_scale``, ``log_null`` (G, C, F) : sum of squares, log determinant of the
     whitener and evidence of mere noise, over the shanks that have the feature; ``counted`` (G, F) their rows.
-    ``pattern`` (G, F) : which row of ``has`` (G, P, S) names those shanks. ``power`` (G, F) : what a feature counts
+    ``pattern`` (G, F) : which row of ``has`` (G, P, S) names those shanks, ascending. ``power`` (G, F) : what a feature counts
     beside its correlated fellows. ``mean`` (G, L, F). ``precision`` (L, L), ``log_covariance``. ``active``,
     ``weight`` (S, G, M, 8) and ``start`` (S,) : cells of the label tables.
     """
@@ -31,6 +31,7 @@ class Pack(NamedTuple):
     centre: Any
     basis: Any
     whitener: Any
+    band: Any
     white_one: Any
     white_data: Any
     square: Any
@@ -80,28 +81,28 @@ def _cholesky(a, n):  # type: ignore[no-untyped-def]  # pragma: no cover
 
 @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
 def _design(p, s, g, c, depth, white, first, last):  # type: ignore[no-untyped-def]  # pragma: no cover
-    """Whitened label membership of the rows of one shank, ``white`` (L, R), and the range of rows that each label
-    touches."""
+    """Whitened label membership of the rows of one shank, ``white`` (L, R and the longest band), and the range of
+    rows that each label touches."""
     rows, labels = p.n_rows[s], first.size
-    band = p.whitener.shape[4]
+    band = p.band[s, g, c]
     for i in range(labels):
         first[i] = rows
         last[i] = 0
     for r in range(rows):
         cell = int((depth[r] - p.start[s]) / p.cell_um + 0.5)
         cell = min(max(cell, 0), p.n_cells[s] - 1)
-        end = min(rows, r + band)
         for a in range(p.active.shape[3]):
             label = p.active[s, g, cell, a]
             if label < 0:
                 break
-            for t in range(last[label] if first[label] < rows else r, end):
-                white[label, t] = 0.0
-            first[label] = min(first[label], r)
-            last[label] = end
+            if last[label] == 0:
+                first[label] = r
+                white[label, r:] = 0.0
+            last[label] = min(rows, r + band)
             share = p.weight[s, g, cell, a]
-            for k in range(end - r):
-                white[label, r + k] += share * p.whitener[s, g, c, r, k]
+            for start in range(0, band, LANES):
+                for k in range(LANES):
+                    white[label, r + start + k] += share * p.whitener[s, g, c, r, start + k]
     own = labels - p.n_rows.size + s
     first[own] = 0
     last[own] = rows
@@ -110,52 +111,55 @@ def _design(p, s, g, c, depth, white, first, last):  # type: ignore[no-untyped-d
 
 
 @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
-def _add_products(p, s, g, c, white, first, last, gram, cross):  # type: ignore[no-untyped-def]  # pragma: no cover
-    """Add one shank's products of whitened labels with each other, ``gram`` (P, L, L), and with the data, ``cross``
-    (L, F)."""
-    wide = (p.n_features[g] + LANES - 1) // LANES * LANES
+def _add_products(white, first, last, data, wide, has, gram, cross):  # type: ignore[no-untyped-def]  # pragma: no cover
+    """Add one shank's products of whitened labels with each other, to the patterns of ``gram`` (P, L, L) that ``has``
+    (P,) names, and with the ``data`` (R, F), to ``cross`` (L, F)."""
     for i in range(first.size):
         if last[i] == 0:
             continue
         for j in range(i + 1):
-            total = np.float32(0.0)
-            for t in range(max(first[i], first[j]), min(last[i], last[j])):
-                total += white[i, t] * white[j, t]
-            if total != 0:
+            low, high = max(first[i], first[j]), min(last[i], last[j])
+            if low < high:
+                total = np.float32(0.0)
+                for t in range(low, high):
+                    total += white[i, t] * white[j, t]
                 for pattern in range(gram.shape[0]):
-                    if p.has[g, pattern, s]:
-                        gram[pattern, i, j] += total
-                        if j < i:
-                            gram[pattern, j, i] += total
+                    if has[pattern]:
+                        gram[pattern, j, i] += total
         for t in range(first[i], last[i]):
             w = white[i, t]
             for f in range(wide):
-                cross[i, f] += w * p.white_data[s, g, c, t, f]
+                cross[i, f] += w * data[t, f]
 
 
 @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
-def _left(mean, gram, cross, factor, used, b, rss):  # type: ignore[no-untyped-def]  # pragma: no cover
-    """Take what the labels explain off the sums of squares ``rss`` (F,); ``used`` : labels that any row touches."""
-    labels, features = b.shape[0], rss.size
+def _left(mean, gram, cross, factor, used, low, high, b, rss):  # type: ignore[no-untyped-def]  # pragma: no cover
+    """Take what the labels explain off the sums of squares ``rss`` (F,) of features ``low`` to ``high``; ``used`` :
+    labels that any row touches; ``gram``, ``factor`` : upper triangles."""
     b[:] = 0.0
-    for a in range(used.size):
-        i = used[a]
-        for e in range(used.size):
-            known = gram[i, used[e]]
+    for e in range(used.size):
+        for a in range(e + 1):
+            i, k = used[a], used[e]
+            known = gram[i, k]
             if known != 0:
-                for f in range(features):
-                    b[i, f] += known * mean[used[e], f]
-        for f in range(features):
+                for f in range(low, high):
+                    b[i, f] += known * mean[k, f]
+                if i != k:
+                    for f in range(low, high):
+                        b[k, f] += known * mean[i, f]
+    for i in used:
+        for f in range(low, high):
             rss[f] += mean[i, f] * (b[i, f] - 2 * cross[i, f])
             b[i, f] = cross[i, f] - b[i, f]
-    for k in range(labels):
-        for f in range(features):
-            b[k, f] /= factor[k, k]
+    for k in range(b.shape[0]):
+        share = 1 / factor[k, k]
+        for f in range(low, high):
+            b[k, f] *= share
             rss[f] -= b[k, f] * b[k, f]
-        for i in range(k + 1, labels):
+        for i in range(k + 1, b.shape[0]):
             share = factor[k, i]
             if share != 0:
-                for f in range(features):
+                for f in range(low, high):
                     b[i, f] -= share * b[k, f]
 
 
@@ -167,32 +171,32 @@ def group_evidence(p, g, c, depth, out):  # type: ignore[no-untyped-def]  # prag
     With y ~ N(A mu, v C), mu ~ N(m, v V), v ~ IG(shape, rate): Bishop 2006, section 2.3.7.
     """
     labels, features = p.mean.shape[1], p.n_features[g]
-    patterns = 1
-    for f in range(features):
-        patterns = max(patterns, p.pattern[g, f] + 1)
+    wide = (features + LANES - 1) // LANES * LANES
+    patterns = p.pattern[g, features - 1] + 1
     gram = np.zeros((patterns, labels, labels))
-    cross = np.zeros((labels, p.white_data.shape[4]), np.float32)
-    white = np.empty((labels, p.centre.shape[1]), np.float32)
+    cross = np.zeros((labels, wide), np.float32)
+    white = np.empty((labels, p.centre.shape[1] + p.whitener.shape[4]), np.float32)
     first, last = np.empty(labels, np.int64), np.empty(labels, np.int64)
     touched = np.zeros(labels, np.bool_)
     for s in range(p.n_rows.size):
         if p.n_rows[s] > 0:
             _design(p, s, g, c, depth[s], white, first, last)
-            _add_products(p, s, g, c, white, first, last, gram, cross)
+            _add_products(white, first, last, p.white_data[s, g, c], wide, p.has[g, :, s], gram, cross)
             for i in range(labels):
                 touched[i] |= last[i] > 0
     used = np.flatnonzero(touched)
-    b, rss = np.empty((labels, features)), np.empty(features)
+    b, rss = np.empty((labels, features)), p.square[g, c].copy()
+    high = 0
     for pattern in range(patterns):
+        low = high
+        while high < features and p.pattern[g, high] == pattern:
+            high += 1
         factor = gram[pattern] + p.precision
         log_det = _cholesky(factor, labels) + p.log_covariance
-        for f in range(features):
-            rss[f] = p.square[g, c, f]
-        _left(p.mean[g], gram[pattern], cross, factor, used, b, rss)
-        for f in range(features):
-            if p.pattern[g, f] == pattern:
-                fit = np.log(p.rate + 0.5 * max(rss[f], 0.0))
-                out[f] = p.log_scale[g, c, f] - 0.5 * log_det - (p.shape + 0.5 * p.counted[g, f]) * fit
+        _left(p.mean[g], gram[pattern], cross, factor, used, low, high, b, rss)
+        for f in range(low, high):
+            fit = np.log(p.rate + 0.5 * max(rss[f], 0.0))
+            out[f] = p.log_scale[g, c, f] - 0.5 * log_det - (p.shape + 0.5 * p.counted[g, f]) * fit
 
 
 @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")

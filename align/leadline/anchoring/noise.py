@@ -25,6 +25,7 @@ class NoiseModel:
 
 
 BAND = 16
+FAINT = 0.001
 MODELS = {
     "lfp": (
         NoiseModel(0.06, 100.0, 0.0, 1.0),
@@ -66,16 +67,18 @@ def correlation(tip_distance_um: FloatArray, model: NoiseModel) -> FloatArray:
 
 
 def whitener(correlation_matrix: FloatArray) -> FloatArray:
-    """Lower-triangular ``U`` with ``U C U' = I``, but for what lies more than ``BAND`` rows off its diagonal.
+    """Lower-triangular ``U`` with ``U C U' = I``, but for what is far off its diagonal.
 
-    Rows so far apart tell next to nothing of each other once those between are known: the entries left out are below
-    0.001 of the diagonal.
+    Rows far apart tell next to nothing of each other once those between are known. Diagonals are kept up to the last
+    that reaches ``FAINT`` of the main one, at most ``BAND`` of them.
     """
     from scipy.linalg import solve_triangular
 
     factor = np.linalg.cholesky(correlation_matrix)
     whole = solve_triangular(factor, np.eye(len(factor)), lower=True)
-    return np.asarray(np.triu(whole, 1 - BAND), np.float64)
+    size = np.abs(whole) / np.diag(whole)[:, None]
+    row, column = np.nonzero(size > FAINT)
+    return np.asarray(np.triu(whole, -min(BAND - 1, int((row - column).max()))), np.float64)
 
 
 def flat_evidence(

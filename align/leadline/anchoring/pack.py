@@ -74,11 +74,17 @@ def assemble(
         for i, (s, f) in enumerate(zip(shanks, features, strict=True))
     )
     ids = np.unique(np.concatenate([np.zeros(0, np.int64), *(t.ids for t in tables if t is not None)]))
-    columns = {g: tuple(dict.fromkeys(key for f in features for key in f.columns[g])) for g in GROUPS}
+    columns = {g: _by_owners(features, g) for g in GROUPS}
     mean, covariance = label_prior(ids, columns, len(shanks), structures, knowledge)
     whole = Packed(None, features, tables, ids, columns, mean, covariance, 0.0)
     pack = _filled(_empty(whole, prior), whole, prior)
     return Packed(pack, features, tables, ids, columns, mean, covariance, _log_silent(whole, pack.power))
+
+
+def _by_owners(features: Sequence[FeatureSet], group: str) -> tuple[Column, ...]:
+    """The columns that any shank has; those that the same shanks have stand together."""
+    every = dict.fromkeys(key for f in features for key in f.columns[group])
+    return tuple(sorted(every, key=lambda key: [key in f.columns[group] for f in features]))
 
 
 def _reach(prior: DepthPrior, shank: int) -> FloatArray:
@@ -128,6 +134,7 @@ def _empty(whole: Packed, prior: DepthPrior) -> Any:
         centre=np.zeros((n, rows)),
         basis=np.zeros((n, rows, prior.dims)),
         whitener=np.zeros((*shape, rows, BAND), np.float32),
+        band=np.ones(shape, np.int64),
         white_one=np.zeros((*shape, rows), np.float32),
         white_data=np.zeros((*shape, rows, -(-wide // LANES) * LANES), np.float32),
         square=np.zeros((groups, models, wide)),
@@ -197,7 +204,9 @@ def _whiten(pack: Any, whole: Packed, s: int, g: int, c: int, has: BoolArray) ->
     feature, group = whole.features[s], GROUPS[g]
     white = whitener(correlation(feature.tip_distance_um, MODELS[group][c]))
     r = len(white)
-    for k in range(min(BAND, r)):
+    row, column = np.nonzero(white)
+    pack.band[s, g, c] = 1 + (row - column).max()
+    for k in range(pack.band[s, g, c]):
         pack.whitener[s, g, c, : r - k, k] = np.diag(white, -k)
     pack.white_one[s, g, c, :r] = white.sum(axis=1)
     own = np.flatnonzero(has[:, s])
