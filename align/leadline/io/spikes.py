@@ -23,6 +23,8 @@ if TYPE_CHECKING:
 OPTIONAL = ("amplitude_uv", "width_s")
 KNOWN = ("time_s", "unit_id", "tip_distance_um", "channel", "shank", *OPTIONAL)
 MAX_WIDTH_S = 0.02
+MANY_ROWS, ROWS_A_BYTE = 2**22, 8
+"""A Parquet file of equal rows packs them without end; times that differ take a byte or more each."""
 
 
 def read_spikes(path: Path, probe: Probe) -> Spikes:
@@ -106,9 +108,19 @@ def _read(path: Path, needed: Sequence[str], what: str) -> pd.DataFrame:
 def _read_parquet(path: Path, needed: Sequence[str], what: str) -> pd.DataFrame:
     import pandas as pd
     from pyarrow import ArrowException
+    from pyarrow.parquet import read_metadata
 
     try:
+        rows = read_metadata(path).num_rows
+        if rows > MANY_ROWS and rows > ROWS_A_BYTE * path.stat().st_size:
+            raise LeadlineError(
+                f"promises {rows} {what}, more than its {path.stat().st_size} bytes can tell apart",
+                where=str(path),
+                mend="Write it again",
+            )
         table = pd.read_parquet(path)
+    except LeadlineError:
+        raise
     except (ArrowException, AttributeError, *READ_FAULTS) as error:
         first = (str(error).splitlines() or [type(error).__name__])[0]
         raise LeadlineError(

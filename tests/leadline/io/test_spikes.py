@@ -120,6 +120,16 @@ def test_files_that_are_no_tables_are_refused(tmp_path, reader, name, content, w
         reader(path)
 
 
+def test_a_parquet_file_of_a_billion_equal_rows_is_refused_before_it_is_unpacked(tmp_path, line, monkeypatch):
+    path = tmp_path / "s.parquet"
+    rows = np.zeros(5_000_000)
+    pd.DataFrame({"time_s": rows, "unit_id": rows, "tip_distance_um": rows}).to_parquet(path)
+    assert path.stat().st_size < 600_000
+    monkeypatch.setattr("pandas.read_parquet", lambda *_: pytest.fail("unpacked"))
+    with pytest.raises(LeadlineError, match=r"promises 5000000 spikes, more than its \d+ bytes"):
+        read_spikes(path, line)
+
+
 def test_parquet_without_a_column_is_refused(tmp_path, line):
     path = tmp_path / "s.parquet"
     pd.DataFrame({"time_s": [0.1], "unitid": [1]}).to_parquet(path)
