@@ -17,12 +17,12 @@ class Pack(NamedTuple):
     which the last S are an intercept of each shank.
 
     ``centre`` (S, R), ``basis`` (S, R, J) : label depth of the rows, ``centre + basis @ z``. ``whitener`` (S, G, C,
-    R, B) : entry [r, k] carries row r into whitened row r + k < r + ``band`` (S, G, C). ``white_one`` (S, G, C, R), ``white_data``
-    (S, G, C, R, F). ``square``, ``log_scale``, ``log_null`` (G, C, F) : sum of squares, log determinant of the
-    whitener and evidence of mere noise, over the shanks that have the feature; ``counted`` (G, F) their rows.
-    ``pattern`` (G, F) : which row of ``has`` (G, P, S) names those shanks, ascending. ``power`` (G, F) : what a feature counts
-    beside its correlated fellows. ``mean`` (G, L, F). ``precision`` (L, L), ``log_covariance``. ``active``,
-    ``weight`` (S, G, M, 8) and ``start`` (S,) : cells of the label tables.
+    R, B) : entry [r, k] carries row r into whitened row r + k, k < ``band`` (S, G, C). ``white_one`` (S, G, C, R),
+    ``white_data`` (S, G, C, R, F). ``square``, ``log_scale``, ``log_null`` (G, C, F) : sum of squares, log
+    determinant of the whitener and evidence of mere noise, over the shanks that have the feature; ``counted`` (G, F)
+    their rows. ``pattern`` (G, F) : which row of ``has`` (G, P, S) names those shanks, ascending. ``power`` (G, F) :
+    what a feature counts beside its correlated fellows. ``mean`` (G, L, F). ``precision`` (L, L),
+    ``log_covariance``. ``active``, ``weight`` (S, G, M, 8) and ``start`` (S,) : cells of the label tables.
     """
 
     n_rows: Any
@@ -133,9 +133,8 @@ def _add_products(white, first, last, data, wide, has, gram, cross):  # type: ig
 
 
 @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
-def _left(mean, gram, cross, factor, used, low, high, b, rss):  # type: ignore[no-untyped-def]  # pragma: no cover
-    """Take what the labels explain off the sums of squares ``rss`` (F,) of features ``low`` to ``high``; ``used`` :
-    labels that any row touches; ``gram``, ``factor`` : upper triangles."""
+def _expected(mean, gram, used, low, high, b):  # type: ignore[no-untyped-def]  # pragma: no cover
+    """``b = gram @ mean`` for features ``low`` to ``high``; ``gram`` : its upper triangle, ``used`` its rows not 0."""
     b[:] = 0.0
     for e in range(used.size):
         for a in range(e + 1):
@@ -147,6 +146,13 @@ def _left(mean, gram, cross, factor, used, low, high, b, rss):  # type: ignore[n
                 if i != k:
                     for f in range(low, high):
                         b[k, f] += known * mean[i, f]
+
+
+@njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
+def _left(mean, gram, cross, factor, used, low, high, b, rss):  # type: ignore[no-untyped-def]  # pragma: no cover
+    """Take what the labels explain off the sums of squares ``rss`` (F,) of features ``low`` to ``high``; ``used`` :
+    labels that any row touches; ``gram``, ``factor`` : upper triangles."""
+    _expected(mean, gram, used, low, high, b)
     for i in used:
         for f in range(low, high):
             rss[f] += mean[i, f] * (b[i, f] - 2 * cross[i, f])
