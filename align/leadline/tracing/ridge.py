@@ -9,7 +9,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from leadline.base.arrays import AnyArray, FloatArray
+from leadline.base.arrays import AnyArray, Float32Array, FloatArray
 from leadline.base.progress import SILENT, Progress, tracked
 from leadline.model.volume import Volume, Voxels
 from leadline.tracing.grid import blocks
@@ -57,8 +57,6 @@ def find_ridges(
     .. [1] Sato et al. (1998). Med. Image Anal. 2, 143. doi:10.1016/S1361-8415(98)80009-1
     .. [2] Steger (1998). IEEE Trans. Pattern Anal. Mach. Intell. 20, 113. doi:10.1109/34.659930
     """
-    from scipy.ndimage import gaussian_filter
-
     from leadline.tracing._kernels import ridge_points
 
     found: list[AnyArray] = []
@@ -74,11 +72,34 @@ def find_ridges(
         hi = np.array([s.stop for s in inner])
         base = np.array([s.start for s in outer])
         for scale in scales_um:
-            smooth = gaussian_filter(block, scale / image.voxel_um, truncate=TRUNCATE, mode="nearest")
+            smooth = smoothed(block, scale / image.voxel_um)
             found.append(ridge_points(smooth, within, base, lo, hi, image.voxel_um, scale, threshold))
     rows = np.concatenate(found) if found else np.zeros((0, 7))
     rows = rows[_strongest_per_voxel(rows, image.shape)]
     return Ridges(image.points(rows[:, :3]), rows[:, 3:6], rows[:, 6])
+
+
+def smoothed(block: AnyArray, sigma_vox: FloatArray) -> Float32Array:
+    """``scipy.ndimage.gaussian_filter(block, sigma_vox, mode="nearest", truncate=TRUNCATE)`` to the bit, and faster.
+
+    ``block`` : (n0, n1, n2), taken as float32. ``sigma_vox`` : (3,) along the axes.
+    """
+    from leadline.tracing._kernels import correlate_lines, correlate_rows
+
+    first, second, third = (_weights(float(sigma)) for sigma in sigma_vox)
+    values = np.ascontiguousarray(block, np.float32)
+    down, out = np.empty_like(values), np.empty_like(values)
+    correlate_rows(values.reshape(1, len(values), -1), first, down.reshape(1, len(values), -1))
+    correlate_rows(down, second, out)
+    correlate_lines(out.reshape(-1, out.shape[2]), third)
+    return out
+
+
+def _weights(sigma: float) -> FloatArray:
+    """The middle and one side of a Gaussian kernel whose sum over both sides is 1."""
+    reach = int(TRUNCATE * sigma + 0.5)
+    both = np.exp(-0.5 / (sigma * sigma) * np.arange(-reach, reach + 1) ** 2)
+    return np.asarray((both / both.sum())[reach:], float)
 
 
 def _strongest_per_voxel(rows: AnyArray, shape: tuple[int, int, int]) -> AnyArray:
