@@ -1,4 +1,4 @@
-"""``make bench``: every benchmark, or those named: a table, docs/benchmarks/benchmarks.json, two figures."""
+"""``make bench``: every benchmark, or those named: tables and two figures in docs/benchmarks."""
 
 from __future__ import annotations
 
@@ -33,6 +33,7 @@ def main(names: list[str], folder: Path = OUT) -> int:
         new += rows
     table.show(new, console)
     table.draw([row for rows in held.values() for row in rows], folder)
+    table.page(held, table.made(folder / "benchmarks.json"), folder / "README.md")
     return int(any(row.met is False for row in new))
 
 

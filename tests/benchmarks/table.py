@@ -76,44 +76,98 @@ def curves(rows: Sequence[Row]) -> list[Curve]:
     return found
 
 
+MEASURES = ("work", "size", "ours", "reference", "ratio", "bar", "peak MB", "met")
+GROWTH = ("work", "sizes", "each further unit", "R² of a line", "peak, most / least")
+LEFT = ("work", "size", "sizes", "reference")
+
+
+def _measures(row: Row) -> tuple[str, ...]:
+    """A row in words, one for each of ``MEASURES``."""
+    peak = "-" if row.peak_mb is None else f"{row.peak_mb:.0f}"
+    sign = "≥" if row.at_least else "≤"
+    return (
+        row.work,
+        f"{row.size:g} {row.unit}",
+        f"{row.ours:.3g} {row.measured}",
+        "-" if row.theirs is None else f"{row.theirs:.3g} {row.reference}",
+        "-" if row.ratio is None else f"{row.ratio:.2f}",
+        "-" if row.bar is None else f"{sign} {row.bar:g}",
+        peak if row.peak_bar_mb is None else f"{peak} ≤ {row.peak_bar_mb:.0f}",
+        {True: "yes", False: "no", None: "-"}[row.met],
+    )
+
+
+def _growth(c: Curve) -> tuple[str, ...]:
+    """A curve in words, one for each of ``GROWTH``."""
+    return (
+        c.work,
+        f"{', '.join(f'{s:g}' for s in c.size)} {c.unit}",
+        f"{c.line[0]:.3g} {c.measured}",
+        f"{c.r2:.4f}" + ("" if c.r2 > STRAIGHT else " (bent)"),
+        "-" if c.flat is None else f"{c.flat:.2f}" + ("" if c.flat <= FLAT else " (grows)"),
+    )
+
+
 def show(rows: Sequence[Row], console: Console) -> None:
     """Print the rows, and below them how cost and memory grow."""
-    table = Table(title="Benchmarks", header_style="bold")
-    for name in ("work", "size", "ours", "reference", "ratio", "bar", "peak MB", "met"):
-        table.add_column(name, justify="left" if name in ("work", "reference") else "right")
-    for row in rows:
-        theirs = "-" if row.theirs is None else f"{row.theirs:.3g} {row.reference}"
-        sign = "≥" if row.at_least else "≤"
-        peak = "-" if row.peak_mb is None else f"{row.peak_mb:.0f}"
-        table.add_row(
-            row.work,
-            f"{row.size:g} {row.unit}",
-            f"{row.ours:.3g} {row.measured}",
-            theirs,
-            "-" if row.ratio is None else f"{row.ratio:.2f}",
-            "-" if row.bar is None else f"{sign} {row.bar:g}",
-            peak if row.peak_bar_mb is None else f"{peak} ≤ {row.peak_bar_mb:.0f}",
-            {True: "yes", False: "[bold red]no", None: "-"}[row.met],
-        )
-    console.print(table)
+    growth = [_growth(curve) for curve in curves(rows)]
+    for title, names, lines in (
+        ("Benchmarks", MEASURES, [_measures(row) for row in rows]),
+        ("Growth with size", GROWTH, growth),
+    ):
+        table = Table(title=title, header_style="bold")
+        for name in names:
+            table.add_column(name, justify="left" if name in LEFT else "right")
+        for line in lines:
+            bad = line[-1] == "no" or any(word.endswith((" (bent)", " (grows)")) for word in line)
+            table.add_row(*line, style="bold red" if bad else None)
+        if lines:
+            console.print(table)
     for row in rows:
         if row.note:
             console.print(f"{row.work}, {row.size:g} {row.unit}: {row.note}", markup=False, highlight=False)
-    growth = curves(rows)
-    if not growth:
-        return
-    table = Table(title="Growth with size", header_style="bold")
-    for name in ("work", "sizes", "each further unit", "R² of a line", "peak, most / least"):
-        table.add_column(name, justify="left" if name in ("work", "sizes") else "right")
-    for c in growth:
-        table.add_row(
-            c.work,
-            f"{', '.join(f'{s:g}' for s in c.size)} {c.unit}",
-            f"{c.line[0]:.3g} {c.measured}",
-            f"{c.r2:.4f}" + ("" if c.r2 > STRAIGHT else " [bold red]bent"),
-            "-" if c.flat is None else f"{c.flat:.2f}" + ("" if c.flat <= FLAT else " [bold red]grows"),
-        )
-    console.print(table)
+
+
+def page(benches: dict[str, list[Row]], made: dict[str, str], path: Path) -> None:
+    """Write the last figures of every benchmark as one page. ``made`` : when and on what each was measured."""
+    rows = [row for held in benches.values() for row in held]
+    lines = [
+        "# What it costs",
+        "",
+        "Made by `make bench`; all figures with versions and machine are in [benchmarks.json](benchmarks.json).",
+        "Costs are CPU seconds; each reference is measured in the same process. Ratios are ours over the reference,",
+        "or the reference over ours where the bar says ≥.",
+        "",
+        *_markdown(MEASURES, [_measures(row) for row in rows]),
+        "",
+        "## Growth with size",
+        "",
+        *_markdown(GROWTH, [_growth(curve) for curve in curves(rows)]),
+        "",
+        "![Cost against size](cost.png)",
+        "![Memory against size](memory.png)",
+        "",
+        "## Notes",
+        "",
+        *(f"- {row.work}, {row.size:g} {row.unit}: {row.note}" for row in rows if row.note),
+        "",
+        *(f"- `{name}`: {said}" for name, said in made.items()),
+    ]
+    write_text(path, "\n".join(lines) + "\n")
+
+
+def _markdown(names: Sequence[str], lines: Sequence[Sequence[str]]) -> list[str]:
+    rule = ["---" if name in LEFT else "---:" for name in names]
+    return ["| " + " | ".join(line) + " |" for line in (names, rule, *lines)]
+
+
+def made(path: Path) -> dict[str, str]:
+    """When and on what each benchmark in the JSON file was measured, in words."""
+    told = {}
+    for name, bench in json.loads(path.read_text("utf-8"))["benches"].items():
+        m = bench["machine"]
+        told[name] = f"{bench['day']}, {m['processor']}, {m['cores']} cores, {m['memory_gb']:g} GB, {m['system']}"
+    return told
 
 
 def write(path: Path, benches: dict[str, list[Row]]) -> dict[str, list[Row]]:

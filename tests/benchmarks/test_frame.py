@@ -61,4 +61,8 @@ def test_rows_become_a_table_a_file_and_figures(tmp_path):
     assert curve.line == pytest.approx((0.2, 0.1))
     assert curve.r2 > 0.999
     assert curve.flat == pytest.approx(116 / 101)
+    table.page(held, table.made(file), tmp_path / "README.md")
+    text = (tmp_path / "README.md").read_text("utf-8")
+    assert "| sum | 16 GB | 3.3 CPU s | 1.6 numpy | 2.06 | ≤ 4 | 116 | yes |" in text
+    assert "| sum | 1, 4, 16 GB | 0.2 CPU s | 1.0000 | 1.15 (grows) |" in text
     assert {p.name for p in table.draw(rows, tmp_path)} == {"cost.png", "cost.svg", "memory.png", "memory.svg"}
