@@ -33,13 +33,54 @@ TOLERANCE = {
 SAME_NAMES = 0.9  # channels on a border may change sides
 
 
+# What a structure of the tiny brain does: power in five bands in dB over the others, spikes a second of a site.
+BANDS_HZ = ((0.7, 4.0), (5.0, 10.0), (30.0, 90.0), (140.0, 220.0), (300.0, 1000.0))
+SOUNDS = {
+    0: (-6, -6, -8, -9, -9, 0.0), 614454277: (-1, -1, -3, -2, -4, 0.3), 12: (0, -1, 0, -1, -1, 3.0),
+    51: (-2, -2, 0, -1, 3, 8.0), 13: (3, -1, 1, 2, 4, 9.0), 14: (2, -1, 0, 0, 0, 4.0), 21: (-1, 1, -3, -2, -4, 0.2),
+    4294967295: (0, 1, 1, 8, 5, 12.0), 32: (1, 5, 4, 0, 1, 3.0), 50: (-2, -2, -1, -1, 2, 5.0),
+}  # fmt: skip
+SECONDS, DEEPER_UM = 30, 90.0
+
+
+def write_speaking_recording(folder: Path) -> None:
+    """Traces and spikes that speak of the structures, of a probe that sat a little deeper than its dye."""
+    from tests.good_brain import N_CONTACTS, N_TRACES, SAMPLING_HZ, entry_um, label_at, tip_um
+
+    rng = np.random.default_rng(11)
+    tip_distance_um = 100.0 + 50.0 * np.arange(N_CONTACTS)
+    way = (tip_um() - entry_um()) / np.linalg.norm(tip_um() - entry_um())
+    label = label_at(tip_um() + (DEEPER_UM - tip_distance_um)[:, None] * way)
+    sound = np.array([SOUNDS[int(k)] for k in label])
+    n = int(SECONDS * SAMPLING_HZ)
+    hz = np.fft.rfftfreq(n, 1 / SAMPLING_HZ)
+    uv = np.zeros((N_CONTACTS, n), np.float32)
+    for (low, high), db in zip(BANDS_HZ, sound.T, strict=False):
+        noise = np.zeros((N_CONTACTS, hz.size), complex)
+        band = (hz >= low) & (hz < high)
+        size = (N_CONTACTS, int(band.sum()))
+        own, shared = (rng.normal(size=size) + 1j * rng.normal(size=size) for _ in range(2))
+        noise[:, band] = own + (shared + np.roll(shared, 1, axis=0) + np.roll(shared, -1, axis=0))
+        wave = np.fft.irfft(noise, n, axis=1)
+        uv += (120.0 / low**0.5 * 10 ** (db / 20))[:, None] * wave / wave.std(axis=1, keepdims=True)
+    traces = np.zeros((n, N_TRACES), "<i2")
+    traces[:, :N_CONTACTS] = np.clip(np.rint(uv.T / 0.5), -32768, 32767)
+    traces.tofile(folder / "a_lfp.bin")
+    rows = [(t, f"u{2 * k + u}", tip_distance_um[k], 40 + 6 * u + 4 * sound[k, 4])
+            for k in range(N_CONTACTS) for u in range(2)
+            for t in rng.uniform(0, SECONDS, rng.poisson(sound[k, 5] * SECONDS / 2))]  # fmt: skip
+    lines = [f"{t:.5f},{unit},{tip:g},{size:.1f}" for t, unit, tip, size in sorted(rows)]
+    (folder / "a_spikes.csv").write_text("time_s,unit_id,tip_distance_um,amplitude_uv\n" + "\n".join(lines) + "\n")
+
+
 def write_inputs(folder: Path, chunk: tuple[int, int, int] = (64, 64, 64)) -> None:
-    """The tiny brain, its dye track to be found, its stack in chunks of ``chunk`` voxels."""
+    """The tiny brain with a recording that says much, its dye track to be found, its stack in chunks of ``chunk``."""
     import tifffile
     import zarr
     from tests.good_brain import STACK_UM, write_good_brain
 
     file = write_good_brain(folder)
+    write_speaking_recording(folder)
     for name in ("auto", "dye"):
         voxels = tifffile.imread(folder / f"{name}.ome.tif")
         (folder / f"{name}.ome.tif").unlink()
