@@ -135,4 +135,5 @@ def test_the_sampler_finds_the_mean_spread_and_evidence_of_brute_force():
     ours = np.concatenate([r.z @ prior.basis.T + prior.mean_um for r in runs])
     assert np.mean([r.log_evidence for r in runs]) == pytest.approx(log_z, abs=0.25)
     assert ours.mean(axis=0) == pytest.approx(mean, abs=0.15 * spread.max())
-    assert [_middle(d, np.ones(len(d))) for d in ours.T] == pytest.approx(spread, rel=0.1)
+    middle = np.array([_middle(d, np.ones(len(d))) for d in ours.T])
+    assert middle == pytest.approx(spread, rel=0.15)  # the grid is half as coarse as that

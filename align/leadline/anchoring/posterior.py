@@ -25,11 +25,11 @@ if TYPE_CHECKING:
 
 # power of the likelihood: features and rows are less independent than the model says, and so are the shanks of a
 # probe (of four, ALIKE makes two). Chosen for calibration on invented tracks and brains, kind and rough, of other seeds
-# than the study's; 0.25 to 0.4 do nearly as well
-POWER, ALIKE = 0.3, 0.5
+# than the study's; 0.3 to 0.4 do nearly as well
+POWER, ALIKE = 0.4, 0.5
 # nats of tempered evidence for each row and feature from which on a recording is believed with all of its power, and
 # the least share of it: learned on the same invented brains, kind and rough
-TRUSTED_NATS, LEAST_TRUST = 0.1, 0.1
+TRUSTED_NATS, LEAST_TRUST = 0.11, 0.1
 # how much tempered evidence makes labels as likely as not, and how fast it convinces: learned on invented tracks,
 # because the evidence of a tempered model is no calibrated Bayes factor
 EVEN_AT, CONVINCES = 4.0, 0.9

@@ -21,11 +21,12 @@ if TYPE_CHECKING:
     from leadline.anchoring.depth_prior import DepthPrior
     from leadline.anchoring.pack import Packed
 
-# few particles that walk far find better modes, and hold them steadier between seeds, than many that walk little
-PARTICLES = 80
-MOVES = 8
-LAST_MOVES = 12
-SCOUTS = 2048
+# Few particles that walk far find better modes, and hold them steadier between seeds, than many that walk little.
+# Shanks of a probe, which cost more, agree sooner.
+WALKERS, WALKERS_OF_SEVERAL = 160, 96
+MOVES, LAST_MOVES = 8, 12
+# of the walkers: how many scouts go before them, and how many walk, less far, while modes are still to be told apart
+SCOUTS, EARLY = 26, 4
 KEEP_ESS = 0.4
 MAX_SHRINK = 24
 MAX_LEVELS = 60
@@ -34,11 +35,13 @@ SHRINK = 0.7
 
 @dataclass
 class Ensemble:
-    """Particles in motion: ``z`` (N, J), log likelihood of each group of features (N, G), noise models ``c`` (N, G)."""
+    """Particles in motion: ``z`` (N, J), log likelihood of each group of features (N, G), noise models ``c`` (N, G),
+    log weights (N,)."""
 
     z: FloatArray
     by_group: FloatArray
     c: IntArray
+    log_weight: FloatArray
 
     @property
     def log_likelihood(self) -> FloatArray:
@@ -52,6 +55,7 @@ class Ensemble:
             np.concatenate([p.z for p in parts]),
             np.concatenate([p.by_group for p in parts]),
             np.concatenate([p.c for p in parts]),
+            np.concatenate([p.log_weight for p in parts]),
         )
 
     def take(self, rows: IntArray) -> Ensemble:
@@ -60,6 +64,7 @@ class Ensemble:
             self.z[rows].copy(),
             self.by_group[rows].copy(),
             self.c[rows].copy(),
+            np.zeros(len(rows)),
         )
 
 
@@ -131,26 +136,29 @@ def _tempered(
     progress: Progress,
     settle: Callable[[float], float],
 ) -> Drawn:
-    particles = _scouts(prior, rng, SCOUTS)
+    few = WALKERS if packed.speaking == 1 else WALKERS_OF_SEVERAL
+    particles = _scouts(prior, rng, SCOUTS * few)
     _evaluate(crew, packed, particles)
     beta, log_z, spent = 0.0, 0.0, len(particles.z)
     levels = [(beta, particles)]
     progress.begin("depth posterior", 1.0)
     while beta < 1.0 and len(levels) <= MAX_LEVELS:
-        step = _next_step(particles.log_likelihood * power, 1.0 - beta)
-        particles, gained, more = _raised(crew, packed, prior, particles, power, beta, step, rng)
+        step = _next_step(particles, power, 1.0 - beta, KEEP_ESS * few * MOVES)
+        more_of_them = max(1, EARLY >> (len(levels) - 1))
+        walk = (few * more_of_them, MOVES // more_of_them)
+        particles, gained, more = _raised(crew, packed, prior, particles, power, beta, step, rng, walk)
         beta, log_z, spent = beta + step, log_z + gained, spent + more
         levels.append((beta, particles))
         progress.step(step)
     share = settle(log_z)
     if share < beta:  # back to the last level below, and up to the share from there
         start, particles = [level for level in levels if level[0] <= share][-1]
-        particles, _, more = _raised(crew, packed, prior, particles, power, start, share - start, rng)
+        particles, _, more = _raised(crew, packed, prior, particles, power, start, share - start, rng, (few, MOVES))
         spent += more
     shape = fit(particles.z, np.ones(len(particles.z)))
-    last = particles.take(np.arange(len(particles.z))[-PARTICLES:])
+    last = particles.take(np.arange(len(particles.z))[-few:])
     draws, more = _walked(crew, packed, last, shape, power * share, rng, LAST_MOVES)
-    effective = _effective(draws.z.reshape(LAST_MOVES, PARTICLES, -1) @ prior.basis.T)
+    effective = _effective(draws.z.reshape(LAST_MOVES, few, -1) @ prior.basis.T)
     return Drawn(draws.z, log_z, len(levels) - 1, spent + more, effective, share)
 
 
@@ -163,15 +171,16 @@ def _raised(
     beta: float,
     step: float,
     rng: np.random.Generator,
+    walk: tuple[int, int],
 ) -> tuple[Ensemble, float, int]:
-    """New particles at ``beta + step``, the log evidence gained, and evaluations spent."""
-    gain = step * power * particles.log_likelihood
-    top = gain.max()
-    weight = np.exp(gain - top)
-    raised = particles.take(_resample(weight, particles.z @ prior.offset_basis, PARTICLES, rng))
+    """New particles at ``beta + step``, the log evidence gained, and evaluations spent; ``walk`` : walkers, moves."""
+    log_weight = particles.log_weight + step * power * particles.log_likelihood
+    gained = float(np.logaddexp.reduce(log_weight) - np.logaddexp.reduce(particles.log_weight))
+    weight = np.exp(log_weight - log_weight.max())
+    raised = particles.take(_resample(weight, particles.z @ prior.offset_basis, walk[0], rng))
     shape = fit(particles.z, weight)
-    along, spent = _walked(crew, packed, raised, shape, power * (beta + step), rng, MOVES)
-    return along, float(top + np.log(weight.mean())), spent
+    along, spent = _walked(crew, packed, raised, shape, power * (beta + step), rng, walk[1])
+    return along, gained, spent
 
 
 def _walked(
@@ -237,11 +246,12 @@ def fit(z: FloatArray, weight: FloatArray) -> tuple[FloatArray, FloatArray]:
 
 
 def _scouts(prior: DepthPrior, rng: np.random.Generator, n: int) -> Ensemble:
-    return Ensemble(
-        prior.draw(rng, n),
-        np.empty((n, len(GROUPS))),
-        rng.integers(0, len(MODELS["lfp"]), (n, len(GROUPS))),
-    )
+    """Paths whose tip offsets are spread as far as stray ones, in antithetic pairs, weighted to the prior: where the
+    dye ends far from the tip, enough of them are near the truth."""
+    half = rng.standard_normal((n // 2, prior.dims))
+    z = np.concatenate([half, -half])
+    log_weight = prior.log_ratio(prior.offset_mean_um + z @ prior.offset_basis)
+    return Ensemble(z, np.empty((n, len(GROUPS))), rng.integers(0, len(MODELS["lfp"]), (n, len(GROUPS))), log_weight)
 
 
 def _evaluate(crew: Crew, packed: Packed, p: Ensemble) -> None:
@@ -251,19 +261,21 @@ def _evaluate(crew: Crew, packed: Packed, p: Ensemble) -> None:
     crew.run(evaluate, (packed.pack,), arrays)
 
 
-def _next_step(log_weight: FloatArray, left: float) -> float:
-    """Largest step of the inverse temperature that keeps half of the effective sample size (by bisection)."""
+def _next_step(particles: Ensemble, power: float, left: float, keep: float) -> float:
+    """Largest step of the inverse temperature that keeps an effective sample size of ``keep`` (by bisection)."""
+    slope = power * particles.log_likelihood
 
     def ess(step: float) -> float:
-        w = np.exp(step * (log_weight - log_weight.max()))
-        return float(w.sum() ** 2 / (w**2).sum()) / len(w)
+        log_weight = particles.log_weight + step * slope
+        w = np.exp(log_weight - log_weight.max())
+        return float(w.sum() ** 2 / (w**2).sum())
 
-    if ess(left) >= KEEP_ESS:
+    if ess(left) >= keep:
         return left
     low, high = 0.0, left
     for _ in range(40):
         middle = (low + high) / 2
-        low, high = (middle, high) if ess(middle) >= KEEP_ESS else (low, middle)
+        low, high = (middle, high) if ess(middle) >= keep else (low, middle)
     return max(low, 1e-6)
 
 
