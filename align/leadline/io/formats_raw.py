@@ -212,13 +212,8 @@ def open_nrrd(path: Path, channel: int) -> Image:
     for is_space in space:
         axes += next(names) if is_space else "c"
     data = pick(_nrrd_block(path, header, shape, offset), axes, channel, path)
-    try:
-        voxel, unitless = _nrrd_sizes(header, space)
-        letters, notes = _nrrd_letters(header, space, path)
-    except LeadlineError:
-        raise
-    except READ_FAULTS as error:
-        raise unreadable(path, error) from error
+    voxel, unitless = _nrrd_sizes(header, space)
+    letters, notes = _nrrd_letters(header, space, path)
     return Image(path, (_level(data),), voxel, letters, unitless, notes)
 
 

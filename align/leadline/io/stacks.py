@@ -7,12 +7,12 @@ from typing import TYPE_CHECKING
 
 from leadline.base.errors import LeadlineError
 from leadline.base.progress import SILENT, Progress
-from leadline.io.images import Image, settle, volume_of
+from leadline.io.images import READ_FAULTS, Image, settle, unreadable, volume_of
 from leadline.io.plausible import require_chain, require_plausible
 from leadline.model.volume import Stack
 
 if TYPE_CHECKING:
-    from collections.abc import Sequence
+    from collections.abc import Callable, Sequence
     from pathlib import Path
 
 FORMATS = "OME-Zarr, OME-TIFF, TIFF, a folder of TIFF planes, NIfTI (.nii, .nii.gz), NRRD (.nrrd, .nhdr)"
@@ -33,7 +33,7 @@ def open_image(path: Path, channel: int = 0) -> Image:
         raise LeadlineError("is not there", where=str(path), mend="Correct the path; it is relative to its toml file")
     if path.is_dir():
         zarr = is_zarr(path) or name.endswith(".zarr")
-        return _plausible(open_zarr(path, channel) if zarr else open_planes(path, channel))
+        return _read(open_zarr if zarr else open_planes, path, channel)
     if path.stat().st_size == 0:
         raise LeadlineError("is an empty file", where=str(path), mend="Copy or export it again")
     for suffixes, reader in (
@@ -44,12 +44,19 @@ def open_image(path: Path, channel: int = 0) -> Image:
         if name.endswith(suffixes):
             if reader is open_tiff:
                 require_chain(path)
-            return _plausible(reader(path, channel))
+            return _read(reader, path, channel)
     raise LeadlineError(f"is of no format that is read here ({path.suffix or 'no suffix'})", where=str(path),
                         mend=f"Give one of {FORMATS}")  # fmt: skip
 
 
-def _plausible(image: Image) -> Image:
+def _read(reader: Callable[[Path, int], Image], path: Path, channel: int) -> Image:
+    """What a reader makes of a file; whatever a damaged header leads it to is one error."""
+    try:
+        image = reader(path, channel)
+    except LeadlineError:
+        raise
+    except READ_FAULTS as error:
+        raise unreadable(path, error) from error
     require_plausible(image)
     return image
 
