@@ -86,15 +86,15 @@ def _few(volume: Any) -> Any:
 def _equal(source: Any, level: Any) -> bool:
     """A block in the middle against numpy's own weighted mean, to the rounding of a level of integers."""
     factor = level.voxel_um / source.voxel_um
-    start = [n // 2 for n in level.shape]
-    fine = [(int(np.floor(s * f)), int(np.ceil((s + 4) * f))) for s, f in zip(start, factor, strict=True)]
-    means = np.asarray(source.data[tuple(slice(a, b) for a, b in fine)], float)
-    for axis, (s, f, (a, b)) in enumerate(zip(start, factor, fine, strict=True)):
-        low, at = (s + np.arange(4))[:, None] * f - a, np.arange(b - a)
-        weight = np.clip(np.minimum(at + 1, low + f) - np.maximum(at, low), 0, None) / f
-        means = np.moveaxis(np.tensordot(weight, means, (1, axis)), 0, axis)
-    here = np.asarray(level.data[tuple(slice(s, s + 4) for s in start)], float)
-    return bool(np.abs(here - means).max() <= 0.5 + 1e-2)
+    start = [(n - 1) // 2 for n in level.shape]
+    fine = [(int(np.floor(s * f)), int(np.ceil((s + 1) * f))) for s, f in zip(start, factor, strict=True)]
+    mean = np.asarray(source.data[tuple(slice(a, b) for a, b in fine)], float)
+    for s, f, (a, b) in zip(start, factor, fine, strict=True):
+        at = np.arange(a, min(b, a + len(mean)))
+        weight = np.clip(np.minimum(at + 1, (s + 1) * f) - np.maximum(at, s * f), 0, None)
+        mean = np.tensordot(weight / weight.sum(), mean, (0, 0))
+    here = float(level.data[tuple(slice(s, s + 1) for s in start)].squeeze())
+    return bool(abs(here - mean) <= 0.5 + 1e-2)
 
 
 def _plane(number: int) -> Any:

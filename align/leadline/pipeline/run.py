@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 from leadline.base.atomic import sweep
 from leadline.base.errors import LeadlineError
 from leadline.base.fingerprint import fingerprint_path, fingerprint_value
+from leadline.base.memory import give_back
 from leadline.base.progress import SILENT, Progress
 from leadline.pipeline.bench import Bench
 from leadline.pipeline.ingest import ingest
@@ -66,12 +67,14 @@ def _run(bench: Bench, until: str) -> Summary:
         try:
             if step.stage in READ_THE_STACK:
                 ingest(bench)
+                give_back()
             warnings = step.run(bench)
         finally:
             _require_unchanged(step, marks, record, brain)  # whatever else went wrong, a change is why
         outputs = {str(p.relative_to(brain.folder)): fingerprint_path(p) for p in step.gives}
         record.keep(step.name, Done(key, outputs, tuple(warnings), inputs))
         done.append(step.name)
+        give_back()
     if until == "locate":
         write_provenance(brain, record, [s.name for s in steps])
     warnings_all = tuple((s.name, w) for s in steps for w in record.steps[s.name].warnings)
