@@ -15,7 +15,7 @@ if TYPE_CHECKING:
     from leadline.base.arrays import AnyArray, Float32Array, IntArray
     from leadline.model.volume import Voxels
 
-KEPT_BYTES = 192 * 2**20
+KEPT_BYTES = 128 * 2**20
 KEPT_CHUNK_BYTES = 32 * 2**20
 
 Region = tuple[slice, slice, slice]
