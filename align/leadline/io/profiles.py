@@ -81,7 +81,7 @@ def write_spectra(path: Path, spectra: Spectra) -> None:
     words = np.array([spectra.penetration, spectra.event_kind], dtype=np.str_)
     arrays = {name: getattr(spectra, name) for name in SPECTRA_FIELDS}
     with whole_file(path) as part, part.open("wb") as handle:
-        np.savez_compressed(handle, allow_pickle=False, words=words, **arrays)
+        np.savez_compressed(handle, words=words, **arrays)
 
 
 def read_spectra(path: Path) -> Spectra:
