@@ -150,7 +150,6 @@ def page(benches: dict[str, list[Row]], made: dict[str, str], path: Path) -> Non
         "## Notes",
         "",
         *(f"- {row.work}, {row.size:g} {row.unit}: {row.note}" for row in rows if row.note),
-        "",
         *(f"- `{name}`: {said}" for name, said in made.items()),
     ]
     write_text(path, "\n".join(lines) + "\n")
@@ -240,5 +239,6 @@ def _memory(axes: Any, curve: Curve) -> None:
     low = min(curve.peak_mb)
     axes.axhspan(low, low * FLAT, color=SOFT, alpha=0.2, linewidth=0)
     axes.plot(curve.size, curve.peak_mb, "o-", color=ACCENT, markersize=4, linewidth=0.8)
+    axes.set_ylim(top=1.15 * max(curve.peak_mb))
     axes.set_ylabel("peak memory, MB")
     axes.text(0.04, 0.06, "grey: within 10 % of the least", transform=axes.transAxes, color=SOFT)
