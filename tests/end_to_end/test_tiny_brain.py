@@ -90,7 +90,8 @@ def test_the_channel_table_keeps_the_contract(done):
     assert table["p_region"].between(0, 1).all()
     assert (table["p_coarse"] >= table["p_region"] - 1e-9).all()
     at = table[["ap_um", "dv_um", "ml_um"]].to_numpy(float)
-    assert table["region_id"].tolist() == atlas.label_at(at).tolist()
+    # a border or two lie between the middle of the draws and the likeliest structure, seldom
+    assert (table["region_id"] == atlas.label_at(at)).mean() > 0.7
     assert table["region"].tolist() == [atlas.structures[i].acronym for i in table["region_id"]]
     assert (np.diff(table.sort_values("tip_distance_um")["track_depth_um"]) <= 0).all()
     same = pd.read_parquet(done / "out" / "channels.parquet")
@@ -102,6 +103,8 @@ def test_probabilities_agree_between_the_two_tables(done):
     assert posterior.groupby("channel")["probability"].sum().between(0.97, 1.0001).all()
     named = posterior.merge(table, on=["penetration", "channel", "region_id"], how="inner")
     assert np.allclose(named["probability"], named["p_region"], atol=1e-3)
+    likeliest = posterior.groupby("channel")["probability"].max()
+    assert np.allclose(table.set_index("channel")["p_region"], likeliest.sort_index(), atol=1e-3)
 
 
 def test_a_second_run_changes_no_file_and_is_quick(brain, capsys):

@@ -23,14 +23,16 @@ BORDER_STEP_UM = 5.0
 BORDER_REACH_UM = 2000.0
 TANGENT_STEP_UM = 25.0
 INFORMED_FROM = 0.5
+TIE = 1e-6
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Located:
     """Contacts of one shank, located. All arrays have one entry a contact.
 
-    ``region_id`` is the structure at ``atlas_um``; ``p_region`` the probability, given all modelled error, that it is
-    the right one; ``region_draws`` (S, n) the structure in every draw.
+    ``region_id`` is the likeliest structure, ``p_region`` its probability, given all modelled error; ``region_draws``
+    (S, n) the structure in every draw. Depth and ``atlas_um`` are the middle of the draws, so that close to a border,
+    or where the track grazes one, the atlas may hold another structure there.
     """
 
     track_depth_um: FloatArray
@@ -64,23 +66,32 @@ def locate(
     draws = posterior.depth_um[:, rows]
     depth = np.median(draws, axis=0)
     atlas_um = track.atlas_at(depth)
-    region = atlas.label_at(atlas_um)
+    here = atlas.label_at(atlas_um)
     if posterior.label_id is None:
         region_draws = atlas.label_at(_with_lateral_error(draws, track, registration_error_um, seed))
     else:
         region_draws = posterior.label_id[:, rows]
+    region, p_region = likeliest(region_draws, here)
     coarse_of = _coarse_ids(atlas.structures, np.union1d(region, region_draws))
     return Located(
         track_depth_um=depth,
         track_depth_sd_um=draws.std(axis=0),
         atlas_um=atlas_um,
         region_id=region,
-        p_region=(region_draws == region).mean(axis=0),
+        p_region=p_region,
         p_coarse=(_lookup(coarse_of, region_draws) == _lookup(coarse_of, region)).mean(axis=0),
         boundary_um=border_distance(track, atlas, depth),
         basis=tuple(_basis(float(d), anchors, posterior.informed) for d in tip_distance_um),
         region_draws=region_draws,
     )
+
+
+def likeliest(region_draws: IntArray, here: IntArray) -> tuple[IntArray, FloatArray]:
+    """Structure ``(n,)`` that most draws ``(S, n)`` believe in, and their share; of equal ones ``here`` (n,)."""
+    ids = np.unique(region_draws)
+    share = np.stack([(region_draws == i).mean(axis=0) for i in ids], axis=1)
+    best = np.argmax(share + TIE * (ids == here[:, None]), axis=1)
+    return ids[best], np.asarray(share[np.arange(len(best)), best], np.float64)
 
 
 def border_distance(track: Track, atlas: Atlas, depth_um: FloatArray) -> FloatArray:

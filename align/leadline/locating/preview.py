@@ -10,6 +10,7 @@ import numpy as np
 
 from leadline.base.arrays import Float32Array, FloatArray, IntArray, frozen, frozen_vector
 from leadline.base.errors import LeadlineError
+from leadline.locating.assign import TIE
 
 if TYPE_CHECKING:
     from collections.abc import Iterable
@@ -64,7 +65,7 @@ class LabelTable:
 @dataclass(frozen=True, slots=True, eq=False)
 class Odds:
     """How likely each structure is at each row. ``ids`` : (L,). ``share`` : (R, L), rows sum to 1. ``region_id`` :
-    (R,) the structure at the median depth, ``p_region`` : (R,) its share."""
+    (R,) the likeliest structure, ``p_region`` : (R,) its share."""
 
     ids: IntArray
     share: Float32Array
@@ -94,7 +95,8 @@ def believed(posterior: DepthPosterior, table: LabelTable) -> LabelTable:
 
 
 def preview_odds(median_um: FloatArray, draws_um: FloatArray, table: LabelTable) -> Odds:
-    """Odds of rows whose depth is ``median_um`` (R,), with draws ``(S, R)``; draw s is looked up on copy s mod K."""
+    """Odds of rows with draws ``(S, R)``; draw s is looked up on copy s mod K. Of structures equally likely the one at
+    ``median_um`` (R,) is named."""
     draws, rows = draws_um.shape
     copies, cells = table.lateral_code.shape
     start = (np.arange(draws, dtype=np.int32) % copies * cells)[:, None]
@@ -102,8 +104,10 @@ def preview_odds(median_um: FloatArray, draws_um: FloatArray, table: LabelTable)
     n = table.ids.size
     counts = np.bincount((codes + np.arange(rows, dtype=np.int32) * n).ravel(), minlength=rows * n).reshape(rows, n)
     share = counts.astype(np.float32) / np.float32(draws)
-    here = table.code[table.cell(median_um)].astype(np.int64)
-    return Odds(table.ids, share, table.ids[here], share[np.arange(rows), here])
+    leaning = share.copy()
+    leaning[np.arange(rows), table.code[table.cell(median_um)]] += TIE
+    best = leaning.argmax(axis=1)
+    return Odds(table.ids, share, table.ids[best], share[np.arange(rows), best])
 
 
 def odds_of(region_id: IntArray, region_draws: IntArray) -> Odds:
