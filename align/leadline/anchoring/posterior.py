@@ -32,7 +32,7 @@ POWER, ALIKE = 0.4, 0.5
 TRUSTED_NATS, LEAST_TRUST = 0.11, 0.1
 # how much tempered evidence makes labels as likely as not, and how fast it convinces: learned on invented tracks,
 # because the evidence of a tempered model is no calibrated Bayes factor
-EVEN_AT, CONVINCES = 4.0, 0.9
+EVEN_AT, CONVINCES = 5.5, 0.9
 # a median strays 1.25 times as far as a mean, two runs sqrt(2) times as far as one
 SHIFT_OF_MEDIAN = 1.25 * 2**0.5
 ON_TRACK = -1

@@ -32,7 +32,7 @@ def write_transforms(path: Path, transforms: Mapping[str, PointTransform]) -> No
             arrays[f"{name}_field"] = transform.field.displacement_um
             arrays[f"{name}_grid"] = np.stack([transform.field.spacing_um, transform.field.origin_um])
     with whole_file(path) as part, part.open("wb") as handle:
-        np.savez(handle, **arrays)
+        np.savez(handle, **arrays)  # type: ignore[arg-type]
 
 
 def read_transforms(path: Path, names: Sequence[str]) -> tuple[PointTransform, ...]:
