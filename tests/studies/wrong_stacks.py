@@ -24,7 +24,7 @@ from leadline.registration.stage import register
 
 CODES = ("PIR", "RAS", "LIP", "IAR", "SPL")
 PIR_VOXEL_UM = (96.0, 75.0, 75.0)
-SETTINGS = RegisterSettings(resolution_um=200.0, deformable=False)
+SETTINGS = RegisterSettings(resolution_um=400.0, deformable=False)
 
 
 @dataclass(frozen=True)
