@@ -23,7 +23,7 @@ if TYPE_CHECKING:
 
 # Few particles that walk far find better modes, and hold them steadier between seeds, than many that walk little.
 # Shanks of a probe, which cost more, agree sooner.
-WALKERS, WALKERS_OF_SEVERAL = 160, 96
+WALKERS, WALKERS_OF_SEVERAL = 120, 64
 MOVES, LAST_MOVES = 8, 12
 # of the walkers: how many scouts go before them, and how many walk, less far, while modes are still to be told apart
 SCOUTS, EARLY = 26, 4
