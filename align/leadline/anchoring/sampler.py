@@ -6,7 +6,7 @@ import os
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from itertools import pairwise
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, NamedTuple
 
 import numpy as np
 
@@ -22,7 +22,7 @@ if TYPE_CHECKING:
     from leadline.anchoring.pack import Packed
 
 # Few particles that walk far find better modes, and hold them steadier between seeds, than many that walk little.
-# Shanks of a probe, which cost more, agree sooner.
+# Where several shanks speak, a look at them costs more, and fewer walk.
 WALKERS, WALKERS_OF_SEVERAL = 120, 64
 MOVES, LAST_MOVES = 8, 12
 # of the walkers: how many scouts go before them, and how many walk, less far, while modes are still to be told apart
@@ -108,6 +108,15 @@ class Crew:
             job.result()
 
 
+class Target(NamedTuple):
+    """What particles walk on: the likelihood's power, and centre and root of the Gaussian that guides them."""
+
+    crew: Crew
+    packed: Packed
+    power: float
+    shape: tuple[FloatArray, FloatArray]
+
+
 def sample(
     packed: Packed,
     prior: DepthPrior,
@@ -157,7 +166,7 @@ def _tempered(
         spent += more
     shape = fit(particles.z, np.ones(len(particles.z)))
     last = particles.take(np.arange(len(particles.z))[-few:])
-    draws, more = _walked(crew, packed, last, shape, power * share, rng, LAST_MOVES)
+    draws, more = _walked(Target(crew, packed, power * share, shape), last, rng, LAST_MOVES)
     effective = _effective(draws.z.reshape(LAST_MOVES, few, -1) @ prior.basis.T)
     return Drawn(draws.z, log_z, len(levels) - 1, spent + more, effective, share)
 
@@ -179,23 +188,15 @@ def _raised(
     weight = np.exp(log_weight - log_weight.max())
     raised = particles.take(_resample(weight, particles.z @ prior.offset_basis, walk[0], rng))
     shape = fit(particles.z, weight)
-    along, spent = _walked(crew, packed, raised, shape, power * (beta + step), rng, walk[1])
+    along, spent = _walked(Target(crew, packed, power * (beta + step), shape), raised, rng, walk[1])
     return along, gained, spent
 
 
-def _walked(
-    crew: Crew,
-    packed: Packed,
-    particles: Ensemble,
-    shape: tuple[FloatArray, FloatArray],
-    power: float,
-    rng: np.random.Generator,
-    moves: int,
-) -> tuple[Ensemble, int]:
+def _walked(target: Target, particles: Ensemble, rng: np.random.Generator, moves: int) -> tuple[Ensemble, int]:
     """The particles as they stood after each of some moves, all together (moves x N), and evaluations spent."""
     spent, along = 0, []
     for _ in range(moves):
-        spent += move_all(crew, packed, particles, shape, power, rng)
+        spent += move_all(target, particles, rng)
         along.append(particles.take(np.arange(len(particles.z))))
     return Ensemble.of(along), spent
 
@@ -209,19 +210,12 @@ def _effective(depth: FloatArray) -> float:
     return float(n * np.clip(within / max(between, 1e-12), 1.0, moves))
 
 
-def move_all(
-    crew: Crew,
-    packed: Packed,
-    particles: Ensemble,
-    shape: tuple[FloatArray, FloatArray],
-    power: float,
-    rng: np.random.Generator,
-) -> int:
+def move_all(target: Target, particles: Ensemble, rng: np.random.Generator) -> int:
     """One slice move and one switch of noise model for every particle; returns evaluations."""
     from leadline.anchoring._kernels import slice_move
 
     n, dims = particles.z.shape
-    centre, root = shape
+    centre, root = target.shape
     a = np.linalg.solve(root, (particles.z - centre).T).T.copy()
     group = rng.integers(0, len(GROUPS), n)
     model = (particles.c[np.arange(n), group] + rng.integers(1, len(MODELS["lfp"]), n)) % len(MODELS["lfp"])
@@ -229,7 +223,7 @@ def move_all(
     state = (particles.z, particles.by_group, particles.c, a)
     slices = (rng.standard_normal((n, dims)), np.log(rng.random(n)), rng.random((n, MAX_SHRINK)))
     switches = (group, model, np.log(rng.random(n)))
-    crew.run(slice_move, (packed.pack, power, centre, root), (*state, *slices, *switches, count))
+    target.crew.run(slice_move, (target.packed.pack, target.power, centre, root), (*state, *slices, *switches, count))
     return int(count.sum())
 
 
